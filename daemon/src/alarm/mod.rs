@@ -1,0 +1,1 @@
+//! Life cycle and limits.

@@ -1,0 +1,1 @@
+//! The site file: read, check, explain.

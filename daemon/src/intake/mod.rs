@@ -1,0 +1,1 @@
+//! Sources, decoding and reading quality.

@@ -1,0 +1,1 @@
+//! Processes the journal in its order: readings to limits and blocks, findings to alarms, people to both.

@@ -1,0 +1,3 @@
+//! The `borewake` program.
+
+fn main() {}

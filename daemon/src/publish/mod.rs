@@ -1,0 +1,1 @@
+//! Drains the outbox and reads the snapshot.

@@ -1,0 +1,1 @@
+//! Evidence with plots.

@@ -1,0 +1,1 @@
+//! The only code that speaks SQL: readings, journal, checkpoints, outbox.

@@ -1,0 +1,1 @@
+//! Drives the model over stored readings; re-run.

@@ -1,0 +1,1 @@
+//! Line source, leaky, images, storage and skin: for checks and for sites too simple for a mesh.

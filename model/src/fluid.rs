@@ -1,0 +1,1 @@
+//! Density, viscosity and compressibility of water.

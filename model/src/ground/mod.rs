@@ -1,0 +1,135 @@
+//! What is under the site: layers, zones, barriers, edge and wells, and the mesh fitted to them.
+
+use serde::{Deserialize, Serialize};
+
+/// A point on the map, metres east and north of the local origin.
+pub type Point = [f64; 2];
+
+/// The ground of a site, as described (before calibration). SI throughout.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Ground {
+    /// Conducting layers, top first; at least one.
+    pub layers: Vec<Layer>,
+    /// The outer boundary, shared by all layers.
+    pub edge: Edge,
+    /// Lines that resist flow.
+    pub barriers: Vec<Barrier>,
+    /// Wells whose rates are known.
+    pub wells: Vec<Well>,
+    /// Pressure gauges.
+    pub gauges: Vec<Gauge>,
+    /// Wells of others: places known, rates not.
+    pub neighbours: Vec<Neighbour>,
+}
+
+/// A conducting layer.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Layer {
+    /// Name in the site file.
+    pub name: String,
+    /// `T = k h / mu` \[m3/(Pa s)\], positive.
+    pub transmissivity: f64,
+    /// `S = phi c_t h` \[m/Pa\], positive.
+    pub storativity: f64,
+    /// Exchange with the next layer below \[m/(Pa s)\]; `None` where there is none.
+    pub leakance_below: Option<f64>,
+}
+
+/// The outer boundary.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub struct Edge {
+    /// How it behaves.
+    pub kind: EdgeKind,
+    /// Distance from the centre of wells and gauges \[m\].
+    pub distance: f64,
+}
+
+/// How the outer boundary behaves.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum EdgeKind {
+    /// The ground goes on: the edge is far and lets pressure out as an endless ground would.
+    Open,
+    /// Nothing passes.
+    Closed,
+    /// The pressure is held.
+    Fixed,
+}
+
+/// A line that resists flow.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Barrier {
+    /// Name in the site file.
+    pub name: String,
+    /// Its corners, at least two.
+    pub line: Vec<Point>,
+    /// Flow per metre of line and Pascal of difference \[m3/(Pa s m)\], from zero (sealed) up.
+    pub conductance: f64,
+}
+
+/// A well whose rate is known.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Well {
+    /// Name in the site file.
+    pub name: String,
+    /// Where it meets the ground.
+    pub at: Point,
+    /// Layer, by order.
+    pub layer: usize,
+    /// Radius \[m\].
+    pub radius: f64,
+    /// Skin, -6 to 50.
+    pub skin: f64,
+    /// Wellbore storage \[m3/Pa\]; zero where it does not matter.
+    pub storage: f64,
+}
+
+/// A pressure gauge.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Gauge {
+    /// Name in the site file.
+    pub name: String,
+    /// Where it sits.
+    pub seat: Seat,
+    /// Standard deviation of one reading about the truth \[Pa\].
+    pub noise: f64,
+    /// Drift within specification \[Pa/s\].
+    pub drift: f64,
+}
+
+/// Where a gauge sits.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Seat {
+    /// In the bore of a well, by order: it feels that well's skin and storage.
+    InWell(usize),
+    /// In the ground.
+    InGround {
+        /// Where.
+        at: Point,
+        /// Layer, by order.
+        layer: usize,
+    },
+}
+
+/// A well of somebody else's.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Neighbour {
+    /// Name in the site file.
+    pub name: String,
+    /// Where it meets the ground.
+    pub at: Point,
+    /// Layer, by order.
+    pub layer: usize,
+}
+
+impl Ground {
+    /// Where gauge `index` sits: position and layer.
+    #[must_use]
+    pub fn gauge_at(&self, index: usize) -> Option<(Point, usize)> {
+        match self.gauges.get(index)?.seat {
+            Seat::InGround { at, layer } => Some((at, layer)),
+            Seat::InWell(well) => self.wells.get(well).map(|w| (w.at, w.layer)),
+        }
+    }
+}

@@ -1,0 +1,77 @@
+//! Galerkin projection on a rational Krylov basis, its certificate, and the modal form.
+
+use nalgebra::{DMatrix, DVector};
+use serde::{Deserialize, Serialize};
+
+use crate::ground::Point;
+use crate::weak_form::Parameter;
+
+/// A dense share of a reduced matrix that one parameter scales.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct ReducedBlock {
+    /// What scales it.
+    pub parameter: Parameter,
+    /// The projected matrix (r by r, symmetric).
+    pub matrix: DMatrix<f64>,
+}
+
+/// A reduced ground: the sparse system projected block by block, so that parameters change without a new reduction.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Reduced {
+    /// Shares of the reduced storage matrix.
+    pub mass: Vec<ReducedBlock>,
+    /// Shares of the reduced conduction matrix.
+    pub stiffness: Vec<ReducedBlock>,
+    /// Port vectors of the wells (r by number of wells).
+    pub wells: DMatrix<f64>,
+    /// Observation vectors of the gauges (r by number of gauges).
+    pub gauges: DMatrix<f64>,
+    /// Port vectors of the neighbours (r by number of neighbours).
+    pub neighbours: DMatrix<f64>,
+    /// Places at which a source can be put without a further solve (candidate leaks, images).
+    pub places: Vec<(Point, usize)>,
+    /// Their port vectors (r by number of places).
+    pub place_ports: DMatrix<f64>,
+    /// What the reduction costs in accuracy.
+    pub certificate: Certificate,
+}
+
+/// What the reduction costs in accuracy.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Certificate {
+    /// Largest step-response error over the times checked, as a share of that response's peak, at ports.
+    pub ports: f64,
+    /// The same at randomly chosen nodes.
+    pub random_nodes: f64,
+    /// The same at the corners of the parameter box, where it was checked.
+    pub box_corners: Option<f64>,
+    /// Unknowns of the full system.
+    pub full_size: usize,
+    /// Number of modes kept.
+    pub modes: usize,
+    /// Number of shifts used.
+    pub shifts: usize,
+    /// Shortest and longest time checked \[s\].
+    pub times: (f64, f64),
+}
+
+/// Factors on the described parameters; what is not named keeps its described value.
+pub type Factors = Vec<(Parameter, f64)>;
+
+/// The modal form at one set of parameters: `x_k' = -lambda_k x_k + b_k . u`, `y = c x`.
+///
+/// The pressure at functional i under a unit rate at port j held for t is
+/// `sum_k c_ik b_jk (1 - exp(-lambda_k t)) / lambda_k`, with `t` in place of the quotient where lambda is zero.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Modal {
+    /// Decay rates \[1/s\], ascending, exactly zero for closed components.
+    pub lambda: DVector<f64>,
+    /// Ports of the wells (r by number of wells).
+    pub wells: DMatrix<f64>,
+    /// Functionals of the gauges (r by number of gauges).
+    pub gauges: DMatrix<f64>,
+    /// Ports of the neighbours (r by number of neighbours).
+    pub neighbours: DMatrix<f64>,
+    /// Ports of the places (r by number of places), in the order of [`Reduced::places`].
+    pub places: DMatrix<f64>,
+}

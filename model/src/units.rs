@@ -1,0 +1,1 @@
+//! Quantities at the border: text with a unit to SI and back.

@@ -1,0 +1,1 @@
+//! Signatures, causes, evidence, thresholds.
