@@ -1,0 +1,244 @@
+//! The site as read: what the other rooms are given.
+
+use std::collections::BTreeMap;
+use std::path::PathBuf;
+use std::time::Duration;
+
+use borewake_model::ground::Ground;
+use borewake_model::units::UnitSystem;
+
+use super::source::{ChannelSettings, SourceSettings, TopicPattern};
+use super::{MqttEndpoint, Note};
+use crate::record::{AlarmId, ChannelId, Holds, Priority, SourceName, Stamp};
+
+/// A site file that holds: every reference resolved, every quantity in SI.
+#[derive(Debug, Clone)]
+pub struct Site {
+    /// The file it was read from.
+    pub path: PathBuf,
+    /// The file's text as read.
+    pub text: String,
+    /// Name in topics and file names: lower-case letters, digits and hyphens.
+    pub id: String,
+    /// Name for people.
+    pub name: String,
+    /// How numbers are shown.
+    pub units: UnitSystem,
+    /// Latitude and longitude of the local origin \[degrees\], where stated.
+    pub origin: Option<(f64, f64)>,
+    /// Where state lives.
+    pub store: StoreSettings,
+    /// What is under the site.
+    pub ground: Ground,
+    /// Wells, in the order of [`Ground::wells`].
+    pub wells: Vec<WellSettings>,
+    /// Gauges, in the order of [`Ground::gauges`].
+    pub gauges: Vec<GaugeSettings>,
+    /// Channels known by name, those that wells and gauges take from a pattern included.
+    pub channels: BTreeMap<ChannelId, ChannelSettings>,
+    /// Channels whose names have placeholders, filled in from the topic at run time.
+    pub patterns: Vec<PatternChannel>,
+    /// Sources, in file order.
+    pub sources: Vec<SourceSettings>,
+    /// What is asked of the watch.
+    pub watch: WatchConfig,
+    /// Limits, one a side, in file order.
+    pub limits: Vec<LimitSettings>,
+    /// Where events go, in file order.
+    pub publish: Vec<PublishSettings>,
+    /// What was accepted but is not acted on, or looks odd.
+    pub notes: Vec<Note>,
+}
+
+/// A channel whose name has placeholders.
+#[derive(Debug, Clone, PartialEq)]
+pub struct PatternChannel {
+    /// Name with placeholders, such as `{gauge}.pressure`.
+    pub id: TopicPattern,
+    /// Settings of every channel so named; their `id` is the pattern's text.
+    pub settings: ChannelSettings,
+}
+
+impl Site {
+    /// Settings of a channel, by its name or by the pattern its name fits.
+    #[must_use]
+    pub fn channel(&self, id: &ChannelId) -> Option<ChannelSettings> {
+        self.channels.get(id).cloned().or_else(|| {
+            let pattern = self.patterns.iter().find(|p| p.id.fits(&id.0))?;
+            Some(ChannelSettings {
+                id: id.clone(),
+                ..pattern.settings.clone()
+            })
+        })
+    }
+
+    /// A source by name.
+    #[must_use]
+    pub fn source(&self, name: &SourceName) -> Option<&SourceSettings> {
+        self.sources.iter().find(|s| s.name == *name)
+    }
+
+    /// The command that renews the ground file, for messages.
+    #[must_use]
+    pub fn commission_command(&self) -> String {
+        format!("borewake commission {}", self.path.display())
+    }
+}
+
+/// Where state lives.
+#[derive(Debug, Clone, PartialEq)]
+pub struct StoreSettings {
+    /// Database, ground file, checkpoints, socket; relative paths start at the site file's folder.
+    pub folder: PathBuf,
+    /// How long raw readings are kept; `None` for ever.
+    pub keep_raw: Option<Duration>,
+    /// Size the folder may grow to \[bytes\]; `None` without bound.
+    pub max_size: Option<u64>,
+}
+
+/// A well's channel and meter.
+#[derive(Debug, Clone, PartialEq)]
+pub struct WellSettings {
+    /// Name in the site file.
+    pub name: String,
+    /// Channel of its rate.
+    pub rate: ChannelId,
+    /// Share of the channel's rate that enters this well, above 0 and at most 1.
+    pub share: f64,
+    /// How the rate stands to its instant.
+    pub holds: Holds,
+    /// What is stated of the meter; `None` where it is left to the data.
+    pub meter: Option<Meter>,
+    /// Rates before the record, in order of time.
+    pub past: Vec<PastRate>,
+}
+
+/// What is stated of a meter. Ratios are standard deviations as a share of the rate.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Meter {
+    /// Constant error.
+    pub bias: f64,
+    /// Error that forgets itself over [`Meter::memory`].
+    pub error: f64,
+    /// Correlation time of [`Meter::error`].
+    pub memory: Duration,
+}
+
+/// A rate before the record began; it holds until the next one, or until the record.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct PastRate {
+    /// When it began.
+    pub from: Stamp,
+    /// Rate into the ground \[m3/s\].
+    pub rate: f64,
+}
+
+/// A gauge's channel and what its numbers refer to.
+#[derive(Debug, Clone, PartialEq)]
+pub struct GaugeSettings {
+    /// Name in the site file.
+    pub name: String,
+    /// Channel of its pressure.
+    pub channel: ChannelId,
+    /// What its zero is.
+    pub reference: Reference,
+    /// Elevation of the sensor \[m\].
+    pub elevation: Option<f64>,
+    /// How it hangs.
+    pub string: GaugeString,
+    /// Whether the site file states its noise, or a default stands in [`Ground::gauges`].
+    pub noise_stated: bool,
+    /// Whether the site file states its drift, or a default stands in [`Ground::gauges`].
+    pub drift_stated: bool,
+}
+
+/// What the zero of a gauge is.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
+pub enum Reference {
+    /// Vacuum.
+    #[default]
+    Absolute,
+    /// The atmosphere, through a vent.
+    Vented,
+    /// The air sealed in at the maker's.
+    Sealed,
+    /// Another pressure.
+    Differential,
+}
+
+/// How a gauge hangs.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
+pub enum GaugeString {
+    /// In the bore near the layer.
+    #[default]
+    Downhole,
+    /// At the wellhead.
+    Surface,
+    /// In a piezometer.
+    Piezometer,
+}
+
+/// What is asked of the watch.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct WatchConfig {
+    /// Mean time between false alarms asked for \[s\].
+    pub false_alarm_interval: f64,
+    /// How long a block waits for late readings.
+    pub lateness: Duration,
+    /// How long a missing rate is held before the gauges that feel it are blind.
+    pub hold_rate: Duration,
+    /// Length of a block; a whole number of seconds.
+    pub block: Duration,
+}
+
+/// One side of a limit.
+#[derive(Debug, Clone, PartialEq)]
+pub struct LimitSettings {
+    /// Name of its alarm, such as `limit-O-2-above`.
+    pub alarm: AlarmId,
+    /// Gauge, by its order in the ground.
+    pub gauge: usize,
+    /// The gauge's channel.
+    pub channel: ChannelId,
+    /// Which side is beyond.
+    pub side: Side,
+    /// The limit \[Pa\].
+    pub value: f64,
+    /// How long a value must stay beyond, on sample time; zero is at once.
+    pub delay: Duration,
+    /// How far back it must come to count as returned \[Pa\], from zero.
+    pub deadband: f64,
+    /// Named preset of common practice.
+    pub practice: Option<String>,
+    /// How soon to act.
+    pub priority: Priority,
+    /// What to do.
+    pub response: String,
+    /// Who set the number, and when.
+    pub author: String,
+}
+
+/// Which side of a limit is beyond it.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Side {
+    /// Values above.
+    Above,
+    /// Values below.
+    Below,
+}
+
+/// Where events go.
+#[derive(Debug, Clone, PartialEq)]
+pub enum PublishSettings {
+    /// A broker.
+    Mqtt(MqttPublish),
+}
+
+/// A broker that events go to.
+#[derive(Debug, Clone, PartialEq)]
+pub struct MqttPublish {
+    /// The broker.
+    pub endpoint: MqttEndpoint,
+    /// Root of all topics, without slash at its end; the site's id follows.
+    pub topic_root: String,
+}

@@ -1,1 +1,0 @@
-//! Quantities at the border: text with a unit to SI and back.
