@@ -1,4 +1,16 @@
 //! Galerkin projection on a rational Krylov basis, its certificate, and the modal form.
+//!
+//! The sparse [`System`](crate::weak_form::System) `M x' + K x = B u`, `y = C x` is projected on a few hundred
+//! vectors V, block by block, so that parameters change without a new reduction ([`Reduced`]); the small pencil is
+//! then diagonalised ([`Modal`]) and stepped exactly ([`Gains`], [`Propagator`]). Because the columns of wells *and*
+//! gauges are in the basis and the pencil stays symmetric, stability, passivity and reciprocity carry over.
+
+mod modal;
+mod propagate;
+mod step;
+
+pub use propagate::Propagator;
+pub use step::Gains;
 
 use nalgebra::{DMatrix, DVector};
 use serde::{Deserialize, Serialize};
@@ -18,6 +30,9 @@ pub struct ReducedBlock {
 /// A reduced ground: the sparse system projected block by block, so that parameters change without a new reduction.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 pub struct Reduced {
+    /// Number of closed components. Their M-orthonormal indicators are the first vectors of the basis, and every
+    /// stiffness block vanishes exactly on them.
+    pub closed: usize,
     /// Shares of the reduced storage matrix.
     pub mass: Vec<ReducedBlock>,
     /// Shares of the reduced conduction matrix.

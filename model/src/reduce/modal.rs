@@ -1,0 +1,192 @@
+//! From the reduced pencil at one set of parameters to its modes.
+
+use faer::Par;
+use faer::diag::Diag;
+use faer::dyn_stack::{MemBuffer, MemStack};
+use faer::linalg::evd::{ComputeEigenvectors, self_adjoint_evd, self_adjoint_evd_scratch};
+use nalgebra::{Cholesky, DMatrix, DVector};
+
+use super::{Factors, Modal, Reduced, ReducedBlock};
+use crate::ModelError;
+use crate::weak_form::Parameter;
+
+/// An eigenvalue below minus this share of the largest is no rounding error.
+const NEGATIVE: f64 = 1e-9;
+
+impl Reduced {
+    /// Number of vectors of the basis, which is the number of modes.
+    #[must_use]
+    pub fn modes(&self) -> usize {
+        self.wells.nrows()
+    }
+
+    /// The modal form at `factors` on the described parameters.
+    ///
+    /// Solves `K v = lambda M v` with `M = sum b_i M_i`, `K = sum a_j K_j` (Cholesky of M, then a symmetric eigenproblem).
+    /// Decay rates come ascending, those of closed components exactly zero. The sign of a mode is such that its
+    /// largest entry in the basis is positive.
+    ///
+    /// # Errors
+    /// [`ModelError::Parameter`] for a factor that is negative or not finite, [`ModelError::NotPositive`] where the pencil is not
+    /// positive, [`ModelError::Size`] where the parts do not fit each other.
+    pub fn modal(&self, factors: &Factors) -> Result<Modal, ModelError> {
+        let modes = self.modes();
+        let mass = weighted(&self.mass, factors, modes)?;
+        let stiffness = weighted(&self.stiffness, factors, modes)?;
+        let (lambda, vectors) = symmetric_pencil(&stiffness, mass, self.closed)?;
+        let rotate = |ports: &DMatrix<f64>| {
+            if ports.nrows() == modes {
+                Ok(vectors.tr_mul(ports))
+            } else {
+                Err(ModelError::Size {
+                    what: "rows of the port vectors",
+                    found: ports.nrows(),
+                    expected: modes,
+                })
+            }
+        };
+        Ok(Modal {
+            lambda,
+            wells: rotate(&self.wells)?,
+            gauges: rotate(&self.gauges)?,
+            neighbours: rotate(&self.neighbours)?,
+            places: rotate(&self.place_ports)?,
+        })
+    }
+}
+
+/// The factor on one parameter; what is not named keeps its described value.
+pub(super) fn factor_on(parameter: Parameter, factors: &Factors) -> Result<f64, ModelError> {
+    let mut product = 1.0;
+    for &(named, factor) in factors {
+        if named == parameter {
+            product *= factor;
+        }
+    }
+    if product.is_finite() && product >= 0.0 {
+        Ok(product)
+    } else {
+        Err(ModelError::Parameter {
+            what: format!("the factor on {parameter:?}"),
+            value: product,
+            must: "must be finite and not negative",
+        })
+    }
+}
+
+fn weighted(
+    blocks: &[ReducedBlock],
+    factors: &Factors,
+    modes: usize,
+) -> Result<DMatrix<f64>, ModelError> {
+    let mut sum = DMatrix::zeros(modes, modes);
+    for block in blocks {
+        if block.matrix.shape() != (modes, modes) {
+            return Err(ModelError::Size {
+                what: "rows of a reduced block",
+                found: block.matrix.nrows(),
+                expected: modes,
+            });
+        }
+        let factor = factor_on(block.parameter, factors)?;
+        sum.zip_apply(&block.matrix, |s, b| *s += factor * b);
+    }
+    Ok(sum)
+}
+
+/// Solves `K v = lambda M v`, where K vanishes on the first `closed` coordinates: decay rates ascending, and
+/// M-orthonormal vectors as columns.
+fn symmetric_pencil(
+    stiffness: &DMatrix<f64>,
+    mass: DMatrix<f64>,
+    closed: usize,
+) -> Result<(DVector<f64>, DMatrix<f64>), ModelError> {
+    let modes = mass.nrows();
+    let factor = Cholesky::new(mass)
+        .ok_or(ModelError::NotPositive {
+            what: "the reduced storage matrix",
+        })?
+        .unpack();
+    let solve = |m: &mut DMatrix<f64>| {
+        factor
+            .solve_lower_triangular_mut(m)
+            .then_some(())
+            .ok_or(ModelError::NotPositive {
+                what: "the reduced storage matrix",
+            })
+    };
+    // L^-1 K L^-T. L is lower triangular, so the leading rows and columns that vanish in K vanish here too.
+    let mut half = stiffness.clone();
+    solve(&mut half)?;
+    let mut standard = half.transpose();
+    solve(&mut standard)?;
+
+    let rest = modes - closed.min(modes);
+    let (values, rotation) =
+        symmetric_eigen(&standard.view((closed, closed), (rest, rest)).into_owned())?;
+    let largest = values.iter().copied().fold(0.0, f64::max);
+    if values.iter().any(|&l| l < -NEGATIVE * largest) {
+        return Err(ModelError::NotPositive {
+            what: "the reduced conduction matrix",
+        });
+    }
+    let mut lambda = DVector::zeros(modes);
+    let mut vectors = DMatrix::identity(modes, modes);
+    for (to, l) in lambda.rows_mut(closed, rest).iter_mut().zip(values.iter()) {
+        *to = l.max(0.0);
+    }
+    vectors
+        .view_mut((closed, closed), (rest, rest))
+        .copy_from(&rotation);
+    if !factor.tr_solve_lower_triangular_mut(&mut vectors) {
+        return Err(ModelError::NotPositive {
+            what: "the reduced storage matrix",
+        });
+    }
+    for mut column in vectors.column_iter_mut() {
+        let largest = column
+            .iter()
+            .copied()
+            .fold(0.0_f64, |a, b| if b.abs() > a.abs() { b } else { a });
+        if largest < 0.0 {
+            column.neg_mut();
+        }
+    }
+    Ok((lambda, vectors))
+}
+
+/// Eigenvalues, ascending, and orthonormal eigenvectors of a symmetric matrix (its lower triangle is read).
+pub(super) fn symmetric_eigen(
+    matrix: &DMatrix<f64>,
+) -> Result<(DVector<f64>, DMatrix<f64>), ModelError> {
+    let n = matrix.nrows();
+    let mut values = Diag::<f64>::zeros(n);
+    let mut vectors = faer::Mat::<f64>::zeros(n, n);
+    let copy = faer::Mat::from_fn(n, n, |i, j| matrix[(i, j)]);
+    if !copy.is_all_finite() {
+        return Err(ModelError::NotFinite("an entry of a reduced matrix"));
+    }
+    let scratch =
+        self_adjoint_evd_scratch::<f64>(n, ComputeEigenvectors::Yes, Par::Seq, Default::default());
+    self_adjoint_evd(
+        copy.as_ref(),
+        values.as_mut(),
+        Some(vectors.as_mut()),
+        Par::Seq,
+        MemStack::new(&mut MemBuffer::new(scratch)),
+        Default::default(),
+    )
+    .map_err(|_| ModelError::NotSettled {
+        what: "the eigenvalue iteration of the reduced pencil",
+        steps: n,
+        residual: f64::NAN,
+    })?;
+    let mut order: Vec<usize> = (0..n).collect();
+    order.sort_by(|&a, &b| values[a].total_cmp(&values[b]));
+    Ok((
+        DVector::from_iterator(n, order.iter().map(|&k| values[k])),
+        DMatrix::from_fn(n, n, |i, k| {
+            order.get(k).map_or(0.0, |&from| vectors[(i, from)])
+        }),
+    ))
+}
