@@ -1,1 +1,10 @@
 //! Line source, leaky, images, storage and skin: for checks and for sites too simple for a mesh.
+//!
+//! Every response here is the pressure \[Pa\] under a rate of one m3/s into the ground, in a ground of
+//! transmissivity `T = k h / mu` \[m3/(Pa s)\] and storativity `S = phi c_t h` \[m/Pa\].
+
+mod exponential_integral;
+mod line_source;
+
+pub use exponential_integral::e1;
+pub use line_source::{Path, constant_head, line_source, sealed, superpose};
