@@ -210,6 +210,8 @@ pub enum TransitionKind {
     Returned,
     /// Its finding, size or priority changed so much that it must be seen again.
     Changed,
+    /// Its finding was brought up to date; nobody need see it again.
+    Updated,
     /// A re-run no longer supports what was said, or says it otherwise.
     Revised,
     /// Its finding was taken into the model.

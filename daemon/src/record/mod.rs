@@ -4,6 +4,7 @@ mod alarm;
 mod channel;
 mod command;
 mod journal;
+mod names;
 mod outgoing;
 mod reading;
 mod snapshot;
@@ -14,11 +15,15 @@ pub use alarm::{
     Suppression, Transition, TransitionKind,
 };
 pub use borewake_model::block::{Block, GaugeBlock, RateKnown, RatePath};
-pub use borewake_model::finding::{Cause, Expectation, Finding};
+pub use borewake_model::finding::{
+    Cause, Expectation, Finding, Place, Size, SizeUnit, Subject, Weighed,
+};
+pub use borewake_model::units::UnitSystem;
 pub use borewake_model::watch::{Adoption, Blind, Step};
 pub use channel::{ChannelId, ChannelKind, Holds, SourceName};
 pub use command::{Command, CommandKind, Reply};
 pub use journal::{Entry, EntryKind};
+pub use names::Names;
 pub use outgoing::{Outgoing, OutgoingId};
 pub use reading::{
     AckToken, ClockEpoch, ClockState, Delivery, DeviceStatus, Quality, Reading, RejectReason,
