@@ -228,6 +228,9 @@ def main():
     metered = q * (1 + bias + METER_WANDER * wander(rng, n, METER_MEMORY, W))
 
     lost = rng.uniform(size=(n, W + G)) < SCATTERED
+    for w, (name, _, _) in enumerate(WELLS):               # the instant of a planned change is always logged
+        for at, _ in PLAN[name]:
+            lost[abs(day - at) < 1 / 24, w] = False
     no_row = np.zeros(n, bool)
     for a, b, who in GAPS:
         within = (day >= a) & (day < b)

@@ -1,7 +1,9 @@
 //! A Modbus RTU device on the far end of a pty: a general library's server, with registers and a delay to set.
 
 use std::collections::BTreeMap;
+use std::fs::File;
 use std::future::Future;
+use std::os::unix::fs::OpenOptionsExt as _;
 use std::pin::Pin;
 use std::sync::{Arc, Mutex, MutexGuard};
 use std::time::Duration;
@@ -10,6 +12,9 @@ use tokio::task::JoinHandle;
 use tokio_modbus::server::{Service, rtu::Server};
 use tokio_modbus::{ExceptionCode, Request, Response, SlaveRequest};
 use tokio_serial::{SerialPort, SerialStream};
+
+/// `O_NOCTTY` of Linux.
+const NO_CONTROLLING_TERMINAL: i32 = 0o400;
 
 #[derive(Default)]
 struct Device {
@@ -31,8 +36,9 @@ impl Shared {
 pub struct ModbusServer {
     path: String,
     device: Shared,
-    // The near end stays open here, so that the far end outlives a daemon that comes and goes.
-    _near: SerialStream,
+    // The near end stays open here, so that the far end outlives a daemon that comes and goes. A plain file: a serial
+    // port of the library's would lock the daemon out.
+    _near: File,
     task: JoinHandle<()>,
 }
 
@@ -43,10 +49,15 @@ impl ModbusServer {
     /// The system gives no pty.
     #[must_use]
     pub fn start() -> Self {
-        let (far, mut near) = SerialStream::pair().expect("a pty pair");
-        near.set_exclusive(false)
-            .expect("the daemon may open it too");
+        let (far, near) = SerialStream::pair().expect("a pty pair");
         let path = near.name().expect("a pty's near end has a name");
+        let held = File::options()
+            .read(true)
+            .write(true)
+            .custom_flags(NO_CONTROLLING_TERMINAL)
+            .open(&path)
+            .expect("the near end opens");
+        drop(near);
         let device = Shared::default();
         let service = device.clone();
         let task = tokio::spawn(async move {
@@ -55,7 +66,7 @@ impl ModbusServer {
         Self {
             path,
             device,
-            _near: near,
+            _near: held,
             task,
         }
     }
