@@ -3,8 +3,10 @@
 //! Every response here is the pressure \[Pa\] under a rate of one m3/s into the ground, in a ground of
 //! transmissivity `T = k h / mu` \[m3/(Pa s)\] and storativity `S = phi c_t h` \[m/Pa\].
 
+mod bessel;
 mod exponential_integral;
 mod line_source;
 
+pub use bessel::{k0, k0_k1, k1};
 pub use exponential_integral::e1;
 pub use line_source::{Path, constant_head, line_source, sealed, superpose};

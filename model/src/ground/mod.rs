@@ -1,5 +1,7 @@
 //! What is under the site: layers, zones, barriers, edge and wells, and the mesh fitted to them.
 
+pub mod mesh;
+
 use serde::{Deserialize, Serialize};
 
 /// A point on the map, metres east and north of the local origin.

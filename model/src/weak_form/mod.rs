@@ -2,11 +2,28 @@
 //!
 //! A scheme is a trial space, a test space and a rule for flux or quadrature; all of them give
 //! the symmetric [`System`] `M x' + K x = B u`, `y = C x`.
+//!
+//! The statement itself stands once, in `statement`. A scheme answers four questions of it, one file each:
+//! what storage, conduction and a line joint amount to between the nodes of one triangle or segment, and
+//! what the value at a point is. `quadratic` is the working scheme; `linear` and `finite_volume` are
+//! there to be held against it and where a maximum principle matters.
+
+mod assembly;
+mod finite_volume;
+mod linear;
+mod nodes;
+mod quadratic;
+mod space;
+mod statement;
 
 use faer::sparse::SparseColMat;
 use serde::{Deserialize, Serialize};
 
-use crate::ground::Point;
+use crate::ModelError;
+use crate::ground::mesh::{Mesh, MeshOptions};
+use crate::ground::{Ground, Point};
+use nodes::Nodes;
+use space::Space;
 
 /// A parameter on which a block of the matrices depends linearly.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, PartialOrd, Ord, Serialize, Deserialize)]
@@ -60,4 +77,128 @@ pub struct System {
     pub closed_components: Vec<Vec<usize>>,
     /// Where each unknown sits and in which layer (a wellbore node sits at its well).
     pub nodes: Vec<(Point, usize)>,
+}
+
+/// How the weak form is made discrete.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Scheme {
+    /// Quadratic hat functions on triangles: the working scheme, errors below 2e-4 of a response's peak.
+    Quadratic,
+    /// Linear hat functions on triangles.
+    LinearConsistent,
+    /// The same with storage gathered at the vertices.
+    LinearLumped,
+    /// Voronoi cells with a two-point flux through each face.
+    FiniteVolume,
+}
+
+impl Scheme {
+    fn space(self) -> &'static dyn Space {
+        match self {
+            Self::Quadratic => &quadratic::Quadratic,
+            Self::LinearConsistent => &linear::Linear { lumped: false },
+            Self::LinearLumped => &linear::Linear { lumped: true },
+            Self::FiniteVolume => &finite_volume::FiniteVolume,
+        }
+    }
+}
+
+/// A ground made discrete: the system, the mesh it lives on, and where its unknowns are.
+#[derive(Debug, Clone)]
+pub struct Discrete {
+    /// The matrices and functionals.
+    pub system: System,
+    /// The mesh.
+    pub mesh: Mesh,
+    scheme: Scheme,
+    nodes: Nodes,
+}
+
+/// Meshes the ground and puts it into the weak form.
+///
+/// Wells without storage: the port is the ring's pressure, and the skin acts outside the system. A positive
+/// skin adds `skin q / 2 pi T` to the well's pressure at once; a negative one is in the cut-out's radius, so
+/// a skin fitted beside a described skin below zero is `min(described, 0)` plus what is fitted. Wells with
+/// storage have an unknown of their own, joined to the ring by `2 pi T / skin`, or are one with the ring at
+/// skin zero or less.
+///
+/// # Errors
+/// [`ModelError::Mesh`] where the ground cannot be meshed, [`ModelError::Parameter`] where a number of it
+/// cannot be used.
+pub fn discretise(
+    ground: &Ground,
+    scheme: Scheme,
+    options: &MeshOptions,
+) -> Result<Discrete, ModelError> {
+    statement::check(ground)?;
+    let mesh = Mesh::fit(ground, options)?;
+    discretise_on(ground, scheme, mesh)
+}
+
+/// As [`discretise`], on a mesh already fitted to this ground.
+///
+/// # Errors
+/// As [`discretise`]; [`ModelError::Size`] where the mesh was fitted to another ground.
+pub fn discretise_on(ground: &Ground, scheme: Scheme, mesh: Mesh) -> Result<Discrete, ModelError> {
+    statement::check(ground)?;
+    let nodes = Nodes::number(ground, &mesh, scheme.space())?;
+    let system = statement::assemble(ground, &mesh, scheme.space(), &nodes)?;
+    let mut discrete = Discrete {
+        system,
+        mesh,
+        scheme,
+        nodes,
+    };
+    discrete.system.gauges = discrete.gauges(ground)?;
+    discrete.system.neighbours = discrete.neighbours(ground)?;
+    Ok(discrete)
+}
+
+impl Discrete {
+    /// The value at a point of a layer as a functional on the unknowns; also a unit source there.
+    ///
+    /// Within the cut-out of a well of that layer it is the ring's pressure; on a barrier, that of one side.
+    ///
+    /// # Errors
+    /// [`ModelError::Mesh`] where the point lies outside the edge or in no layer.
+    pub fn locate(&self, point: Point, layer: usize) -> Result<Functional, ModelError> {
+        self.nodes
+            .locate(&self.mesh, self.scheme.space(), point, layer)
+    }
+
+    fn gauges(&self, ground: &Ground) -> Result<Vec<Functional>, ModelError> {
+        let of = |(gauge, vertex): (&crate::ground::Gauge, &Option<usize>)| match gauge.seat {
+            crate::ground::Seat::InWell(well) => {
+                self.system
+                    .wells
+                    .get(well)
+                    .cloned()
+                    .ok_or(ModelError::Size {
+                        what: "wells, counted by the seat of a gauge",
+                        found: self.system.wells.len(),
+                        expected: well + 1,
+                    })
+            }
+            crate::ground::Seat::InGround { at, layer } => match *vertex {
+                Some(vertex) => Ok(self.nodes.at_vertex(vertex, layer)),
+                None => self.locate(at, layer),
+            },
+        };
+        ground
+            .gauges
+            .iter()
+            .zip(&self.mesh.gauges)
+            .map(of)
+            .collect()
+    }
+
+    fn neighbours(&self, ground: &Ground) -> Result<Vec<Functional>, ModelError> {
+        let all = ground.neighbours.iter().zip(&self.mesh.neighbours);
+        all.map(|(other, vertex)| match *vertex {
+            Some(vertex) => Ok(self.nodes.at_vertex(vertex, other.layer)),
+            None => self.locate(other.at, other.layer),
+        })
+        .collect()
+    }
 }

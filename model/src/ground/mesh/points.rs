@@ -1,0 +1,297 @@
+//! Lays the points of the mesh: what must be there, rings, and what fills the gaps.
+
+use std::f64::consts::PI;
+
+use super::super::Point;
+use super::centre::{Centre, Plan};
+use super::triangulate::{fail, triangulate};
+use super::{cross, distance, line};
+use crate::ModelError;
+
+/// Two points may not lie closer than this share of the size asked for there.
+const CLOSE: f64 = 0.7;
+/// A triangle with a circumradius above this share of the size is a gap to be filled.
+const GAP: f64 = 0.75;
+/// Points keep this share of the size away from barriers and the edge, which have points of their own.
+const CLEAR: f64 = 0.55;
+/// Passes of filling; a gap left after so many only makes a larger triangle.
+const PASSES: usize = 24;
+
+/// Points and triangles before barriers are doubled.
+#[derive(Debug, Clone)]
+pub(super) struct Laid {
+    pub(super) points: Vec<Point>,
+    pub(super) triangles: Vec<[usize; 3]>,
+    /// Centre points come first: point `i` is centre `i`, for all centres.
+    pub(super) rings: Vec<Vec<usize>>,
+    /// Pieces of barriers.
+    pub(super) pieces: Vec<(usize, [usize; 2])>,
+}
+
+/// Lays points and triangulates them.
+pub(super) fn lay(plan: &Plan) -> Result<Laid, ModelError> {
+    let mut points: Vec<Point> = plan.centres.iter().map(|c| c.at).collect();
+    let mut constraints = Vec::new();
+    let mut rings = Vec::new();
+    for &(centre, radius) in &plan.wells {
+        let Some(centre) = plan.centres.get(centre) else {
+            continue;
+        };
+        let ring = anchored_ring(plan, centre, radius, &mut points);
+        for (i, &a) in ring.iter().enumerate() {
+            if let Some(&b) = ring.get((i + 1) % ring.len()) {
+                constraints.push(super::ordered(a, b));
+            }
+        }
+        rings.push(ring);
+    }
+    constraints.sort_unstable();
+    constraints.dedup();
+    let pieces = lay_barriers(plan, &mut points)?;
+    constraints.extend(pieces.iter().map(|(_, piece)| *piece));
+    lay_outline(plan, &mut points);
+    lay_rings(plan, &mut points);
+    let mut triangles = triangulate(&points, &constraints, plan.apart)?;
+    for _ in 0..PASSES {
+        if !fill(plan, &mut points, &triangles) {
+            break;
+        }
+        triangles = triangulate(&points, &constraints, plan.apart)?;
+    }
+    Ok(Laid {
+        points,
+        triangles,
+        rings,
+        pieces,
+    })
+}
+
+/// The ring of a cut-out; wells of other layers with the same radius share it.
+fn anchored_ring(plan: &Plan, centre: &Centre, radius: f64, points: &mut Vec<Point>) -> Vec<usize> {
+    (0..centre.ring)
+        .map(|k| {
+            let p = on_ring(centre, radius, k, 0.0);
+            let known = points.iter().position(|q| distance(*q, p) <= plan.apart);
+            known.unwrap_or_else(|| {
+                points.push(p);
+                points.len() - 1
+            })
+        })
+        .collect()
+}
+
+fn on_ring(centre: &Centre, radius: f64, k: usize, offset: f64) -> Point {
+    let angle = centre.turn + 2.0 * PI * (k as f64 + offset) / centre.ring as f64;
+    [
+        centre.at[0] + radius * angle.cos(),
+        centre.at[1] + radius * angle.sin(),
+    ]
+}
+
+/// Points along barriers, spaced as the size asks, and the pieces between them.
+fn lay_barriers(
+    plan: &Plan,
+    points: &mut Vec<Point>,
+) -> Result<Vec<(usize, [usize; 2])>, ModelError> {
+    let mut pieces: Vec<(usize, [usize; 2])> = Vec::new();
+    for (barrier, (a, b)) in plan.segments() {
+        let mut add = |p: Point| {
+            let known = points.iter().position(|q| distance(*q, p) <= plan.apart);
+            known.unwrap_or_else(|| {
+                points.push(p);
+                points.len() - 1
+            })
+        };
+        let mut before = add(a);
+        for share in shares(plan, a, b) {
+            let here = add([a[0] + share * (b[0] - a[0]), a[1] + share * (b[1] - a[1])]);
+            pieces.push((barrier, super::ordered(before, here)));
+            before = here;
+        }
+    }
+    let mut seen: Vec<[usize; 2]> = pieces.iter().map(|p| p.1).collect();
+    seen.sort_unstable();
+    for pair in seen.windows(2) {
+        if let [a, b] = pair
+            && a == b
+        {
+            let at = points.get(a[0]).copied().unwrap_or(plan.middle);
+            return Err(fail(
+                at,
+                "a barrier runs twice along one line; leave one of them out",
+            ));
+        }
+    }
+    Ok(pieces)
+}
+
+/// Ends of the pieces of a segment, as ascending shares of it that end with one; at least two, so that a
+/// barrier always has a point with two sides.
+fn shares(plan: &Plan, a: Point, b: Point) -> Vec<f64> {
+    let length = distance(a, b);
+    let at = |s: f64| [a[0] + s * (b[0] - a[0]), a[1] + s * (b[1] - a[1])];
+    // The number of pieces up to each station, found by small steps, since the size varies with place.
+    let (mut s, mut count, mut track) = (0.0, 0.0, vec![(0.0, 0.0)]);
+    while s < 1.0 {
+        let h = plan.size.at(at(s));
+        let step = (0.1 * h / length).max(1e-5).min(1.0 - s);
+        let middle = plan.size.at(at(s + 0.5 * step));
+        count += step * length / middle;
+        s = if 1.0 - s - step < 1e-12 {
+            1.0
+        } else {
+            s + step
+        };
+        track.push((s, count));
+    }
+    let mut pieces = 2.0;
+    while pieces < count {
+        pieces += 1.0;
+    }
+    let (mut ends, mut k, mut i) = (Vec::new(), 1.0, 1);
+    while k < pieces {
+        let wanted = k * count / pieces;
+        while track.get(i).is_some_and(|t| t.1 < wanted) {
+            i += 1;
+        }
+        if let (Some(low), Some(high)) = (track.get(i - 1), track.get(i)) {
+            ends.push(low.0 + (high.0 - low.0) * (wanted - low.1) / (high.1 - low.1));
+        }
+        k += 1.0;
+    }
+    ends.push(1.0);
+    ends
+}
+
+/// Points of the outline; where a barrier ends on it, its end stands for the nearest of them.
+fn lay_outline(plan: &Plan, points: &mut Vec<Point>) {
+    let ends: Vec<Point> = points
+        .iter()
+        .copied()
+        .filter(|p| distance(*p, plan.middle) > (1.0 - 1e-9) * plan.outline)
+        .collect();
+    let spacing = plan.size.edge.2;
+    for k in 0..plan.outline_points {
+        let angle = 2.0 * PI * k as f64 / plan.outline_points as f64;
+        let p = [
+            plan.middle[0] + plan.outline * angle.cos(),
+            plan.middle[1] + plan.outline * angle.sin(),
+        ];
+        if ends.iter().all(|e| distance(*e, p) > 0.4 * spacing) {
+            points.push(p);
+        }
+    }
+}
+
+/// Rings round every centre, as far as it is the nearest one.
+fn lay_rings(plan: &Plan, points: &mut Vec<Point>) {
+    let mut wanted: Vec<(f64, Point)> = Vec::new();
+    for (i, centre) in plan.centres.iter().enumerate() {
+        let growth = (0.5 * 3f64.sqrt() * centre.share()).exp();
+        let reach = plan.outline + distance(centre.at, plan.middle);
+        for (k, &(radius, fixed)) in radii(centre, growth, reach).iter().enumerate() {
+            if fixed {
+                continue;
+            }
+            let offset = if k % 2 == 0 { 0.0 } else { 0.5 };
+            for j in 0..centre.ring {
+                let p = on_ring(centre, radius, j, offset);
+                if plan.size.owner(p) == Some(i) && clear(plan, p) {
+                    wanted.push((plan.size.at(p), p));
+                }
+            }
+        }
+    }
+    wanted.sort_by(|a, b| a.0.total_cmp(&b.0));
+    for (h, p) in wanted {
+        if points.iter().all(|q| distance(*q, p) > CLOSE * h) {
+            points.push(p);
+        }
+    }
+}
+
+/// Radii of the rings of a centre, and whether a ring is a cut-out's, laid already.
+///
+/// Rings alternate in angle; an even number of steps between cut-outs keeps both unturned.
+fn radii(centre: &Centre, growth: f64, reach: f64) -> Vec<(f64, bool)> {
+    let mut all: Vec<(f64, bool)> = Vec::new();
+    for &anchor in &centre.anchors {
+        if let Some(&(below, _)) = all.last() {
+            let ratio = f64::ln(anchor / below);
+            let mut steps = 2.0;
+            while steps * growth.ln() < 0.8 * ratio {
+                steps += 2.0;
+            }
+            let mut k = 1.0;
+            while k < steps {
+                all.push((below * (ratio * k / steps).exp(), false));
+                k += 1.0;
+            }
+        }
+        all.push((anchor, true));
+    }
+    if all.is_empty() {
+        all.push((centre.start, false));
+    }
+    while let Some(&(last, _)) = all.last() {
+        let next = last * growth;
+        if next > reach {
+            break;
+        }
+        all.push((next, false));
+    }
+    all
+}
+
+/// Whether a point is inside the edge and keeps off it and off barriers.
+fn clear(plan: &Plan, p: Point) -> bool {
+    let h = plan.size.at(p);
+    let apothem = plan.outline * (PI / plan.outline_points as f64).cos();
+    apothem - distance(p, plan.middle) > CLEAR * h
+        && plan
+            .segments()
+            .iter()
+            .all(|&(_, (a, b))| line::from_segment(p, a, b) > CLEAR * h)
+}
+
+/// Puts points into the middle of triangles that are too large. Says whether there was one.
+fn fill(plan: &Plan, points: &mut Vec<Point>, triangles: &[[usize; 3]]) -> bool {
+    let mut wanted: Vec<(f64, Point)> = Vec::new();
+    for t in triangles {
+        let [Some(&a), Some(&b), Some(&c)] = t.map(|v| points.get(v)) else {
+            continue;
+        };
+        let Some((middle, radius)) = circumcircle(a, b, c) else {
+            continue;
+        };
+        let h = plan.size.at(middle);
+        let in_first_ring = plan
+            .centres
+            .iter()
+            .any(|centre| distance(centre.at, middle) < 0.99 * centre.start);
+        if radius > GAP * h && !in_first_ring && clear(plan, middle) {
+            wanted.push((h / radius, middle));
+        }
+    }
+    wanted.sort_by(|a, b| a.0.total_cmp(&b.0));
+    let before = points.len();
+    for (_, p) in wanted {
+        let h = plan.size.at(p);
+        if points.iter().all(|q| distance(*q, p) > CLOSE * h) {
+            points.push(p);
+        }
+    }
+    points.len() > before
+}
+
+fn circumcircle(a: Point, b: Point, c: Point) -> Option<(Point, f64)> {
+    let twice = cross(a, b, c);
+    if twice <= 0.0 {
+        return None;
+    }
+    let (u, v) = ([b[0] - a[0], b[1] - a[1]], [c[0] - a[0], c[1] - a[1]]);
+    let (uu, vv) = (u[0] * u[0] + u[1] * u[1], v[0] * v[0] + v[1] * v[1]);
+    let x = (v[1] * uu - u[1] * vv) / (2.0 * twice);
+    let y = (u[0] * vv - v[0] * uu) / (2.0 * twice);
+    Some(([a[0] + x, a[1] + y], x.hypot(y)))
+}

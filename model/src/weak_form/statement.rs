@@ -1,0 +1,222 @@
+//! The weak statement, once for all schemes.
+//!
+//! For every test function `w` of every layer `l`, with `p` the pressure change from rest,
+//!
+//! ```text
+//! int w S dp/dt + int T grad w . grad p + int (w - w') L (p - p')    (p' in the layer below)
+//!   + int_barrier c [w][p] + int_edge w (T/R) p                      ([.] the jump across a barrier)
+//!   = sum over wells q w(x)
+//! ```
+//!
+//! In a cut-out nothing is stored or conducted, and its ring has one pressure. The edge at distance `R` lets
+//! pressure out where it is open, holds it where it is fixed, and keeps it where it is closed. Barriers and
+//! the edge pass through all layers.
+
+use std::f64::consts::PI;
+
+use super::assembly::Assembly;
+use super::nodes::{Nodes, Slot};
+use super::space::{Local, MOST, Space};
+use super::{Functional, Parameter, System};
+use crate::ModelError;
+use crate::ground::mesh::{Mesh, distance};
+use crate::ground::{EdgeKind, Ground, Well};
+
+/// Puts the statement into a space. Gauges and neighbours are left to the caller.
+pub(super) fn assemble(
+    ground: &Ground,
+    mesh: &Mesh,
+    space: &dyn Space,
+    nodes: &Nodes,
+) -> Result<System, ModelError> {
+    let mut sum = Assembly::new(nodes.places.len());
+    for (l, layer) in ground.layers.iter().enumerate() {
+        let (storativity, transmissivity) =
+            (Parameter::Storativity(l), Parameter::Transmissivity(l));
+        for t in 0..mesh.triangles.len() {
+            let corners = mesh.corners(t);
+            let Some(here) = nodes.triangle(mesh, t, l) else {
+                continue;
+            };
+            sum.store(
+                storativity,
+                layer.storativity,
+                &here,
+                &space.storage(&corners),
+            );
+            sum.conduct(
+                transmissivity,
+                layer.transmissivity,
+                &here,
+                &space.conduction(&corners),
+            );
+            if let Some(leakance) = layer.leakance_below
+                && let Some(below) = nodes.triangle(mesh, t, l + 1)
+            {
+                let storage = space.storage(&corners);
+                sum.exchange(Parameter::Leakance(l), leakance, (&here, &below), &storage);
+            }
+        }
+        for joint in &mesh.joints {
+            let sides = (&nodes.segment(joint.one, l), &nodes.segment(joint.other, l));
+            let conductance = ground
+                .barriers
+                .get(joint.barrier)
+                .map_or(0.0, |b| b.conductance);
+            let line = space.line(length(mesh, joint.one));
+            sum.exchange(Parameter::Barrier(joint.barrier), conductance, sides, &line);
+        }
+        if ground.edge.kind == EdgeKind::Open {
+            let beta = layer.transmissivity / ground.edge.distance;
+            for &segment in &mesh.edge {
+                let line = space.line(length(mesh, segment));
+                sum.let_out(transmissivity, beta, &nodes.segment(segment, l), &line);
+            }
+        }
+    }
+    for (w, well) in ground.wells.iter().enumerate() {
+        bore(ground, w, well, nodes, &mut sum);
+    }
+    let closed_components = sum.closed();
+    let (mass, stiffness) = sum.finish()?;
+    Ok(System {
+        size: nodes.places.len(),
+        mass,
+        stiffness,
+        wells: nodes
+            .bores
+            .iter()
+            .map(|&i| Functional(vec![(i, 1.0)]))
+            .collect(),
+        gauges: Vec::new(),
+        neighbours: Vec::new(),
+        closed_components,
+        nodes: nodes.places.clone(),
+    })
+}
+
+/// Storage in the bore of a well, and the skin between bore and ring where they are apart.
+fn bore(ground: &Ground, w: usize, well: &Well, nodes: &Nodes, sum: &mut Assembly) {
+    let (Some(&ring), Some(&bore)) = (nodes.rings.get(w), nodes.bores.get(w)) else {
+        return;
+    };
+    if well.storage <= 0.0 {
+        return;
+    }
+    let one = Local::scaled(1.0, &[[1.0]]);
+    let alone = |i: usize| {
+        let mut slots = [Slot::Absent; MOST];
+        slots[0] = Slot::Unknown(i);
+        slots
+    };
+    sum.store(Parameter::Storage(w), well.storage, &alone(bore), &one);
+    if bore != ring {
+        let transmissivity = ground
+            .layers
+            .get(well.layer)
+            .map_or(0.0, |l| l.transmissivity);
+        let conductance = 2.0 * PI * transmissivity / well.skin;
+        sum.exchange(
+            Parameter::Skin(w),
+            conductance,
+            (&alone(bore), &alone(ring)),
+            &one,
+        );
+    }
+}
+
+fn length(mesh: &Mesh, [a, b]: [usize; 2]) -> f64 {
+    match (mesh.points.get(a), mesh.points.get(b)) {
+        (Some(&a), Some(&b)) => distance(a, b),
+        _ => f64::NAN,
+    }
+}
+
+/// Refuses numbers that the statement cannot take.
+pub(super) fn check(ground: &Ground) -> Result<(), ModelError> {
+    let demand = |good: bool, what: String, value: f64, must: &'static str| {
+        if good {
+            Ok(())
+        } else {
+            Err(ModelError::Parameter { what, value, must })
+        }
+    };
+    let positive = |x: f64| x.is_finite() && x > 0.0;
+    let not_negative = |x: f64| x.is_finite() && x >= 0.0;
+    let layers = ground.layers.len();
+    if layers == 0 {
+        return Err(ModelError::Size {
+            what: "layers of the ground",
+            found: 0,
+            expected: 1,
+        });
+    }
+    for (l, layer) in ground.layers.iter().enumerate() {
+        let (t, s) = (layer.transmissivity, layer.storativity);
+        demand(
+            positive(t),
+            format!("transmissivity of layer {}", layer.name),
+            t,
+            "it must be positive",
+        )?;
+        demand(
+            positive(s),
+            format!("storativity of layer {}", layer.name),
+            s,
+            "it must be positive",
+        )?;
+        if let Some(leakance) = layer.leakance_below {
+            let what = format!("leakance below layer {}", layer.name);
+            demand(
+                not_negative(leakance),
+                what,
+                leakance,
+                "it must be zero or more",
+            )?;
+            let what = format!("leakance below layer {}", layer.name);
+            demand(l + 1 < layers, what, leakance, "there is no layer below")?;
+        }
+    }
+    for barrier in &ground.barriers {
+        let what = format!("conductance of barrier {}", barrier.name);
+        demand(
+            not_negative(barrier.conductance),
+            what,
+            barrier.conductance,
+            "it must be zero or more",
+        )?;
+    }
+    let seats = (0..ground.gauges.len()).map(|g| {
+        (
+            format!("layer of gauge {g}"),
+            ground.gauge_at(g).map(|(_, l)| l),
+        )
+    });
+    let wells = ground
+        .wells
+        .iter()
+        .map(|w| (format!("layer of well {}", w.name), Some(w.layer)));
+    let others = ground
+        .neighbours
+        .iter()
+        .map(|n| (format!("layer of neighbour {}", n.name), Some(n.layer)));
+    for (what, layer) in seats.chain(wells).chain(others) {
+        let value = layer.map_or(f64::NAN, |l| l as f64);
+        demand(
+            layer.is_some_and(|l| l < layers),
+            what,
+            value,
+            "the ground has no such layer",
+        )?;
+    }
+    for well in &ground.wells {
+        let what = format!("storage of well {}", well.name);
+        demand(
+            not_negative(well.storage),
+            what,
+            well.storage,
+            "it must be zero or more",
+        )?;
+    }
+    Ok(())
+}
