@@ -3,7 +3,7 @@
 use sqlx::{Connection, SqliteConnection};
 
 use super::error::{Result, StoreError};
-use super::rows::{self, to_json};
+use super::rows::{spelled, to_json};
 use super::sql;
 use super::writer::Writer;
 use crate::record::{Alarm, Outgoing, Transition};
@@ -110,7 +110,7 @@ async fn insert_transition(
         .bind(&alarm.id.0)
         .bind(alarm.occurrence)
         .bind(alarm.sequence)
-        .bind(rows::transition_code(transition.kind))
+        .bind(spelled("a transition", &transition.kind)?)
         .bind(transition.at.0)
         .bind(transition.recorded.0)
         .bind(transition.by.as_deref())
@@ -129,15 +129,15 @@ async fn set_alarm(
 ) -> Result<()> {
     sqlx::query(sql::SET_ALARM)
         .bind(&alarm.id.0)
-        .bind(rows::kind_code(alarm.kind))
+        .bind(spelled("an alarm", &alarm.kind)?)
         .bind(alarm.state().name())
-        .bind(rows::condition_code(alarm.condition))
-        .bind(rows::acknowledgement_code(alarm.acknowledgement))
-        .bind(rows::latch_code(alarm.latch))
-        .bind(rows::suppression_code(&alarm.suppression))
+        .bind(spelled("an alarm", &alarm.condition)?)
+        .bind(spelled("an alarm", &alarm.acknowledgement)?)
+        .bind(spelled("an alarm", &alarm.latch)?)
+        .bind(to_json("an alarm", &alarm.suppression)?)
         .bind(alarm.occurrence)
         .bind(alarm.sequence)
-        .bind(rows::priority_code(alarm.priority))
+        .bind(spelled("an alarm", &alarm.priority)?)
         .bind(alarm.since.0)
         .bind(position)
         .bind(body)

@@ -1,10 +1,10 @@
 //! How readings and enumerations are written in columns, and read back.
 
+use serde::Serialize;
+use serde::de::DeserializeOwned;
+
 use super::error::{Result, StoreError};
-use crate::record::{
-    Acknowledgement, AlarmKind, ChannelId, ClockEpoch, ClockState, Condition, DeviceStatus, Latch,
-    Priority, Quality, Reading, Stamp, Suppression, TransitionKind,
-};
+use crate::record::{ChannelId, ClockEpoch, ClockState, DeviceStatus, Quality, Reading, Stamp};
 
 /// Columns of a reading: channel, sampled, epoch, received, value, raw, quality, device, clock.
 pub(super) type ReadingRow = (i64, i64, i64, i64, Option<f64>, Option<f64>, i64, i64, i64);
@@ -70,81 +70,32 @@ fn clock_from(code: i64) -> Option<ClockState> {
     })
 }
 
-pub(super) fn transition_code(kind: TransitionKind) -> &'static str {
-    match kind {
-        TransitionKind::Raised => "raised",
-        TransitionKind::Acknowledged => "acknowledged",
-        TransitionKind::Returned => "returned",
-        TransitionKind::Changed => "changed",
-        TransitionKind::Revised => "revised",
-        TransitionKind::Adopted => "adopted",
+/// The spelling of a plain enumeration, which is the one it has in events and commands.
+pub(super) fn spelled<T: Serialize>(what: &'static str, value: &T) -> Result<String> {
+    match serde_json::to_value(value) {
+        Ok(serde_json::Value::String(text)) => Ok(text),
+        Ok(other) => Err(StoreError::Unwritable {
+            what,
+            why: format!("{other} is no single word"),
+        }),
+        Err(e) => Err(StoreError::Unwritable {
+            what,
+            why: e.to_string(),
+        }),
     }
 }
 
-pub(super) fn transition_from(code: &str) -> Option<TransitionKind> {
-    Some(match code {
-        "raised" => TransitionKind::Raised,
-        "acknowledged" => TransitionKind::Acknowledged,
-        "returned" => TransitionKind::Returned,
-        "changed" => TransitionKind::Changed,
-        "revised" => TransitionKind::Revised,
-        "adopted" => TransitionKind::Adopted,
-        _ => return None,
-    })
-}
-
-pub(super) fn kind_code(kind: AlarmKind) -> &'static str {
-    match kind {
-        AlarmKind::Limit => "limit",
-        AlarmKind::Watch => "watch",
-        AlarmKind::Blind => "blind",
-    }
-}
-
-pub(super) fn condition_code(condition: Condition) -> &'static str {
-    match condition {
-        Condition::Present => "present",
-        Condition::Absent => "absent",
-    }
-}
-
-pub(super) fn acknowledgement_code(acknowledgement: Acknowledgement) -> &'static str {
-    match acknowledgement {
-        Acknowledgement::Acknowledged => "acknowledged",
-        Acknowledgement::Unacknowledged => "unacknowledged",
-    }
-}
-
-pub(super) fn latch_code(latch: Latch) -> &'static str {
-    match latch {
-        Latch::None => "none",
-        Latch::Open => "open",
-        Latch::Set => "set",
-    }
-}
-
-pub(super) fn suppression_code(suppression: &Suppression) -> &'static str {
-    match suppression {
-        Suppression::None => "none",
-        Suppression::Shelved { .. } => "shelved",
-        Suppression::Design { .. } => "design",
-        Suppression::OutOfService => "out-of-service",
-    }
-}
-
-pub(super) fn priority_code(priority: Priority) -> &'static str {
-    match priority {
-        Priority::Low => "low",
-        Priority::Medium => "medium",
-        Priority::High => "high",
-    }
+/// The value of a spelling.
+pub(super) fn from_spelled<T: DeserializeOwned>(what: &'static str, text: &str) -> Result<T> {
+    serde_json::from_value(serde_json::Value::String(text.to_owned()))
+        .map_err(|e| StoreError::unreadable(what, e))
 }
 
 /// Writes as JSON what must read back the same: JSON has no word for infinity or NaN, and a number lost that
 /// way would only be missed at the next start.
 pub(super) fn to_json<T>(what: &'static str, value: &T) -> Result<String>
 where
-    T: serde::Serialize + serde::de::DeserializeOwned + PartialEq,
+    T: Serialize + DeserializeOwned + PartialEq,
 {
     let unwritable = |why: String| StoreError::Unwritable { what, why };
     let text = serde_json::to_string(value).map_err(|e| unwritable(e.to_string()))?;
@@ -160,6 +111,7 @@ where
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::record::RejectReason;
 
     #[test]
     fn codes_read_back() {
@@ -170,16 +122,18 @@ mod tests {
             assert_eq!(clock_code(clock_from(code).unwrap()), code);
         }
         assert!(device_from(5).is_none() && clock_from(4).is_none());
-        for kind in [
-            TransitionKind::Raised,
-            TransitionKind::Acknowledged,
-            TransitionKind::Returned,
-            TransitionKind::Changed,
-            TransitionKind::Revised,
-            TransitionKind::Adopted,
-        ] {
-            assert_eq!(transition_from(transition_code(kind)), Some(kind));
-        }
+    }
+
+    #[test]
+    fn spellings_are_those_of_events_and_read_back() {
+        let word = spelled("a reason", &RejectReason::NotANumber).unwrap();
+        assert_eq!(word, RejectReason::NotANumber.name());
+        assert_eq!(
+            from_spelled::<RejectReason>("a reason", &word).unwrap(),
+            RejectReason::NotANumber
+        );
+        assert!(from_spelled::<RejectReason>("a reason", "no-such").is_err());
+        assert!(spelled("a pair", &(1, 2)).is_err());
     }
 
     #[test]

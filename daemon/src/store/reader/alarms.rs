@@ -6,7 +6,7 @@ use sha2::{Digest, Sha256};
 
 use super::super::error::{Result, StoreError};
 use super::super::outbox::Waiting;
-use super::super::rows;
+use super::super::rows::from_spelled;
 use super::super::sql;
 use super::Reader;
 use crate::record::{Alarm, Outgoing, OutgoingId, Stamp, Transition};
@@ -155,14 +155,11 @@ fn alarm(body: &str) -> Result<Alarm> {
 fn transition(
     (id, kind, at, recorded, by, note, body): TransitionRow,
 ) -> Result<(i64, Transition)> {
-    let kind = rows::transition_from(&kind).ok_or_else(|| {
-        StoreError::unreadable(format!("transition {id}"), format!("kind {kind:?}"))
-    })?;
     Ok((
         id,
         Transition {
             alarm: alarm(&body)?,
-            kind,
+            kind: from_spelled("a transition", &kind)?,
             at: Stamp(at),
             recorded: Stamp(recorded),
             by,

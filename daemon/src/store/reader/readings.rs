@@ -1,11 +1,10 @@
 //! Readings and refusals.
 
 use super::super::error::Result;
-use super::super::rows::{self, ReadingRow};
+use super::super::rows::{self, ReadingRow, from_spelled};
 use super::super::sql;
 use super::Reader;
-use crate::record::{ChannelId, ClockEpoch, Reading, RejectReason, Rejected, Stamp};
-use crate::store::StoreError;
+use crate::record::{ChannelId, ClockEpoch, Reading, Rejected, Stamp};
 
 /// A row of the table of rejected deliveries.
 type RejectedRow = (
@@ -140,9 +139,6 @@ impl Reader {
         rows.into_iter()
             .map(
                 |(id, channel, source, sampled, received, raw, reason, detail)| {
-                    let reason = reason_from(&reason).ok_or_else(|| {
-                        StoreError::unreadable("a rejected delivery", format!("reason {reason:?}"))
-                    })?;
                     Ok((
                         id,
                         Rejected {
@@ -151,7 +147,7 @@ impl Reader {
                             sampled: sampled.map(Stamp),
                             received: Stamp(received),
                             raw,
-                            reason,
+                            reason: from_spelled("a rejected delivery", &reason)?,
                             detail,
                         },
                     ))
@@ -205,21 +201,4 @@ impl Reader {
 fn sort(readings: &mut [Reading]) {
     readings
         .sort_by(|a, b| (a.sampled, &a.channel, a.epoch).cmp(&(b.sampled, &b.channel, b.epoch)));
-}
-
-fn reason_from(name: &str) -> Option<RejectReason> {
-    use RejectReason as R;
-    [
-        R::Malformed,
-        R::Checksum,
-        R::Payload,
-        R::Unit,
-        R::NotANumber,
-        R::Time,
-        R::UnknownChannel,
-        R::DeviceError,
-        R::Conflict,
-    ]
-    .into_iter()
-    .find(|reason| reason.name() == name)
 }
