@@ -46,7 +46,7 @@ NEIGHBOUR = ("Cobb disposal well", (1580.0, 860.0))
 
 # What happens, in days since the start of the log.
 LEAK_AT, LEAK_DAY, LEAK_GROWS, LEAK_SHARE = (-130.0, -430.0), 48.25, 6.0, 0.036
-STEP_GAUGE, STEP_DAY, STEP_SIZE = "M-2", 70.4, 5.2e3
+STEP_GAUGE, STEP_DAY, STEP_SIZE = "M-2", 70.4, 3.2e3
 NEIGHBOUR_DAY, NEIGHBOUR_RATE = 85.1, 290.0 / DAY
 
 # Planned rates [m3/d] from a day of the log on. Days 0 to 40 exercise every well for the commissioning.
