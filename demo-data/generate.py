@@ -42,12 +42,12 @@ RADIUS = 0.11              # m, of every well
 # name, place [m], skin
 WELLS = [("Q-1", (0.0, 0.0), 2.1), ("Q-2", (720.0, -310.0), 0.6), ("Q-3", (-420.0, -680.0), 3.4)]
 OBSERVATION = [("M-1", (-640.0, 150.0)), ("M-2", (310.0, 560.0)), ("M-3", (180.0, -960.0))]
-NEIGHBOUR = ("Cobb disposal well", (1580.0, 860.0))
+NEIGHBOUR = ("Cobb disposal well", (1700.0, -160.0))
 
 # What happens, in days since the start of the log.
 LEAK_AT, LEAK_DAY, LEAK_GROWS, LEAK_SHARE = (-130.0, -430.0), 48.25, 6.0, 0.036
 STEP_GAUGE, STEP_DAY, STEP_SIZE = "M-2", 70.4, 3.2e3
-NEIGHBOUR_DAY, NEIGHBOUR_RATE = 85.1, 290.0 / DAY
+NEIGHBOUR_DAY, NEIGHBOUR_RATE = 85.1, 90.0 / DAY
 
 # Planned rates [m3/d] from a day of the log on. Days 0 to 40 exercise every well for the commissioning.
 PLAN = {
