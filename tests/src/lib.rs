@@ -7,6 +7,7 @@ pub mod broker;
 pub mod collect;
 pub mod daemon;
 pub mod modbus;
+pub mod pty;
 pub mod publisher;
 pub mod readings;
 pub mod site;
@@ -19,6 +20,7 @@ pub use broker::Broker;
 pub use collect::{Collector, Message};
 pub use daemon::{Daemon, Output, borewake, borewake_in};
 pub use modbus::ModbusServer;
+pub use pty::TextDevice;
 pub use publisher::Publisher;
 
 /// How long a state may take to be reached before the test gives up. Two loaded cores must do.

@@ -3,7 +3,6 @@
 use std::collections::BTreeMap;
 use std::fs::File;
 use std::future::Future;
-use std::os::unix::fs::OpenOptionsExt as _;
 use std::pin::Pin;
 use std::sync::{Arc, Mutex, MutexGuard};
 use std::time::Duration;
@@ -11,10 +10,6 @@ use std::time::Duration;
 use tokio::task::JoinHandle;
 use tokio_modbus::server::{Service, rtu::Server};
 use tokio_modbus::{ExceptionCode, Request, Response, SlaveRequest};
-use tokio_serial::{SerialPort, SerialStream};
-
-/// `O_NOCTTY` of Linux.
-const NO_CONTROLLING_TERMINAL: i32 = 0o400;
 
 #[derive(Default)]
 struct Device {
@@ -36,8 +31,6 @@ impl Shared {
 pub struct ModbusServer {
     path: String,
     device: Shared,
-    // The near end stays open here, so that the far end outlives a daemon that comes and goes. A plain file: a serial
-    // port of the library's would lock the daemon out.
     _near: File,
     task: JoinHandle<()>,
 }
@@ -49,15 +42,7 @@ impl ModbusServer {
     /// The system gives no pty.
     #[must_use]
     pub fn start() -> Self {
-        let (far, near) = SerialStream::pair().expect("a pty pair");
-        let path = near.name().expect("a pty's near end has a name");
-        let held = File::options()
-            .read(true)
-            .write(true)
-            .custom_flags(NO_CONTROLLING_TERMINAL)
-            .open(&path)
-            .expect("the near end opens");
-        drop(near);
+        let (far, near, path) = crate::pty::open();
         let device = Shared::default();
         let service = device.clone();
         let task = tokio::spawn(async move {
@@ -66,7 +51,7 @@ impl ModbusServer {
         Self {
             path,
             device,
-            _near: held,
+            _near: near,
             task,
         }
     }

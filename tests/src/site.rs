@@ -140,6 +140,28 @@ register = {{ table = "holding", address = 200, type = "f32", order = "big" }}
     )
 }
 
+/// Pressure of O from lines `O=<kPa> <RFC 3339>*<checksum>`.
+#[must_use]
+pub fn text_source(port: &str) -> String {
+    format!(
+        r#"
+[[source]]
+name = "logger"
+kind = "text-line"
+port = "{port}"
+baud = 9600
+separator = "blank"
+time_field = 2
+checksum = "xor"
+[[source.channel]]
+id = "o.pressure"
+kind = "pressure"
+unit = "kPa"
+prefix = "O="
+"#
+    )
+}
+
 /// Pressure of observation gauges from a broker: topic `pads/<gauge>/p`, payload `{"p": kPa, "t": RFC 3339}`.
 #[must_use]
 pub fn mqtt_source(url: &str) -> String {
