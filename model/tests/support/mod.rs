@@ -1,5 +1,11 @@
 //! Sites and solvers that tests of the ground share.
-#![allow(dead_code, reason = "each test file uses its own share of this one")]
+#![allow(
+    dead_code,
+    unreachable_pub,
+    clippy::unwrap_used,
+    clippy::panic,
+    reason = "each test file uses its own share of this one, and helpers of tests may fail loudly"
+)]
 
 use borewake_model::ground::{Edge, EdgeKind, Gauge, Ground, Layer, Neighbour, Point, Seat, Well};
 use borewake_model::weak_form::{Functional, SparseBlock, System};
