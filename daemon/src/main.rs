@@ -1,3 +1,7 @@
 //! The `borewake` program.
 
-fn main() {}
+use std::process::ExitCode;
+
+fn main() -> ExitCode {
+    borewake::cli::main(std::env::args_os()).into()
+}

@@ -1,1 +1,95 @@
 //! One file a verb.
+//!
+//! A verb is a `clap::Args` struct in its own file with `fn run(self, context: &Context) -> Result<Exit, Failure>`. It is
+//! listed once in [`Verb`] and once in [`Verb::run`]; there is nothing else to do, and a verb that is not there yet is
+//! in neither.
+
+mod check;
+mod exit;
+mod logs;
+mod summary;
+pub mod table;
+
+use std::ffi::OsString;
+
+use clap::{Parser, Subcommand};
+
+pub use exit::{Exit, Failure};
+pub use summary::GroundSummary;
+
+/// Watches the pressure of wells, dewatering and embankments, unattended at the site.
+#[derive(Debug, Parser)]
+#[command(name = "borewake", version, arg_required_else_help = true)]
+#[command(after_help = "\
+Exit codes: 0 done; 1 done, and what was asked for does not hold; 2 the command or site file is wrong;
+3 the input or store cannot be used; 4 interrupted; 70 a panic in `run`.
+Logs go to standard error; BOREWAKE_LOG=debug says more (also info, warn, or per room: borewake::intake=debug).")]
+struct Cli {
+    /// Prints one JSON document (or one JSON value a line, for what goes on) in place of text
+    #[arg(long, global = true)]
+    json: bool,
+    #[command(subcommand)]
+    verb: Verb,
+}
+
+/// What every verb is told.
+#[derive(Debug, Clone, Copy)]
+pub struct Context {
+    /// Whether JSON is asked for on standard output.
+    pub json: bool,
+}
+
+/// The verbs there are.
+#[derive(Debug, Subcommand)]
+enum Verb {
+    Check(check::Check),
+}
+
+impl Verb {
+    fn run(self, context: &Context) -> Result<Exit, Failure> {
+        match self {
+            Self::Check(verb) => verb.run(context),
+        }
+    }
+}
+
+/// Runs the program on these arguments, the first of which is its own name, and gives the code to end with.
+pub fn main(arguments: impl IntoIterator<Item = OsString>) -> Exit {
+    let cli = match Cli::try_parse_from(arguments) {
+        Ok(cli) => cli,
+        Err(wrong) => {
+            let exit = if wrong.use_stderr() {
+                Exit::Wrong
+            } else {
+                Exit::Done
+            };
+            // Help into a closed pipe is no failure.
+            let _ = wrong.print();
+            return exit;
+        }
+    };
+    logs::start();
+    let context = Context { json: cli.json };
+    match cli.verb.run(&context) {
+        Ok(exit) => exit,
+        Err(failure) => {
+            eprintln!("borewake: {failure}");
+            failure.exit()
+        }
+    }
+}
+
+/// Writes text to standard output. A reader that has gone away (`| head`) is no failure.
+///
+/// # Errors
+/// Standard output cannot be written.
+pub fn print(text: &str) -> Result<(), Failure> {
+    use std::io::{ErrorKind, Write as _};
+    let mut out = std::io::stdout().lock();
+    match out.write_all(text.as_bytes()).and_then(|()| out.flush()) {
+        Err(e) if e.kind() != ErrorKind::BrokenPipe => Err(Failure::unusable(
+            anyhow::Error::new(e).context("standard output"),
+        )),
+        _ => Ok(()),
+    }
+}

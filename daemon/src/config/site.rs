@@ -7,7 +7,7 @@ use std::time::Duration;
 use borewake_model::ground::Ground;
 use borewake_model::units::UnitSystem;
 
-use super::source::{ChannelSettings, SourceSettings, TopicPattern};
+use super::source::{ChannelSettings, SecretFile, SourceConfig, SourceSettings, TopicPattern};
 use super::{MqttEndpoint, Note};
 use crate::record::{AlarmId, ChannelId, Holds, Priority, SourceName, Stamp};
 
@@ -76,6 +76,18 @@ impl Site {
     #[must_use]
     pub fn source(&self, name: &SourceName) -> Option<&SourceSettings> {
         self.sources.iter().find(|s| s.name == *name)
+    }
+
+    /// Every secret file named, in file order.
+    pub fn secrets(&self) -> impl Iterator<Item = &SecretFile> {
+        let sources = self.sources.iter().filter_map(|s| match &s.config {
+            SourceConfig::Mqtt(source) => source.endpoint.password.as_ref(),
+            _ => None,
+        });
+        let publish = self.publish.iter().filter_map(|p| match p {
+            PublishSettings::Mqtt(publish) => publish.endpoint.password.as_ref(),
+        });
+        sources.chain(publish)
     }
 
     /// The command that renews the ground file, for messages.

@@ -377,6 +377,15 @@ impl TopicPattern {
         })
     }
 
+    /// A text without placeholders, whatever it holds.
+    #[must_use]
+    pub fn plain(text: &str) -> Self {
+        Self {
+            text: text.into(),
+            parts: [PatternPart::Literal(text.to_owned())].into(),
+        }
+    }
+
     /// The pattern as written.
     #[must_use]
     pub fn as_str(&self) -> &str {
@@ -490,6 +499,13 @@ impl SecretFile {
     #[must_use]
     pub fn path(&self) -> &Path {
         &self.0
+    }
+
+    /// Whether others than the owner may read it.
+    #[must_use]
+    pub fn open_to_others(&self) -> bool {
+        use std::os::unix::fs::PermissionsExt as _;
+        std::fs::metadata(&self.0).is_ok_and(|m| m.permissions().mode() & 0o077 != 0)
     }
 
     /// Reads the secret; a line end at its end is dropped.

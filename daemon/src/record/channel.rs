@@ -57,6 +57,21 @@ pub enum ChannelKind {
     Rain,
 }
 
+impl ChannelKind {
+    /// The name used in the site file and in tables.
+    #[must_use]
+    pub fn name(self) -> &'static str {
+        match self {
+            Self::Pressure => "pressure",
+            Self::Rate => "rate",
+            Self::Barometer => "barometer",
+            Self::Temperature => "temperature",
+            Self::Stage => "stage",
+            Self::Rain => "rain",
+        }
+    }
+}
+
 /// How the value of a rate channel stands to its instant.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case")]

@@ -1,0 +1,109 @@
+//! `borewake check`: reads the site file and explains every mistake.
+
+use std::path::PathBuf;
+
+use clap::Args;
+use serde_json::{Value, json};
+
+use super::summary::{summary_json, summary_text};
+use super::{Context, Exit, Failure, GroundSummary, print};
+use crate::config::{self, ConfigError, Mistake, Note, Site};
+
+/// Reads the site file and explains every mistake with line, value and mend
+#[derive(Debug, Args)]
+#[command(after_help = "\
+Example:
+  borewake check site.toml
+
+Ends with 0 where the file holds, with 1 where it has mistakes, with 2 where it cannot be read.")]
+pub(super) struct Check {
+    /// The site file
+    #[arg(value_name = "SITE")]
+    site: PathBuf,
+}
+
+impl Check {
+    pub(super) fn run(self, context: &Context) -> Result<Exit, Failure> {
+        match config::load(&self.site) {
+            Ok(site) => {
+                print(&held(&site, None, context.json))?;
+                Ok(Exit::Done)
+            }
+            Err(ConfigError::Wrong { path, mistakes }) => {
+                let text = if context.json {
+                    document(&wrong_json(&path.display().to_string(), &mistakes))
+                } else {
+                    format!("{}\n", ConfigError::Wrong { path, mistakes })
+                };
+                print(&text)?;
+                Ok(Exit::DoesNotHold)
+            }
+            Err(unreadable) => Err(unreadable.into()),
+        }
+    }
+}
+
+/// What is said of a site file that holds, with the model's size and certificate where there is a ground file.
+fn held(site: &Site, ground: Option<&GroundSummary>, json: bool) -> String {
+    let notes = notes(site);
+    if json {
+        return document(&json!({
+            "holds": true,
+            "file": site.path.display().to_string(),
+            "mistakes": [],
+            "notes": notes,
+            "site": summary_json(site),
+            "model": ground.map(|g| g.json.clone()),
+        }));
+    }
+    let mut text = summary_text(site);
+    if let Some(ground) = ground {
+        text += &format!("\nModel\n{}", ground.text);
+    }
+    if !notes.is_empty() {
+        text += "\nTo know\n";
+        for note in &notes {
+            let at = if note.line > 0 {
+                format!("line {}: ", note.line)
+            } else {
+                String::new()
+            };
+            text += &format!("  {at}{}: {}\n", note.key, note.text);
+        }
+    }
+    text += &format!("\n{} holds.\n", site.path.display());
+    text
+}
+
+/// Notes of the file, and what only the machine it is checked on can tell.
+fn notes(site: &Site) -> Vec<Note> {
+    let mut notes = site.notes.clone();
+    let here = |key: &str, text: String| Note {
+        line: 0,
+        column: 0,
+        key: key.to_owned(),
+        text,
+    };
+    for secret in site.secrets() {
+        if let Err(wrong) = secret.read() {
+            notes.push(here(
+                "password_file",
+                format!("{wrong}; `run` will not start without it"),
+            ));
+        } else if secret.open_to_others() {
+            let path = secret.path().display();
+            let text = format!("others may read {path}; mend: chmod 600 {path}");
+            notes.push(here("password_file", text));
+        }
+    }
+    notes
+}
+
+fn wrong_json(path: &str, mistakes: &[Mistake]) -> Value {
+    json!({ "holds": false, "file": path, "mistakes": mistakes, "notes": [] })
+}
+
+/// One JSON document as text.
+fn document(value: &Value) -> String {
+    format!("{value:#}\n")
+}

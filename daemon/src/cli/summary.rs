@@ -1,0 +1,445 @@
+//! A site file in tables, for `check`.
+
+use std::fmt::Write as _;
+
+use borewake_model::ground::{EdgeKind, Seat};
+use borewake_model::units::{Dimension, significant};
+use serde_json::{Value, json};
+
+use super::table::{Align, Table};
+use crate::config::{
+    GaugeString, MqttEndpoint, Parity, PublishSettings, Reference, SerialSettings, Side, Site,
+    SourceConfig,
+};
+use crate::record::Priority;
+
+/// The model as commissioned, for people and for programs.
+#[derive(Debug, Clone)]
+pub struct GroundSummary {
+    /// Lines of text, each starting with two blanks.
+    pub text: String,
+    /// The same as JSON.
+    pub json: Value,
+}
+
+/// The site in tables.
+pub(super) fn summary_text(site: &Site) -> String {
+    let show = |dimension, value| site.units.show(dimension, value);
+    let time = |t: std::time::Duration| show(Dimension::Time, t.as_secs_f64());
+    let mut text = format!("{} ({})\n", site.name, site.id);
+    let watch = &site.watch;
+    let _ = writeln!(
+        text,
+        "  store {}\n  blocks of {}, waiting {} for late readings; a missing rate is held for {}\n  one false alarm in {}",
+        site.store.folder.display(),
+        time(watch.block),
+        time(watch.lateness),
+        time(watch.hold_rate),
+        show(Dimension::Time, watch.false_alarm_interval),
+    );
+    let parts = [
+        ("Layers", layers(site)),
+        ("Edge", edge(site)),
+        ("Barriers", barriers(site)),
+        ("Wells", wells(site)),
+        ("Neighbours", neighbours(site)),
+        ("Gauges", gauges(site)),
+        ("Sources", sources(site)),
+        ("Limits", limits(site)),
+        ("Publish", publish(site)),
+    ];
+    for (title, part) in parts {
+        if !part.is_empty() {
+            let _ = write!(text, "\n{title}\n{part}");
+        }
+    }
+    text
+}
+
+/// A heading with the unit its column is shown in.
+fn head(site: &Site, name: &str, dimension: Dimension) -> String {
+    let unit = site.units.unit(dimension);
+    if unit.is_empty() {
+        name.to_owned()
+    } else {
+        format!("{name} {unit}")
+    }
+}
+
+/// A number in the site's unit.
+fn number(site: &Site, dimension: Dimension, value: f64) -> String {
+    significant(site.units.number(dimension, value), 4)
+}
+
+/// A coordinate in the site's unit, to a tenth.
+fn coordinate(site: &Site, value: f64) -> String {
+    let text = format!("{:.1}", site.units.number(Dimension::Length, value));
+    text.strip_suffix(".0").map(str::to_owned).unwrap_or(text)
+}
+
+fn text_of(table: &Table) -> String {
+    if table.is_empty() {
+        String::new()
+    } else {
+        table.text(2)
+    }
+}
+
+fn layers(site: &Site) -> String {
+    let mut table = Table::new(&[
+        ("name", Align::Left),
+        (
+            &head(site, "transmissivity", Dimension::Transmissivity),
+            Align::Right,
+        ),
+        (
+            &head(site, "storativity", Dimension::Storativity),
+            Align::Right,
+        ),
+        ("diffusivity m2/s", Align::Right),
+        (
+            &head(site, "leakance below", Dimension::Leakance),
+            Align::Right,
+        ),
+    ]);
+    for layer in &site.ground.layers {
+        let below = layer.leakance_below;
+        table.row([
+            layer.name.clone(),
+            number(site, Dimension::Transmissivity, layer.transmissivity),
+            number(site, Dimension::Storativity, layer.storativity),
+            significant(layer.transmissivity / layer.storativity, 4),
+            below.map_or_else(|| "-".to_owned(), |l| number(site, Dimension::Leakance, l)),
+        ]);
+    }
+    text_of(&table)
+}
+
+fn edge_word(kind: EdgeKind) -> &'static str {
+    match kind {
+        EdgeKind::Open => "open",
+        EdgeKind::Closed => "closed",
+        EdgeKind::Fixed => "fixed",
+    }
+}
+
+fn edge(site: &Site) -> String {
+    let edge = &site.ground.edge;
+    let distance = site.units.show(Dimension::Length, edge.distance);
+    format!("  {}, {distance} from the centre\n", edge_word(edge.kind))
+}
+
+fn barriers(site: &Site) -> String {
+    let mut table = Table::new(&[
+        ("name", Align::Left),
+        ("corners", Align::Right),
+        (
+            &head(site, "conductance", Dimension::Conductance),
+            Align::Right,
+        ),
+    ]);
+    for barrier in &site.ground.barriers {
+        table.row([
+            barrier.name.clone(),
+            barrier.line.len().to_string(),
+            number(site, Dimension::Conductance, barrier.conductance),
+        ]);
+    }
+    text_of(&table)
+}
+
+/// The name of a layer.
+fn layer_name(site: &Site, layer: usize) -> String {
+    let layer = site.ground.layers.get(layer);
+    layer.map(|l| l.name.clone()).unwrap_or_default()
+}
+
+fn wells(site: &Site) -> String {
+    let mut table = Table::new(&[
+        ("name", Align::Left),
+        (&head(site, "east", Dimension::Length), Align::Right),
+        (&head(site, "north", Dimension::Length), Align::Right),
+        ("layer", Align::Left),
+        (&head(site, "radius", Dimension::Length), Align::Right),
+        ("skin", Align::Right),
+        ("rate", Align::Left),
+        ("share %", Align::Right),
+        ("meter", Align::Left),
+        ("past rates", Align::Right),
+    ]);
+    for (well, settings) in site.ground.wells.iter().zip(&site.wells) {
+        let meter = settings.meter.map_or_else(
+            || "from the data".to_owned(),
+            |m| {
+                format!(
+                    "{} % bias, {} % over {}",
+                    significant(100.0 * m.bias, 3),
+                    significant(100.0 * m.error, 3),
+                    site.units.show(Dimension::Time, m.memory.as_secs_f64())
+                )
+            },
+        );
+        table.row([
+            well.name.clone(),
+            coordinate(site, well.at[0]),
+            coordinate(site, well.at[1]),
+            layer_name(site, well.layer),
+            number(site, Dimension::Length, well.radius),
+            significant(well.skin, 3),
+            settings.rate.to_string(),
+            significant(100.0 * settings.share, 4),
+            meter,
+            settings.past.len().to_string(),
+        ]);
+    }
+    text_of(&table)
+}
+
+fn neighbours(site: &Site) -> String {
+    let mut table = Table::new(&[
+        ("name", Align::Left),
+        (&head(site, "east", Dimension::Length), Align::Right),
+        (&head(site, "north", Dimension::Length), Align::Right),
+        ("layer", Align::Left),
+    ]);
+    for neighbour in &site.ground.neighbours {
+        table.row([
+            neighbour.name.clone(),
+            coordinate(site, neighbour.at[0]),
+            coordinate(site, neighbour.at[1]),
+            layer_name(site, neighbour.layer),
+        ]);
+    }
+    text_of(&table)
+}
+
+fn reference_word(reference: Reference) -> &'static str {
+    match reference {
+        Reference::Absolute => "absolute",
+        Reference::Vented => "vented",
+        Reference::Sealed => "sealed",
+        Reference::Differential => "differential",
+    }
+}
+
+fn string_word(string: GaugeString) -> &'static str {
+    match string {
+        GaugeString::Downhole => "downhole",
+        GaugeString::Surface => "surface",
+        GaugeString::Piezometer => "piezometer",
+    }
+}
+
+fn gauges(site: &Site) -> String {
+    let mut table = Table::new(&[
+        ("name", Align::Left),
+        (&head(site, "east", Dimension::Length), Align::Right),
+        (&head(site, "north", Dimension::Length), Align::Right),
+        ("in well", Align::Left),
+        ("layer", Align::Left),
+        ("channel", Align::Left),
+        ("reference", Align::Left),
+        ("string", Align::Left),
+        ("noise Pa", Align::Right),
+        (&head(site, "drift", Dimension::Drift), Align::Right),
+    ]);
+    for (index, (gauge, settings)) in site.ground.gauges.iter().zip(&site.gauges).enumerate() {
+        let ([x, y], layer) = site.ground.gauge_at(index).unwrap_or_default();
+        let well = match gauge.seat {
+            Seat::InWell(well) => site.ground.wells.get(well).map(|w| w.name.clone()),
+            Seat::InGround { .. } => None,
+        };
+        let usual = |stated: bool| if stated { "" } else { "*" };
+        table.row([
+            gauge.name.clone(),
+            coordinate(site, x),
+            coordinate(site, y),
+            well.unwrap_or_else(|| "-".to_owned()),
+            layer_name(site, layer),
+            settings.channel.to_string(),
+            reference_word(settings.reference).to_owned(),
+            string_word(settings.string).to_owned(),
+            format!(
+                "{}{}",
+                significant(gauge.noise, 4),
+                usual(settings.noise_stated)
+            ),
+            format!(
+                "{}{}",
+                number(site, Dimension::Drift, gauge.drift),
+                usual(settings.drift_stated)
+            ),
+        ]);
+    }
+    let mut text = text_of(&table);
+    if site
+        .gauges
+        .iter()
+        .any(|g| !(g.noise_stated && g.drift_stated))
+    {
+        text += "  * not stated in the site file: a usual value to start from\n";
+    }
+    text
+}
+
+fn serial_words(serial: &SerialSettings) -> String {
+    let parity = match serial.parity {
+        Parity::None => 'N',
+        Parity::Even => 'E',
+        Parity::Odd => 'O',
+    };
+    format!(
+        "{} {} {}{parity}{}",
+        serial.port.display(),
+        serial.baud,
+        serial.data_bits,
+        serial.stop_bits
+    )
+}
+
+/// A broker's address and user; never its password.
+fn broker_words(endpoint: &MqttEndpoint) -> String {
+    let scheme = if endpoint.tls { "mqtts" } else { "mqtt" };
+    let user = endpoint.user.as_ref().map(|u| format!(" as {u}"));
+    let host = if endpoint.host.contains(':') {
+        format!("[{}]", endpoint.host)
+    } else {
+        endpoint.host.clone()
+    };
+    let user = user.unwrap_or_default();
+    format!("{scheme}://{host}:{}{user}", endpoint.port)
+}
+
+fn source_words(config: &SourceConfig) -> String {
+    match config {
+        SourceConfig::TextLine(source) => serial_words(&source.serial),
+        SourceConfig::ModbusRtu(source) => {
+            let every = source.every.as_secs_f64();
+            format!(
+                "{}, every {} s",
+                serial_words(&source.serial),
+                significant(every, 4)
+            )
+        }
+        SourceConfig::Mqtt(source) => broker_words(&source.endpoint),
+        SourceConfig::Log(source) => match &source.path {
+            Some(path) => path.display().to_string(),
+            None => "named on the command line".to_owned(),
+        },
+    }
+}
+
+fn sources(site: &Site) -> String {
+    let mut table = Table::new(&[
+        ("name", Align::Left),
+        ("kind", Align::Left),
+        ("channels", Align::Right),
+        ("at", Align::Left),
+    ]);
+    for source in &site.sources {
+        table.row([
+            source.name.to_string(),
+            source.config.kind().to_owned(),
+            source.config.channel_count().to_string(),
+            source_words(&source.config),
+        ]);
+    }
+    text_of(&table)
+}
+
+fn side_word(side: Side) -> &'static str {
+    match side {
+        Side::Above => "above",
+        Side::Below => "below",
+    }
+}
+
+fn priority_word(priority: Priority) -> &'static str {
+    match priority {
+        Priority::Low => "low",
+        Priority::Medium => "medium",
+        Priority::High => "high",
+    }
+}
+
+fn limits(site: &Site) -> String {
+    let mut table = Table::new(&[
+        ("alarm", Align::Left),
+        ("side", Align::Left),
+        (&head(site, "value", Dimension::Pressure), Align::Right),
+        (&head(site, "deadband", Dimension::Pressure), Align::Right),
+        ("delay", Align::Right),
+        ("priority", Align::Left),
+        ("author", Align::Left),
+    ]);
+    for limit in &site.limits {
+        table.row([
+            limit.alarm.to_string(),
+            side_word(limit.side).to_owned(),
+            number(site, Dimension::Pressure, limit.value),
+            number(site, Dimension::Pressure, limit.deadband),
+            site.units.show(Dimension::Time, limit.delay.as_secs_f64()),
+            priority_word(limit.priority).to_owned(),
+            limit.author.clone(),
+        ]);
+    }
+    text_of(&table)
+}
+
+fn publish(site: &Site) -> String {
+    let mut text = String::new();
+    for publish in &site.publish {
+        let PublishSettings::Mqtt(mqtt) = publish;
+        let broker = broker_words(&mqtt.endpoint);
+        let _ = writeln!(text, "  {broker}, under {}/{}/", mqtt.topic_root, site.id);
+    }
+    text
+}
+
+/// The site as JSON, in SI.
+pub(super) fn summary_json(site: &Site) -> Value {
+    let gauges = site.ground.gauges.iter().zip(&site.gauges).enumerate();
+    json!({
+        "id": site.id,
+        "name": site.name,
+        "units": site.units.name(),
+        "store": site.store.folder.display().to_string(),
+        "ground_digest": site.ground_digest(),
+        "watch": {
+            "false_alarm_interval_s": site.watch.false_alarm_interval,
+            "lateness_s": site.watch.lateness.as_secs_f64(),
+            "hold_rate_s": site.watch.hold_rate.as_secs_f64(),
+            "block_s": site.watch.block.as_secs_f64(),
+        },
+        "layers": site.ground.layers,
+        "edge": site.ground.edge,
+        "barriers": site.ground.barriers,
+        "wells": site.ground.wells.iter().zip(&site.wells).map(|(w, s)| json!({
+            "name": w.name, "at_m": w.at, "layer": layer_name(site, w.layer), "radius_m": w.radius,
+            "skin": w.skin, "rate": s.rate, "share": s.share,
+        })).collect::<Vec<_>>(),
+        "neighbours": site.ground.neighbours.iter().map(|n| json!({
+            "name": n.name, "at_m": n.at, "layer": layer_name(site, n.layer),
+        })).collect::<Vec<_>>(),
+        "gauges": gauges.map(|(index, (g, s))| {
+            let (at, layer) = site.ground.gauge_at(index).unwrap_or_default();
+            json!({
+                "name": g.name, "at_m": at, "layer": layer_name(site, layer), "channel": s.channel,
+                "reference": reference_word(s.reference), "noise_Pa": g.noise, "drift_Pa_per_s": g.drift,
+            })
+        }).collect::<Vec<_>>(),
+        "sources": site.sources.iter().map(|s| json!({
+            "name": s.name, "kind": s.config.kind(), "channels": s.config.channel_count(),
+            "at": source_words(&s.config),
+        })).collect::<Vec<_>>(),
+        "limits": site.limits.iter().map(|l| json!({
+            "alarm": l.alarm, "channel": l.channel, "side": side_word(l.side), "value_Pa": l.value,
+            "deadband_Pa": l.deadband, "delay_s": l.delay.as_secs_f64(), "priority": l.priority,
+            "response": l.response, "author": l.author,
+        })).collect::<Vec<_>>(),
+        "publish": site.publish.iter().map(|p| {
+            let PublishSettings::Mqtt(mqtt) = p;
+            json!({ "kind": "mqtt", "at": broker_words(&mqtt.endpoint), "topic_root": mqtt.topic_root })
+        }).collect::<Vec<_>>(),
+    })
+}
