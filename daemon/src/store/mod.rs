@@ -34,6 +34,6 @@ pub use handle::Store;
 pub use open::{OpenReport, Opened, Outcome, SetAside};
 pub use options::{Durability, StoreOptions};
 pub use outbox::Waiting;
-pub use reader::{Judged, Reader};
+pub use reader::{Judged, Reader, Walk};
 pub use retention::{Retained, Retention};
 pub use verify::Problem;

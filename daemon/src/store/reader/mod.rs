@@ -3,6 +3,7 @@
 mod alarms;
 mod journal;
 mod readings;
+mod walk;
 
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
@@ -17,6 +18,7 @@ use super::sql;
 
 pub use journal::Judged;
 pub(in crate::store) use journal::entry_kind;
+pub use walk::Walk;
 
 /// Reads what is stored; cheap to clone. Each call sees one consistent state.
 #[derive(Debug, Clone)]

@@ -319,3 +319,34 @@ proptest! {
         prop_assert_eq!(whole, cut);
     }
 }
+
+#[tokio::test]
+async fn a_walk_meets_every_reading_in_sample_order() {
+    let (_dir, store) = fresh().await;
+    let mut readings: Vec<Reading> = (0..9000).map(|n| reading("a", n, 1.0)).collect();
+    readings.extend((0..40).map(|n| reading("b", n * 200, 2.0)));
+    readings.push(Reading {
+        epoch: ClockEpoch(2),
+        ..reading("a", 4095, 3.0)
+    });
+    store
+        .commit(vec![delivery(readings)], Stamp(0))
+        .await
+        .unwrap();
+    let channels = ["b".into(), "a".into(), "none".into()];
+    let (from, to) = (Stamp(Stamp::SECOND), Stamp(8999 * Stamp::SECOND));
+    let mut walk = store.reader().walk(&channels, from, to);
+    let mut met = Vec::new();
+    while let Some(reading) = walk.next().await.unwrap() {
+        met.push(reading);
+    }
+    assert_eq!(met.len(), 8998 + 39 + 1);
+    assert_eq!(
+        met,
+        store
+            .reader()
+            .readings_between(&channels, from, to)
+            .await
+            .unwrap()
+    );
+}
