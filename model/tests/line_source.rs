@@ -1,6 +1,11 @@
 //! The discrete ground against the line source in an endless one.
 
-#![allow(clippy::unwrap_used, reason = "tests may fail loudly")]
+#![allow(
+    clippy::indexing_slicing,
+    clippy::panic,
+    clippy::unwrap_used,
+    reason = "tests may fail loudly"
+)]
 
 mod support;
 
@@ -47,9 +52,8 @@ fn quadratic_elements_on_three_wells_and_six_gauges() {
                 let exact = k0(r * (s * S / T).sqrt()) / (2.0 * PI * T);
                 let peak = line_source(r, T, S, 200.0 * DAY);
                 let error = (value(gauge, &x, j) - exact) / peak;
-                if error.abs() > 1e-4 {
-                    println!("s {s:.2e} from {j} at {i} r {r:.1}: {error:.2e}");
-                }
+                // Quadratic elements may undershoot before the pressure arrives; here by less than this.
+                assert!(value(gauge, &x, j) > -1e-6 * peak);
                 worst = worst.max(error.abs());
             }
         }

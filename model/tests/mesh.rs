@@ -1,5 +1,12 @@
 //! Meshes of good and bad grounds.
 
+#![allow(
+    clippy::indexing_slicing,
+    clippy::panic,
+    clippy::unwrap_used,
+    reason = "tests may fail loudly"
+)]
+
 mod support;
 
 use borewake_model::ModelError;

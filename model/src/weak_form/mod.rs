@@ -5,10 +5,11 @@
 //!
 //! The statement itself stands once, in `statement`. A scheme answers four questions of it, one file each:
 //! what storage, conduction and a line joint amount to between the nodes of one triangle or segment, and
-//! what the value at a point is. `quadratic` is the working scheme; `linear` and `finite_volume` are
-//! there to be held against it and where a maximum principle matters.
+//! what the value at a point is. `quadratic` is the working scheme; `linear`, `finite_volume` and
+//! `finite_difference` are there to be held against it and where a maximum principle matters.
 
 mod assembly;
+mod finite_difference;
 mod finite_volume;
 mod linear;
 mod nodes;
@@ -91,6 +92,8 @@ pub enum Scheme {
     LinearLumped,
     /// Voronoi cells with a two-point flux through each face.
     FiniteVolume,
+    /// Differences on a rectilinear lattice, whose nodes are wells, not circles: see [`Mesh::lattice`].
+    FiniteDifference,
 }
 
 impl Scheme {
@@ -100,6 +103,7 @@ impl Scheme {
             Self::LinearConsistent => &linear::Linear { lumped: false },
             Self::LinearLumped => &linear::Linear { lumped: true },
             Self::FiniteVolume => &finite_volume::FiniteVolume,
+            Self::FiniteDifference => &finite_difference::FiniteDifference,
         }
     }
 }
@@ -132,7 +136,10 @@ pub fn discretise(
     options: &MeshOptions,
 ) -> Result<Discrete, ModelError> {
     statement::check(ground)?;
-    let mesh = Mesh::fit(ground, options)?;
+    let mesh = match scheme {
+        Scheme::FiniteDifference => Mesh::lattice(ground, options)?,
+        _ => Mesh::fit(ground, options)?,
+    };
     discretise_on(ground, scheme, mesh)
 }
 
@@ -142,6 +149,9 @@ pub fn discretise(
 /// As [`discretise`]; [`ModelError::Size`] where the mesh was fitted to another ground.
 pub fn discretise_on(ground: &Ground, scheme: Scheme, mesh: Mesh) -> Result<Discrete, ModelError> {
     statement::check(ground)?;
+    if scheme == Scheme::FiniteDifference {
+        finite_difference::check(&mesh)?;
+    }
     let nodes = Nodes::number(ground, &mesh, scheme.space())?;
     let system = statement::assemble(ground, &mesh, scheme.space(), &nodes)?;
     let mut discrete = Discrete {

@@ -3,6 +3,7 @@
     dead_code,
     unreachable_pub,
     clippy::unwrap_used,
+    clippy::indexing_slicing,
     clippy::panic,
     reason = "each test file uses its own share of this one, and helpers of tests may fail loudly"
 )]

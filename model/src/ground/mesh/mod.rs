@@ -6,7 +6,9 @@
 //! neighbouring points is filled until no gap is larger than the size asked for there, which keeps every
 //! angle above 25 degrees away from barriers.
 
+mod barrier;
 mod centre;
+mod lattice;
 mod line;
 mod points;
 mod polygon;
