@@ -106,7 +106,7 @@ pub(super) fn source(section: &mut Section<'_>, source: &SourceName, folder: &Pa
     for mut table in section.list("channel") {
         let read = channel(&mut table, source);
         let topic = table.must("topic", "topic = \"pads/{gauge}/p\"", |t, k| t.text(k));
-        let topic = topic.map(|text| (topic_pattern(&table, &text), text));
+        let topic = topic.and_then(|text| Some((topic_pattern(&table, &text)?, text)));
         if let Some((topic, text)) = &topic {
             same_placeholders(&table, &read, topic, text);
         }
@@ -130,13 +130,13 @@ pub(super) fn source(section: &mut Section<'_>, source: &SourceName, folder: &Pa
 }
 
 /// Reads a topic, in which wildcards are placeholders.
-fn topic_pattern(table: &Section<'_>, text: &At<String>) -> TopicPattern {
+fn topic_pattern(table: &Section<'_>, text: &At<String>) -> Option<TopicPattern> {
     if text.value.contains(['+', '#']) {
         let what = "a wildcard has no name here, so one channel would mix several gauges";
         let mend =
             "put a placeholder in its place, such as pads/{gauge}/p, and the same one in `id`";
         table.wrong("topic", text, what, mend);
-        return TopicPattern::plain(&text.value);
+        return None;
     }
     if text.value.len() > LONGEST_TOPIC {
         table.wrong(
@@ -146,7 +146,7 @@ fn topic_pattern(table: &Section<'_>, text: &At<String>) -> TopicPattern {
             "shorten it",
         );
     }
-    pattern(table, "topic", text)
+    Some(pattern(table, "topic", text))
 }
 
 /// Reports placeholders that only one of id and topic has.
