@@ -57,7 +57,7 @@ impl Plan {
             let end = i == 0 || i == last;
             let straight = !end
                 && match (part.get(i - 1), part.get(i + 1)) {
-                    (Some(&q), Some(&r)) => line::angle(p, q, r) > 0.9 * PI,
+                    (Some(&q), Some(&r)) => line::angle(p, q, r) > 0.8 * PI,
                     _ => false,
                 };
             if near || straight || (end && closed && i == last) || self.find(p).is_some() {
@@ -69,8 +69,10 @@ impl Plan {
                 .unwrap_or(p);
             let index = self.add(p, &format!("barrier {name}"));
             if let Some(centre) = self.centres.get_mut(index) {
+                centre.on_barrier = true;
                 centre.turn = (toward[1] - p[1]).atan2(toward[0] - p[0]);
-                centre.start = 0.02 * distance(p, toward);
+                // The flow's singularity is strong at an end and weak at a corner.
+                centre.start = if end { 0.02 } else { 0.3 } * distance(p, toward);
             }
         }
     }

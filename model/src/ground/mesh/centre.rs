@@ -21,6 +21,8 @@ pub(super) struct Centre {
     pub(super) turn: f64,
     /// Points on each ring.
     pub(super) ring: usize,
+    /// Whether it is an end or corner of a barrier.
+    pub(super) on_barrier: bool,
     /// What it is, for messages.
     pub(super) name: String,
 }
@@ -176,6 +178,7 @@ impl Plan {
             start: f64::NAN,
             turn: 0.0,
             ring: self.ring.0,
+            on_barrier: false,
             name: name.to_owned(),
         });
         self.centres.len() - 1
@@ -233,7 +236,7 @@ impl Plan {
         for (i, centre) in self.centres.iter_mut().enumerate() {
             let reach = centre.anchors.last().copied().unwrap_or(0.0);
             let from_middle = distance(centre.at, self.middle);
-            let barrier_end = centre.name.starts_with("barrier ");
+            let barrier_end = centre.on_barrier;
             if !barrier_end && from_middle + 3.0 * reach > 0.95 * self.outline {
                 let why = format!(
                     "{} lies outside the edge; give the edge a distance above {:.0} m",
@@ -280,6 +283,7 @@ impl Plan {
             };
             centre.start = match centre.anchors.first() {
                 Some(&least) => least,
+                None if barrier_end => wanted.min(0.3 * nearest).min(0.3 * barrier),
                 None => wanted.min(0.1 * nearest).min(0.3 * barrier),
             };
         }

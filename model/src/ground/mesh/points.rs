@@ -14,6 +14,8 @@ const CLOSE: f64 = 0.7;
 const GAP: f64 = 0.75;
 /// Points keep this share of the size away from barriers and the edge, which have points of their own.
 const CLEAR: f64 = 0.55;
+/// Most points of a mesh: four times what a site with several barriers needs.
+const MOST: usize = 40_000;
 /// Passes of filling; a gap left after so many only makes a larger triangle.
 const PASSES: usize = 24;
 
@@ -56,7 +58,14 @@ pub(super) fn lay(plan: &Plan) -> Result<Laid, ModelError> {
         if !fill(plan, &mut points, &triangles) {
             break;
         }
+        if points.len() > MOST {
+            break;
+        }
         triangles = triangulate(&points, &constraints, plan.apart)?;
+    }
+    if points.len() > MOST {
+        let why = "the mesh needs more than 40,000 points; give barriers fewer corners";
+        return Err(fail(plan.middle, why));
     }
     Ok(Laid {
         points,

@@ -98,3 +98,36 @@ pub(super) fn fail(at: Point, why: &str) -> ModelError {
         why: why.to_owned(),
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    const SQUARE: [Point; 4] = [[0.0, 0.0], [1.0, 0.0], [1.0, 1.0], [0.0, 1.0]];
+
+    #[test]
+    fn a_square_has_two_triangles_along_its_constraint() {
+        for constraint in [[0, 2], [1, 3]] {
+            let triangles = triangulate(&SQUARE, &[constraint], 1e-9).unwrap();
+            assert_eq!(triangles.len(), 2);
+            assert!(
+                triangles
+                    .iter()
+                    .all(|t| constraint.iter().all(|v| t.contains(v)))
+            );
+        }
+    }
+
+    #[test]
+    fn what_the_library_cannot_take_is_an_error() {
+        let crossing = triangulate(&SQUARE, &[[0, 2], [1, 3]], 1e-9).unwrap_err();
+        assert!(crossing.to_string().contains("cross"), "{crossing}");
+        let mut near = SQUARE.to_vec();
+        near.push([1.0 + 1e-10, 1.0]);
+        let doubled = triangulate(&near, &[], 1e-9).unwrap_err();
+        assert!(doubled.to_string().contains("fall together"), "{doubled}");
+        let mut lost = SQUARE.to_vec();
+        lost.push([f64::NAN, 0.5]);
+        assert!(triangulate(&lost, &[], 1e-9).is_err());
+    }
+}
