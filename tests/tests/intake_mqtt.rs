@@ -23,7 +23,7 @@ fn surroundings() -> (Surroundings, watch::Sender<bool>) {
     let around = Surroundings {
         site: "test".to_owned(),
         clock: Arc::new(SystemClock::new(ClockEpoch(1))),
-        conversions: Arc::new(Conversions::new([], [(pattern, one)])),
+        conversions: Arc::new(Conversions::new::<Conversion, _>([], [(pattern, one)])),
         shutdown,
     };
     (around, stop)
@@ -319,9 +319,8 @@ async fn what_does_not_fit_is_refused_and_acknowledged_like_the_rest() {
 #[test]
 fn tls_is_refused_with_its_mend() {
     let (around, _stop) = surroundings();
-    let error = start(&settings(8883, true), &around)
-        .err()
-        .expect("no TLS here");
+    let started = start(&settings(8883, true), &around).map(|_| ());
+    let error = started.expect_err("no TLS here");
     assert!(matches!(error, IntakeError::Tls(_)));
     assert!(error.to_string().contains("mqtt://"), "{error}");
 }

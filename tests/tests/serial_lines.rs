@@ -40,7 +40,10 @@ fn run(path: &str) -> (SourceHandle, watch::Sender<bool>) {
     let around = Surroundings {
         site: "test".to_owned(),
         clock: Arc::new(SystemClock::new(ClockEpoch(1))),
-        conversions: Arc::new(Conversions::new(ids.map(|id| (id.into(), one)), [])),
+        conversions: Arc::new(Conversions::new::<_, Conversion>(
+            ids.map(|id| (id.into(), one)),
+            [],
+        )),
         shutdown,
     };
     let channel = |(id, field): (&str, usize)| TextChannel {

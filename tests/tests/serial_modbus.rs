@@ -43,7 +43,7 @@ fn run(
     let around = Surroundings {
         site: "test".to_owned(),
         clock: Arc::new(SystemClock::new(ClockEpoch(5))),
-        conversions: Arc::new(Conversions::new(
+        conversions: Arc::new(Conversions::new::<_, Conversion>(
             channels.iter().map(|c| (c.id.clone(), kilo)),
             [],
         )),

@@ -1,36 +1,97 @@
 //! From the number a source delivers to the SI value of its channel.
 
 use std::collections::BTreeMap;
+use std::sync::Arc;
 
-use crate::config::{Conversion, TopicPattern};
-use crate::record::ChannelId;
+use super::decode::{Refusal, cut};
+use crate::config::{ChannelSettings, Conversion, Site, TopicPattern};
+use crate::record::{ChannelId, RejectReason};
 
-/// The conversion of every channel the site file knows.
+/// What the numbers of a channel mean.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Meaning {
+    /// From the delivered number to SI.
+    pub conversion: Conversion,
+    /// The unit that may stand behind the number, where the device writes it; any other is refused.
+    pub unit: Option<Arc<str>>,
+}
+
+impl From<Conversion> for Meaning {
+    /// Numbers with no unit behind them.
+    fn from(conversion: Conversion) -> Self {
+        Self {
+            conversion,
+            unit: None,
+        }
+    }
+}
+
+impl From<&ChannelSettings> for Meaning {
+    fn from(settings: &ChannelSettings) -> Self {
+        Self {
+            conversion: settings.conversion,
+            unit: Some(settings.unit.as_str().into()),
+        }
+    }
+}
+
+/// The meaning of every channel the site file knows.
 #[derive(Debug, Clone, Default)]
 pub struct Conversions {
-    named: BTreeMap<ChannelId, Conversion>,
-    patterns: Vec<(TopicPattern, Conversion)>,
+    named: BTreeMap<ChannelId, Meaning>,
+    patterns: Vec<(TopicPattern, Meaning)>,
 }
 
 impl Conversions {
-    /// Conversions of channels known by name, and of those known by a pattern.
+    /// Channels known by name, and those known by a pattern that their name fits.
     #[must_use]
-    pub fn new(
-        named: impl IntoIterator<Item = (ChannelId, Conversion)>,
-        patterns: impl IntoIterator<Item = (TopicPattern, Conversion)>,
+    pub fn new<N: Into<Meaning>, P: Into<Meaning>>(
+        named: impl IntoIterator<Item = (ChannelId, N)>,
+        patterns: impl IntoIterator<Item = (TopicPattern, P)>,
     ) -> Self {
+        let named = named.into_iter().map(|(id, m)| (id, m.into()));
+        let patterns = patterns.into_iter().map(|(p, m)| (p, m.into()));
         Self {
-            named: named.into_iter().collect(),
-            patterns: patterns.into_iter().collect(),
+            named: named.collect(),
+            patterns: patterns.collect(),
         }
     }
 
-    /// Conversion of a channel, by its name or by the first pattern that it fits; `None` for a channel the site does not know.
-    #[must_use]
-    pub fn of(&self, channel: &ChannelId) -> Option<Conversion> {
-        self.named.get(channel).copied().or_else(|| {
-            let fits = |(pattern, _): &&(TopicPattern, Conversion)| pattern.fits(&channel.0);
-            self.patterns.iter().find(fits).map(|(_, c)| *c)
+    /// Meaning of a channel, by its name or by the first pattern that its name fits.
+    ///
+    /// # Errors
+    /// The site does not know the channel.
+    pub(crate) fn of(&self, channel: &ChannelId) -> Result<&Meaning, Refusal> {
+        let fitting = || {
+            let fits = |(pattern, _): &&(TopicPattern, Meaning)| pattern.fits(&channel.0);
+            self.patterns.iter().find(fits).map(|(_, meaning)| meaning)
+        };
+        self.named.get(channel).or_else(fitting).ok_or_else(|| {
+            let name = cut(&channel.0, 60);
+            Refusal::new(
+                RejectReason::UnknownChannel,
+                format!("the site file does not know channel \"{name}\""),
+            )
         })
+    }
+}
+
+impl From<&Site> for Conversions {
+    fn from(site: &Site) -> Self {
+        let named = site.channels.iter().map(|(id, c)| (id.clone(), c));
+        let patterns = site.patterns.iter().map(|p| (p.id.clone(), &p.settings));
+        Self::new(named, patterns)
+    }
+}
+
+/// For tests: thousands, in kPa.
+#[cfg(test)]
+pub(crate) fn kilo() -> Meaning {
+    Meaning {
+        conversion: Conversion {
+            scale: 1e3,
+            offset: 0.0,
+        },
+        unit: Some("kPa".into()),
     }
 }

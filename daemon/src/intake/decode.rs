@@ -1,7 +1,7 @@
 //! What all decoders share: a number becomes a reading or is refused, an instant is read or is refused.
 
 use super::clock::ClockReading;
-use crate::config::Conversion;
+use super::conversions::Meaning;
 use crate::record::{
     ChannelId, ClockEpoch, ClockState, DeviceStatus, Quality, Reading, RejectReason, Rejected,
     SourceName, Stamp,
@@ -87,9 +87,9 @@ pub(crate) fn reading(
     channel: &ChannelId,
     when: When,
     raw: f64,
-    conversion: Conversion,
+    meaning: &Meaning,
 ) -> Result<Reading, Refusal> {
-    let value = conversion.to_si(raw);
+    let value = meaning.conversion.to_si(raw);
     if !raw.is_finite() || !value.is_finite() {
         return Err(Refusal::new(
             RejectReason::NotANumber,
@@ -124,15 +124,35 @@ pub(crate) fn missing(channel: &ChannelId, when: When, device: DeviceStatus) -> 
     }
 }
 
-/// Reads a number as devices write them; `NaN` and `inf` are read too, and refused by [`reading`].
-pub(crate) fn number(text: &str) -> Result<f64, Refusal> {
+/// Reads a number as devices write them, alone or with the channel's unit behind it; `NaN` and `inf` are read too, and
+/// refused by [`reading`].
+///
+/// # Errors
+/// There is no number, or the unit behind it is another.
+pub(crate) fn number(text: &str, meaning: &Meaning) -> Result<f64, Refusal> {
     let text = text.trim();
-    text.parse().map_err(|_| {
-        Refusal::new(
+    if let Ok(number) = text.parse() {
+        return Ok(number);
+    }
+    let end = text
+        .find(|c: char| !c.is_ascii_digit() && !"+-.eE".contains(c))
+        .unwrap_or(text.len());
+    let (number, unit) = text.split_at(end);
+    let unit = unit.trim();
+    match number.trim().parse() {
+        Ok(number) if meaning.unit.as_deref() == Some(unit) => Ok(number),
+        Ok(_) if unit.starts_with(|c: char| c.is_alphabetic() || "%°[".contains(c)) => {
+            let (unit, due) = (cut(unit, 30), meaning.unit.as_deref().unwrap_or("none"));
+            Err(Refusal::new(
+                RejectReason::Unit,
+                format!("the unit behind the number is \"{unit}\", should be {due}"),
+            ))
+        }
+        Ok(_) | Err(_) => Err(Refusal::new(
             RejectReason::NotANumber,
             format!("\"{}\" is not a number", cut(text, 60)),
-        )
-    })
+        )),
+    }
 }
 
 /// Reads RFC 3339 text.
@@ -208,27 +228,33 @@ pub(crate) fn cut(text: &str, most: usize) -> &str {
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::intake::conversions::kilo;
 
     #[test]
     fn numbers_that_are_not_finite_are_refused() {
         let when = When::delivered(Stamp(0), Stamp(0));
-        let one = Conversion {
-            scale: 1.0,
-            offset: 0.0,
-        };
-        let huge = Conversion {
-            scale: 1e300,
-            offset: 0.0,
-        };
-        for (raw, conversion) in [(f64::NAN, one), (f64::INFINITY, one), (1e300, huge)] {
-            let refused = reading(&"p".into(), when, raw, conversion).unwrap_err();
+        let one = kilo();
+        let mut huge = kilo();
+        huge.conversion.scale = 1e300;
+        for (raw, meaning) in [(f64::NAN, &one), (f64::INFINITY, &one), (1e300, &huge)] {
+            let refused = reading(&"p".into(), when, raw, meaning).unwrap_err();
             assert_eq!(refused.reason, RejectReason::NotANumber);
         }
-        assert_eq!(
-            number("12.5 kPa").unwrap_err().reason,
-            RejectReason::NotANumber
-        );
-        assert_eq!(number(" +1.5e3 ").unwrap(), 1500.0);
+    }
+
+    #[test]
+    fn a_number_may_bring_its_unit_but_no_other() {
+        let meaning = kilo();
+        let read = |text| number(text, &meaning).map_err(|r| r.reason);
+        assert_eq!(read(" +1.5e3 "), Ok(1500.0));
+        assert_eq!(read("12.5 kPa"), Ok(12.5));
+        assert_eq!(read("12.5kPa"), Ok(12.5));
+        for text in ["12.5 psi", "12.5 kpa", "12.5 kPa g", "12.5 %"] {
+            assert_eq!(read(text), Err(RejectReason::Unit), "{text}");
+        }
+        for text in ["", "kPa", "----", "1-2", "1,5", "1.2.3"] {
+            assert_eq!(read(text), Err(RejectReason::NotANumber), "{text}");
+        }
     }
 
     #[test]

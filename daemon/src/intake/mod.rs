@@ -32,7 +32,7 @@ use crate::config::{SourceConfig, SourceSettings};
 use crate::record::{AckToken, Delivery, SourceName, SourceView};
 
 pub use clock::{Clock, ClockReading};
-pub use conversions::Conversions;
+pub use conversions::{Conversions, Meaning};
 pub use merge::{Acks, Merge};
 pub use window::Window;
 
@@ -48,7 +48,7 @@ pub struct Surroundings {
     pub site: String,
     /// What time it is.
     pub clock: Arc<dyn Clock>,
-    /// From delivered numbers to SI.
+    /// What the delivered numbers mean.
     pub conversions: Arc<Conversions>,
     /// Turns true when sources must stop.
     pub shutdown: watch::Receiver<bool>,

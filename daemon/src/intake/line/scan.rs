@@ -145,19 +145,15 @@ fn take(
             }
         }
     };
-    let conversion = conversions.of(&channel.id).ok_or_else(|| {
-        Refusal::new(
-            RejectReason::UnknownChannel,
-            "the site file does not know the channel",
-        )
-    })?;
-    reading(&channel.id, when, number(text)?, conversion).map(Some)
+    let meaning = conversions.of(&channel.id)?;
+    reading(&channel.id, when, number(text, meaning)?, meaning).map(Some)
 }
 
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::config::{Conversion, Parity, SerialSettings};
+    use crate::config::{Parity, SerialSettings};
+    use crate::intake::conversions::{Meaning, kilo};
     use crate::record::{ClockEpoch, ClockState, Quality, Stamp};
     use proptest::prelude::*;
 
@@ -184,11 +180,7 @@ mod tests {
     }
 
     fn run(settings: &TextLineSource, text: &[u8]) -> (Vec<Reading>, Vec<Rejected>) {
-        let kilo = Conversion {
-            scale: 1e3,
-            offset: 0.0,
-        };
-        let known = settings.channels.iter().map(|c| (c.id.clone(), kilo));
+        let known = settings.channels.iter().map(|c| (c.id.clone(), kilo()));
         let now = ClockReading {
             now: Stamp::parse("2031-03-01T00:00:00Z").unwrap(),
             epoch: ClockEpoch(4),
@@ -198,7 +190,7 @@ mod tests {
         read(
             &line,
             settings,
-            &Conversions::new(known, []),
+            &Conversions::new::<_, Meaning>(known, []),
             &"pit".into(),
             now,
         )

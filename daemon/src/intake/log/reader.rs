@@ -6,7 +6,7 @@ use std::path::PathBuf;
 use thiserror::Error;
 
 use super::table::{Sink, Table};
-use crate::config::Conversion;
+use crate::intake::conversions::Meaning;
 use crate::record::{ChannelId, Delivery, SourceName, Stamp};
 
 /// A log that cannot be used.
@@ -52,13 +52,12 @@ impl LogReader {
     ///
     /// # Errors
     /// A file cannot be read, or its header is of no known form.
-    pub fn open(
+    pub fn open<M: Into<Meaning>>(
         paths: &[PathBuf],
-        channels: impl IntoIterator<Item = (ChannelId, Conversion)>,
+        channels: impl IntoIterator<Item = (ChannelId, M)>,
     ) -> Result<Self, LogError> {
-        let named = |(id, conversion): (ChannelId, Conversion)| {
-            (id.0.as_bytes().to_vec(), (id, conversion))
-        };
+        let named =
+            |(id, meaning): (ChannelId, M)| (id.0.as_bytes().to_vec(), (id, meaning.into()));
         let mut sink = Sink {
             channels: channels.into_iter().map(named).collect::<HashMap<_, _>>(),
             unknown: BTreeMap::new(),
@@ -123,6 +122,7 @@ impl LogReader {
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::config::Conversion;
     use crate::record::{Quality, RejectReason};
     use std::path::Path;
 
@@ -220,7 +220,7 @@ mod tests {
             [
                 at(RejectReason::Time, 3),
                 at(RejectReason::NotANumber, 4),
-                at(RejectReason::NotANumber, 5),
+                at(RejectReason::Unit, 5),
                 at(RejectReason::Malformed, 6),
                 at(RejectReason::Malformed, 7),
                 at(RejectReason::UnknownChannel, 8),
@@ -256,7 +256,7 @@ mod tests {
         let error = LogReader::open(&[path], channels()).err().unwrap();
         assert!(error.to_string().contains("\"date,p\""), "{error}");
         assert!(matches!(
-            LogReader::open(&["nowhere.csv".into()], []),
+            LogReader::open(&["nowhere.csv".into()], channels()),
             Err(LogError::Unreadable { .. })
         ));
     }

@@ -7,7 +7,7 @@ use std::path::Path;
 use csv::{ByteRecord, Reader, ReaderBuilder};
 
 use super::reader::LogError;
-use crate::config::Conversion;
+use crate::intake::conversions::Meaning;
 use crate::intake::decode::{Refusal, When, instant, missing, number, reading};
 use crate::record::{
     ChannelId, DeviceStatus, Quality, Reading, RejectReason, Rejected, SourceName, Stamp,
@@ -40,7 +40,7 @@ pub(super) struct Table {
 
 /// Where rows go.
 pub(super) struct Sink {
-    pub(super) channels: HashMap<Vec<u8>, (ChannelId, Conversion)>,
+    pub(super) channels: HashMap<Vec<u8>, (ChannelId, Meaning)>,
     pub(super) unknown: std::collections::BTreeMap<String, u64>,
     pub(super) readings: Vec<Reading>,
     pub(super) rejected: Vec<Rejected>,
@@ -210,11 +210,11 @@ impl Sink {
             );
             return;
         };
-        let Some((id, conversion)) = self.channels.get(channel.trim_ascii()) else {
+        let Some((id, meaning)) = self.channels.get(channel.trim_ascii()) else {
             self.stranger(channel.trim_ascii(), file, line_of(row));
             return;
         };
-        match read_value(id, *conversion, time, value, quality) {
+        match read_value(id, meaning, time, value, quality) {
             Ok(reading) => self.readings.push(reading),
             Err(refusal) => {
                 let id = id.clone();
@@ -251,10 +251,10 @@ impl Sink {
             if value.trim_ascii().is_empty() {
                 continue;
             }
-            let Some((_, conversion)) = self.channels.get(id.0.as_bytes()) else {
+            let Some((_, meaning)) = self.channels.get(id.0.as_bytes()) else {
                 continue;
             };
-            match read_value(id, *conversion, time, value, None) {
+            match read_value(id, meaning, time, value, None) {
                 Ok(reading) => self.readings.push(reading),
                 Err(refusal) => self.refuse(refusal, file, Some(id), Some(time), row),
             }
@@ -300,7 +300,7 @@ fn line_of(row: &ByteRecord) -> u64 {
 /// A reading of a cell.
 fn read_value(
     id: &ChannelId,
-    conversion: Conversion,
+    meaning: &Meaning,
     time: Stamp,
     value: &[u8],
     quality: Option<&[u8]>,
@@ -316,7 +316,7 @@ fn read_value(
     }
     let text = std::str::from_utf8(value)
         .map_err(|_| Refusal::new(RejectReason::Malformed, "the value is no text"))?;
-    let reading = reading(id, when, number(text)?, conversion)?;
+    let reading = reading(id, when, number(text, meaning)?, meaning)?;
     Ok(Reading { quality, ..reading })
 }
 

@@ -78,8 +78,12 @@ async fn session(
         if scan.answered {
             backoff.reset();
         }
-        if let Some(trouble) = &scan.trouble {
-            outlet.trouble(trouble);
+        match &scan.trouble {
+            Some(trouble) => {
+                outlet.say(&format!("connected, but {trouble}"));
+                outlet.trouble(trouble);
+            }
+            None => outlet.say("connected"),
         }
         if let Err(closed) = outlet.offer(scan.readings, scan.rejected) {
             return End::Closed(closed);

@@ -229,15 +229,10 @@ fn decode(
     when: When,
     around: &Surroundings,
 ) -> Result<Reading, Refusal> {
-    let conversion = around.conversions.of(&member.channel).ok_or_else(|| {
-        Refusal::new(
-            RejectReason::UnknownChannel,
-            "the site file does not know the channel",
-        )
-    })?;
+    let meaning = around.conversions.of(&member.channel)?;
     let raw = number(registers, member.kind, member.order)
         .ok_or_else(|| Refusal::new(RejectReason::Malformed, "the answer is too short"))?;
-    reading(&member.channel, when, raw, conversion)
+    reading(&member.channel, when, raw, meaning)
 }
 
 /// A request in words.

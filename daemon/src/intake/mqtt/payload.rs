@@ -46,7 +46,7 @@ impl Decoder {
     pub fn read(
         &self,
         message: &Message,
-        conversions: &Conversions,
+        known: &Conversions,
         source: &SourceName,
         now: ClockReading,
     ) -> (Vec<Reading>, Vec<Rejected>) {
@@ -75,7 +75,7 @@ impl Decoder {
                 continue;
             };
             let id = ChannelId::from(id.as_str());
-            match take(channel, &id, message, &json, conversions, now) {
+            match take(channel, &id, message, &json, known, now) {
                 Ok(reading) => readings.push(reading),
                 Err(refusal) => {
                     // Rejected readings are kept under channels that exist, or under none.
@@ -146,13 +146,10 @@ fn take(
     id: &ChannelId,
     message: &Message,
     payload: &Payload<'_>,
-    conversions: &Conversions,
+    known: &Conversions,
     now: ClockReading,
 ) -> Result<Reading, Refusal> {
-    let conversion = conversions.of(id).ok_or_else(|| {
-        let detail = format!("the site file does not know channel \"{id}\"");
-        Refusal::new(RejectReason::UnknownChannel, detail)
-    })?;
+    let meaning = known.of(id)?;
     let when = match &channel.time {
         Some(pointer) => {
             let sampled = time(payload.at(pointer)?, pointer)?;
@@ -166,11 +163,11 @@ fn take(
         None => When::arrival(now),
     };
     let value = match &channel.value {
-        None => number(payload.text()?)?,
+        None => number(payload.text()?, meaning)?,
         Some(pointer) => match payload.at(pointer)? {
             // RFC 8259 has no NaN: null is how a device says that it has no value.
             Value::Null => return Ok(missing(id, when, DeviceStatus::Normal)),
-            Value::String(text) => number(text)?,
+            Value::String(text) => number(text, meaning)?,
             Value::Number(n) => n.as_f64().unwrap_or(f64::NAN),
             Value::Bool(_) | Value::Array(_) | Value::Object(_) => {
                 let detail = format!("what stands at \"{pointer}\" is no number");
@@ -178,7 +175,7 @@ fn take(
             }
         },
     };
-    reading(id, when, value, conversion)
+    reading(id, when, value, meaning)
 }
 
 /// An instant: RFC 3339 text, or a number of seconds or milliseconds since 1970.
@@ -196,7 +193,8 @@ fn time(value: &Value, pointer: &str) -> Result<crate::record::Stamp, Refusal> {
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::config::{Conversion, TopicPattern};
+    use crate::config::TopicPattern;
+    use crate::intake::conversions::kilo;
     use crate::record::{ClockEpoch, ClockState, Quality, Stamp};
     use proptest::prelude::*;
 
@@ -219,23 +217,14 @@ mod tests {
     }
 
     fn read(channels: &[MqttChannel], message: &Message) -> (Vec<Reading>, Vec<Rejected>) {
-        let kilo = Conversion {
-            scale: 1e3,
-            offset: 0.0,
-        };
-        let named = [("flow".into(), kilo)];
-        let patterns = [(TopicPattern::parse("{g}.pressure").unwrap(), kilo)];
+        let pattern = TopicPattern::parse("{g}.pressure").unwrap();
+        let known = Conversions::new([("flow".into(), kilo())], [(pattern, kilo())]);
         let now = ClockReading {
             now: Stamp::parse("2031-03-01T00:00:00Z").unwrap(),
             epoch: ClockEpoch(3),
             state: ClockState::Holdover,
         };
-        Decoder::new(channels).read(
-            message,
-            &Conversions::new(named, patterns),
-            &"b".into(),
-            now,
-        )
+        Decoder::new(channels).read(message, &known, &"b".into(), now)
     }
 
     #[test]
@@ -305,7 +294,7 @@ mod tests {
             (b"{\"p\": [1], \"t\": 0}", RejectReason::Payload),
             (b"{\"p\": 1e999, \"t\": 0}", RejectReason::Payload),
             (b"{\"p\": \"NaN\", \"t\": 0}", RejectReason::NotANumber),
-            (b"{\"p\": \"12 kPa\", \"t\": 0}", RejectReason::NotANumber),
+            (b"{\"p\": \"12 psi\", \"t\": 0}", RejectReason::Unit),
             (b"{\"p\": 1, \"t\": \"noon\"}", RejectReason::Time),
             (b"{\"p\": 1, \"t\": true}", RejectReason::Time),
             (b"{\"p\": 1, \"t\": 2000000000}", RejectReason::Time),
