@@ -5,8 +5,10 @@
 
 mod digest;
 mod mistake;
+mod pattern;
 mod read;
 mod report;
+mod secret;
 mod section;
 mod site;
 mod source;
@@ -15,16 +17,17 @@ mod values;
 use std::path::Path;
 
 pub use mistake::{ConfigError, Mistake, Note};
+pub use pattern::{PatternError, TopicPattern};
 pub use read::read;
+pub use secret::{Secret, SecretError, SecretFile};
 pub use site::{
     GaugeSettings, GaugeString, LimitSettings, Meter, MqttPublish, PastRate, PatternChannel,
     PublishSettings, Reference, Side, Site, StoreSettings, WatchConfig, WellSettings,
 };
 pub use source::{
     ByteOrder, ChannelSettings, Checksum, Conversion, LogSource, ModbusChannel, ModbusRtuSource,
-    MqttChannel, MqttEndpoint, MqttSource, Parity, PatternError, Register, RegisterNumber,
-    RegisterTable, Secret, SecretError, SecretFile, Separator, SerialSettings, SourceConfig,
-    SourceSettings, TextChannel, TextLineSource, TopicPattern,
+    MqttChannel, MqttEndpoint, MqttSource, Parity, Register, RegisterNumber, RegisterTable,
+    Separator, SerialSettings, SourceConfig, SourceSettings, TextChannel, TextLineSource,
 };
 
 /// Largest site file read \[bytes\].

@@ -7,8 +7,9 @@ use std::time::Duration;
 use borewake_model::ground::Ground;
 use borewake_model::units::UnitSystem;
 
-use super::source::{ChannelSettings, SecretFile, SourceConfig, SourceSettings, TopicPattern};
-use super::{MqttEndpoint, Note};
+use super::{
+    ChannelSettings, MqttEndpoint, Note, SecretFile, SourceConfig, SourceSettings, TopicPattern,
+};
 use crate::record::{AlarmId, ChannelId, Holds, Priority, SourceName, Stamp};
 
 /// A site file that holds: every reference resolved, every quantity in SI.

@@ -3,9 +3,7 @@
 use std::path::Path;
 
 use super::super::section::{At, Section};
-use super::super::source::{
-    MqttChannel, MqttEndpoint, MqttSource, SecretFile, SourceConfig, TopicPattern,
-};
+use super::super::{MqttChannel, MqttEndpoint, MqttSource, SecretFile, SourceConfig, TopicPattern};
 use super::sources::{ChannelRead, KindRead, channel, pattern};
 use crate::record::SourceName;
 

@@ -4,7 +4,7 @@ use std::path::PathBuf;
 use std::time::Duration;
 
 use super::super::section::{At, Section};
-use super::super::source::{
+use super::super::{
     ByteOrder, Checksum, ModbusChannel, ModbusRtuSource, Parity, Register, RegisterNumber,
     RegisterTable, Separator, SerialSettings, SourceConfig, TextChannel, TextLineSource,
 };

@@ -6,7 +6,7 @@ use std::time::Duration;
 use borewake_model::units::Dimension;
 
 use super::super::section::{At, Section};
-use super::super::source::{
+use super::super::{
     ChannelSettings, Conversion, LogSource, SourceConfig, SourceSettings, TopicPattern,
 };
 use super::{mqtt, serial};

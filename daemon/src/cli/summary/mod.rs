@@ -1,17 +1,21 @@
 //! A site file in tables, for `check`.
 
+mod json;
+mod words;
+
 use std::fmt::Write as _;
 
-use borewake_model::ground::{EdgeKind, Seat};
+use borewake_model::ground::Seat;
 use borewake_model::units::{Dimension, significant};
-use serde_json::{Value, json};
+use serde_json::Value;
 
 use super::table::{Align, Table};
-use crate::config::{
-    GaugeString, MqttEndpoint, Parity, PublishSettings, Reference, SerialSettings, Side, Site,
-    SourceConfig,
+use crate::config::{PublishSettings, Site};
+pub(super) use json::summary_json;
+use words::{
+    broker_words, edge_word, layer_name, priority_word, reference_word, side_word, source_words,
+    string_word,
 };
-use crate::record::Priority;
 
 /// The model as commissioned, for people and for programs.
 #[derive(Debug, Clone)]
@@ -115,14 +119,6 @@ fn layers(site: &Site) -> String {
     text_of(&table)
 }
 
-fn edge_word(kind: EdgeKind) -> &'static str {
-    match kind {
-        EdgeKind::Open => "open",
-        EdgeKind::Closed => "closed",
-        EdgeKind::Fixed => "fixed",
-    }
-}
-
 fn edge(site: &Site) -> String {
     let edge = &site.ground.edge;
     let distance = site.units.show(Dimension::Length, edge.distance);
@@ -146,12 +142,6 @@ fn barriers(site: &Site) -> String {
         ]);
     }
     text_of(&table)
-}
-
-/// The name of a layer.
-fn layer_name(site: &Site, layer: usize) -> String {
-    let layer = site.ground.layers.get(layer);
-    layer.map(|l| l.name.clone()).unwrap_or_default()
 }
 
 fn wells(site: &Site) -> String {
@@ -213,23 +203,6 @@ fn neighbours(site: &Site) -> String {
     text_of(&table)
 }
 
-fn reference_word(reference: Reference) -> &'static str {
-    match reference {
-        Reference::Absolute => "absolute",
-        Reference::Vented => "vented",
-        Reference::Sealed => "sealed",
-        Reference::Differential => "differential",
-    }
-}
-
-fn string_word(string: GaugeString) -> &'static str {
-    match string {
-        GaugeString::Downhole => "downhole",
-        GaugeString::Surface => "surface",
-        GaugeString::Piezometer => "piezometer",
-    }
-}
-
 fn gauges(site: &Site) -> String {
     let mut table = Table::new(&[
         ("name", Align::Left),
@@ -282,53 +255,6 @@ fn gauges(site: &Site) -> String {
     text
 }
 
-fn serial_words(serial: &SerialSettings) -> String {
-    let parity = match serial.parity {
-        Parity::None => 'N',
-        Parity::Even => 'E',
-        Parity::Odd => 'O',
-    };
-    format!(
-        "{} {} {}{parity}{}",
-        serial.port.display(),
-        serial.baud,
-        serial.data_bits,
-        serial.stop_bits
-    )
-}
-
-/// A broker's address and user; never its password.
-fn broker_words(endpoint: &MqttEndpoint) -> String {
-    let scheme = if endpoint.tls { "mqtts" } else { "mqtt" };
-    let user = endpoint.user.as_ref().map(|u| format!(" as {u}"));
-    let host = if endpoint.host.contains(':') {
-        format!("[{}]", endpoint.host)
-    } else {
-        endpoint.host.clone()
-    };
-    let user = user.unwrap_or_default();
-    format!("{scheme}://{host}:{}{user}", endpoint.port)
-}
-
-fn source_words(config: &SourceConfig) -> String {
-    match config {
-        SourceConfig::TextLine(source) => serial_words(&source.serial),
-        SourceConfig::ModbusRtu(source) => {
-            let every = source.every.as_secs_f64();
-            format!(
-                "{}, every {} s",
-                serial_words(&source.serial),
-                significant(every, 4)
-            )
-        }
-        SourceConfig::Mqtt(source) => broker_words(&source.endpoint),
-        SourceConfig::Log(source) => match &source.path {
-            Some(path) => path.display().to_string(),
-            None => "named on the command line".to_owned(),
-        },
-    }
-}
-
 fn sources(site: &Site) -> String {
     let mut table = Table::new(&[
         ("name", Align::Left),
@@ -345,21 +271,6 @@ fn sources(site: &Site) -> String {
         ]);
     }
     text_of(&table)
-}
-
-fn side_word(side: Side) -> &'static str {
-    match side {
-        Side::Above => "above",
-        Side::Below => "below",
-    }
-}
-
-fn priority_word(priority: Priority) -> &'static str {
-    match priority {
-        Priority::Low => "low",
-        Priority::Medium => "medium",
-        Priority::High => "high",
-    }
 }
 
 fn limits(site: &Site) -> String {
@@ -394,52 +305,4 @@ fn publish(site: &Site) -> String {
         let _ = writeln!(text, "  {broker}, under {}/{}/", mqtt.topic_root, site.id);
     }
     text
-}
-
-/// The site as JSON, in SI.
-pub(super) fn summary_json(site: &Site) -> Value {
-    let gauges = site.ground.gauges.iter().zip(&site.gauges).enumerate();
-    json!({
-        "id": site.id,
-        "name": site.name,
-        "units": site.units.name(),
-        "store": site.store.folder.display().to_string(),
-        "ground_digest": site.ground_digest(),
-        "watch": {
-            "false_alarm_interval_s": site.watch.false_alarm_interval,
-            "lateness_s": site.watch.lateness.as_secs_f64(),
-            "hold_rate_s": site.watch.hold_rate.as_secs_f64(),
-            "block_s": site.watch.block.as_secs_f64(),
-        },
-        "layers": site.ground.layers,
-        "edge": site.ground.edge,
-        "barriers": site.ground.barriers,
-        "wells": site.ground.wells.iter().zip(&site.wells).map(|(w, s)| json!({
-            "name": w.name, "at_m": w.at, "layer": layer_name(site, w.layer), "radius_m": w.radius,
-            "skin": w.skin, "rate": s.rate, "share": s.share,
-        })).collect::<Vec<_>>(),
-        "neighbours": site.ground.neighbours.iter().map(|n| json!({
-            "name": n.name, "at_m": n.at, "layer": layer_name(site, n.layer),
-        })).collect::<Vec<_>>(),
-        "gauges": gauges.map(|(index, (g, s))| {
-            let (at, layer) = site.ground.gauge_at(index).unwrap_or_default();
-            json!({
-                "name": g.name, "at_m": at, "layer": layer_name(site, layer), "channel": s.channel,
-                "reference": reference_word(s.reference), "noise_Pa": g.noise, "drift_Pa_per_s": g.drift,
-            })
-        }).collect::<Vec<_>>(),
-        "sources": site.sources.iter().map(|s| json!({
-            "name": s.name, "kind": s.config.kind(), "channels": s.config.channel_count(),
-            "at": source_words(&s.config),
-        })).collect::<Vec<_>>(),
-        "limits": site.limits.iter().map(|l| json!({
-            "alarm": l.alarm, "channel": l.channel, "side": side_word(l.side), "value_Pa": l.value,
-            "deadband_Pa": l.deadband, "delay_s": l.delay.as_secs_f64(), "priority": l.priority,
-            "response": l.response, "author": l.author,
-        })).collect::<Vec<_>>(),
-        "publish": site.publish.iter().map(|p| {
-            let PublishSettings::Mqtt(mqtt) = p;
-            json!({ "kind": "mqtt", "at": broker_words(&mqtt.endpoint), "topic_root": mqtt.topic_root })
-        }).collect::<Vec<_>>(),
-    })
 }

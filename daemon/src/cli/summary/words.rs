@@ -1,0 +1,102 @@
+//! Words of the site file, as `check` says them.
+
+use borewake_model::ground::EdgeKind;
+use borewake_model::units::significant;
+
+use crate::config::{
+    GaugeString, MqttEndpoint, Parity, Reference, SerialSettings, Side, Site, SourceConfig,
+};
+use crate::record::Priority;
+
+pub(super) fn edge_word(kind: EdgeKind) -> &'static str {
+    match kind {
+        EdgeKind::Open => "open",
+        EdgeKind::Closed => "closed",
+        EdgeKind::Fixed => "fixed",
+    }
+}
+
+pub(super) fn reference_word(reference: Reference) -> &'static str {
+    match reference {
+        Reference::Absolute => "absolute",
+        Reference::Vented => "vented",
+        Reference::Sealed => "sealed",
+        Reference::Differential => "differential",
+    }
+}
+
+pub(super) fn string_word(string: GaugeString) -> &'static str {
+    match string {
+        GaugeString::Downhole => "downhole",
+        GaugeString::Surface => "surface",
+        GaugeString::Piezometer => "piezometer",
+    }
+}
+
+pub(super) fn serial_words(serial: &SerialSettings) -> String {
+    let parity = match serial.parity {
+        Parity::None => 'N',
+        Parity::Even => 'E',
+        Parity::Odd => 'O',
+    };
+    format!(
+        "{} {} {}{parity}{}",
+        serial.port.display(),
+        serial.baud,
+        serial.data_bits,
+        serial.stop_bits
+    )
+}
+
+/// A broker's address and user; never its password.
+pub(super) fn broker_words(endpoint: &MqttEndpoint) -> String {
+    let scheme = if endpoint.tls { "mqtts" } else { "mqtt" };
+    let user = endpoint.user.as_ref().map(|u| format!(" as {u}"));
+    let host = if endpoint.host.contains(':') {
+        format!("[{}]", endpoint.host)
+    } else {
+        endpoint.host.clone()
+    };
+    let user = user.unwrap_or_default();
+    format!("{scheme}://{host}:{}{user}", endpoint.port)
+}
+
+pub(super) fn source_words(config: &SourceConfig) -> String {
+    match config {
+        SourceConfig::TextLine(source) => serial_words(&source.serial),
+        SourceConfig::ModbusRtu(source) => {
+            let every = source.every.as_secs_f64();
+            format!(
+                "{}, every {} s",
+                serial_words(&source.serial),
+                significant(every, 4)
+            )
+        }
+        SourceConfig::Mqtt(source) => broker_words(&source.endpoint),
+        SourceConfig::Log(source) => match &source.path {
+            Some(path) => path.display().to_string(),
+            None => "named on the command line".to_owned(),
+        },
+    }
+}
+
+pub(super) fn side_word(side: Side) -> &'static str {
+    match side {
+        Side::Above => "above",
+        Side::Below => "below",
+    }
+}
+
+pub(super) fn priority_word(priority: Priority) -> &'static str {
+    match priority {
+        Priority::Low => "low",
+        Priority::Medium => "medium",
+        Priority::High => "high",
+    }
+}
+
+/// The name of a layer.
+pub(super) fn layer_name(site: &Site, layer: usize) -> String {
+    let layer = site.ground.layers.get(layer);
+    layer.map(|l| l.name.clone()).unwrap_or_default()
+}
