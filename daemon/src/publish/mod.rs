@@ -1,1 +1,7 @@
-//! Drains the outbox and reads the snapshot.
+//! Everything that leaves: events as CloudEvents, to files and to brokers.
+//!
+//! Alarms go through the outbox and leave at least once; expectations and the heartbeat are only ever the latest.
+
+pub mod events;
+pub mod mqtt;
+pub mod ndjson;

@@ -1,0 +1,1 @@
+//! Publishing to a broker.
