@@ -7,9 +7,9 @@ use borewake::publish::events::{
     ALARM, EXPECTATION, GaugeNews, HEALTH, alarm, alarm_outgoing, expectation, health,
 };
 use borewake::record::{
-    AlarmKind, Blind, Expectation, Finding, Names, Priority, SizeUnit, Snapshot, SourceView, Stamp, Transition, TransitionKind,
-    Acknowledgement, Alarm, AlarmId, AlarmView, Cause, Condition, GaugeView, Latch, Place, Size,
-    Subject, Suppression, UnitSystem, Weighed,
+    Acknowledgement, Alarm, AlarmId, AlarmKind, AlarmView, Blind, Cause, Condition, Expectation,
+    Finding, GaugeView, Latch, Names, Place, Priority, Size, SizeUnit, Snapshot, SourceView, Stamp,
+    Subject, Suppression, Transition, TransitionKind, UnitSystem, Weighed,
 };
 
 const SCHEMAS: [(&str, &str); 3] = [
