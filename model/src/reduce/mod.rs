@@ -5,18 +5,54 @@
 //! then diagonalised ([`Modal`]) and stepped exactly ([`Gains`], [`Propagator`]). Because the columns of wells *and*
 //! gauges are in the basis and the pencil stays symmetric, stability, passivity and reciprocity carry over.
 
+mod basis;
+mod certificate;
+mod correction;
+mod factor;
+#[cfg(test)]
+mod lattice;
 mod modal;
+mod options;
+mod pencil;
 mod propagate;
+mod rows;
+mod span;
 mod step;
+#[cfg(test)]
+mod tests;
 
+pub use basis::Basis;
+pub use factor::ShiftedCholesky;
+pub use options::{BoxCorners, ReduceOptions};
 pub use propagate::Propagator;
 pub use step::Gains;
 
 use nalgebra::{DMatrix, DVector};
 use serde::{Deserialize, Serialize};
 
+use crate::ModelError;
 use crate::ground::Point;
-use crate::weak_form::Parameter;
+use crate::weak_form::{Functional, Parameter, System};
+
+/// Reduces a system at its described parameters and certifies the result.
+///
+/// `places` are points at which sources may be put later without a further solve: position, layer and functional. Works in three
+/// steps, which [`Basis`] offers one by one: the basis, the projection, the certificate.
+///
+/// # Errors
+/// [`ModelError::Parameter`] for options that cannot be, [`ModelError::Size`] for parts that do not fit each other,
+/// [`ModelError::NotPositive`] for a system that is not symmetric positive, [`ModelError::NotSettled`] where the check against the
+/// full system did not converge.
+pub fn reduce(
+    system: &System,
+    places: &[(Point, usize, Functional)],
+    options: &ReduceOptions,
+) -> Result<Reduced, ModelError> {
+    let basis = Basis::build(system, options)?;
+    let mut reduced = basis.project(system, places)?;
+    reduced.certificate = basis.certify(system, &reduced, options)?;
+    Ok(reduced)
+}
 
 /// A dense share of a reduced matrix that one parameter scales.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
@@ -47,7 +83,7 @@ pub struct Reduced {
     pub places: Vec<(Point, usize)>,
     /// Their port vectors (r by number of places).
     pub place_ports: DMatrix<f64>,
-    /// What the reduction costs in accuracy.
+    /// What the reduction costs in accuracy (`NaN` errors until [`Basis::certify`] has found them).
     pub certificate: Certificate,
 }
 

@@ -31,9 +31,7 @@ impl Reduced {
     /// positive, [`ModelError::Size`] where the parts do not fit each other.
     pub fn modal(&self, factors: &Factors) -> Result<Modal, ModelError> {
         let modes = self.modes();
-        let mass = weighted(&self.mass, factors, modes)?;
-        let stiffness = weighted(&self.stiffness, factors, modes)?;
-        let (lambda, vectors) = symmetric_pencil(&stiffness, mass, self.closed)?;
+        let (lambda, vectors) = self.pencil(factors)?;
         let rotate = |ports: &DMatrix<f64>| {
             if ports.nrows() == modes {
                 Ok(vectors.tr_mul(ports))
@@ -52,6 +50,16 @@ impl Reduced {
             neighbours: rotate(&self.neighbours)?,
             places: rotate(&self.place_ports)?,
         })
+    }
+
+    /// Decay rates and M-orthonormal vectors of the reduced pencil at `factors`.
+    pub(super) fn pencil(
+        &self,
+        factors: &Factors,
+    ) -> Result<(DVector<f64>, DMatrix<f64>), ModelError> {
+        let mass = weighted(&self.mass, factors, self.modes())?;
+        let stiffness = weighted(&self.stiffness, factors, self.modes())?;
+        symmetric_pencil(&stiffness, mass, self.closed)
     }
 }
 
