@@ -6,6 +6,7 @@
 
 mod check;
 mod exit;
+mod export;
 mod logs;
 mod summary;
 pub mod table;
@@ -43,12 +44,14 @@ pub struct Context {
 #[derive(Debug, Subcommand)]
 enum Verb {
     Check(check::Check),
+    Export(export::Export),
 }
 
 impl Verb {
     fn run(self, context: &Context) -> Result<Exit, Failure> {
         match self {
             Self::Check(verb) => verb.run(context),
+            Self::Export(verb) => verb.run(context),
         }
     }
 }

@@ -10,7 +10,7 @@ use borewake_model::units::UnitSystem;
 use super::{
     ChannelSettings, MqttEndpoint, Note, SecretFile, SourceConfig, SourceSettings, TopicPattern,
 };
-use crate::record::{AlarmId, ChannelId, Holds, Priority, SourceName, Stamp};
+use crate::record::{AlarmId, ChannelId, Holds, Names, Priority, SourceName, Stamp};
 
 /// A site file that holds: every reference resolved, every quantity in SI.
 #[derive(Debug, Clone)]
@@ -71,6 +71,20 @@ impl Site {
                 ..pattern.settings.clone()
             })
         })
+    }
+
+    /// Names of what findings know by number, in the ground's order.
+    #[must_use]
+    pub fn names(&self) -> Names {
+        let ground = &self.ground;
+        Names {
+            site: self.id.clone(),
+            units: self.units,
+            gauges: ground.gauges.iter().map(|g| g.name.clone()).collect(),
+            wells: ground.wells.iter().map(|w| w.name.clone()).collect(),
+            neighbours: ground.neighbours.iter().map(|n| n.name.clone()).collect(),
+            layers: ground.layers.iter().map(|l| l.name.clone()).collect(),
+        }
     }
 
     /// A source by name.

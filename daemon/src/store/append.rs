@@ -13,6 +13,16 @@ impl Writer {
     /// Appends entries in one transaction; gives their numbers.
     pub(super) async fn append(&mut self, kinds: &[EntryKind], wall: Stamp) -> Result<Vec<i64>> {
         self.space.for_alarms()?;
+        match self.try_append(kinds, wall).await {
+            Err(StoreError::Full(_)) if self.space.release() => {
+                self.mend().await?;
+                self.try_append(kinds, wall).await
+            }
+            other => other,
+        }
+    }
+
+    async fn try_append(&mut self, kinds: &[EntryKind], wall: Stamp) -> Result<Vec<i64>> {
         let first = self.known().await?.last_seq.saturating_add(1);
         let mut seqs = Vec::with_capacity(kinds.len());
         let mut tx = self.conn.begin_with("begin immediate").await?;

@@ -26,11 +26,10 @@ pub struct Applied {
 impl Writer {
     pub(super) async fn apply(&mut self, applied: &Applied) -> Result<()> {
         self.space.for_alarms()?;
-        let result = self.try_apply(applied).await;
-        match result {
+        match self.try_apply(applied).await {
             // The reserve is there for this.
             Err(StoreError::Full(_)) if self.space.release() => {
-                self.known = None;
+                self.mend().await?;
                 self.try_apply(applied).await
             }
             other => other,

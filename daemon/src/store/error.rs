@@ -1,5 +1,6 @@
 //! What can go wrong in the store, and what the caller may do about it.
 
+use std::fmt;
 use std::path::PathBuf;
 
 use thiserror::Error;
@@ -163,7 +164,7 @@ impl From<sqlx::Error> for StoreError {
 }
 
 /// A commit that was refused, with what was to be committed: nothing of it was stored.
-#[derive(Debug, Error)]
+#[derive(Error)]
 #[error("{error}")]
 pub struct Refused {
     /// Why.
@@ -171,6 +172,16 @@ pub struct Refused {
     pub error: StoreError,
     /// What was handed in, to be tried again.
     pub deliveries: Vec<Delivery>,
+}
+
+/// Says how much came back, not all of it.
+impl fmt::Debug for Refused {
+    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        f.debug_struct("Refused")
+            .field("error", &self.error)
+            .field("deliveries", &self.deliveries.len())
+            .finish()
+    }
 }
 
 impl From<Refused> for StoreError {

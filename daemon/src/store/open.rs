@@ -74,6 +74,16 @@ impl Store {
     /// # Errors
     /// The folder is in use, cannot be used, or was written by a newer program; SQLite is too old.
     pub async fn open(folder: &Path, options: StoreOptions) -> Result<Opened> {
+        let (writer, report) = Writer::open(folder, options).await?;
+        Ok(Opened {
+            store: Self::start(folder, writer),
+            report,
+        })
+    }
+}
+
+impl Writer {
+    pub(super) async fn open(folder: &Path, options: StoreOptions) -> Result<(Self, OpenReport)> {
         fs::create_dir_all(folder).map_err(|source| StoreError::File {
             path: folder.to_owned(),
             doing: "make the folder",
@@ -111,8 +121,9 @@ impl Store {
         let last = sqlx::query_scalar(sql::OUTBOX_LAST)
             .fetch_one(&mut conn)
             .await?;
-        let writer = Writer {
+        let writer = Self {
             conn,
+            path,
             space: Space::new(folder, &options),
             statements: Statements::new(),
             known: None,
@@ -120,18 +131,21 @@ impl Store {
             options,
             _lock: lock,
         };
-        Ok(Opened {
-            store: Store::start(folder, writer),
-            report,
-        })
+        Ok((writer, report))
     }
+}
+
+/// Connects for writing and makes sure of what the promises rest on.
+pub(super) async fn connect(path: &Path, durability: Durability) -> Result<SqliteConnection> {
+    let mut conn = options::writing(path, durability).connect().await?;
+    check_version(&mut conn).await?;
+    check_pragmas(&mut conn, durability).await?;
+    Ok(conn)
 }
 
 /// Connects, checks what is there, and brings the schema up to date.
 async fn examine(path: &Path, durability: Durability) -> Result<(SqliteConnection, Outcome)> {
-    let mut conn = options::writing(path, durability).connect().await?;
-    check_version(&mut conn).await?;
-    check_pragmas(&mut conn, durability).await?;
+    let mut conn = connect(path, durability).await?;
     let empty: bool = sqlx::query_scalar(sql::IS_EMPTY)
         .fetch_one(&mut conn)
         .await?;

@@ -3,6 +3,7 @@
 use std::path::{Path, PathBuf};
 use std::time::Duration;
 
+use sqlx::ConnectOptions;
 use sqlx::sqlite::{SqliteAutoVacuum, SqliteConnectOptions, SqliteJournalMode, SqliteSynchronous};
 
 /// What a power cut may cost.
@@ -83,6 +84,7 @@ pub(super) fn writing(path: &Path, durability: Durability) -> SqliteConnectOptio
         .pragma("mmap_size", "0")
         .optimize_on_close(true, 400)
         .thread_name(|_| "store-writer".to_owned())
+        .disable_statement_logging()
 }
 
 pub(super) fn reading(path: &Path) -> SqliteConnectOptions {
@@ -92,4 +94,5 @@ pub(super) fn reading(path: &Path) -> SqliteConnectOptions {
         .busy_timeout(Duration::from_secs(5))
         .pragma("mmap_size", "0")
         .thread_name(|_| "store-reader".to_owned())
+        .disable_statement_logging()
 }

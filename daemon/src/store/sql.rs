@@ -19,6 +19,7 @@ statements! {
     JOURNAL_MODE = "pragma journal_mode";
     SYNCHRONOUS = "pragma synchronous";
     FOREIGN_KEYS = "pragma foreign_keys";
+    CHECKPOINT_LOG = "pragma wal_checkpoint(passive)";
     TRUNCATE_LOG = "pragma wal_checkpoint(truncate)";
     PAGES = "select (select page_size from pragma_page_size), (select page_count from pragma_page_count), (select freelist_count from pragma_freelist_count)";
 

@@ -4,6 +4,7 @@
 //! transaction open.
 
 use std::collections::HashMap;
+use std::path::PathBuf;
 
 use sqlx::{Connection, SqliteConnection};
 use tokio::sync::{mpsc, oneshot, watch};
@@ -14,6 +15,7 @@ use super::commit::Committed;
 use super::error::{Refused, Result};
 use super::lock::FolderLock;
 use super::many_rows::ManyRows;
+use super::open;
 use super::options::StoreOptions;
 use super::retention::{Retained, Retention};
 use super::space::Space;
@@ -44,6 +46,7 @@ pub(super) enum Ask {
 /// The writing connection and what must be known between transactions.
 pub(super) struct Writer {
     pub(super) conn: SqliteConnection,
+    pub(super) path: PathBuf,
     pub(super) options: StoreOptions,
     pub(super) space: Space,
     pub(super) statements: Statements,
@@ -111,6 +114,12 @@ impl Writer {
     /// Takes requests one by one until it is told to close or nobody is left to ask.
     pub(super) async fn run(mut self, mut asks: mpsc::Receiver<Ask>) {
         while let Some(ask) = asks.recv().await {
+            if self.known.is_none()
+                && let Err(error) = self.mend().await
+            {
+                // The request will fail in its turn and say so to its caller.
+                tracing::error!(%error, "the store's connection cannot be renewed");
+            }
             match ask {
                 Ask::Commit(deliveries, wall, reply) => {
                     let result = match self.commit(&deliveries, wall).await {
@@ -185,6 +194,21 @@ impl Writer {
         }
     }
 
+    /// After an error: forgets what may be wrong, and takes a new connection where the old one is of no use.
+    ///
+    /// The library rolls back a dropped transaction later than it lets the next one begin, so it is waited for
+    /// here. A full disk or a failing one may make SQLite roll back by itself: then that rollback finds no
+    /// transaction, and the library would refuse to begin another one on this connection for ever.
+    pub(super) async fn mend(&mut self) -> Result<()> {
+        self.known = None;
+        let answers = self.conn.ping().await.is_ok();
+        if !answers || self.conn.is_in_transaction() {
+            tracing::warn!("the store takes a new connection after an error");
+            self.conn = open::connect(&self.path, self.options.durability).await?;
+        }
+        Ok(())
+    }
+
     /// What is remembered of the tables, read where need be.
     pub(super) async fn known(&mut self) -> Result<&mut Known> {
         let known = match self.known.take() {
@@ -227,7 +251,10 @@ impl Writer {
 
     async fn close(mut self) -> Result<()> {
         self.set_meta(CLEAN_STOP, Some("1")).await?;
-        self.tidy().await?;
+        // Waits for nobody: a reader beside us must not hold up the stop.
+        sqlx::query(sql::CHECKPOINT_LOG)
+            .execute(&mut self.conn)
+            .await?;
         self.conn.close().await?;
         Ok(())
     }

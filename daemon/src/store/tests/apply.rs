@@ -1,5 +1,6 @@
+use super::super::writer::Writer;
 use super::super::{Applied, StoreError, StoreOptions};
-use super::{TARGET, alarm, fresh, message, open, options, transition};
+use super::{TARGET, alarm, delivery, fresh, message, open, options, reading, transition};
 use crate::record::{EntryKind, Stamp};
 use crate::store::Store;
 
@@ -196,4 +197,55 @@ async fn stale_checkpoints_go_with_the_position() {
         .await
         .unwrap();
     assert_eq!(left.map(|c| c.block), Some(10));
+}
+
+/// Makes the disk full for this connection beyond some pages: SQLite fails as it does on a full one.
+async fn fill(writer: &mut Writer, pages: u32) {
+    sqlx::query(sqlx::AssertSqlSafe(format!(
+        "pragma max_page_count = {pages}"
+    )))
+    .execute(&mut writer.conn)
+    .await
+    .unwrap();
+}
+
+#[tokio::test]
+async fn on_a_full_disk_the_reserve_goes_and_alarms_are_written() {
+    let dir = tempfile::tempdir().unwrap();
+    let reserve = dir.path().join("borewake.reserve");
+    let with_reserve = StoreOptions {
+        reserve: 4096,
+        ..options()
+    };
+    let (mut writer, _) = Writer::open(dir.path(), with_reserve).await.unwrap();
+    let batch = vec![delivery(vec![reading("a", 1, 1.0)])];
+    writer.commit(&batch, Stamp(0)).await.unwrap();
+    assert!(reserve.exists());
+
+    fill(&mut writer, 1).await;
+    let mut large = applied(1);
+    large.desk = vec![1; 200_000];
+    writer.apply(&large).await.unwrap();
+    assert!(!reserve.exists());
+    let store = Store::start(dir.path(), writer);
+    assert!(store.reader().verify_integrity().await.unwrap().is_empty());
+    let history = store.reader().transitions_after(0, 9).await.unwrap();
+    assert_eq!(history.len(), 1);
+    store.close().await.unwrap();
+}
+
+#[tokio::test]
+async fn a_commit_that_met_a_full_disk_can_be_tried_again() {
+    let dir = tempfile::tempdir().unwrap();
+    let (mut writer, _) = Writer::open(dir.path(), options()).await.unwrap();
+    fill(&mut writer, 1).await;
+    let batch = vec![delivery((0..5000).map(|n| reading("a", n, 1.0)).collect())];
+    let error = writer.commit(&batch, Stamp(0)).await.unwrap_err();
+    assert!(matches!(error, StoreError::Full(_)), "{error}");
+    writer.mend().await.unwrap();
+    fill(&mut writer, 1 << 20).await;
+    let committed = writer.commit(&batch, Stamp(0)).await.unwrap();
+    assert_eq!((committed.seq, committed.readings.len()), (Some(1), 5000));
+    let store = Store::start(dir.path(), writer);
+    assert!(store.reader().verify_integrity().await.unwrap().is_empty());
 }
