@@ -2,8 +2,17 @@
 
 use serde::{Deserialize, Serialize};
 
+use crate::expect::{Noise, Priors};
 use crate::ground::Ground;
 use crate::reduce::{Factors, Reduced};
+
+mod fit;
+pub(crate) mod history;
+pub(crate) mod places;
+mod relevance;
+
+pub use fit::commission;
+pub use places::{Line, Places, places};
 
 /// A ground as commissioned: all that the watch needs, as the ground file keeps it.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
@@ -14,6 +23,30 @@ pub struct Commissioned {
     pub reduced: Reduced,
     /// What history said.
     pub calibration: Calibration,
+}
+
+/// What commissioning may assume and how far it goes.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct CommissionSettings {
+    /// Standard deviation of the logarithm of a described parameter about the truth.
+    pub parameter_sd: f64,
+    /// Standard deviation of a well's skin about the described one.
+    pub skin_sd: f64,
+    /// Bias a meter may have, as a share (common practice for flow meters in the field, no source).
+    pub meter_bias: f64,
+    /// Rounds of Gauss-Newton at most.
+    pub rounds: usize,
+}
+
+impl Default for CommissionSettings {
+    fn default() -> Self {
+        Self {
+            parameter_sd: 0.5,
+            skin_sd: 5.0,
+            meter_bias: 0.01,
+            rounds: 10,
+        }
+    }
 }
 
 /// What history said about the parameters. Standard deviations are of the natural logarithm where a parameter is positive.
@@ -37,4 +70,16 @@ pub struct Calibration {
     pub blocks: (i64, i64),
     /// Standard deviation and lag-1 correlation of the whitened departures left at each gauge.
     pub left: Vec<(f64, f64)>,
+    /// Pressure of each gauge at rest, about which its offset is learned \[Pa\].
+    pub reference: Vec<f64>,
+    /// The stochastic nuisances.
+    pub stochastic: Noise,
+    /// Priors of the nuisances' coefficients.
+    pub priors: Priors,
+    /// Factor on the innovations' scale of each gauge that history asks for.
+    pub inflate: Vec<f64>,
+    /// Longest run of blocks in which the raw value of each gauge never changed.
+    pub longest_unchanged: Vec<u32>,
+    /// Mean total injection \[m3/s\].
+    pub flow: f64,
 }

@@ -2,7 +2,17 @@
 
 use serde::{Deserialize, Serialize};
 
+use crate::expect::columns::Memory;
+use crate::expect::posterior::Posterior;
 use crate::finding::{Cause, Expectation, Finding, Place, Size, Subject};
+use crate::weigh::barrier::Barriers;
+use crate::weigh::ladder::Ladder;
+
+mod band;
+mod step;
+mod stuck;
+
+pub use step::Watch;
 
 /// What the site asks of the watch.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
@@ -61,4 +71,46 @@ pub enum Blind {
     NoGround,
     /// The model does not describe this gauge.
     Model,
+}
+
+/// A column that comes and goes.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub(crate) enum Live {
+    /// A meter's gain in a rate epoch, by the epoch's id.
+    Epoch(u32),
+    /// A missing reading.
+    Missing {
+        /// Gauge, by order.
+        gauge: usize,
+        /// Block.
+        block: i64,
+    },
+}
+
+/// All that a watch remembers; with the same ground, settings and adoptions it goes on bit by bit as if never stopped.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct WatchState {
+    /// Next block due; `None` before the first.
+    next: Option<i64>,
+    memory: Option<Memory>,
+    /// Filter state of readings and columns.
+    filter: nalgebra::DMatrix<f64>,
+    /// Rows of the present batch: whitened readings, then columns.
+    pending: nalgebra::DMatrix<f64>,
+    live: Vec<Live>,
+    posterior: Posterior,
+    band: band::Band,
+    stuck: stuck::Stuck,
+    ladder: Ladder,
+    barriers: Barriers,
+    log_mixture: f64,
+    finding: Option<Finding>,
+}
+
+impl WatchState {
+    /// Number of the next block due; `None` before the first.
+    #[must_use]
+    pub fn next_block(&self) -> Option<i64> {
+        self.next
+    }
 }

@@ -1,0 +1,617 @@
+//! The fit: damped Gauss-Newton in the logarithms of the parameters, everything else linear.
+
+#![expect(
+    clippy::indexing_slicing,
+    reason = "indices run over columns, gauges and wells laid out by the same code"
+)]
+
+use nalgebra::{DMatrix, DVector};
+
+use super::history::{History, Regression, Solved};
+use super::relevance::{Group, learn};
+use super::{Calibration, CommissionSettings};
+use crate::ModelError;
+use crate::block::Block;
+use crate::expect::columns::{Columns, Kind, LAGS, Priors};
+use crate::expect::frame::{Frame, factor, free_parameters, with_factor};
+use crate::expect::noise::{Noise, Path};
+use crate::expect::whitener::Whitener;
+use crate::ground::Ground;
+use crate::reduce::{Factors, Reduced};
+
+/// Share of a pair's response that its discrepancy is thought to be before history is asked.
+const TYPICAL_DISCREPANCY: f64 = 0.001;
+/// The same of a meter's gain in one rate epoch.
+const TYPICAL_GAIN: f64 = 0.005;
+/// Largest step of a logarithm in one round.
+const LONGEST_STEP: f64 = 0.4;
+/// Least history \[s\].
+const LEAST_HISTORY: f64 = 5.0 * 86_400.0;
+
+/// Calibrates a ground on quiet history.
+///
+/// `progress` is told the share done, 0 to 1.
+///
+/// # Errors
+/// [`ModelError::History`] where history is too short or a gauge is silent in it, others where the mathematics fails.
+pub fn commission(
+    ground: &Ground,
+    reduced: &Reduced,
+    history: &[Block],
+    settings: &CommissionSettings,
+    progress: &mut dyn FnMut(f64),
+) -> Result<Calibration, ModelError> {
+    let (Some(first), Some(last)) = (history.first(), history.last()) else {
+        return Err(ModelError::History("there is none".to_owned()));
+    };
+    let block = first.length;
+    let length = history.len() as f64 * block;
+    if length < LEAST_HISTORY {
+        return Err(ModelError::History(format!(
+            "it lasts {:.1} days, but at least {:.0} days are needed",
+            length / 86_400.0,
+            LEAST_HISTORY / 86_400.0
+        )));
+    }
+    let mut fit = Fit::start(ground, reduced, history, settings, block)?;
+    for round in 0..settings.rounds {
+        progress(0.05 + 0.6 * round as f64 / settings.rounds as f64);
+        let moved = fit.round(round)?;
+        if round >= 3 && moved < 1e-3 {
+            break;
+        }
+    }
+    progress(0.7);
+    let calibration = fit.finish(history, (first.index, last.index))?;
+    progress(1.0);
+    Ok(calibration)
+}
+
+/// The state of the fit.
+struct Fit<'a> {
+    ground: &'a Ground,
+    reduced: &'a Reduced,
+    history: &'a [Block],
+    settings: &'a CommissionSettings,
+    block: f64,
+    factors: Factors,
+    skins: Vec<f64>,
+    noise: Noise,
+    priors: Priors,
+    share: Vec<f64>,
+    gain: f64,
+    past: f64,
+    /// Spread of a parameter between pairs: other wells, own well.
+    apart: [f64; 2],
+    coefficients: Option<DVector<f64>>,
+}
+
+impl<'a> Fit<'a> {
+    fn start(
+        ground: &'a Ground,
+        reduced: &'a Reduced,
+        history: &'a [Block],
+        settings: &'a CommissionSettings,
+        block: f64,
+    ) -> Result<Self, ModelError> {
+        let (gauges, wells) = (ground.gauges.len(), ground.wells.len());
+        let rates = Rates::of(history, wells);
+        let count = typical_count(history, gauges);
+        let noise = Noise {
+            gauge: ground
+                .gauges
+                .iter()
+                .zip(&count)
+                .map(|(g, n)| g.noise.max(1e-3) / n.sqrt())
+                .collect(),
+            wander: ground
+                .gauges
+                .iter()
+                .zip(&count)
+                .map(|(g, n)| 0.5 * g.noise.max(1e-3) / n.sqrt())
+                .collect(),
+            wander_memory: 5.0 * 86_400.0,
+            meter: rates.largest.iter().map(|q| 0.005 * q).collect(),
+            meter_memory: 86_400.0,
+            meter_fresh: rates.largest.iter().map(|q| 0.002 * q).collect(),
+        };
+        let priors = Priors {
+            offset: 1e5,
+            drift: ground.gauges.iter().map(|g| 0.5 * g.drift).collect(),
+            settling: ground
+                .gauges
+                .iter()
+                .map(|g| 0.5 * g.drift * 0.25 * 365.25 * 86_400.0)
+                .collect(),
+            skin: settings.skin_sd,
+            parameter: settings.parameter_sd,
+            bias: settings.meter_bias,
+            gain: 1.0,
+            past: 1.0,
+            apart: [1.0; 2],
+            discrepancy: vec![1.0; gauges * wells],
+            pair_spread: vec![0.0; gauges * wells],
+            lag_spread: rates.lag_spread.clone(),
+            rate: rates.largest.clone(),
+        };
+        let skins = ground.wells.iter().map(|w| w.skin.max(0.0)).collect();
+        let factors = free_parameters(reduced)
+            .into_iter()
+            .map(|p| (p, 1.0))
+            .collect();
+        Ok(Self {
+            ground,
+            reduced,
+            history,
+            settings,
+            block,
+            factors,
+            skins,
+            noise,
+            priors,
+            share: vec![0.01; gauges * wells],
+            gain: TYPICAL_GAIN,
+            past: 0.1,
+            apart: [0.1, 0.03],
+            coefficients: None,
+        })
+    }
+
+    fn columns(&self) -> Result<Columns, ModelError> {
+        let frame = Frame::new(self.ground, self.reduced, &self.factors)?;
+        Ok(Columns::new(
+            frame,
+            self.priors.clone(),
+            &self.skins,
+            Vec::new(),
+        ))
+    }
+
+    /// Prior standard deviation and mean of every coefficient.
+    fn spread(&self, columns: &Columns, width: usize) -> (DVector<f64>, DVector<f64>) {
+        let mut spread = DVector::from_element(width, 1.0);
+        let mut centre = DVector::zeros(width);
+        for (index, kind) in columns.kinds.iter().enumerate() {
+            match *kind {
+                Kind::Discrepancy { gauge, well, .. } => {
+                    spread[index] = self.share[gauge * columns.frame.wells + well];
+                }
+                Kind::Past { .. } => spread[index] = self.past,
+                // The prior is about the described value, wherever the fit now stands.
+                Kind::Parameter(i) => {
+                    if let Some(tilted) = columns.frame.tilted.get(i) {
+                        centre[index] =
+                            -factor(&self.factors, tilted.parameter).ln() / self.priors.parameter;
+                    }
+                }
+                Kind::Skin(i) => {
+                    if let Some(&(_, well, _)) = columns.frame.in_wells.get(i)
+                        && let (Some(skin), Some(described)) =
+                            (self.skins.get(well), self.ground.wells.get(well))
+                    {
+                        centre[index] = (described.skin.max(0.0) - skin) / self.priors.skin;
+                    }
+                }
+                Kind::PairParameter { gauge, well, .. } => {
+                    let own = columns.frame.well_of(gauge).is_some_and(|(w, _)| w == well);
+                    spread[index] = self.apart[usize::from(own)];
+                }
+                _ => {}
+            }
+        }
+        for index in columns.len()..width {
+            spread[index] = self.gain;
+        }
+        (spread, centre)
+    }
+
+    fn whitener(&self, columns: &Columns) -> Result<Whitener, ModelError> {
+        let path = Path::of(&columns.frame.modal, self.block);
+        Whitener::new(&path, &self.noise, &columns.skin_paths(), self.block)
+    }
+
+    /// One round: columns at the present parameters, scales learned, parameters and skins moved. Returns the longest move.
+    fn round(&mut self, round: usize) -> Result<f64, ModelError> {
+        let mut columns = self.columns()?;
+        let mut history = History::run(&mut columns, self.history)?;
+        self.priors.pair_spread.clone_from(&history.pair_spread);
+        if let Some(coefficients) = &self.coefficients {
+            history.fill(coefficients);
+        }
+        if round == 0 {
+            columns = self.columns()?;
+            history = History::run(&mut columns, self.history)?;
+        }
+        let regression = history.whiten(&self.whitener(&columns)?);
+        let solved = self.learn_scales(&columns, &regression, round)?;
+        let mut moved = 0.0_f64;
+        for (index, kind) in columns.kinds.iter().enumerate() {
+            match *kind {
+                Kind::Parameter(i) => {
+                    if let Some(tilted) = columns.frame.tilted.get(i) {
+                        let step = (solved.mean[index] * self.priors.parameter)
+                            .clamp(-LONGEST_STEP, LONGEST_STEP);
+                        moved = moved.max(step.abs());
+                        let value = factor(&self.factors, tilted.parameter) * step.exp();
+                        self.factors = with_factor(&self.factors, tilted.parameter, value);
+                    }
+                }
+                Kind::Skin(i) => {
+                    if let Some(&(_, well, _)) = columns.frame.in_wells.get(i)
+                        && let Some(skin) = self.skins.get_mut(well)
+                    {
+                        *skin += solved.mean[index] * self.priors.skin;
+                    }
+                }
+                _ => {}
+            }
+        }
+        self.factors.sort_by_key(|(p, _)| *p);
+        if (1..6).contains(&round) {
+            self.learn_noise(&columns, &history, &solved)?;
+        }
+        self.coefficients = Some(solved.mean);
+        Ok(moved)
+    }
+
+    /// Groups of columns whose scale is learned.
+    fn groups(&self, columns: &Columns, width: usize) -> Vec<Group> {
+        let (gauges, wells) = (columns.frame.gauges, columns.frame.wells);
+        let mut groups: Vec<Group> = (0..gauges * wells)
+            .map(|pair| Group {
+                columns: Vec::new(),
+                scale: self.share[pair],
+                typical: TYPICAL_DISCREPANCY,
+                weight: 1.0,
+            })
+            .collect();
+        let mut past = Group {
+            columns: Vec::new(),
+            scale: self.past,
+            typical: 0.003,
+            weight: 1.0,
+        };
+        for (index, kind) in columns.kinds.iter().enumerate() {
+            match *kind {
+                Kind::Discrepancy { gauge, well, .. } => {
+                    if let Some(group) = groups.get_mut(gauge * wells + well) {
+                        group.columns.push(index);
+                    }
+                }
+                Kind::Past { .. } => past.columns.push(index),
+                _ => {}
+            }
+        }
+        groups.push(past);
+        for own in [false, true] {
+            let members = columns
+                .kinds
+                .iter()
+                .enumerate()
+                .filter(|(_, kind)| match **kind {
+                    Kind::PairParameter { gauge, well, .. } => {
+                        columns.frame.well_of(gauge).is_some_and(|(w, _)| w == well) == own
+                    }
+                    _ => false,
+                });
+            groups.push(Group {
+                columns: members.map(|(index, _)| index).collect(),
+                scale: self.apart[usize::from(own)],
+                typical: TYPICAL_DISCREPANCY,
+                weight: 1.0,
+            });
+        }
+        groups.push(Group {
+            columns: (columns.len()..width).collect(),
+            scale: self.gain,
+            typical: TYPICAL_GAIN,
+            weight: 4.0,
+        });
+        groups
+    }
+
+    fn learn_scales(
+        &mut self,
+        columns: &Columns,
+        regression: &Regression,
+        round: usize,
+    ) -> Result<Solved, ModelError> {
+        let width = regression.z.len();
+        let (mut spread, centre) = self.spread(columns, width);
+        if round == 0 {
+            return regression.solve(&spread, &centre);
+        }
+        let mut groups = self.groups(columns, width);
+        let solved = learn(regression, &mut groups, &mut spread, &centre)?;
+        let pairs = self.share.len();
+        for (share, group) in self.share.iter_mut().zip(&groups) {
+            *share = group.scale;
+        }
+        if let Some([past, other, own, gain]) = groups.get(pairs..) {
+            self.past = past.scale;
+            self.apart = [other.scale, own.scale];
+            self.gain = gain.scale;
+        }
+        Ok(solved)
+    }
+
+    /// Log likelihood of what the coefficients leave, under other noise.
+    fn try_noise(
+        &self,
+        columns: &Columns,
+        path: &Path,
+        left: &DMatrix<f64>,
+        noise: &Noise,
+    ) -> Result<f64, ModelError> {
+        let whitener = Whitener::new(path, noise, &columns.skin_paths(), self.block)?;
+        let gauges = columns.frame.gauges;
+        let mut state = DMatrix::zeros(whitener.states(), 1);
+        let mut square = 0.0;
+        for at in (0..left.nrows()).step_by(gauges) {
+            square += whitener
+                .step(&mut state, &left.rows(at, gauges).into_owned())
+                .norm_squared();
+        }
+        Ok(-0.5 * square - whitener.log_scale() * (left.nrows() / gauges) as f64)
+    }
+
+    /// Moves each figure of the noise while the likelihood of the residuals grows.
+    fn learn_noise(
+        &mut self,
+        columns: &Columns,
+        history: &History,
+        solved: &Solved,
+    ) -> Result<(), ModelError> {
+        let width = history.raw.ncols() - 1;
+        let mut left = history.raw.columns(0, 1).into_owned();
+        left.gemm(
+            -1.0,
+            &history.raw.columns(1, width),
+            &DMatrix::from_column_slice(width, 1, solved.mean.as_slice()),
+            1.0,
+        );
+        let path = Path::of(&columns.frame.modal, self.block);
+        let mut best = self.try_noise(columns, &path, &left, &self.noise)?;
+        let gauges = self.noise.gauge.len();
+        let mut knobs: Vec<Knob> = vec![
+            Knob::Gauges,
+            Knob::Wander,
+            Knob::Meter,
+            Knob::MeterMemory,
+            Knob::MeterFresh,
+        ];
+        knobs.extend((0..gauges).map(Knob::Gauge));
+        for stride in [2.0_f64, 1.25] {
+            for &knob in &knobs {
+                for factor in [stride, 1.0 / stride] {
+                    let mut improved = false;
+                    for _ in 0..3 {
+                        let mut next = self.noise.clone();
+                        knob.turn(&mut next, factor);
+                        let value = self.try_noise(columns, &path, &left, &next)?;
+                        if value <= best + 0.5 {
+                            break;
+                        }
+                        best = value;
+                        self.noise = next;
+                        improved = true;
+                    }
+                    if improved {
+                        break;
+                    }
+                }
+            }
+        }
+        Ok(())
+    }
+
+    fn finish(&mut self, blocks: &[Block], span: (i64, i64)) -> Result<Calibration, ModelError> {
+        let mut columns = self.columns()?;
+        let mut history = History::run(&mut columns, self.history)?;
+        if let Some(coefficients) = &self.coefficients {
+            history.fill(coefficients);
+        }
+        let mut whitener = self.whitener(&columns)?;
+        let regression = history.whiten(&whitener);
+        let width = regression.z.len();
+        let (spread, centre) = self.spread(&columns, width);
+        let solved = regression.solve(&spread, &centre)?;
+        let gauges = columns.frame.gauges;
+        let left = regression.left(&solved.mean);
+        let summary = |left: &DVector<f64>| -> Vec<(f64, f64)> {
+            (0..gauges)
+                .map(|gauge| {
+                    let series: Vec<f64> =
+                        left.iter().skip(gauge).step_by(gauges).copied().collect();
+                    spread_and_correlation(&series)
+                })
+                .collect()
+        };
+        let inflate: Vec<f64> = summary(&left).iter().map(|(sd, _)| sd.max(0.7)).collect();
+        whitener.inflate(&inflate);
+        let scaled = DVector::from_iterator(
+            left.len(),
+            left.iter()
+                .enumerate()
+                .map(|(i, v)| v / inflate[i % gauges]),
+        );
+        let inverse: DMatrix<f64> = solved.factor.inverse();
+        let sd = |index: usize| inverse[(index, index)].max(0.0).sqrt();
+        let mut factor_sd = vec![0.0; self.factors.len()];
+        let mut skin_sd = vec![self.settings.skin_sd; self.skins.len()];
+        for (index, kind) in columns.kinds.iter().enumerate() {
+            match *kind {
+                Kind::Parameter(i) => {
+                    if let Some(tilted) = columns.frame.tilted.get(i)
+                        && let Some(at) = self
+                            .factors
+                            .iter()
+                            .position(|(p, _)| *p == tilted.parameter)
+                    {
+                        factor_sd[at] = sd(index) * self.priors.parameter;
+                    }
+                }
+                Kind::Skin(i) => {
+                    if let Some(&(_, well, _)) = columns.frame.in_wells.get(i) {
+                        skin_sd[well] = sd(index) * self.priors.skin;
+                    }
+                }
+                _ => {}
+            }
+        }
+        let innovation = whitener.innovation();
+        let mut priors = self.priors.clone();
+        priors.gain = self.gain;
+        priors.past = self.past;
+        priors.apart = self.apart;
+        priors.discrepancy.clone_from(&self.share);
+        let rates = Rates::of(blocks, columns.frame.wells);
+        Ok(Calibration {
+            factors: self.factors.clone(),
+            factor_sd,
+            skins: self.skins.clone(),
+            skin_sd,
+            noise: (0..gauges).map(|g| innovation[(g, g)].sqrt()).collect(),
+            discrepancy: self.share.clone(),
+            block: self.block,
+            blocks: span,
+            left: summary(&scaled),
+            reference: history.reference,
+            stochastic: self.noise.clone(),
+            priors,
+            inflate,
+            longest_unchanged: longest_unchanged(blocks, gauges),
+            flow: rates.flow,
+        })
+    }
+}
+
+/// A figure of the noise that is tried larger and smaller.
+#[derive(Debug, Clone, Copy)]
+enum Knob {
+    Gauges,
+    Wander,
+    Meter,
+    MeterMemory,
+    MeterFresh,
+    Gauge(usize),
+}
+
+impl Knob {
+    fn turn(self, noise: &mut Noise, factor: f64) {
+        let all = |list: &mut Vec<f64>| list.iter_mut().for_each(|v| *v *= factor);
+        match self {
+            Self::Gauges => all(&mut noise.gauge),
+            Self::Wander => all(&mut noise.wander),
+            Self::Meter => all(&mut noise.meter),
+            Self::MeterMemory => noise.meter_memory *= factor,
+            Self::MeterFresh => all(&mut noise.meter_fresh),
+            Self::Gauge(g) => {
+                if let Some(value) = noise.gauge.get_mut(g) {
+                    *value *= factor;
+                }
+            }
+        }
+    }
+}
+
+/// What the rates of the history are like.
+struct Rates {
+    /// Largest rate of each well \[m3/s\].
+    largest: Vec<f64>,
+    /// Spread of each well's lagged rate (lag by well) \[m3/s\].
+    lag_spread: Vec<f64>,
+    /// Mean total injection \[m3/s\].
+    flow: f64,
+}
+
+impl Rates {
+    fn of(history: &[Block], wells: usize) -> Self {
+        let mut largest = vec![0.0_f64; wells];
+        let mut lag_spread = vec![0.0; LAGS.len() * wells];
+        let mut flow = 0.0;
+        for well in 0..wells {
+            let mut series = Vec::with_capacity(history.len());
+            for block in history {
+                let mut from = 0.0;
+                let mut sum = 0.0;
+                for &(until, rate) in block.rates.get(well).map_or(&[][..], |p| &p.pieces) {
+                    sum += rate * (until - from);
+                    from = until;
+                    largest[well] = largest[well].max(rate.abs());
+                }
+                series.push(sum / block.length);
+            }
+            let length = history.first().map_or(1.0, |b| b.length);
+            for (lag, time) in LAGS.iter().enumerate() {
+                let keep = (-length / time).exp();
+                let mut value = 0.0;
+                let lagged: Vec<f64> = series
+                    .iter()
+                    .map(|rate| {
+                        value = keep * value + (1.0 - keep) * rate;
+                        value
+                    })
+                    .collect();
+                lag_spread[lag * wells + well] = spread_and_correlation(&lagged).0;
+            }
+            flow += series.iter().map(|q| q.abs()).sum::<f64>() / series.len().max(1) as f64;
+        }
+        Self {
+            largest,
+            lag_spread,
+            flow,
+        }
+    }
+}
+
+/// Readings in a block of each gauge, as a rule.
+fn typical_count(history: &[Block], gauges: usize) -> Vec<f64> {
+    (0..gauges)
+        .map(|gauge| {
+            let counts = history
+                .iter()
+                .filter_map(|b| b.gauges.get(gauge).and_then(Option::as_ref))
+                .map(|g| f64::from(g.count))
+                .collect();
+            super::history::median(counts).max(1.0)
+        })
+        .collect()
+}
+
+/// Longest run of blocks without a change of the raw value, by gauge.
+fn longest_unchanged(history: &[Block], gauges: usize) -> Vec<u32> {
+    (0..gauges)
+        .map(|gauge| {
+            let (mut run, mut longest) = (0, 0);
+            for block in history {
+                if let Some(Some(read)) = block.gauges.get(gauge) {
+                    run = if read.changed { 0 } else { run + 1 };
+                    longest = longest.max(run);
+                }
+            }
+            longest
+        })
+        .collect()
+}
+
+/// Standard deviation and lag-1 correlation of a series.
+pub(crate) fn spread_and_correlation(series: &[f64]) -> (f64, f64) {
+    let count = series.len().max(2) as f64;
+    let mean = series.iter().sum::<f64>() / count;
+    let variance = series.iter().map(|v| (v - mean).powi(2)).sum::<f64>() / count;
+    let together: f64 = series
+        .iter()
+        .zip(series.iter().skip(1))
+        .map(|(a, b)| (a - mean) * (b - mean))
+        .sum::<f64>()
+        / count;
+    (
+        variance.sqrt(),
+        if variance > 0.0 {
+            together / variance
+        } else {
+            0.0
+        },
+    )
+}

@@ -1,0 +1,187 @@
+//! History as one whitened regression: readings less prediction beside all columns.
+
+#![expect(
+    clippy::indexing_slicing,
+    reason = "rows and columns are counted by the same code that lays them out"
+)]
+
+use nalgebra::{Cholesky, DMatrix, DVector, Dyn};
+
+use crate::ModelError;
+use crate::block::Block;
+use crate::expect::columns::Columns;
+use crate::expect::drive::Sampled;
+use crate::expect::whitener::Whitener;
+
+/// Raw columns of the whole history.
+#[derive(Debug, Clone)]
+pub(crate) struct History {
+    /// Readings less prediction and reference, then the columns (blocks times gauges, by 1 + columns).
+    pub(crate) raw: DMatrix<f64>,
+    /// Number of gauges.
+    pub(crate) gauges: usize,
+    /// Rows without a reading.
+    pub(crate) missing: Vec<usize>,
+    /// Reference subtracted from each gauge \[Pa\].
+    pub(crate) reference: Vec<f64>,
+    /// Spread of each pair's response \[Pa\] (gauge by well, row-major by gauge).
+    pub(crate) pair_spread: Vec<f64>,
+}
+
+impl History {
+    /// Runs the columns over the history.
+    ///
+    /// # Errors
+    /// [`ModelError`] where a block does not fit.
+    pub(crate) fn run(columns: &mut Columns, history: &[Block]) -> Result<Self, ModelError> {
+        let (gauges, wells) = (columns.frame.gauges, columns.frame.wells);
+        let mut memory = columns.start();
+        let fixed = columns.len();
+        let rows = history.len() * gauges;
+        let mut raw = DMatrix::zeros(rows, 1 + fixed);
+        let mut missing = Vec::new();
+        let mut pairs = DMatrix::zeros(gauges * wells, history.len());
+        for (index, block) in history.iter().enumerate() {
+            let sampled = Sampled::of(block, wells, gauges)?;
+            let step = columns.step(&mut memory, &sampled, block.start())?;
+            let width = 1 + fixed + step.epochs.ncols();
+            if raw.ncols() < width {
+                raw = raw.resize_horizontally(width, 0.0);
+            }
+            let at = index * gauges;
+            raw.view_mut((at, 1), (gauges, fixed))
+                .copy_from(&step.fixed);
+            raw.view_mut((at, 1 + fixed), (gauges, step.epochs.ncols()))
+                .copy_from(&step.epochs);
+            for gauge in 0..gauges {
+                match block.gauges.get(gauge).and_then(Option::as_ref) {
+                    Some(read) => raw[(at + gauge, 0)] = read.mean - step.base[gauge],
+                    None => missing.push(at + gauge),
+                }
+                for well in 0..wells {
+                    pairs[(gauge * wells + well, index)] = step.pairs[(gauge, well)];
+                }
+            }
+        }
+        let mut reference = Vec::with_capacity(gauges);
+        for gauge in 0..gauges {
+            let seen: Vec<f64> = (0..history.len())
+                .map(|b| b * gauges + gauge)
+                .filter(|row| missing.binary_search(row).is_err())
+                .map(|row| raw[(row, 0)])
+                .collect();
+            if seen.is_empty() {
+                return Err(ModelError::History(format!(
+                    "gauge {gauge} has no reading in the whole history; take it out of the site file or give a longer history"
+                )));
+            }
+            let middle = median(seen);
+            reference.push(middle);
+            for block in 0..history.len() {
+                let row = block * gauges + gauge;
+                raw[(row, 0)] = if missing.binary_search(&row).is_ok() {
+                    0.0
+                } else {
+                    raw[(row, 0)] - middle
+                };
+            }
+        }
+        let pair_spread = pairs.row_iter().map(|r| r.variance().sqrt()).collect();
+        Ok(Self {
+            raw,
+            gauges,
+            missing,
+            reference,
+            pair_spread,
+        })
+    }
+
+    /// Fills rows without a reading with what the coefficients say.
+    pub(crate) fn fill(&mut self, coefficients: &DVector<f64>) {
+        for &row in &self.missing {
+            let mut value = 0.0;
+            for (column, coefficient) in coefficients.iter().enumerate() {
+                value += self.raw[(row, column + 1)] * coefficient;
+            }
+            self.raw[(row, 0)] = value;
+        }
+    }
+
+    /// Whitens everything.
+    pub(crate) fn whiten(&self, whitener: &Whitener) -> Regression {
+        let mut state = DMatrix::zeros(whitener.states(), self.raw.ncols());
+        let mut rows = DMatrix::zeros(self.raw.nrows(), self.raw.ncols());
+        for at in (0..self.raw.nrows()).step_by(self.gauges) {
+            let block = self.raw.rows(at, self.gauges).into_owned();
+            rows.rows_mut(at, self.gauges)
+                .copy_from(&whitener.step(&mut state, &block));
+        }
+        let gram = rows.transpose() * &rows;
+        let width = gram.ncols() - 1;
+        Regression {
+            z: gram.view((1, 0), (width, 1)).column(0).into_owned(),
+            gram: gram.view((1, 1), (width, width)).into_owned(),
+            rows,
+        }
+    }
+}
+
+/// A whitened regression by its sums.
+#[derive(Debug, Clone)]
+pub(crate) struct Regression {
+    /// Whitened readings, then columns.
+    pub(crate) rows: DMatrix<f64>,
+    /// `W'e`.
+    pub(crate) z: DVector<f64>,
+    /// `W'W`.
+    pub(crate) gram: DMatrix<f64>,
+}
+
+/// A regression solved under prior standard deviations.
+#[derive(Debug, Clone)]
+pub(crate) struct Solved {
+    /// Posterior mean of the coefficients.
+    pub(crate) mean: DVector<f64>,
+    /// Their covariance.
+    pub(crate) factor: Cholesky<f64, Dyn>,
+}
+
+impl Regression {
+    /// Solves with prior mean `centre` and prior standard deviation `spread` of each coefficient.
+    ///
+    /// # Errors
+    /// [`ModelError::NotPositive`] where the columns make no positive definite matrix.
+    pub(crate) fn solve(
+        &self,
+        spread: &DVector<f64>,
+        centre: &DVector<f64>,
+    ) -> Result<Solved, ModelError> {
+        let mut r = self.gram.clone();
+        let mut z = self.z.clone();
+        for (index, sd) in spread.iter().enumerate() {
+            let precision = 1.0 / (sd * sd);
+            r[(index, index)] += precision;
+            z[index] += precision * centre[index];
+        }
+        let factor = Cholesky::new(r).ok_or(ModelError::NotPositive {
+            what: "the matrix of the nuisances",
+        })?;
+        let mean = factor.solve(&z);
+        Ok(Solved { mean, factor })
+    }
+
+    /// What the coefficients leave, whitened.
+    pub(crate) fn left(&self, mean: &DVector<f64>) -> DVector<f64> {
+        let width = self.rows.ncols() - 1;
+        self.rows.column(0) - self.rows.columns(1, width) * mean
+    }
+}
+
+/// Median; of an even count the upper one of the middle two.
+pub(crate) fn median(mut values: Vec<f64>) -> f64 {
+    let middle = values.len() / 2;
+    if values.is_empty() {
+        return 0.0;
+    }
+    *values.select_nth_unstable_by(middle, f64::total_cmp).1
+}

@@ -1,0 +1,403 @@
+//! The constant-coefficient nuisances as columns: everything a gauge can show that is no cause.
+//!
+//! Every column is scaled by its prior standard deviation, so that all coefficients have a standard normal prior.
+//! Fixed columns exist from the first block on: offset, drift within specification and settling of each gauge, skin
+//! of each well with a gauge in it, error of each fitted parameter, bias of each meter, discrepancy of each pair, and
+//! the rates before the record. Further columns come and go: a meter's gain in each rate epoch (a meter errs in
+//! proportion to its rate, and differently at each), readings that are missing, rates that are unknown.
+
+#![expect(
+    clippy::indexing_slicing,
+    reason = "indices run over gauges, wells and columns laid out by the same code"
+)]
+
+use nalgebra::{DMatrix, DVector};
+use serde::{Deserialize, Serialize};
+
+use super::adopted::Adopted;
+use super::drive::{Drive, Driven, Sampled, Tables, gain};
+use super::epochs::Epochs;
+use super::frame::{Frame, held, means, seen};
+use crate::ModelError;
+
+/// What is known before the record of the size of each nuisance; learned at commissioning where marked.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Priors {
+    /// Offset of each gauge about its reference \[Pa\].
+    pub offset: f64,
+    /// Drift of each gauge within its specification \[Pa/s\].
+    pub drift: Vec<f64>,
+    /// Final settling of each gauge \[Pa\].
+    pub settling: Vec<f64>,
+    /// Skin of a well.
+    pub skin: f64,
+    /// Logarithm of a parameter.
+    pub parameter: f64,
+    /// Bias of a meter, as a share.
+    pub bias: f64,
+    /// Gain of a meter in one rate epoch, as a share (learned).
+    pub gain: f64,
+    /// Rates before the record, as a share of each well's largest rate (learned).
+    pub past: f64,
+    /// Spread of the logarithm of a parameter between pairs of well and gauge: other wells, own well (learned). In a
+    /// ground that varies, every pair sees a transmissivity and a storativity of its own.
+    pub apart: [f64; 2],
+    /// Discrepancy of each pair as a share of its response (learned; gauge by well, row-major by gauge).
+    pub discrepancy: Vec<f64>,
+    /// Spread of each pair's response over the history \[Pa\], in the same order.
+    pub pair_spread: Vec<f64>,
+    /// Spread of each well's lagged rate over the history \[m3/s\] (lag by well, row-major by lag).
+    pub lag_spread: Vec<f64>,
+    /// Largest rate of each well in the history \[m3/s\].
+    pub rate: Vec<f64>,
+}
+
+/// Time constants of the discrepancy, two a decade \[s\]; the first [`OWN_LAGS`] act at a well's own gauge only.
+pub(crate) const LAGS: [f64; 10] = [
+    360.0,
+    1_138.4,
+    3_600.0,
+    11_384.0,
+    36_000.0,
+    113_840.0,
+    360_000.0,
+    1_138_400.0,
+    3_600_000.0,
+    11_384_000.0,
+];
+/// How many of [`LAGS`] are for a well's own gauge only.
+pub(crate) const OWN_LAGS: usize = 2;
+/// Time constant of a new gauge's settling \[s\].
+const SETTLING: f64 = 15.0 * 86_400.0;
+/// Ends of the windows of past rates \[s before the record\].
+const PAST: [f64; 8] = [
+    21_600.0,
+    86_400.0,
+    345_600.0,
+    1_382_400.0,
+    5_529_600.0,
+    22_118_400.0,
+    88_473_600.0,
+    353_894_400.0,
+];
+
+/// Which nuisance a fixed column is.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub(crate) enum Kind {
+    Offset(usize),
+    Drift(usize),
+    Settling(usize),
+    Skin(usize),
+    Parameter(usize),
+    Bias(usize),
+    PairParameter {
+        gauge: usize,
+        well: usize,
+        parameter: usize,
+    },
+    Discrepancy {
+        gauge: usize,
+        well: usize,
+        lag: usize,
+    },
+    Past {
+        well: usize,
+    },
+    Adopted(usize),
+}
+
+/// The fixed columns of a site.
+#[derive(Debug, Clone)]
+pub(crate) struct Columns {
+    pub(crate) frame: Frame,
+    pub(crate) kinds: Vec<Kind>,
+    pub(crate) priors: Priors,
+    pub(crate) adopted: Vec<Adopted>,
+    lags: Drive,
+    skins: Vec<f64>,
+}
+
+/// What the columns remember from block to block.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub(crate) struct Memory {
+    /// Seconds since the record's first block.
+    pub(crate) elapsed: f64,
+    /// Unit-port states of the calibrated ground (modes by wells).
+    pub(crate) base: DMatrix<f64>,
+    /// The same for each tilted ground.
+    tilted: Vec<DMatrix<f64>>,
+    /// States of the lags (lags by wells).
+    lags: DMatrix<f64>,
+    /// Well and state of each window of the past.
+    past: Vec<(usize, DVector<f64>)>,
+    /// Rate of each well at the end of the last block \[m3/s\].
+    pub(crate) entering: Vec<f64>,
+    /// Rate epochs.
+    pub(crate) epochs: Epochs,
+}
+
+/// One block of raw columns.
+#[derive(Debug, Clone)]
+pub(crate) struct Raw {
+    /// Prediction of the calibrated ground \[Pa\].
+    pub(crate) base: DVector<f64>,
+    /// Response of each pair, skin included \[Pa\] (gauges by wells).
+    pub(crate) pairs: DMatrix<f64>,
+    /// Fixed columns (gauges by columns).
+    pub(crate) fixed: DMatrix<f64>,
+    /// Columns of the rate epochs, in their order (gauges by epochs with a column).
+    pub(crate) epochs: DMatrix<f64>,
+    /// Means of the unit-port states, by class.
+    pub(crate) means: Vec<DMatrix<f64>>,
+    /// How the block's geometry acts on the modes.
+    pub(crate) tables: Tables,
+    /// What the block's rates drove.
+    pub(crate) driven: Driven,
+    /// Rate of each well before the block \[m3/s\].
+    pub(crate) entering: Vec<f64>,
+}
+
+impl Columns {
+    /// Lays out the columns.
+    pub(crate) fn new(frame: Frame, priors: Priors, skins: &[f64], adopted: Vec<Adopted>) -> Self {
+        let mut kinds = Vec::new();
+        let (gauges, wells) = (frame.gauges, frame.wells);
+        kinds.extend((0..gauges).map(Kind::Offset));
+        kinds.extend((0..gauges).map(Kind::Drift));
+        kinds.extend((0..gauges).map(Kind::Settling));
+        kinds.extend((0..frame.in_wells.len()).map(Kind::Skin));
+        kinds.extend((0..frame.tilted.len()).map(Kind::Parameter));
+        kinds.extend((0..wells).map(Kind::Bias));
+        for gauge in 0..gauges {
+            for well in 0..wells {
+                let own = frame.well_of(gauge).is_some_and(|(w, _)| w == well);
+                let first = if own { 0 } else { OWN_LAGS };
+                kinds.extend(
+                    (0..frame.tilted.len()).map(|parameter| Kind::PairParameter {
+                        gauge,
+                        well,
+                        parameter,
+                    }),
+                );
+                kinds.extend((first..LAGS.len()).map(|lag| Kind::Discrepancy { gauge, well, lag }));
+            }
+        }
+        for well in 0..wells {
+            kinds.extend(PAST.iter().map(|_| Kind::Past { well }));
+        }
+        for (index, one) in adopted.iter().enumerate() {
+            kinds.extend((0..one.columns()).map(|_| Kind::Adopted(index)));
+        }
+        let lags = Drive::new(DVector::from_iterator(
+            LAGS.len(),
+            LAGS.iter().map(|t| 1.0 / t),
+        ));
+        Self {
+            frame,
+            kinds,
+            priors,
+            adopted,
+            lags,
+            skins: skins.to_vec(),
+        }
+    }
+
+    /// Number of fixed columns.
+    pub(crate) fn len(&self) -> usize {
+        self.kinds.len()
+    }
+
+    /// Pressure per rate through skin, of each gauge in a well: gauge, well, Pa per m3/s.
+    pub(crate) fn skin_paths(&self) -> Vec<(usize, usize, f64)> {
+        self.frame
+            .in_wells
+            .iter()
+            .map(|&(gauge, well, unit)| (gauge, well, unit * self.skin(well)))
+            .collect()
+    }
+
+    fn skin(&self, well: usize) -> f64 {
+        self.skins.get(well).copied().unwrap_or(0.0)
+    }
+
+    /// Memory before the first block.
+    pub(crate) fn start(&self) -> Memory {
+        let modes = self.frame.base.drive.len();
+        let wells = self.frame.wells;
+        let lambda = &self.frame.modal.lambda;
+        let mut past = Vec::new();
+        for well in 0..wells {
+            let mut from = 0.0;
+            for until in PAST {
+                let state = lambda.map(|l| (-l * from).exp() * gain(l, until - from));
+                past.push((well, state));
+                from = until;
+            }
+        }
+        Memory {
+            elapsed: 0.0,
+            base: DMatrix::zeros(modes, wells),
+            tilted: vec![DMatrix::zeros(modes, wells); self.frame.tilted.len()],
+            lags: DMatrix::zeros(self.lags.len(), wells),
+            past,
+            entering: vec![0.0; wells],
+            epochs: Epochs::new(wells),
+        }
+    }
+
+    /// Computes the raw columns of a block and moves the memory to its end.
+    ///
+    /// # Errors
+    /// [`ModelError`] where the block does not fit.
+    pub(crate) fn step(
+        &mut self,
+        memory: &mut Memory,
+        sampled: &Sampled,
+        start: f64,
+    ) -> Result<Raw, ModelError> {
+        let gauges = self.frame.gauges;
+        let class = &sampled.class;
+        if memory.elapsed == 0.0 {
+            // The record begins in mid-flow: the rate before it is taken to be the first one read.
+            for (entering, rates) in memory.entering.iter_mut().zip(&sampled.rates) {
+                *entering = rates.first().copied().unwrap_or(0.0);
+            }
+        }
+        let entering = memory.entering.clone();
+        let held = held(sampled, &memory.entering);
+        let tables = self.frame.base.drive.tables(&sampled.geometry).clone();
+        let driven = tables.drive(sampled, &|_, _| true);
+        let base_means = means(&tables, &memory.base, &driven.mean);
+        let mut pairs = self.frame.base.pairs(&base_means, class);
+        let bare = pairs.clone();
+        let held_at =
+            |gauge: usize, well: usize| held[(class.get(gauge).copied().unwrap_or(0), well)];
+        for &(gauge, well, unit) in &self.frame.in_wells {
+            pairs[(gauge, well)] += unit * self.skin(well) * held_at(gauge, well);
+        }
+        let base = pairs.column_sum();
+
+        let mut tilts = Vec::with_capacity(self.frame.tilted.len());
+        for (tilted, state) in self.frame.tilted.iter_mut().zip(&mut memory.tilted) {
+            let tables = tilted.stepped.drive.tables(&sampled.geometry).clone();
+            let driven = tables.drive(sampled, &|_, _| true);
+            let means = means(&tables, state, &driven.mean);
+            tilts.push((tilted.stepped.pairs(&means, class) - &bare) / tilted.step);
+            decay(state, &tables.decay);
+            *state += driven.end;
+        }
+        let lag_tables = self.lags.tables(&sampled.geometry).clone();
+        let lag_driven = lag_tables.drive(sampled, &|_, _| true);
+        let lag_means = means(&lag_tables, &memory.lags, &lag_driven.mean);
+
+        let mid = memory.elapsed + 0.5 * sampled.geometry.length;
+        let priors = &self.priors;
+        let mut fixed = DMatrix::zeros(gauges, self.kinds.len());
+        let at = |list: &[f64], index: usize| list.get(index).copied().unwrap_or(0.0);
+        let mut past_index = 0;
+        let mut adopted_from = None;
+        for (column, kind) in self.kinds.iter().enumerate() {
+            match *kind {
+                Kind::Offset(g) => fixed[(g, column)] = priors.offset,
+                Kind::Drift(g) => fixed[(g, column)] = at(&priors.drift, g) * mid,
+                Kind::Settling(g) => {
+                    fixed[(g, column)] = at(&priors.settling, g) * (-mid / SETTLING).exp()
+                }
+                Kind::Skin(i) => {
+                    if let Some(&(gauge, well, unit)) = self.frame.in_wells.get(i) {
+                        fixed[(gauge, column)] = priors.skin * unit * held_at(gauge, well);
+                    }
+                }
+                Kind::Parameter(i) => {
+                    if let Some(tilt) = tilts.get(i) {
+                        fixed
+                            .column_mut(column)
+                            .axpy(priors.parameter, &tilt.column_sum(), 0.0);
+                    }
+                }
+                Kind::Bias(w) => fixed
+                    .column_mut(column)
+                    .axpy(priors.bias, &pairs.column(w), 0.0),
+                Kind::PairParameter {
+                    gauge,
+                    well,
+                    parameter,
+                } => {
+                    let own = self.frame.well_of(gauge).is_some_and(|(w, _)| w == well);
+                    if let (Some(tilt), Some(spread)) =
+                        (tilts.get(parameter), priors.apart.get(usize::from(own)))
+                    {
+                        fixed[(gauge, column)] = spread * tilt[(gauge, well)];
+                    }
+                }
+                Kind::Discrepancy { gauge, well, lag } => {
+                    let pair = gauge * self.frame.wells + well;
+                    let spread = at(&priors.lag_spread, lag * self.frame.wells + well);
+                    let size = at(&priors.discrepancy, pair) * at(&priors.pair_spread, pair);
+                    let mean = class.get(gauge).and_then(|&c| lag_means.get(c));
+                    if let (Some(mean), Some(time), true) = (mean, LAGS.get(lag), spread > 0.0) {
+                        fixed[(gauge, column)] = size * mean[(lag, well)] / time / spread;
+                    }
+                }
+                Kind::Past { well } => {
+                    if let Some((_, state)) = memory.past.get(past_index) {
+                        let means: Vec<DVector<f64>> = tables
+                            .mean_decay
+                            .iter()
+                            .map(|decay| state.component_mul(decay))
+                            .collect();
+                        let seen = seen(&self.frame.base, well, &means, class);
+                        let size = priors.past * at(&priors.rate, well);
+                        fixed.column_mut(column).axpy(size, &seen, 0.0);
+                    }
+                    past_index += 1;
+                }
+                Kind::Adopted(_) => {
+                    adopted_from.get_or_insert(column);
+                }
+            }
+        }
+        if let Some(mut column) = adopted_from {
+            for one in &mut self.adopted {
+                let rows = one.rows(&self.frame, &tables, sampled, &pairs, start)?;
+                fixed.columns_mut(column, rows.ncols()).copy_from(&rows);
+                column += rows.ncols();
+            }
+        }
+        let epochs = memory.epochs.step(
+            &self.frame,
+            &tables,
+            sampled,
+            &memory.entering,
+            priors,
+            &|well| self.skins.get(well).copied().unwrap_or(0.0),
+        );
+        decay(&mut memory.base, &tables.decay);
+        memory.base += &driven.end;
+        decay(&mut memory.lags, &lag_tables.decay);
+        memory.lags += lag_driven.end;
+        for (_, state) in &mut memory.past {
+            state.component_mul_assign(&tables.decay);
+        }
+        for (entering, rates) in memory.entering.iter_mut().zip(&sampled.rates) {
+            *entering = rates.last().copied().unwrap_or(*entering);
+        }
+        memory.elapsed += sampled.geometry.length;
+        Ok(Raw {
+            base,
+            pairs,
+            fixed,
+            epochs,
+            means: base_means,
+            tables,
+            driven,
+            entering,
+        })
+    }
+}
+
+fn decay(state: &mut DMatrix<f64>, by: &DVector<f64>) {
+    for mut column in state.column_iter_mut() {
+        column.component_mul_assign(by);
+    }
+}

@@ -1,0 +1,120 @@
+//! The published expectation: model and nuisances as they were known some days ago.
+//!
+//! A slow leak would carry its own band along if the nuisances went on learning from it, so the published mean and
+//! standard deviation use a posterior older than the oldest onset that is alive, and never younger than a few days.
+
+#![expect(
+    clippy::indexing_slicing,
+    reason = "indices run over gauges of rows made here"
+)]
+
+use nalgebra::DMatrix;
+use serde::{Deserialize, Serialize};
+
+use super::Live;
+use crate::expect::posterior::Posterior;
+
+/// Least age of the posterior used \[s\].
+const AGE: f64 = 4.0 * 86_400.0;
+/// Ages at which posteriors are kept \[days\].
+const KEPT: [i64; 11] = [0, 1, 2, 3, 4, 5, 7, 11, 18, 30, 50];
+
+/// A posterior as it was.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+struct Snapshot {
+    /// Block after which it was taken.
+    block: i64,
+    /// Which columns come after the fixed ones.
+    live: Vec<Live>,
+    /// The posterior.
+    posterior: Posterior,
+}
+
+/// Posteriors of the past, oldest first.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub(crate) struct Band {
+    kept: Vec<Snapshot>,
+}
+
+impl Band {
+    pub(crate) fn new() -> Self {
+        Self { kept: Vec::new() }
+    }
+
+    /// Keeps the present posterior if a day has passed, and thins the old ones.
+    pub(crate) fn keep(&mut self, block: i64, day: i64, live: &[Live], posterior: &Posterior) {
+        if self.kept.last().is_some_and(|s| block - s.block < day) {
+            return;
+        }
+        self.kept.push(Snapshot {
+            block,
+            live: live.to_vec(),
+            posterior: posterior.clone(),
+        });
+        // The newest that is at least as old as each age wanted, and the youngest one.
+        let wanted: Vec<i64> = KEPT
+            .iter()
+            .filter_map(|age| {
+                self.kept
+                    .iter()
+                    .rev()
+                    .find(|s| block - s.block >= age * day)
+                    .map(|s| s.block)
+            })
+            .collect();
+        self.kept.retain(|s| wanted.contains(&s.block));
+    }
+
+    /// Mean and variance that the nuisances add to the model's prediction, by gauge, from a posterior older than `before`
+    /// and than some days. `row` holds fixed columns, then live ones. `None` where nothing is old enough.
+    pub(crate) fn expect(
+        &self,
+        now: i64,
+        block: f64,
+        before: Option<i64>,
+        fixed: usize,
+        live: &[Live],
+        row: &DMatrix<f64>,
+    ) -> Option<Vec<(f64, f64)>> {
+        let old = |s: &&Snapshot| (now - s.block) as f64 * block >= AGE;
+        let snapshot = self
+            .kept
+            .iter()
+            .rev()
+            .filter(old)
+            .find(|s| before.is_none_or(|b| s.block < b))
+            .or_else(|| self.kept.first().filter(old))?;
+        let count = snapshot.posterior.len();
+        let mut known = DMatrix::zeros(row.nrows(), count);
+        known
+            .columns_mut(0, fixed)
+            .copy_from(&row.columns(0, fixed));
+        let mut fresh = vec![0.0; row.nrows()];
+        for (index, name) in live.iter().enumerate() {
+            let column = row.column(fixed + index);
+            match snapshot.live.iter().position(|l| l == name) {
+                Some(at) => known.column_mut(fixed + at).copy_from(&column),
+                None if matches!(name, Live::Missing { .. }) => {}
+                None => {
+                    for (sum, value) in fresh.iter_mut().zip(column.iter()) {
+                        *sum += value * value;
+                    }
+                }
+            }
+        }
+        let mean = &known * &snapshot.posterior.mean;
+        let spread = &known * &snapshot.posterior.covariance;
+        Some(
+            fresh
+                .iter()
+                .enumerate()
+                .map(|(gauge, fresh)| {
+                    (
+                        mean[gauge],
+                        spread.row(gauge).dot(&known.row(gauge)).max(0.0) + fresh,
+                    )
+                })
+                .collect(),
+        )
+    }
+}
