@@ -5,11 +5,15 @@
 //! in neither.
 
 mod check;
+mod commission;
 mod exit;
 mod export;
 mod logs;
+mod progress;
+mod replay;
 mod summary;
 pub mod table;
+mod verify;
 
 use std::ffi::OsString;
 
@@ -44,14 +48,20 @@ pub struct Context {
 #[derive(Debug, Subcommand)]
 enum Verb {
     Check(check::Check),
+    Commission(commission::Commission),
     Export(export::Export),
+    Replay(replay::Replay),
+    Verify(verify::Verify),
 }
 
 impl Verb {
     fn run(self, context: &Context) -> Result<Exit, Failure> {
         match self {
             Self::Check(verb) => verb.run(context),
+            Self::Commission(verb) => verb.run(context),
             Self::Export(verb) => verb.run(context),
+            Self::Replay(verb) => verb.run(context),
+            Self::Verify(verb) => verb.run(context),
         }
     }
 }

@@ -34,6 +34,14 @@ pub struct Reading {
     pub clock: ClockState,
 }
 
+impl Reading {
+    /// Whether watch and limits may use it: it has a finite value that is not known to be bad.
+    #[must_use]
+    pub fn is_usable(&self) -> bool {
+        self.quality.usable() && self.value.is_some_and(f64::is_finite)
+    }
+}
+
 /// Primary quality flag of IOC/IODE (UNESCO-IOC Manuals and Guides 54, volume 3, 2013).
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case")]

@@ -1,1 +1,10 @@
-//! Drives the model over stored readings; re-run.
+//! Drives the model over stored readings: blocks, the model's thread, the ground file.
+
+pub mod blocks;
+pub mod closer;
+pub mod commissioning;
+pub mod ground_file;
+pub mod history;
+pub mod lane;
+pub mod rerun;
+pub mod stored;

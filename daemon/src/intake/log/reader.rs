@@ -100,6 +100,12 @@ impl LogReader {
         }))
     }
 
+    /// Instant of the next row; `None` at the end of all files.
+    #[must_use]
+    pub fn next_instant(&self) -> Option<Stamp> {
+        self.tables.iter().filter_map(Table::next_time).min()
+    }
+
     /// Size of all files \[bytes\].
     #[must_use]
     pub fn total_bytes(&self) -> u64 {

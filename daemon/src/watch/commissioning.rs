@@ -1,0 +1,102 @@
+//! Makes a ground file: mesh, weak form, reduction, calibration, and the watch brought to the end of history.
+
+use borewake_model::ModelError;
+use borewake_model::commission::{CommissionSettings, Commissioned, commission, places};
+use borewake_model::ground::Ground;
+use borewake_model::ground::mesh::MeshOptions;
+use borewake_model::reduce::{ReduceOptions, Reduced, reduce};
+use borewake_model::watch::{Watch, WatchSettings};
+use borewake_model::weak_form::{Scheme, discretise};
+
+use super::ground_file::GroundFile;
+use crate::config::Site;
+use crate::record::{Block, Stamp};
+
+/// A stage of commissioning, for progress.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Stage {
+    /// Mesh and assembly.
+    Discretise,
+    /// Projection on modes, with its certificate.
+    Reduce,
+    /// Calibration.
+    Calibrate,
+    /// Bringing the watch to the end of history.
+    Settle,
+}
+
+impl Stage {
+    /// What people are told.
+    #[must_use]
+    pub fn words(self) -> &'static str {
+        match self {
+            Self::Discretise => "meshing the ground",
+            Self::Reduce => "reducing it to modes",
+            Self::Calibrate => "fitting parameters",
+            Self::Settle => "settling the watch",
+        }
+    }
+}
+
+/// Meshes and reduces a ground as described.
+///
+/// # Errors
+/// The ground cannot be meshed or reduced; the place is named.
+pub fn reduce_ground(
+    ground: &Ground,
+    progress: &mut dyn FnMut(Stage, f64),
+) -> Result<Reduced, ModelError> {
+    progress(Stage::Discretise, 0.0);
+    let discrete = discretise(ground, Scheme::Quadratic, &MeshOptions::default())?;
+    progress(Stage::Reduce, 0.0);
+    let mut at = Vec::new();
+    for (point, layer) in places(ground) {
+        at.push((point, layer, discrete.locate(point, layer)?));
+    }
+    reduce(&discrete.system, &at, &ReduceOptions::default())
+}
+
+/// Makes a ground file from quiet history.
+///
+/// # Errors
+/// The ground cannot be meshed, or history cannot be used.
+pub fn make(
+    site: &Site,
+    history: &[Block],
+    made: Stamp,
+    progress: &mut dyn FnMut(Stage, f64),
+) -> Result<GroundFile, ModelError> {
+    let last_block = history.last().map(|b| b.index).ok_or_else(|| {
+        ModelError::History("no whole block of readings lies in the span given".into())
+    })?;
+    let reduced = reduce_ground(&site.ground, progress)?;
+    let settings = CommissionSettings::default();
+    let calibration = commission(&site.ground, &reduced, history, &settings, &mut |share| {
+        progress(Stage::Calibrate, share)
+    })?;
+    let commissioned = Commissioned {
+        ground: site.ground.clone(),
+        reduced,
+        calibration,
+    };
+    let settings = WatchSettings {
+        false_alarm_interval: site.watch.false_alarm_interval,
+        first_onset: last_block + 1,
+    };
+    let mut watch = Watch::new(&commissioned, &settings, &[])?;
+    let total = history.len().max(1);
+    for (done, block) in history.iter().enumerate() {
+        watch.step(block)?;
+        #[expect(clippy::cast_precision_loss, reason = "a share for a progress bar")]
+        progress(Stage::Settle, done as f64 / total as f64);
+    }
+    let start = watch.save();
+    Ok(GroundFile {
+        site_digest: site.ground_digest(),
+        made,
+        commissioned,
+        settings,
+        start,
+        last_block,
+    })
+}

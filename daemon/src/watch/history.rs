@@ -1,0 +1,148 @@
+//! History in memory: readings of a log or of the store, cut into blocks the same way the live edge is.
+
+use std::collections::BTreeMap;
+
+use super::blocks::BlockPlan;
+use crate::record::{Block, ChannelId, Reading, Stamp};
+
+/// Readings by channel, each in sample order and each key once.
+#[derive(Debug, Clone, Default)]
+pub struct History {
+    series: BTreeMap<ChannelId, Vec<Reading>>,
+}
+
+impl History {
+    /// Takes in readings in any order. Of two with one key the first stays, as in the store.
+    pub fn add(&mut self, readings: impl IntoIterator<Item = Reading>) {
+        for reading in readings {
+            let series = self.series.entry(reading.channel.clone()).or_default();
+            let key = (reading.sampled, reading.epoch);
+            match series.last().map(|r| (r.sampled, r.epoch)) {
+                None => series.push(reading),
+                Some(last) if last < key => series.push(reading),
+                Some(_) => {
+                    if let Err(at) = series.binary_search_by_key(&key, |r| (r.sampled, r.epoch)) {
+                        series.insert(at, reading);
+                    }
+                }
+            }
+        }
+    }
+
+    /// First and last sample instant; `None` when nothing was read.
+    #[must_use]
+    pub fn span(&self) -> Option<(Stamp, Stamp)> {
+        let first = self
+            .series
+            .values()
+            .filter_map(|s| s.first())
+            .map(|r| r.sampled)
+            .min()?;
+        let last = self
+            .series
+            .values()
+            .filter_map(|s| s.last())
+            .map(|r| r.sampled)
+            .max()?;
+        Some((first, last))
+    }
+
+    /// Number of readings.
+    #[must_use]
+    pub fn len(&self) -> usize {
+        self.series.values().map(Vec::len).sum()
+    }
+
+    /// Whether nothing was read.
+    #[must_use]
+    pub fn is_empty(&self) -> bool {
+        self.series.is_empty()
+    }
+
+    /// The block of one number.
+    #[must_use]
+    pub fn block(&self, plan: &BlockPlan, index: i64) -> Block {
+        let (start, end) = (plan.start_of(index), plan.start_of(index + 1));
+        let mut within = BTreeMap::new();
+        let mut before = BTreeMap::new();
+        for channel in plan.channels() {
+            let Some(series) = self.series.get(&channel) else {
+                continue;
+            };
+            let first = series.partition_point(|r| r.sampled < start);
+            let last = series.partition_point(|r| r.sampled <= end);
+            let earlier = series.get(..first).unwrap_or_default();
+            if let Some(reading) = earlier.iter().rev().find(|r| r.is_usable()) {
+                before.insert(channel.clone(), reading.clone());
+            }
+            if let Some(readings) = series.get(first..last) {
+                within.insert(channel, readings.to_vec());
+            }
+        }
+        plan.build(index, &within, &before)
+    }
+
+    /// All whole blocks between two instants, in order.
+    #[must_use]
+    pub fn blocks(&self, plan: &BlockPlan, from: Stamp, to: Stamp) -> Vec<Block> {
+        let first = plan.index_of(from.plus(plan.length - 1));
+        let end = plan.index_of(to);
+        (first..end).map(|index| self.block(plan, index)).collect()
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::record::{ClockEpoch, ClockState, DeviceStatus, Holds, Quality};
+    use crate::watch::blocks::WellFeed;
+
+    fn reading(second: i64, value: f64) -> Reading {
+        let at = Stamp(second * Stamp::SECOND);
+        Reading {
+            channel: "p".into(),
+            sampled: at,
+            received: at,
+            epoch: ClockEpoch(0),
+            value: Some(value),
+            raw: None,
+            quality: Quality::Good,
+            device: DeviceStatus::Normal,
+            clock: ClockState::Foreign,
+        }
+    }
+
+    #[test]
+    fn order_of_arrival_does_not_matter_and_the_first_of_a_key_stays() {
+        let plan = BlockPlan {
+            length: 100 * Stamp::SECOND,
+            hold_rate: 0,
+            wells: vec![WellFeed {
+                channel: "q".into(),
+                share: 1.0,
+                holds: Holds::After,
+            }],
+            gauges: vec!["p".into()],
+        };
+        let mut straight = History::default();
+        straight.add([reading(10, 1.0), reading(20, 2.0), reading(130, 3.0)]);
+        let mut mixed = History::default();
+        mixed.add([
+            reading(130, 3.0),
+            reading(20, 2.0),
+            reading(10, 1.0),
+            reading(20, 9.0),
+        ]);
+        let span = straight.span().unwrap();
+        assert_eq!(
+            straight
+                .blocks(&plan, Stamp(0), span.1.plus(100 * Stamp::SECOND))
+                .len(),
+            2
+        );
+        for index in 0..2 {
+            assert_eq!(straight.block(&plan, index), mixed.block(&plan, index));
+        }
+        assert_eq!(mixed.len(), 3);
+    }
+}
