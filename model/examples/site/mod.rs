@@ -119,3 +119,10 @@ fn processor_seconds() -> Option<f64> {
         .ok()
         .map(|ns| ns * 1e-9)
 }
+
+/// Log-spaced times \[s\].
+pub(crate) fn log_times(first: f64, last: f64, count: u32) -> Vec<f64> {
+    (0..count)
+        .map(|k| first * (last / first).powf(f64::from(k) / f64::from(count - 1)))
+        .collect()
+}

@@ -6,6 +6,7 @@
 )]
 
 use faer::dyn_stack::{MemBuffer, MemStack};
+use faer::sparse::SparseColMat;
 use faer::sparse::linalg::cholesky::{
     SymbolicCholesky, SymbolicCholeskyRaw, factorize_symbolic_cholesky,
 };
@@ -70,6 +71,15 @@ impl ShiftedCholesky {
     /// [`ModelError::NotPositive`] where the matrix is not positive definite.
     pub fn factorise(&mut self, s: f64) -> Result<(), ModelError> {
         let matrix = self.pencil.shifted(s);
+        self.factorise_matrix(&matrix)
+    }
+
+    /// The same for the pencil of the same system at other parameters.
+    pub(super) fn factorise_other(&mut self, pencil: &Pencil, s: f64) -> Result<(), ModelError> {
+        self.factorise_matrix(&pencil.shifted(s))
+    }
+
+    fn factorise_matrix(&mut self, matrix: &SparseColMat<usize, f64>) -> Result<(), ModelError> {
         self.values.fill(0.0);
         self.symbolic
             .factorize_numeric_llt(

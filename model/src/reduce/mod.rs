@@ -16,10 +16,12 @@ mod options;
 mod pencil;
 mod propagate;
 mod rows;
+mod search;
 mod span;
 mod step;
 #[cfg(test)]
 mod tests;
+mod truncate;
 
 pub use basis::Basis;
 pub use factor::ShiftedCholesky;

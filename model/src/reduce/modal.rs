@@ -104,7 +104,7 @@ fn weighted(
 
 /// Solves `K v = lambda M v`, where K vanishes on the first `closed` coordinates: decay rates ascending, and
 /// M-orthonormal vectors as columns.
-fn symmetric_pencil(
+pub(super) fn symmetric_pencil(
     stiffness: &DMatrix<f64>,
     mass: DMatrix<f64>,
     closed: usize,

@@ -23,8 +23,12 @@ pub struct ReduceOptions {
     pub tolerance: f64,
     /// Modes kept at most.
     pub max_modes: usize,
-    /// Real shifts, and so sparse factorisations, at most.
+    /// Real shifts, and so sparse factorisations, at most at the described parameters. Every parameter whose ratio to
+    /// the first matters takes up to ten more.
     pub max_shifts: usize,
+    /// Half-width of the box of parameters in which the basis must serve, as a natural logarithm: each parameter may lie within
+    /// `exp(± this)` times its described value.
+    pub log_range: f64,
     /// Number of log-spaced times at which the certificate compares with the full system, from `fastest` to one year
     /// (or to `slowest` if that is shorter).
     pub checked_times: usize,
@@ -51,6 +55,7 @@ impl Default for ReduceOptions {
             tolerance: 1e-4,
             max_modes: 170,
             max_shifts: 24,
+            log_range: 0.5,
             checked_times: 8,
             checked_nodes: 20,
             corners: None,
@@ -86,6 +91,13 @@ impl ReduceOptions {
                 "tolerance of the reduction",
                 self.tolerance,
                 "must be positive",
+            );
+        }
+        if !(self.log_range.is_finite() && self.log_range >= 0.0) {
+            return refuse(
+                "range of parameters",
+                self.log_range,
+                "must not be negative",
             );
         }
         if self.max_shifts < 2 || self.max_modes < 1 || self.checked_times < 2 {

@@ -8,7 +8,7 @@
 use nalgebra::{DMatrix, DVector};
 
 use super::Modal;
-use super::step::mean_of_decay;
+use super::step::decay_and_gain;
 use crate::ModelError;
 use crate::block::RatePath;
 
@@ -142,9 +142,7 @@ impl Propagator {
                 let kept = &mut self.kept[at];
                 kept.dt = dt;
                 for k in 0..self.lambda.len() {
-                    let z = self.lambda[k] * dt;
-                    kept.decay[k] = (-z).exp();
-                    kept.gain[k] = dt * mean_of_decay(z);
+                    (kept.decay[k], kept.gain[k]) = decay_and_gain(self.lambda[k], dt);
                 }
                 at
             }
@@ -256,11 +254,7 @@ mod tests {
         let response = |j: usize, t: f64| -> f64 {
             (0..2)
                 .map(|k| {
-                    let gain = if t > 0.0 {
-                        t * mean_of_decay(p.lambda[k] * t)
-                    } else {
-                        0.0
-                    };
+                    let gain = decay_and_gain(p.lambda[k], t.max(0.0)).1;
                     p.functionals[(k, 0)] * p.ports[(k, j)] * gain
                 })
                 .sum()
@@ -311,7 +305,7 @@ mod tests {
         p.advance(&mut x, &rates, 1200.0, &[0.0, 600.0], &mut out)
             .unwrap();
         assert_eq!(out[(0, 0)], 0.0);
-        let gain = 600.0 * mean_of_decay(2e-3 * 600.0);
+        let gain = decay_and_gain(2e-3, 600.0).1;
         assert!((out[(0, 1)] - (600.0 - 0.3 * gain)).abs() < 1e-12);
     }
 

@@ -9,7 +9,8 @@ use faer::linalg::matmul::matmul;
 use faer::{Accum, Mat, MatRef, Par};
 use nalgebra::{Cholesky, DMatrix};
 
-use super::modal::symmetric_eigen;
+use super::Factors;
+use super::modal::{factor_on, symmetric_eigen};
 use super::pencil::{Pencil, multiply};
 use super::rows::Rows;
 use crate::ModelError;
@@ -90,23 +91,38 @@ impl<'a> Span<'a> {
         out
     }
 
+    /// Reduced storage and conduction at `factors`.
+    pub(super) fn pencil(
+        &self,
+        factors: &Factors,
+    ) -> Result<(DMatrix<f64>, DMatrix<f64>), ModelError> {
+        let sum = |parts: &[SparseBlock], blocks: &[Mat<f64>]| {
+            let mut sum = DMatrix::zeros(self.width, self.width);
+            for (part, block) in parts.iter().zip(blocks) {
+                let factor = factor_on(part.parameter, factors)?;
+                for j in 0..self.width {
+                    for i in 0..self.width {
+                        sum[(i, j)] += factor * block[(i, j)];
+                    }
+                }
+            }
+            Ok(sum)
+        };
+        Ok((
+            sum(&self.system.mass, &self.mass)?,
+            sum(&self.system.stiffness, &self.stiffness)?,
+        ))
+    }
+
     /// Response `b^T (V^T (K + s M) V)^-1 b` of the reduced system at a real shift, for projected ports b.
     pub(super) fn response(
         &self,
         s: f64,
+        factors: &Factors,
         ports: &DMatrix<f64>,
     ) -> Result<DMatrix<f64>, ModelError> {
-        let mut shifted = DMatrix::zeros(self.width, self.width);
-        for (blocks, factor) in [(&self.stiffness, 1.0), (&self.mass, s)] {
-            for block in blocks {
-                for j in 0..self.width {
-                    for i in j..self.width {
-                        shifted[(i, j)] += factor * block[(i, j)];
-                    }
-                }
-            }
-        }
-        let solved = Cholesky::new(shifted)
+        let (mass, stiffness) = self.pencil(factors)?;
+        let solved = Cholesky::new(stiffness + mass * s)
             .ok_or(ModelError::NotPositive {
                 what: "the reduced shifted matrix",
             })?

@@ -4,6 +4,9 @@ use nalgebra::{DVector, DVectorView};
 
 use super::Modal;
 
+/// `exp(-40)` is a twentieth of a rounding error of one.
+const GONE: f64 = 40.0;
+
 /// What a held rate does to each mode over a step of one length, and to its mean over that step.
 ///
 /// With `z = lambda dt` and a forcing `f = b . u` held over the step,
@@ -26,16 +29,29 @@ impl Gains {
     #[must_use]
     pub fn new(lambda: &DVector<f64>, dt: f64) -> Self {
         Self {
-            decay: lambda.map(|l| (-l * dt).exp()),
-            gain: lambda.map(|l| dt * mean_of_decay(l * dt)),
+            decay: lambda.map(|l| decay_and_gain(l, dt).0),
+            gain: lambda.map(|l| decay_and_gain(l, dt).1),
             mean_decay: lambda.map(|l| mean_of_decay(l * dt)),
             mean_gain: lambda.map(|l| dt * mean_of_growth(l * dt)),
         }
     }
 }
 
+/// `exp(-lambda dt)` and `(1 - exp(-lambda dt)) / lambda`.
+pub(super) fn decay_and_gain(lambda: f64, dt: f64) -> (f64, f64) {
+    let z = lambda * dt;
+    if z > GONE {
+        return (0.0, lambda.recip());
+    }
+    if z < f64::MIN_POSITIVE {
+        return (1.0, dt);
+    }
+    let less = (-z).exp_m1();
+    (1.0 + less, -less / lambda)
+}
+
 /// `(1 - exp(-z)) / z`.
-pub(super) fn mean_of_decay(z: f64) -> f64 {
+fn mean_of_decay(z: f64) -> f64 {
     if z > f64::MIN_POSITIVE {
         -(-z).exp_m1() / z
     } else {
@@ -83,7 +99,7 @@ impl Modal {
         if t <= 0.0 {
             return 0.0;
         }
-        self.sum(functional, port, |l| t * mean_of_decay(l * t))
+        self.sum(functional, port, |l| decay_and_gain(l, t).1)
     }
 
     /// Mean of [`Modal::step_response`] over `t0..t1` \[s\], with `0 <= t0 < t1`: what a block mean shows.
@@ -97,7 +113,8 @@ impl Modal {
     ) -> f64 {
         let d = t1 - t0;
         self.sum(functional, port, |l| {
-            t0 * mean_of_decay(l * t0) + (-l * t0).exp() * d * mean_of_growth(l * d)
+            let (decay, gain) = decay_and_gain(l, t0);
+            gain + decay * d * mean_of_growth(l * d)
         })
     }
 
@@ -125,6 +142,11 @@ mod tests {
     fn the_two_means_meet_their_limits_and_each_other_where_series_and_quotient_join() {
         assert_eq!(mean_of_decay(0.0), 1.0);
         assert_eq!(mean_of_growth(0.0), 0.5);
+        assert_eq!(decay_and_gain(0.0, 7.0), (1.0, 7.0));
+        assert_eq!(decay_and_gain(1e-320, 7.0), (1.0, 7.0));
+        assert_eq!(decay_and_gain(2.0, 1e3), (0.0, 0.5));
+        let (decay, gain) = decay_and_gain(1.0, 40.0);
+        assert!((decay - (-40.0_f64).exp()).abs() < 1e-16 && (gain - 1.0).abs() < 1e-16);
         let below = mean_of_growth(1.0 - 1e-15);
         assert!((below - mean_of_growth(1.0)).abs() < 1e-15);
         // e^-1 exactly: 1 - (1 - e^-1) = e^-1.

@@ -1,0 +1,79 @@
+//! From a described site to its modes, end to end.
+
+mod support;
+
+use borewake_model::closed_form::line_source;
+use borewake_model::ground::mesh::MeshOptions;
+use borewake_model::ground::{Barrier, Seat};
+use borewake_model::reduce::{BoxCorners, ReduceOptions, reduce};
+use borewake_model::weak_form::{Scheme, discretise};
+use support::{S, T, three_wells};
+
+#[test]
+fn every_gauge_of_an_open_site_shows_the_line_source() {
+    let g = three_wells();
+    let system = discretise(&g, Scheme::Quadratic, &MeshOptions::default())
+        .unwrap()
+        .system;
+    let reduced = reduce(&system, &[], &ReduceOptions::default()).unwrap();
+    let modal = reduced.modal(&Vec::new()).unwrap();
+    let said = &reduced.certificate;
+    println!("{said:?}");
+    assert!(system.size <= 30_000 && modal.modes() <= 170);
+    assert!(said.ports < 5e-5 && said.random_nodes < 5e-4, "{said:?}");
+    assert!(modal.lambda.iter().all(|&l| l > 0.0));
+    for (w, well) in g.wells.iter().enumerate() {
+        for i in 0..g.gauges.len() {
+            let (to, _) = g.gauge_at(i).unwrap();
+            let r = if matches!(g.gauges[i].seat, Seat::InWell(own) if own == w) {
+                well.radius
+            } else {
+                (to[0] - well.at[0]).hypot(to[1] - well.at[1])
+            };
+            let (mut error, mut peak) = (0.0_f64, 0.0_f64);
+            for k in 0..60 {
+                // One minute to 365.25 days.
+                let t = 60.0 * 525_960.0_f64.powf(f64::from(k) / 59.0);
+                let exact = line_source(r, T, S, t);
+                let found = modal.step_response(modal.gauges.column(i), modal.wells.column(w), t);
+                error = error.max((found - exact).abs());
+                peak = peak.max(exact);
+            }
+            assert!(
+                error < 2e-4 * peak,
+                "well {w} gauge {i}: {:.1e}",
+                error / peak
+            );
+        }
+    }
+}
+
+#[test]
+fn a_site_with_barrier_skin_and_storage_keeps_its_certificate_over_the_box() {
+    let mut g = three_wells();
+    g.wells[0].skin = 4.0;
+    g.wells[0].storage = 2e-7;
+    g.barriers = vec![Barrier {
+        name: "fault".into(),
+        line: vec![[-600.0, -900.0], [-200.0, 300.0], [-900.0, 1400.0]],
+        conductance: 1e-12,
+    }];
+    let coarse = MeshOptions {
+        points_per_ring: 8,
+        ..MeshOptions::default()
+    };
+    let system = discretise(&g, Scheme::Quadratic, &coarse).unwrap().system;
+    let options = ReduceOptions {
+        checked_times: 5,
+        corners: Some(BoxCorners {
+            log_transmissivity: 0.5,
+            log_storativity: 0.5,
+        }),
+        ..ReduceOptions::default()
+    };
+    let reduced = reduce(&system, &[], &options).unwrap();
+    let said = &reduced.certificate;
+    println!("{said:?}");
+    assert!(said.ports < 2e-4, "{said:?}");
+    assert!(said.box_corners.unwrap() < 2e-3, "{said:?}");
+}
