@@ -16,6 +16,7 @@ pub mod table;
 mod verify;
 
 use std::ffi::OsString;
+use std::io::{ErrorKind, Write as _};
 
 use clap::{Parser, Subcommand};
 
@@ -86,7 +87,8 @@ pub fn main(arguments: impl IntoIterator<Item = OsString>) -> Exit {
     match cli.verb.run(&context) {
         Ok(exit) => exit,
         Err(failure) => {
-            eprintln!("borewake: {failure}");
+            // A closed standard error leaves the exit code to speak.
+            let _ = writeln!(std::io::stderr(), "borewake: {failure}");
             failure.exit()
         }
     }
@@ -97,7 +99,6 @@ pub fn main(arguments: impl IntoIterator<Item = OsString>) -> Exit {
 /// # Errors
 /// Standard output cannot be written.
 pub fn print(text: &str) -> Result<(), Failure> {
-    use std::io::{ErrorKind, Write as _};
     let mut out = std::io::stdout().lock();
     match out.write_all(text.as_bytes()).and_then(|()| out.flush()) {
         Err(e) if e.kind() != ErrorKind::BrokenPipe => Err(Failure::unusable(

@@ -1,1 +1,3 @@
 //! Evidence with plots.
+
+pub mod svg;
