@@ -1,7 +1,7 @@
 //! The model against the line source, at every gauge of an open site with three wells.
 //!
 //! ```text
-//! cargo run --release -p borewake-model --example line_source
+//! cargo run -p borewake-model --example line_source
 //! ```
 //!
 //! The ground is one endless layer, so that a closed form is at hand (Theis 1935):

