@@ -11,6 +11,7 @@ mod export;
 mod logs;
 mod progress;
 mod replay;
+mod run;
 mod summary;
 pub mod table;
 mod verify;
@@ -52,6 +53,7 @@ enum Verb {
     Commission(commission::Commission),
     Export(export::Export),
     Replay(replay::Replay),
+    Run(run::Run),
     Verify(verify::Verify),
 }
 
@@ -62,6 +64,7 @@ impl Verb {
             Self::Commission(verb) => verb.run(context),
             Self::Export(verb) => verb.run(context),
             Self::Replay(verb) => verb.run(context),
+            Self::Run(verb) => verb.run(context),
             Self::Verify(verb) => verb.run(context),
         }
     }

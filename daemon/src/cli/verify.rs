@@ -1,5 +1,6 @@
 //! `borewake verify`: the store's integrity, and that what is stored gives the stored alarms.
 
+use std::collections::BTreeMap;
 use std::path::PathBuf;
 
 use clap::Args;
@@ -11,7 +12,7 @@ use crate::alarm::Desk;
 use crate::config::{self, Site};
 use crate::keeper::settings::block_plan;
 use crate::keeper::{KeeperSettings, Pace, saved};
-use crate::record::{Adoption, Alarm, EntryKind};
+use crate::record::{Adoption, Alarm, AlarmId, EntryKind};
 use crate::store::{Reader, StoreError};
 use crate::watch::ground_file::GroundFile;
 use crate::watch::rerun::{Comparison, compare};
@@ -119,6 +120,7 @@ async fn desk_again(
 ) -> Result<(Vec<String>, i64), StoreError> {
     let settings = KeeperSettings::of(site, Pace::Lockstep, false);
     let mut desk = Desk::new(settings.alarms);
+    let mut again: BTreeMap<AlarmId, Alarm> = BTreeMap::new();
     let mut seq = 0;
     while seq < position {
         let entries = reader.entries_after(seq, 1000).await?;
@@ -130,15 +132,16 @@ async fn desk_again(
                 EntryKind::Batch { .. } => reader.readings_of(entry.seq).await?,
                 _ => Vec::new(),
             };
-            desk.entry(entry, &readings);
+            for transition in desk.entry(entry, &readings).transitions {
+                again.insert(transition.alarm.id.clone(), transition.alarm);
+            }
         }
         seq = entries.last().map_or(position, |e| e.seq);
     }
-    let again: Vec<Alarm> = desk.alarms().cloned().collect();
     let stored = reader.alarms().await?;
     let mut wrong = Vec::new();
     for alarm in &stored {
-        match again.iter().find(|a| a.id == alarm.id) {
+        match again.get(&alarm.id) {
             Some(same) if same == alarm => {}
             Some(other) => wrong.push(format!(
                 "{}: stored as {} (occurrence {}), the journal gives {} (occurrence {})",
@@ -154,7 +157,7 @@ async fn desk_again(
             )),
         }
     }
-    for alarm in &again {
+    for alarm in again.values() {
         if !stored.iter().any(|a| a.id == alarm.id) {
             wrong.push(format!(
                 "{}: the journal gives it, but it is not stored",

@@ -11,6 +11,8 @@ pub mod saved;
 pub mod settings;
 mod view;
 
+use std::sync::Arc;
+
 use thiserror::Error;
 use tokio::sync::{mpsc, watch};
 use tracing::{info, warn};
@@ -18,10 +20,11 @@ use tracing::{info, warn};
 use self::judge::{Gone, Judge};
 use self::saved::{Due, Saved};
 use crate::alarm::{AlarmSettings, Desk};
-use crate::publish::events;
+use crate::publish::events::{self, GaugeNews};
+use crate::publish::mqtt::Latest;
 use crate::record::{
     AckToken, Adoption, Command, CommandKind, Delivery, Entry, EntryKind, Reading, Reply, Snapshot,
-    SourceName, Stamp, Transition,
+    SourceName, SourceView, Stamp, Step, Transition,
 };
 use crate::store::{Applied, Committed, Refused, Store, StoreError};
 use crate::watch::blocks::BlockPlan;
@@ -114,7 +117,8 @@ pub struct Keeper {
     position: i64,
     unsaved: u32,
     snapshot: Snapshot,
-    shown: watch::Sender<Snapshot>,
+    shown: watch::Sender<Arc<Snapshot>>,
+    latest: watch::Sender<Latest>,
     events: Option<mpsc::UnboundedSender<Happening>>,
 }
 
@@ -158,7 +162,7 @@ impl Keeper {
             ),
         };
         let snapshot = view::empty(&settings);
-        let shown = watch::Sender::new(snapshot.clone());
+        let shown = watch::Sender::new(Arc::new(snapshot.clone()));
         let mut keeper = Self {
             settings,
             store,
@@ -172,6 +176,7 @@ impl Keeper {
             unsaved: 0,
             snapshot,
             shown,
+            latest: watch::Sender::new(Latest::default()),
             events: None,
         };
         keeper.recover().await?;
@@ -201,8 +206,19 @@ impl Keeper {
 
     /// Where the snapshot is shown.
     #[must_use]
-    pub fn snapshots(&self) -> watch::Receiver<Snapshot> {
+    pub fn snapshots(&self) -> watch::Receiver<Arc<Snapshot>> {
         self.shown.subscribe()
+    }
+
+    /// Where the latest expectation of every gauge is shown, as topic and payload.
+    #[must_use]
+    pub fn latest(&self) -> watch::Receiver<Latest> {
+        self.latest.subscribe()
+    }
+
+    /// Takes in how sources stand.
+    pub fn sources(&mut self, views: impl IntoIterator<Item = (String, SourceView)>) {
+        self.snapshot.sources.extend(views);
     }
 
     /// Where transitions and their messages go besides the outbox (a file of events, a terminal).
@@ -388,7 +404,8 @@ impl Keeper {
                 self.saved.closer.next = self.saved.closer.next.max(Some(block + 1));
             }
             EntryKind::Judged { step, .. } => {
-                view::see(&mut self.snapshot, step, &self.settings.alarms.names.gauges)
+                view::see(&mut self.snapshot, step, &self.settings.alarms.names.gauges);
+                self.tell(step, entry.wall);
             }
             EntryKind::WatchBlind { why, .. } => self.snapshot.health.watch = Some(why.clone()),
             EntryKind::WatchSees => self.snapshot.health.watch = None,
@@ -483,6 +500,25 @@ impl Keeper {
         Ok(())
     }
 
+    /// Shows what the newest block said of every gauge.
+    fn tell(&self, step: &Step, recorded: Stamp) {
+        let names = &self.settings.alarms.names;
+        let end = self.settings.plan.start_of(step.block + 1);
+        let news = (0..names.gauges.len()).map(|gauge| GaugeNews {
+            gauge,
+            block: step.block,
+            end,
+            expectation: step.expectations.get(gauge).copied().flatten(),
+            departure: step.departures.get(gauge).copied().flatten(),
+            blind: step.blind.get(gauge).copied().flatten(),
+        });
+        let replay = self.settings.replay;
+        let all = news
+            .map(|n| events::expectation(&n, names, recorded, replay))
+            .collect();
+        self.latest.send_replace(Arc::new(all));
+    }
+
     fn count(&mut self, committed: &Committed) {
         let health = &mut self.snapshot.health;
         health.committed += u64::try_from(committed.readings.len()).unwrap_or(0);
@@ -493,7 +529,7 @@ impl Keeper {
 
     fn show(&mut self, wall: Stamp) {
         view::finish(&mut self.snapshot, &self.desk, self.position, wall);
-        self.shown.send_replace(self.snapshot.clone());
+        self.shown.send_replace(Arc::new(self.snapshot.clone()));
     }
 }
 

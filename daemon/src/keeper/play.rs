@@ -4,7 +4,7 @@ use thiserror::Error;
 
 use super::{Keeper, KeeperError, Undelivered};
 use crate::intake::log::{LogError, LogReader};
-use crate::record::Stamp;
+use crate::record::{Delivery, Reading, Stamp};
 
 /// How often the clock of a replay is journalled \[µs of sample time\].
 const TICK: i64 = 3600 * Stamp::SECOND;
@@ -29,6 +29,7 @@ pub struct Player {
     log: LogReader,
     clock: Option<Stamp>,
     rows: u64,
+    held: Option<Delivery>,
 }
 
 impl Player {
@@ -40,6 +41,7 @@ impl Player {
             log,
             clock: None,
             rows: 0,
+            held: None,
         }
     }
 
@@ -48,13 +50,11 @@ impl Player {
     /// # Errors
     /// The log or the store cannot be used.
     pub async fn next(&mut self) -> Result<Option<Stamp>, PlayError> {
-        let Some(delivery) = self.log.next_delivery()? else {
+        let Some(delivery) = self.stretch()? else {
             return Ok(None);
         };
-        let newest = delivery
-            .readings
-            .iter()
-            .map(|r| r.received)
+        let newest = delivery.readings.iter().map(|r| r.received);
+        let newest = newest
             .chain(delivery.rejected.iter().map(|r| r.received))
             .max();
         let before = self.clock;
@@ -66,6 +66,30 @@ impl Player {
             self.keeper.tick(wall).await?;
         }
         Ok(Some(wall))
+    }
+
+    /// The next deliveries cut where the clock passes a tick, so that a replay's clock is never far from its readings.
+    fn stretch(&mut self) -> Result<Option<Delivery>, LogError> {
+        let Some(mut delivery) = self
+            .held
+            .take()
+            .map_or_else(|| self.log.next_delivery(), |d| Ok(Some(d)))?
+        else {
+            return Ok(None);
+        };
+        let tick = |r: &Reading| r.received.0.div_euclid(TICK);
+        let first = delivery.readings.first().map(tick);
+        let end = delivery.readings.iter().position(|r| Some(tick(r)) > first);
+        if let Some(end) = end {
+            let rest = delivery.readings.split_off(end);
+            self.held = Some(Delivery {
+                source: delivery.source.clone(),
+                readings: rest,
+                rejected: Vec::new(),
+                ack: None,
+            });
+        }
+        Ok(Some(delivery))
     }
 
     /// The keeper, for requests between two stretches.

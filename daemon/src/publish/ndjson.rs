@@ -44,6 +44,25 @@ impl Ndjson {
         })
     }
 
+    /// Goes on with a file, or starts it.
+    ///
+    /// # Errors
+    /// The file cannot be opened.
+    pub fn append(path: &Path) -> Result<Self, NdjsonError> {
+        let file = File::options()
+            .create(true)
+            .append(true)
+            .open(path)
+            .map_err(|source| NdjsonError {
+                path: path.to_owned(),
+                source,
+            })?;
+        Ok(Self {
+            path: path.to_owned(),
+            to: Target::File(BufWriter::new(file)),
+        })
+    }
+
     /// Writes to standard output.
     #[must_use]
     pub fn stdout() -> Self {

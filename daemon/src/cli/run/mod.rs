@@ -1,0 +1,250 @@
+//! `borewake run`: the daemon.
+
+mod publishing;
+
+use std::path::PathBuf;
+use std::time::Duration;
+
+use clap::Args;
+use tokio::signal::unix::{SignalKind, signal};
+use tokio::sync::{mpsc, watch};
+use tracing::{error, info, warn};
+
+use super::{Context, Exit, Failure};
+use crate::config::{self, Site};
+use crate::control;
+use crate::intake::{self, clock::SystemClock};
+use crate::keeper::{Happening, Keeper, KeeperSettings, Pace, Undelivered};
+use crate::publish::ndjson::Ndjson;
+use crate::record::{Delivery, Stamp};
+use crate::store::Store;
+use crate::watch::ground_file::GroundFile;
+
+/// How often the wall clock is journalled.
+const TICK: Duration = Duration::from_secs(60);
+/// Longest wait of a reading for its group commit.
+const GROUP: Duration = Duration::from_secs(1);
+/// Readings that are committed without waiting for more.
+const ROWS: usize = 256;
+/// Deliveries held while nothing can be committed.
+const HELD: usize = 4096;
+/// How long to wait before a full disk is tried again.
+const FULL: Duration = Duration::from_secs(5);
+/// Longest wait for sources and publishers to end.
+const STOP: Duration = Duration::from_secs(5);
+
+/// Watches a site until it is told to stop
+#[derive(Debug, Args)]
+#[command(after_help = "\
+Example:
+  borewake run site.toml
+
+SIGTERM and SIGINT stop it in good order. Without a usable ground file it records, judges limits and publishes, and
+says that every gauge is blind. It advises; it is no safety function.")]
+pub(super) struct Run {
+    /// The site file
+    #[arg(value_name = "SITE")]
+    site: PathBuf,
+    /// Also writes every event to this file, one JSON document a line
+    #[arg(long, value_name = "FILE")]
+    events: Option<PathBuf>,
+}
+
+impl Run {
+    pub(super) fn run(self, _context: &Context) -> Result<Exit, Failure> {
+        let site = config::load(&self.site)?;
+        exit_on_panic();
+        let runtime = tokio::runtime::Builder::new_multi_thread()
+            .worker_threads(2)
+            .enable_all()
+            .build()
+            .map_err(Failure::unusable)?;
+        let done = runtime
+            .block_on(serve(site, self.events))
+            .map_err(Failure::unusable);
+        runtime.shutdown_timeout(STOP);
+        done
+    }
+}
+
+/// A panic anywhere ends the process with its own code, after the log has it: a daemon that has lost a thread
+/// must not look alive. The service manager starts it again.
+fn exit_on_panic() {
+    let before = std::panic::take_hook();
+    std::panic::set_hook(Box::new(move |info| {
+        before(info);
+        error!(%info, "panic; ending the process so that it is started again");
+        std::process::exit(Exit::Panic.code().into());
+    }));
+}
+
+async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit> {
+    let mut terminate = signal(SignalKind::terminate())?;
+    let mut interrupt = signal(SignalKind::interrupt())?;
+    for note in &site.notes {
+        warn!(line = note.line, key = %note.key, "{}", note.text);
+    }
+    let opened = Store::open(&site.store.folder, publishing::store_options(&site)).await?;
+    let store = opened.store;
+    let epoch = store.advance_clock().await?;
+    let ground = GroundFile::read(&site.store.folder, &site.ground_digest());
+    let settings = KeeperSettings::of(&site, Pace::Live, false);
+    let mut keeper = Keeper::open(settings, store.clone(), ground, Stamp::now()).await?;
+    let (stop, stopped) = watch::channel(false);
+    let around = intake::Surroundings {
+        site: site.id.clone(),
+        clock: std::sync::Arc::new(SystemClock::new(epoch)),
+        conversions: std::sync::Arc::new(intake::Conversions::from(&site)),
+        shutdown: stopped.clone(),
+    };
+    let mut sources = Vec::new();
+    for source in &site.sources {
+        sources.extend(intake::start(source, &around)?);
+    }
+    let acks = intake::Acks::of(&sources);
+    let states: Vec<_> = sources
+        .iter()
+        .map(|s| (s.name.to_string(), s.state.clone()))
+        .collect();
+    let tasks: Vec<_> = sources
+        .iter_mut()
+        .map(|s| std::mem::replace(&mut s.task, tokio::spawn(async {})))
+        .collect();
+    let mut merge = intake::Merge::new(
+        sources
+            .into_iter()
+            .map(|s| (s.name, s.deliveries, s.window)),
+    );
+
+    let (commands_in, mut commands) = mpsc::channel(16);
+    let control = control::Server::bind(&site.store.folder)?;
+    let mut others = vec![tokio::spawn(
+        control.serve(commands_in, until(stopped.clone())),
+    )];
+    others.extend(publishing::start(
+        &site,
+        &store,
+        &keeper.snapshots(),
+        &keeper.latest(),
+        &stopped,
+    )?);
+    if let Some(path) = events_file {
+        others.push(tokio::spawn(follow(
+            Ndjson::append(&path)?,
+            keeper.events(),
+        )));
+    }
+
+    info!(site = %site.id, "running");
+    let mut tick = tokio::time::interval(TICK);
+    tick.set_missed_tick_behavior(tokio::time::MissedTickBehavior::Skip);
+    let mut batch = Vec::new();
+    let mut due = None;
+    let mut listening = true;
+    loop {
+        let timer = async move {
+            match due {
+                Some(at) => tokio::time::sleep_until(at).await,
+                None => std::future::pending().await,
+            }
+        };
+        let mut now = false;
+        tokio::select! {
+            _ = terminate.recv() => break,
+            _ = interrupt.recv() => break,
+            // Nothing more is taken while the disk is full: sources hold back, or count gaps.
+            open = merge.turn(&mut batch), if listening && batch.len() < HELD => {
+                listening = open;
+                due.get_or_insert_with(|| tokio::time::Instant::now() + GROUP);
+                let rows: usize = batch.iter().map(|d| d.readings.len()).sum();
+                now = rows >= ROWS || merge.full().next().is_some();
+            }
+            () = timer => now = true,
+            Some(answer) = keeper.answer() => keeper.answered(answer, Stamp::now()).await?,
+            Some((command, reply)) = commands.recv() => {
+                let answer = keeper.person(command, Stamp::now()).await?;
+                let _ = reply.send(answer);
+            }
+            _ = tick.tick() => {
+                keeper.sources(states.iter().map(|(name, view)| (name.clone(), view.borrow().clone())));
+                keeper.tick(Stamp::now()).await?;
+            }
+        }
+        if now {
+            due = match commit(&mut keeper, &mut batch, &acks).await? {
+                Committed::All => None,
+                Committed::NoSpace => Some(tokio::time::Instant::now() + FULL),
+            };
+        }
+    }
+    info!("stopping");
+    stop.send_replace(true);
+    let ended = tokio::time::timeout(STOP, async { while merge.turn(&mut batch).await {} }).await;
+    if ended.is_err() {
+        warn!("a source did not end in time; what it had not handed over stays with its sender");
+    }
+    if commit(&mut keeper, &mut batch, &acks).await? == Committed::NoSpace {
+        warn!("the disk is full; what was not committed stays unacknowledged with its senders");
+    }
+    keeper.stop(Stamp::now()).await?;
+    for task in tasks.into_iter().chain(others) {
+        if tokio::time::timeout(STOP, task).await.is_err() {
+            warn!("a task did not end in time");
+        }
+    }
+    info!("stopped");
+    Ok(Exit::Done)
+}
+
+/// Commits what has gathered, then tells the sources.
+///
+/// A full disk is waited for: what was refused stays in the batch, unacknowledged, and is tried again.
+async fn commit(
+    keeper: &mut Keeper,
+    batch: &mut Vec<Delivery>,
+    acks: &intake::Acks,
+) -> anyhow::Result<Committed> {
+    if batch.is_empty() {
+        return Ok(Committed::All);
+    }
+    match keeper.deliver(std::mem::take(batch), Stamp::now()).await {
+        Ok(tokens) => {
+            for (source, token) in tokens {
+                acks.committed(&source, token);
+            }
+            Ok(Committed::All)
+        }
+        Err(Undelivered::Refused(refused)) if refused.error.is_space() => {
+            *batch = refused.deliveries;
+            Ok(Committed::NoSpace)
+        }
+        Err(why) => Err(why.into()),
+    }
+}
+
+/// Whether a commit could be made.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+enum Committed {
+    /// It was.
+    All,
+    /// The disk is too full for readings.
+    NoSpace,
+}
+
+/// Completes when the daemon stops.
+async fn until(mut stopped: watch::Receiver<bool>) {
+    let _ = stopped.wait_for(|stop| *stop).await;
+}
+
+/// Writes every event to a file until the keeper ends.
+async fn follow(mut file: Ndjson, mut told: mpsc::UnboundedReceiver<Happening>) {
+    while let Some(happening) = told.recv().await {
+        if let Err(why) = file.write(&happening.event) {
+            error!(%why, "events are no longer written to the file");
+            return;
+        }
+    }
+    if let Err(why) = file.close() {
+        error!(%why, "the file of events could not be closed");
+    }
+}
