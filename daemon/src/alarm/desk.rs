@@ -1,5 +1,7 @@
 //! The desk: journal entries in, transitions and replies out.
 
+mod person;
+
 use std::collections::{BTreeMap, BTreeSet, HashMap};
 
 use serde::{Deserialize, Serialize};
@@ -13,8 +15,8 @@ use super::settings::{AlarmSettings, LimitSettings, Side};
 use super::watch::{WatchState, watch_id};
 use super::words;
 use crate::record::{
-    Adoption, Alarm, AlarmId, AlarmKind, AlarmView, ChannelId, Command, CommandKind, Condition,
-    Entry, EntryKind, Reading, Reply, Stamp, Step, Transition, TransitionKind,
+    Alarm, AlarmId, AlarmKind, AlarmView, ChannelId, Condition, Entry, EntryKind, Reading, Reply,
+    Stamp, Step, Transition, TransitionKind,
 };
 
 /// Version of [`Desk::save`]'s form.
@@ -288,136 +290,6 @@ impl Desk {
     pub fn tick(&mut self, wall: Stamp) -> Vec<Transition> {
         let State { book, blind, .. } = &mut self.state;
         blind.tick(book, &self.settings, wall)
-    }
-
-    /// What adopting an alarm's finding means. The keeper puts it into the command before journalling it, so that the
-    /// journal alone says what was adopted.
-    ///
-    /// # Errors
-    /// The alarm cannot be adopted; the reason and the mend in words.
-    pub fn adoption(&self, alarm: &AlarmId, occurrence: u32) -> Result<Adoption, String> {
-        self.occurrence(alarm, occurrence)?;
-        if *alarm != watch_id() {
-            return Err(format!(
-                "{alarm} is no finding of the watch; only `{}` can be adopted",
-                watch_id()
-            ));
-        }
-        self.state
-            .watch
-            .adoption(&self.state.book)
-            .map_err(|why| format!("{alarm} cannot be adopted: {why}"))
-    }
-
-    /// Does what a person asks. An adoption is taken from the command as journalled; without one it is refused.
-    pub fn person(&mut self, command: &Command, wall: Stamp) -> (Vec<Transition>, Reply) {
-        let done = match &command.kind {
-            CommandKind::Show => Err("showing the state needs no journal entry".to_owned()),
-            CommandKind::Acknowledge { alarm, occurrence } => {
-                self.acknowledge(alarm, *occurrence, command, wall)
-            }
-            CommandKind::Adopt {
-                alarm,
-                occurrence,
-                adoption,
-            } => self.adopt(alarm, *occurrence, adoption.as_ref(), command, wall),
-        };
-        match done {
-            Ok((transition, text)) => (transition.into_iter().collect(), Reply::Done { text }),
-            Err(why) => (Vec::new(), Reply::Refused { why }),
-        }
-    }
-
-    fn acknowledge(
-        &mut self,
-        id: &AlarmId,
-        occurrence: u32,
-        command: &Command,
-        wall: Stamp,
-    ) -> Result<(Option<Transition>, String), String> {
-        self.occurrence(id, occurrence)?;
-        let when = When {
-            at: wall,
-            recorded: wall,
-        };
-        match self.state.book.act(
-            id,
-            Some(&Event::Acknowledge),
-            TransitionKind::Acknowledged,
-            when,
-            Some(&command.by),
-            &command.note,
-        ) {
-            Ok(t) => {
-                let text = format!("{id} occurrence {occurrence} is {}", t.alarm.state().name());
-                Ok((Some(t), text))
-            }
-            Err(super::Refusal::AlreadyAcknowledged) => Ok((
-                None,
-                format!("{id} occurrence {occurrence} was acknowledged before"),
-            )),
-            Err(why) => Err(format!("{id} cannot be acknowledged: {why}")),
-        }
-    }
-
-    fn adopt(
-        &mut self,
-        id: &AlarmId,
-        occurrence: u32,
-        adoption: Option<&Adoption>,
-        command: &Command,
-        wall: Stamp,
-    ) -> Result<(Option<Transition>, String), String> {
-        self.adoption(id, occurrence)?;
-        let adoption = adoption
-            .ok_or_else(|| format!("{id} cannot be adopted: the command holds no adoption"))?;
-        let when = When {
-            at: wall,
-            recorded: wall,
-        };
-        let transition = self
-            .state
-            .book
-            .act(
-                id,
-                Some(&Event::Adopt),
-                TransitionKind::Adopted,
-                when,
-                Some(&command.by),
-                &command.note,
-            )
-            .map_err(|why| format!("{id} cannot be adopted: {why}"))?;
-        self.state.watch.adopted();
-        let text = format!(
-            "{} is adopted as {} from block {} on; the watch goes on past it",
-            id,
-            adoption.cause.name(),
-            adoption.block
-        );
-        Ok((Some(transition), text))
-    }
-
-    /// Checks that a person means the alarm as it stands now.
-    fn occurrence(&self, id: &AlarmId, occurrence: u32) -> Result<(), String> {
-        let alarm = self.state.book.get(id).ok_or_else(|| {
-            let known: Vec<&str> = self.alarms().map(|a| a.id.0.as_str()).collect();
-            if known.is_empty() {
-                format!("there is no alarm {id}, and none has come so far")
-            } else {
-                format!("there is no alarm {id}; there are {}", known.join(", "))
-            }
-        })?;
-        match occurrence.cmp(&alarm.occurrence) {
-            std::cmp::Ordering::Equal => Ok(()),
-            std::cmp::Ordering::Less => Err(format!(
-                "occurrence {occurrence} of {id} is over; it is occurrence {} now: {}",
-                alarm.occurrence, alarm.summary
-            )),
-            std::cmp::Ordering::Greater => Err(format!(
-                "{id} has come {} times, there is no occurrence {occurrence}",
-                alarm.occurrence
-            )),
-        }
     }
 }
 

@@ -4,6 +4,7 @@
 //! listed once in [`Verb`] and once in [`Verb::run`]; there is nothing else to do, and a verb that is not there yet is
 //! in neither.
 
+mod alarms;
 mod check;
 mod commission;
 mod exit;
@@ -49,6 +50,7 @@ pub struct Context {
 /// The verbs there are.
 #[derive(Debug, Subcommand)]
 enum Verb {
+    Alarms(alarms::Alarms),
     Check(check::Check),
     Commission(commission::Commission),
     Export(export::Export),
@@ -60,6 +62,7 @@ enum Verb {
 impl Verb {
     fn run(self, context: &Context) -> Result<Exit, Failure> {
         match self {
+            Self::Alarms(verb) => verb.run(context),
             Self::Check(verb) => verb.run(context),
             Self::Commission(verb) => verb.run(context),
             Self::Export(verb) => verb.run(context),

@@ -5,8 +5,8 @@ use proptest::prelude::*;
 use super::*;
 use crate::alarm::ChannelWatch;
 use crate::record::{
-    AlarmState, Cause, ClockEpoch, ClockState, DeviceStatus, Finding, Names, Quality, Subject,
-    UnitSystem, Weighed,
+    AlarmState, Cause, ClockEpoch, ClockState, Command, CommandKind, DeviceStatus, Finding, Names,
+    Quality, Subject, UnitSystem, Weighed,
 };
 
 const BLOCK: f64 = 1800.0;
