@@ -10,7 +10,15 @@ use super::error::{Result, StoreError};
 /// however it ends.
 #[derive(Debug)]
 pub(super) struct FolderLock {
-    _file: File,
+    file: File,
+}
+
+/// Unlocks rather than only closing: a process that is just being started holds a copy of every open file until
+/// it runs its own program, and would hold the lock as long.
+impl Drop for FolderLock {
+    fn drop(&mut self) {
+        let _ = self.file.unlock();
+    }
 }
 
 impl FolderLock {
@@ -50,6 +58,6 @@ impl FolderLock {
             .and_then(|()| file.rewind())
             .and_then(|()| writeln!(file, "{}", std::process::id()))
             .map_err(file_error("write the lock"))?;
-        Ok(Self { _file: file })
+        Ok(Self { file })
     }
 }
