@@ -1,7 +1,7 @@
 //! One file a verb.
 //!
 //! A verb is a `clap::Args` struct in its own file with `fn run(self, context: &Context) -> Result<Exit, Failure>`. It is
-//! listed once in [`Verb`] and once in [`Verb::run`]; there is nothing else to do, and a verb that is not there yet is
+//! listed once in `Verb` and once in its `run`; there is nothing else to do, and a verb that is not there yet is
 //! in neither.
 
 mod alarms;

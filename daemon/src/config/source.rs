@@ -15,7 +15,7 @@ pub struct ChannelSettings {
     pub source: SourceName,
     /// What it measures.
     pub kind: ChannelKind,
-    /// Unit of the numbers after [`ChannelSettings::scale`] and [`ChannelSettings::offset`], as the site file spells it.
+    /// Unit of the numbers after the channel's own `scale` and `offset`, as the site file spells it.
     pub unit: String,
     /// From the delivered number to the SI unit of the kind: the channel's own `scale` and `offset`, then its unit.
     pub conversion: Conversion,
