@@ -74,7 +74,7 @@ async fn daemon(server: Server) {
             CommandKind::Acknowledge { alarm, occurrence } if occurrence == 3 => Reply::Done {
                 text: format!("{alarm} {occurrence} {} {}", command.by, command.note),
             },
-            CommandKind::Adopt { occurrence, .. } if occurrence == 3 => Reply::Done {
+            CommandKind::Adopt { occurrence: 3, .. } => Reply::Done {
                 text: "adopted".into(),
             },
             _ => Reply::Refused {

@@ -229,21 +229,20 @@ impl Desk {
     /// make all true ones look late.
     pub fn batch(&mut self, readings: &[Reading], recorded: Stamp) -> Vec<Transition> {
         let horizon = recorded.seconds() + self.settings.future;
-        let mut usable: Vec<(&Reading, f64)> = readings
+        let mut usable: Vec<(&Reading, f64, &Use)> = readings
             .iter()
-            .filter(|r| r.quality.usable() && self.uses.contains_key(&r.channel))
-            .filter(|r| r.sampled.seconds() <= horizon)
-            .filter_map(|r| r.value.filter(|v| v.is_finite()).map(|v| (r, v)))
+            .filter(|r| r.quality.usable() && r.sampled.seconds() <= horizon)
+            .filter_map(|r| {
+                let value = r.value.filter(|v| v.is_finite())?;
+                Some((r, value, self.uses.get(&r.channel)?))
+            })
             .collect();
-        usable.sort_by(|(a, _), (b, _)| {
+        usable.sort_by(|(a, ..), (b, ..)| {
             (a.sampled, &a.channel, a.epoch).cmp(&(b.sampled, &b.channel, b.epoch))
         });
         let mut transitions = Vec::new();
         let mut spoke = false;
-        for (reading, value) in usable {
-            let Some(used) = self.uses.get(&reading.channel) else {
-                continue;
-            };
+        for (reading, value, used) in usable {
             if used.watched {
                 self.state.blind.sampled(&reading.channel, reading.sampled);
                 spoke = true;

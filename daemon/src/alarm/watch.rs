@@ -77,7 +77,11 @@ impl WatchState {
             Some(reason) => reason,
             None => "the block was judged again",
         };
-        match step.finding.as_ref().map(|f| tidy(f, settings.block)) {
+        match step
+            .finding
+            .as_ref()
+            .map(|f| tidy(f, step.block, settings.block))
+        {
             Some(finding) => self.found(book, settings, finding, fresh, why, when),
             None => self.cleared(book, settings, step.block, fresh, why, when),
         }
@@ -327,9 +331,11 @@ fn blocks(seconds: f64, block: f64) -> i64 {
     count.max(1)
 }
 
-/// A finding whose numbers are all finite, so that it can be kept and sent as JSON: what is not finite is left out.
-fn tidy(finding: &Finding, block: f64) -> Finding {
+/// A finding of this block whose numbers are all finite, so that it can be kept and sent as JSON: what is not finite is
+/// left out.
+fn tidy(finding: &Finding, block: i64, length: f64) -> Finding {
     let mut f = finding.clone();
+    f.block = block;
     f.size = f.size.filter(|s| s.value.is_finite() && s.sd.is_finite());
     f.place = f
         .place
@@ -339,8 +345,8 @@ fn tidy(finding: &Finding, block: f64) -> Finding {
         cause.probability = finite(cause.probability, 0.0);
         cause.log_evidence = finite(cause.log_evidence, 0.0);
     }
-    f.onset = finite(f.onset, block_end(f.block, block).seconds());
-    f.onset_sd = finite(f.onset_sd, block);
+    f.onset = finite(f.onset, block_end(block, length).seconds());
+    f.onset_sd = finite(f.onset_sd, length);
     f.log_mixture = finite(f.log_mixture, 0.0);
     f.log_threshold = finite(f.log_threshold, 0.0);
     f
