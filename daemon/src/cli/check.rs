@@ -2,12 +2,14 @@
 
 use std::path::PathBuf;
 
+use borewake_model::units::Dimension;
 use clap::Args;
 use serde_json::{Value, json};
 
 use super::summary::{summary_json, summary_text};
 use super::{Context, Exit, Failure, GroundSummary, print};
 use crate::config::{self, ConfigError, Mistake, Note, Site};
+use crate::watch::ground_file::GroundFile;
 
 /// Reads the site file and explains every mistake with line, value and mend
 #[derive(Debug, Args)]
@@ -26,7 +28,7 @@ impl Check {
     pub(super) fn run(self, context: &Context) -> Result<Exit, Failure> {
         match config::load(&self.site) {
             Ok(site) => {
-                print(&held(&site, None, context.json))?;
+                print(&held(&site, Some(&ground_summary(&site)), context.json))?;
                 Ok(Exit::Done)
             }
             Err(ConfigError::Wrong { path, mistakes }) => {
@@ -40,6 +42,37 @@ impl Check {
             }
             Err(unreadable) => Err(unreadable.into()),
         }
+    }
+}
+
+/// Size and certificate of the ground file, or why there is none to use.
+fn ground_summary(site: &Site) -> GroundSummary {
+    let file = match GroundFile::read(&site.store.folder, &site.ground_digest()) {
+        Ok(file) => file,
+        Err(why) => {
+            let mend = site.commission_command();
+            return GroundSummary {
+                text: format!("  {why}; until `{mend}` has made it, every gauge is blind\n"),
+                json: json!({ "usable": false, "why": why.to_string(), "mend": mend }),
+            };
+        }
+    };
+    let certificate = &file.commissioned.reduced.certificate;
+    let (fastest, slowest) = certificate.times;
+    let time = |t| site.units.show(Dimension::Time, t);
+    let text = format!(
+        "  {} unknowns reduced to {} modes, made {}\n  worst step response from {} to {}: {:.1e} of its peak at wells and gauges, {:.1e} at nodes drawn at random\n",
+        certificate.full_size,
+        certificate.modes,
+        file.made,
+        time(fastest),
+        time(slowest),
+        certificate.ports,
+        certificate.random_nodes,
+    );
+    GroundSummary {
+        text,
+        json: json!({ "usable": true, "made": file.made, "certificate": certificate }),
     }
 }
 

@@ -7,6 +7,7 @@
 mod alarms;
 mod check;
 mod commission;
+mod demo;
 mod exit;
 mod export;
 mod logs;
@@ -53,6 +54,7 @@ enum Verb {
     Alarms(alarms::Alarms),
     Check(check::Check),
     Commission(commission::Commission),
+    Demo(demo::Demo),
     Export(export::Export),
     Replay(replay::Replay),
     Run(run::Run),
@@ -65,6 +67,7 @@ impl Verb {
             Self::Alarms(verb) => verb.run(context),
             Self::Check(verb) => verb.run(context),
             Self::Commission(verb) => verb.run(context),
+            Self::Demo(verb) => verb.run(context),
             Self::Export(verb) => verb.run(context),
             Self::Replay(verb) => verb.run(context),
             Self::Run(verb) => verb.run(context),

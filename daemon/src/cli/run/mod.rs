@@ -1,6 +1,7 @@
 //! `borewake run`: the daemon.
 
 mod publishing;
+mod upkeep;
 
 use std::path::PathBuf;
 use std::time::Duration;
@@ -22,6 +23,8 @@ use crate::watch::ground_file::GroundFile;
 
 /// How often the wall clock is journalled.
 const TICK: Duration = Duration::from_secs(60);
+/// How often old raw readings are dropped.
+const UPKEEP: Duration = Duration::from_secs(3600);
 /// Longest wait of a reading for its group commit.
 const GROUP: Duration = Duration::from_secs(1);
 /// Readings that are committed without waiting for more.
@@ -138,6 +141,8 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
     info!(site = %site.id, "running");
     let mut tick = tokio::time::interval(TICK);
     tick.set_missed_tick_behavior(tokio::time::MissedTickBehavior::Skip);
+    let mut upkeep = tokio::time::interval(UPKEEP);
+    upkeep.set_missed_tick_behavior(tokio::time::MissedTickBehavior::Skip);
     let mut batch = Vec::new();
     let mut due = None;
     let mut listening = true;
@@ -169,6 +174,7 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
                 keeper.sources(states.iter().map(|(name, view)| (name.clone(), view.borrow().clone())));
                 keeper.tick(Stamp::now()).await?;
             }
+            _ = upkeep.tick() => upkeep::upkeep(&site, &store).await,
         }
         if now {
             due = match commit(&mut keeper, &mut batch, &acks).await? {
