@@ -168,16 +168,23 @@ impl<'s> Report<'s> {
                 continue;
             }
             let source = self.line_at(start).trim();
+            let message = error.message().replace('\n', ", ");
+            let usual = "mend the line; text goes in double quotes, lists in [ ], tables in { }";
+            let mend = if message.contains("duplicate key") {
+                "keep one of the two; what comes several times has a heading like [[gauge]]"
+                    .to_owned()
+            } else {
+                unquoted(source)
+                    .filter(|_| message.contains("quoted"))
+                    .unwrap_or_else(|| usual.to_owned())
+            };
             broken.push(Mistake {
                 line,
                 column,
                 key: "file".to_owned(),
                 value: String::new(),
-                what: format!("this is not TOML: {}", error.message().replace('\n', ", ")),
-                mend: unquoted(source).unwrap_or_else(|| {
-                    "mend the line; text goes in double quotes, lists in [ ], tables in { }"
-                        .to_owned()
-                }),
+                what: format!("this is not TOML: {message}"),
+                mend,
             });
         }
         broken

@@ -297,3 +297,13 @@ fn lines_that_are_no_toml_are_told_with_the_rest() {
         ]
     );
 }
+
+#[test]
+fn a_key_that_stands_twice_is_told_at_the_second() {
+    one(
+        "skin = 1.5",
+        "skin = 1.5\nskin = 2.5",
+        "skin = 2.5",
+        "file\n    this is not TOML: duplicate key\n    mend: keep one of the two; what comes several times has a heading like [[gauge]]",
+    );
+}
