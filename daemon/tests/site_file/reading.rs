@@ -125,8 +125,6 @@ fn what_is_accepted_and_not_acted_on_is_noted() {
     assert_eq!(
         keys,
         [
-            "store: keep_raw",
-            "store: max_size",
             "neighbour \"old quarry well\": meter",
             "source \"field broker\": url",
             "http: listen",

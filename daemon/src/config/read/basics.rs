@@ -105,15 +105,6 @@ pub(super) fn store(root: &mut Section<'_>, base: &Path, id: &str) -> StoreSetti
     settings.max_size = table
         .quantity("max_size", Dimension::Size, Sign::Positive)
         .and_then(|size| bytes(&table, &size));
-    for (key, there) in [
-        ("keep_raw", settings.keep_raw.is_some()),
-        ("max_size", settings.max_size.is_some()),
-    ] {
-        if there {
-            let text = "this build keeps all readings and deletes none";
-            root.report.note(&table.key_span(key), table.key(key), text);
-        }
-    }
     table.close();
     settings
 }
