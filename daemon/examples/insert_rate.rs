@@ -3,14 +3,14 @@
 //!
 //! `cargo run --release -p borewake --example insert_rate [rows]`
 
+mod baseline;
+
 use std::path::Path;
 use std::time::{Duration, Instant};
 
 use anyhow::{Context, Result, ensure};
 use borewake::record::{ClockEpoch, ClockState, Delivery, DeviceStatus, Quality, Reading, Stamp};
 use borewake::store::{Store, StoreOptions};
-use sqlx::sqlite::{SqliteConnectOptions, SqliteJournalMode, SqliteSynchronous};
-use sqlx::{ConnectOptions, Connection};
 
 const BATCH: usize = 1000;
 const ROUNDS: usize = 5;
@@ -28,7 +28,7 @@ async fn main() -> Result<()> {
     for round in 1..=ROUNDS {
         let dir = tempfile::tempdir()?;
         let commit = commit(&dir.path().join("store"), batches.clone()).await?;
-        let plain = plain(&dir.path().join("plain.sqlite"), &batches).await?;
+        let plain = baseline::insert(&dir.path().join("plain.sqlite"), &batches).await?;
         let rate = |time: Duration| rate(rows, time);
         let ratio = rate(commit) / rate(plain);
         println!(
@@ -97,54 +97,5 @@ async fn commit(folder: &Path, batches: Vec<Vec<Reading>>) -> Result<Duration> {
     }
     let time = begun.elapsed();
     opened.store.close().await?;
-    Ok(time)
-}
-
-/// The same rows into the same table, and nothing else.
-async fn plain(path: &Path, batches: &[Vec<Reading>]) -> Result<Duration> {
-    let mut conn = SqliteConnectOptions::new()
-        .filename(path)
-        .create_if_missing(true)
-        .journal_mode(SqliteJournalMode::Wal)
-        .synchronous(SqliteSynchronous::Full)
-        .connect()
-        .await?;
-    sqlx::raw_sql(
-        "create table reading (channel integer not null, sampled integer not null, epoch integer not null, \
-         received integer not null, value real, raw real, quality integer not null, device integer not null, \
-         clock integer not null, arrival integer not null, primary key (channel, sampled, epoch)) strict, without rowid; \
-         create index reading_by_arrival on reading (arrival)",
-    )
-    .execute(&mut conn)
-    .await?;
-    let numbers: std::collections::HashMap<_, i64> = batches
-        .iter()
-        .flatten()
-        .take(CHANNELS)
-        .map(|reading| reading.channel.clone())
-        .zip(1..)
-        .collect();
-    let begun = Instant::now();
-    for (batch, arrival) in batches.iter().zip(1_i64..) {
-        let mut tx = conn.begin_with("begin immediate").await?;
-        for reading in batch {
-            sqlx::query("insert into reading values (?, ?, ?, ?, ?, ?, ?, ?, ?, ?)")
-                .bind(numbers.get(&reading.channel))
-                .bind(reading.sampled.0)
-                .bind(reading.epoch.0)
-                .bind(reading.received.0)
-                .bind(reading.value)
-                .bind(reading.raw)
-                .bind(i64::from(reading.quality.flag()))
-                .bind(0_i64)
-                .bind(3_i64)
-                .bind(arrival)
-                .execute(&mut *tx)
-                .await?;
-        }
-        tx.commit().await?;
-    }
-    let time = begun.elapsed();
-    conn.close().await?;
     Ok(time)
 }

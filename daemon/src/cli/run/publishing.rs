@@ -67,9 +67,13 @@ pub(super) fn start(
     stopped: &watch::Receiver<bool>,
 ) -> anyhow::Result<Vec<JoinHandle<()>>> {
     let mut tasks = Vec::new();
-    for target in &site.publish {
+    for (number, target) in site.publish.iter().enumerate() {
         let PublishSettings::Mqtt(broker) = target;
-        let settings = mqtt_settings(site, broker)?;
+        let mut settings = mqtt_settings(site, broker)?;
+        if number > 0 && broker.endpoint.client_id.is_none() {
+            // Two clients of one id at one broker would throw each other out.
+            settings.client_id = format!("{}-{}", settings.client_id, number + 1);
+        }
         let outbox = Outbox {
             store: store.clone(),
             target: target_name(target),
