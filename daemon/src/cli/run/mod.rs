@@ -84,6 +84,9 @@ fn exit_on_panic() {
 async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit> {
     let mut terminate = signal(SignalKind::terminate())?;
     let mut interrupt = signal(SignalKind::interrupt())?;
+    for secret in site.secrets() {
+        secret.read()?;
+    }
     for note in &site.notes {
         warn!(line = note.line, key = %note.key, "{}", note.text);
     }
