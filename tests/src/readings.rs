@@ -1,6 +1,25 @@
 //! Seeded readings for tests: a gauge that walks up and down through a limit.
 
+use std::path::Path;
 use std::time::{Duration, SystemTime};
+
+use crate::stored::Stored;
+use crate::{Publisher, until};
+
+/// The reading that [`heard`] leaves in `o.pressure`: its value \[Pa\], older than all that tests send.
+pub const PROBE: f64 = 5e6;
+
+/// Waits until the daemon hears what is published for gauge O: a broker keeps nothing for a client it has not met yet.
+pub async fn heard(publisher: &mut Publisher, store: &Path) {
+    let mut stored = Stored::open(store).await;
+    until("the daemon to hear the broker", async || {
+        publisher
+            .publish("pads/o/p", "{\"p\": 5000, \"t\": \"2021-04-30T00:00:00Z\"}")
+            .await;
+        (!stored.readings("o.pressure").await.is_empty()).then_some(())
+    })
+    .await;
+}
 
 /// A small generator of numbers (splitmix64), so that tests need no crate and the same seed gives the same run.
 pub struct Dice(pub u64);

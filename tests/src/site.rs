@@ -74,18 +74,16 @@ pub struct Site {
 }
 
 impl Site {
-    /// Writes the site file: the common ground and what the test adds.
+    /// Writes the site file: the common ground, what the test adds, and a log source for channels that nothing delivers.
     ///
     /// # Panics
     /// No temporary folder can be made.
     #[must_use]
     pub fn new(additions: &[&str]) -> Self {
         let folder = tempfile::tempdir().expect("a temporary folder");
-        fs::write(
-            folder.path().join("site.toml"),
-            format!("{GROUND}{}", additions.concat()),
-        )
-        .expect("a site file");
+        let text = format!("{GROUND}{}", additions.concat());
+        let left = undelivered(&text);
+        fs::write(folder.path().join("site.toml"), text + &left).expect("a site file");
         Self { folder }
     }
 
@@ -106,6 +104,28 @@ impl Site {
     pub fn store(&self) -> PathBuf {
         self.folder.path().join("store")
     }
+}
+
+/// A log source for the channels of the common ground that no source of `text` delivers; empty where there are none.
+fn undelivered(text: &str) -> String {
+    let channels: String = [
+        ("w.rate", "rate", "m3/d"),
+        ("w.pressure", "pressure", "kPa"),
+        ("o.pressure", "pressure", "kPa"),
+    ]
+    .iter()
+    .filter(|(id, kind, _)| {
+        let pattern = *kind == "pressure" && text.contains("id = \"{gauge}.pressure\"");
+        !pattern && !text.contains(&format!("id = \"{id}\""))
+    })
+    .map(|(id, kind, unit)| {
+        format!("[[source.channel]]\nid = \"{id}\"\nkind = \"{kind}\"\nunit = \"{unit}\"\n")
+    })
+    .collect();
+    if channels.is_empty() {
+        return channels;
+    }
+    format!("\n[[source]]\nname = \"log\"\nkind = \"log\"\n{channels}")
 }
 
 /// Rate and well pressure from a Modbus RTU device: unit 3, floats at 100 [m3/d] and 200 [kPa].
