@@ -94,6 +94,11 @@ impl BlindState {
         self.review(book, settings, when)
     }
 
+    /// Why the watch judges nothing at all.
+    pub(super) fn why(&self) -> Option<&str> {
+        self.why.as_deref()
+    }
+
     /// A usable sample of a watched channel was committed.
     pub(super) fn sampled(&mut self, channel: &ChannelId, at: Stamp) {
         match self.newest.get_mut(channel) {

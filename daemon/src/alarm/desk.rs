@@ -174,6 +174,12 @@ impl Desk {
         self.state.book.views(since)
     }
 
+    /// Why the watch judges nothing at all, where the journal says so.
+    #[must_use]
+    pub fn watch_blind_because(&self) -> Option<&str> {
+        self.state.blind.why()
+    }
+
     /// Takes one entry of the journal; `readings` are those committed under a `Batch` entry's number.
     pub fn entry(&mut self, entry: &Entry, readings: &[Reading]) -> Outcome {
         let mut outcome = Outcome::default();

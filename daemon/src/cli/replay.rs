@@ -75,8 +75,8 @@ impl Replay {
     }
 
     async fn play(&self, site: &Site, scratch: &Scratch, json: bool) -> anyhow::Result<Exit> {
-        let mut player = open_player(site, &site.store.folder, &scratch.folder, &self.logs).await?;
-        let mut told = player.keeper().events();
+        let (mut player, mut told) =
+            open_player(site, &site.store.folder, &scratch.folder, &self.logs).await?;
         let mut file = self
             .events
             .as_ref()
@@ -113,7 +113,7 @@ impl Replay {
     }
 }
 
-/// A player over logs with a store of its own in `folder` and the ground file of `ground_folder`.
+/// A player over logs with a store of its own in `folder` and the ground file of `ground_folder`, and what happens in it.
 ///
 /// # Errors
 /// A log or the store cannot be used.
@@ -122,7 +122,7 @@ pub(super) async fn open_player(
     ground_folder: &std::path::Path,
     folder: &std::path::Path,
     logs: &[PathBuf],
-) -> anyhow::Result<Player> {
+) -> anyhow::Result<(Player, mpsc::UnboundedReceiver<Happening>)> {
     let channels = site
         .channels
         .iter()
@@ -141,8 +141,9 @@ pub(super) async fn open_player(
         .store;
     let settings = KeeperSettings::of(site, Pace::Lockstep, true);
     let start = log.next_instant().unwrap_or_default();
-    let keeper = Keeper::open(settings, store, ground, start).await?;
-    Ok(Player::new(keeper, log))
+    let (events, told) = mpsc::unbounded_channel();
+    let keeper = Keeper::open(settings, store, ground, start, Some(events)).await?;
+    Ok((Player::new(keeper, log), told))
 }
 
 /// Writes and prints what has happened since the last call.

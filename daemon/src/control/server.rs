@@ -25,6 +25,8 @@ const CONNECTIONS: usize = 16;
 const LONGEST: u64 = 64 * 1024;
 /// How long a connection may say nothing.
 const IDLE: Duration = Duration::from_secs(30);
+/// How long a stop waits for connections to end.
+const GOODBYE: Duration = Duration::from_millis(500);
 /// How long the daemon may take to answer.
 const ANSWER: Duration = Duration::from_secs(50);
 
@@ -89,7 +91,7 @@ impl Server {
         let mut stop = std::pin::pin!(stop);
         loop {
             let accepted = tokio::select! {
-                () = stop.as_mut() => return,
+                () = stop.as_mut() => break,
                 Some(_) = talks.join_next(), if !talks.is_empty() => continue,
                 accepted = accept(&self.listener, &room) => accepted,
             };
@@ -107,6 +109,11 @@ impl Server {
                 None => sleep(Duration::from_millis(200)).await,
             }
         }
+        // Answers that are on their way still go out.
+        let _ = timeout(GOODBYE, async {
+            while talks.join_next().await.is_some() {}
+        })
+        .await;
     }
 }
 

@@ -6,6 +6,7 @@
 
 pub mod judge;
 mod judging;
+mod opening;
 pub mod play;
 pub mod saved;
 pub mod settings;
@@ -15,7 +16,6 @@ use std::sync::Arc;
 
 use thiserror::Error;
 use tokio::sync::{mpsc, watch};
-use tracing::{info, warn};
 
 use self::judge::{Gone, Judge};
 use self::saved::{Due, Saved};
@@ -24,17 +24,18 @@ use crate::publish::events::{self, GaugeNews};
 use crate::publish::mqtt::Latest;
 use crate::record::{
     AckToken, Adoption, Command, CommandKind, Delivery, Entry, EntryKind, Reading, Reply, Snapshot,
-    SourceName, SourceView, Stamp, Step, Transition,
+    SourceName, SourceView, Stamp, Step, Transition, TransitionKind,
 };
 use crate::store::{Applied, Committed, Refused, Store, StoreError};
 use crate::watch::blocks::BlockPlan;
-use crate::watch::ground_file::{GroundFile, GroundFileError};
-use crate::watch::lane::{Answer, ModelThread};
+use crate::watch::lane::Answer;
 
 /// Entries after which the position is saved even when nothing changed.
 const SAVE_EVERY: u32 = 64;
 /// Wall-clock time without further late readings after which a re-run starts \[µs\].
 const GATHER: i64 = 5 * 60 * Stamp::SECOND;
+/// Wall-clock time after which a re-run starts even so: readings that always come late must not put it off for ever \[µs\].
+const GATHER_AT_MOST: i64 = 3600 * Stamp::SECOND;
 /// Failures at one block after which the watch starts blind beyond it.
 const ATTEMPTS: u32 = 3;
 
@@ -123,87 +124,6 @@ pub struct Keeper {
 }
 
 impl Keeper {
-    /// Restores what was saved, processes what the journal holds beyond it, and opens the watch.
-    ///
-    /// # Errors
-    /// The store cannot be used or was written by another version.
-    pub async fn open(
-        settings: KeeperSettings,
-        store: Store,
-        ground: Result<GroundFile, GroundFileError>,
-        wall: Stamp,
-    ) -> Result<Self, KeeperError> {
-        let (position, saved) = match store.reader().restore().await? {
-            Some((position, bytes)) => (
-                position,
-                postcard::from_bytes::<Saved>(&bytes)
-                    .map_err(|e| KeeperError::State(e.to_string()))?,
-            ),
-            None => (0, Saved::default()),
-        };
-        let desk = if saved.desk.is_empty() {
-            Desk::new(settings.alarms.clone())
-        } else {
-            Desk::restore(settings.alarms.clone(), &saved.desk)
-                .map_err(|e| KeeperError::State(e.to_string()))?
-        };
-        let (to_keeper, answers) = mpsc::unbounded_channel();
-        let digest = ground.as_ref().ok().and_then(|g| g.digest().ok());
-        let (judge, ground_last, blind) = match ground {
-            Ok(ground) => {
-                let last = ground.last_block;
-                let thread = ModelThread::start(ground, to_keeper).map_err(KeeperError::Thread)?;
-                (Some(Judge::new(thread)), last, None)
-            }
-            Err(e) => (
-                None,
-                i64::MIN,
-                Some(format!("{e}; make it with: {}", settings.renew)),
-            ),
-        };
-        let snapshot = view::empty(&settings);
-        let shown = watch::Sender::new(Arc::new(snapshot.clone()));
-        let mut keeper = Self {
-            settings,
-            store,
-            desk,
-            saved,
-            judge,
-            answers,
-            ground_last,
-            fingerprint: fingerprint(digest.as_deref()),
-            position,
-            unsaved: 0,
-            snapshot,
-            shown,
-            latest: watch::Sender::new(Latest::default()),
-            events: None,
-        };
-        keeper.recover().await?;
-        let version = env!("CARGO_PKG_VERSION").to_owned();
-        keeper
-            .happen(
-                EntryKind::Start {
-                    version,
-                    ground: digest,
-                },
-                wall,
-            )
-            .await?;
-        match blind {
-            Some(why) => {
-                warn!(%why, "every gauge is blind; readings and limits go on");
-                let from = keeper.saved.closer.next.unwrap_or(0);
-                keeper
-                    .happen(EntryKind::WatchBlind { from, why }, wall)
-                    .await?;
-            }
-            None => keeper.start_watch(wall).await?,
-        }
-        keeper.show(wall);
-        Ok(keeper)
-    }
-
     /// Where the snapshot is shown.
     #[must_use]
     pub fn snapshots(&self) -> watch::Receiver<Arc<Snapshot>> {
@@ -219,13 +139,6 @@ impl Keeper {
     /// Takes in how sources stand.
     pub fn sources(&mut self, views: impl IntoIterator<Item = (String, SourceView)>) {
         self.snapshot.sources.extend(views);
-    }
-
-    /// Where transitions and their messages go besides the outbox (a file of events, a terminal).
-    pub fn events(&mut self) -> mpsc::UnboundedReceiver<Happening> {
-        let (tx, rx) = mpsc::unbounded_channel();
-        self.events = Some(tx);
-        rx
     }
 
     /// The store, for readers beside the keeper.
@@ -343,7 +256,8 @@ impl Keeper {
         }))
     }
 
-    /// Ends in good order: what the model has said is taken in, the position and a checkpoint are saved.
+    /// Ends in good order: what the model has said is taken in, the position and a checkpoint are saved. The store
+    /// stays open for those who still publish from it; who opened it closes it.
     ///
     /// # Errors
     /// The store cannot be used.
@@ -352,31 +266,6 @@ impl Keeper {
         self.save_at_stop(wall).await?;
         if self.unsaved > 0 {
             self.save(Vec::new()).await?;
-        }
-        self.store.close().await?;
-        Ok(())
-    }
-
-    async fn recover(&mut self) -> Result<(), KeeperError> {
-        let from = self.position;
-        loop {
-            let entries = self
-                .store
-                .reader()
-                .entries_after(self.position, 1000)
-                .await?;
-            if entries.is_empty() {
-                break;
-            }
-            for entry in &entries {
-                self.process(entry, None).await?;
-            }
-        }
-        if self.position > from {
-            info!(
-                entries = self.position - from,
-                "processed the journal beyond the last saved position"
-            );
         }
         Ok(())
     }
@@ -410,18 +299,22 @@ impl Keeper {
             EntryKind::WatchBlind { why, .. } => self.snapshot.health.watch = Some(why.clone()),
             EntryKind::WatchSees => self.snapshot.health.watch = None,
             EntryKind::Tick => self.saved.closer.tick(entry.wall, self.settings.lateness),
-            EntryKind::Person { command } => {
-                if let CommandKind::Adopt {
-                    adoption: Some(adoption),
-                    ..
-                } = &command.kind
-                {
-                    self.adopt(adoption, entry.wall);
-                }
-            }
-            EntryKind::Start { .. } => {}
+            EntryKind::Person { .. } => {}
+            EntryKind::Start { ground, .. } => self.started(ground.as_deref(), entry.wall),
         }
         let outcome = self.desk.entry(entry, &readings);
+        if let EntryKind::Person { command } = &entry.kind
+            && let CommandKind::Adopt {
+                adoption: Some(adoption),
+                ..
+            } = &command.kind
+            && outcome
+                .transitions
+                .iter()
+                .any(|t| t.kind == TransitionKind::Adopted)
+        {
+            self.adopt(adoption, entry.wall);
+        }
         self.position = entry.seq;
         self.unsaved += 1;
         if !outcome.transitions.is_empty() || self.unsaved >= SAVE_EVERY {
@@ -434,8 +327,7 @@ impl Keeper {
         let plan = &self.settings.plan;
         let first = readings
             .iter()
-            .filter(|r| plan.feeds(&r.channel))
-            .map(|r| plan.index_of(r.sampled))
+            .filter_map(|r| plan.first_block_of(r))
             .filter(|&block| block > self.ground_last && self.saved.closer.is_closed(block))
             .min();
         if let Some(from) = first {
@@ -443,6 +335,7 @@ impl Keeper {
                 from,
                 compare_from: from,
                 reason: "late readings".into(),
+                first: wall,
                 since: wall,
                 replaces_live: false,
             });
@@ -453,16 +346,30 @@ impl Keeper {
         }
     }
 
+    /// What was said under another ground file is said again under this one.
+    fn started(&mut self, ground: Option<&str>, wall: Stamp) {
+        let Some(ground) = ground else { return };
+        if self.saved.ground.as_ref().is_some_and(|old| old != ground) {
+            self.saved.want_rerun(Due {
+                from: i64::MIN,
+                compare_from: i64::MIN,
+                reason: "the ground was calibrated anew".into(),
+                first: wall,
+                since: wall,
+                replaces_live: true,
+            });
+        }
+        self.saved.ground = Some(ground.to_owned());
+    }
+
     fn adopt(&mut self, adoption: &Adoption, wall: Stamp) {
-        let onset = self
-            .settings
-            .plan
-            .index_of(Stamp::from_seconds(adoption.onset));
+        let from = self.before_onset(adoption);
         self.saved.adoptions.push(adoption.clone());
         self.saved.want_rerun(Due {
-            from: onset.saturating_sub(1),
+            from,
             compare_from: adoption.block,
             reason: "a finding was taken into the model".into(),
+            first: wall,
             since: wall,
             replaces_live: true,
         });
@@ -533,12 +440,5 @@ impl Keeper {
     }
 }
 
-/// What a checkpoint belongs to: program, processor and ground file. Under another, sums may round otherwise.
-fn fingerprint(ground: Option<&str>) -> String {
-    format!(
-        "{} {} {}",
-        env!("CARGO_PKG_VERSION"),
-        std::env::consts::ARCH,
-        ground.unwrap_or("none")
-    )
-}
+#[cfg(test)]
+mod tests;

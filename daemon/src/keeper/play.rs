@@ -121,6 +121,9 @@ impl Player {
     /// The store cannot be used.
     pub async fn stop(self) -> Result<(), PlayError> {
         let wall = self.clock();
-        Ok(self.keeper.stop(wall).await?)
+        let store = self.keeper.store().clone();
+        self.keeper.stop(wall).await?;
+        store.close().await.map_err(KeeperError::from)?;
+        Ok(())
     }
 }

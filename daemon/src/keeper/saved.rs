@@ -16,6 +16,10 @@ pub struct Saved {
     pub due: Option<Due>,
     /// A re-run that is under way: after a crash it starts again.
     pub running: Option<Due>,
+    /// Digest of the ground file last used.
+    pub ground: Option<String>,
+    /// Length of the blocks that the numbers here and in the journal count \[µs\].
+    pub length: Option<i64>,
     /// The desk, in its own encoding.
     pub desk: Vec<u8>,
 }
@@ -29,6 +33,8 @@ pub struct Due {
     pub compare_from: i64,
     /// Why, in words.
     pub reason: String,
+    /// Wall clock of the first cause: gathering must end some time.
+    pub first: Stamp,
     /// Wall clock of the last cause, so that trickling late data are gathered.
     pub since: Stamp,
     /// Whether the live edge must wait for it (a finding was taken into the model).
@@ -65,6 +71,7 @@ impl Due {
             from: self.from.min(more.from),
             compare_from: self.compare_from.min(more.compare_from),
             reason,
+            first: self.first.min(more.first),
             since: self.since.max(more.since),
             replaces_live: self.replaces_live || more.replaces_live,
         }

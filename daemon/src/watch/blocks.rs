@@ -61,10 +61,20 @@ impl BlockPlan {
         all
     }
 
-    /// Whether blocks are built from a channel.
+    /// The first block that a reading has a part in; `None` where no block is built from its channel. A rate that is
+    /// the mean up to its instant belongs to the block that ends there too.
     #[must_use]
-    pub fn feeds(&self, channel: &ChannelId) -> bool {
-        self.gauges.contains(channel) || self.wells.iter().any(|w| &w.channel == channel)
+    pub fn first_block_of(&self, reading: &Reading) -> Option<i64> {
+        let block = self.index_of(reading.sampled);
+        let mut wells = self.wells.iter().filter(|w| w.channel == reading.channel);
+        let up_to =
+            wells.any(|w| w.holds == Holds::Before) && self.start_of(block) == reading.sampled;
+        if up_to {
+            return Some(block.saturating_sub(1));
+        }
+        let feeds = self.gauges.contains(&reading.channel)
+            || self.wells.iter().any(|w| w.channel == reading.channel);
+        feeds.then_some(block)
     }
 
     /// Builds a block.
@@ -294,6 +304,22 @@ mod tests {
         let within = series(&[reading("q", 3600 + 600, 4.0), reading("q", 7200, 8.0)]);
         let block = plan(Holds::Before).build(1, &within, &BTreeMap::new());
         assert_eq!(block.rates[0].pieces, vec![(600.0, 2.0), (3600.0, 4.0)]);
+    }
+
+    #[test]
+    fn a_mean_rate_at_a_boundary_is_part_of_the_block_that_ends_there() {
+        let at = |second| reading("q", second, 4.0);
+        assert_eq!(plan(Holds::Before).first_block_of(&at(7200)), Some(1));
+        assert_eq!(plan(Holds::Before).first_block_of(&at(7201)), Some(2));
+        assert_eq!(plan(Holds::After).first_block_of(&at(7200)), Some(2));
+        assert_eq!(
+            plan(Holds::Before).first_block_of(&reading("p", 7200, 1.0)),
+            Some(2)
+        );
+        assert_eq!(
+            plan(Holds::After).first_block_of(&reading("x", 7200, 1.0)),
+            None
+        );
     }
 
     #[test]

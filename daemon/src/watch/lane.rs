@@ -28,6 +28,8 @@ pub enum Ask {
     Open {
         /// Which lane; what it held is dropped.
         lane: LaneId,
+        /// Number of this opening; answers bear it.
+        run: u64,
         /// A checkpoint, as [`Answer::Saved`] gave it.
         checkpoint: Option<Vec<u8>>,
         /// Findings taken into the model.
@@ -37,6 +39,8 @@ pub enum Ask {
     Step {
         /// Which lane.
         lane: LaneId,
+        /// Number of its opening.
+        run: u64,
         /// The block.
         block: Box<Block>,
     },
@@ -44,6 +48,8 @@ pub enum Ask {
     Save {
         /// Which lane.
         lane: LaneId,
+        /// Number of its opening.
+        run: u64,
         /// The block it stands after.
         block: i64,
     },
@@ -51,22 +57,25 @@ pub enum Ask {
     Promote,
 }
 
-/// What the thread answers. Every [`Ask`] but [`Ask::Promote`] has exactly one answer.
+/// What the thread answers. Every [`Ask`] but [`Ask::Promote`] has exactly one answer, which bears the number of the
+/// lane's opening: by that an answer to a lane closed meanwhile is known.
 #[derive(Debug)]
 pub enum Answer {
     /// A lane is open.
-    Opened(LaneId),
+    Opened(u64),
     /// A block was judged.
-    Stepped(LaneId, Box<Step>),
+    Stepped(u64, Box<Step>),
     /// A lane's state.
     Saved {
+        /// Number of the lane's opening.
+        run: u64,
         /// Block after which it was taken.
         block: i64,
         /// Encoded state.
         state: Vec<u8>,
     },
     /// The lane cannot go on.
-    Failed(LaneId, ModelError),
+    Failed(u64, ModelError),
 }
 
 /// Handle on the model's thread; dropping it ends the thread after its present request.
@@ -88,6 +97,12 @@ impl ModelThread {
             .name("model".into())
             .spawn(move || Lanes::new(ground).serve(&inbox, &answers))?;
         Ok(Self { asks })
+    }
+
+    /// A handle on whoever takes the requests.
+    #[cfg(test)]
+    pub(crate) fn over(asks: mpsc::Sender<Ask>) -> Self {
+        Self { asks }
     }
 
     /// Sends a request. `false` when the thread is gone.
@@ -121,31 +136,32 @@ impl Lanes {
                 }
                 Ask::Open {
                     lane,
+                    run,
                     checkpoint,
                     adoptions,
                 } => match self.open(checkpoint, &adoptions) {
                     Ok(watch) => {
                         *self.slot(lane) = Some(watch);
-                        Answer::Opened(lane)
+                        Answer::Opened(run)
                     }
-                    Err(e) => Answer::Failed(lane, e),
+                    Err(e) => Answer::Failed(run, e),
                 },
-                Ask::Step { lane, block } => match self.slot(lane) {
+                Ask::Step { lane, run, block } => match self.slot(lane) {
                     Some(watch) => match watch.step(&block) {
-                        Ok(step) => Answer::Stepped(lane, Box::new(step)),
-                        Err(e) => Answer::Failed(lane, e),
+                        Ok(step) => Answer::Stepped(run, Box::new(step)),
+                        Err(e) => Answer::Failed(run, e),
                     },
-                    None => Answer::Failed(lane, closed()),
+                    None => Answer::Failed(run, closed()),
                 },
-                Ask::Save { lane, block } => match self.slot(lane) {
+                Ask::Save { lane, run, block } => match self.slot(lane) {
                     Some(watch) => match postcard::to_stdvec(&watch.save()) {
-                        Ok(state) => Answer::Saved { block, state },
+                        Ok(state) => Answer::Saved { run, block, state },
                         Err(e) => Answer::Failed(
-                            lane,
+                            run,
                             ModelError::History(format!("the checkpoint cannot be encoded: {e}")),
                         ),
                     },
-                    None => Answer::Failed(lane, closed()),
+                    None => Answer::Failed(run, closed()),
                 },
             };
             if answers.send(answer).is_err() {

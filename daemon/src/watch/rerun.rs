@@ -50,6 +50,12 @@ pub async fn compare(
         return Ok(result);
     };
     let first = ground.last_block + 1;
+    // What began within the commissioning history is part of the calibration.
+    let adoptions: Vec<Adoption> = adoptions
+        .iter()
+        .filter(|a| plan.index_of(Stamp::from_seconds(a.onset)) > ground.last_block)
+        .cloned()
+        .collect();
     result.passed_over =
         u64::try_from(reader.judged_between(i64::MIN, first).await?.len()).unwrap_or(u64::MAX);
     let onset = |a: &Adoption| {

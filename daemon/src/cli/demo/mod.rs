@@ -80,14 +80,14 @@ impl Demo {
         say(json, &summary(&site, &ground));
         say(json, "Playing the log ...");
         let store = scratch.folder.join("played");
-        let player = open_player(&site, &site.store.folder, &store, &[log_file]).await?;
+        let (player, told) = open_player(&site, &site.store.folder, &store, &[log_file]).await?;
         let mut stage = Stage {
             player,
             json,
             score: Score::new(truth),
             adopt: None,
         };
-        stage.play().await?;
+        stage.play(told).await?;
         let Stage { player, score, .. } = stage;
         player.stop().await?;
         let written = pictures::draw(&site, &store, &score, &self.out).await?;
@@ -145,8 +145,7 @@ struct Stage {
 }
 
 impl Stage {
-    async fn play(&mut self) -> anyhow::Result<()> {
-        let mut told = self.player.keeper().events();
+    async fn play(&mut self, mut told: mpsc::UnboundedReceiver<Happening>) -> anyhow::Result<()> {
         let bar = progress::bytes(self.player.log().total_bytes(), "playing");
         while let Some(clock) = self.player.next().await? {
             bar.set_position(self.player.log().read_bytes());

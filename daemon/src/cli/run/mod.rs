@@ -23,8 +23,6 @@ use crate::watch::ground_file::GroundFile;
 
 /// How often the wall clock is journalled.
 const TICK: Duration = Duration::from_secs(60);
-/// How often old raw readings are dropped.
-const UPKEEP: Duration = Duration::from_secs(3600);
 /// Longest wait of a reading for its group commit.
 const GROUP: Duration = Duration::from_secs(1);
 /// Readings that are committed without waiting for more.
@@ -95,8 +93,19 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
     let epoch = store.advance_clock().await?;
     let ground = GroundFile::read(&site.store.folder, &site.ground_digest());
     let settings = KeeperSettings::of(&site, Pace::Live, false);
-    let mut keeper = Keeper::open(settings, store.clone(), ground, Stamp::now()).await?;
+    let mut others = Vec::new();
+    let events = match events_file {
+        Some(path) => {
+            let (events, told) = mpsc::unbounded_channel();
+            others.push(tokio::spawn(follow(Ndjson::append(&path)?, told)));
+            Some(events)
+        }
+        None => None,
+    };
+    let mut keeper = Keeper::open(settings, store.clone(), ground, Stamp::now(), events).await?;
+    // Sources stop first, so that what they have handed over still goes all the way; then the rest.
     let (stop, stopped) = watch::channel(false);
+    let (stop_rest, rest_stopped) = watch::channel(false);
     let around = intake::Surroundings {
         site: site.id.clone(),
         clock: std::sync::Arc::new(SystemClock::new(epoch)),
@@ -124,28 +133,26 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
 
     let (commands_in, mut commands) = mpsc::channel(16);
     let control = control::Server::bind(&site.store.folder)?;
-    let mut others = vec![tokio::spawn(
-        control.serve(commands_in, until(stopped.clone())),
-    )];
+    others.push(tokio::spawn(
+        control.serve(commands_in, until(rest_stopped.clone())),
+    ));
     others.extend(publishing::start(
         &site,
         &store,
         &keeper.snapshots(),
         &keeper.latest(),
-        &stopped,
+        &rest_stopped,
     )?);
-    if let Some(path) = events_file {
-        others.push(tokio::spawn(follow(
-            Ndjson::append(&path)?,
-            keeper.events(),
-        )));
-    }
+    others.push(tokio::spawn(upkeep::keep_bounds(
+        site.clone(),
+        store.clone(),
+        until(rest_stopped),
+    )));
 
     info!(site = %site.id, "running");
-    let mut tick = tokio::time::interval(TICK);
+    // Not at once: blocks that ended while the daemon was down wait for what senders kept back meanwhile.
+    let mut tick = tokio::time::interval_at(tokio::time::Instant::now() + TICK, TICK);
     tick.set_missed_tick_behavior(tokio::time::MissedTickBehavior::Skip);
-    let mut upkeep = tokio::time::interval(UPKEEP);
-    upkeep.set_missed_tick_behavior(tokio::time::MissedTickBehavior::Skip);
     let mut batch = Vec::new();
     let mut due = None;
     let mut listening = true;
@@ -170,6 +177,7 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
             () = timer => now = true,
             Some(answer) = keeper.answer() => keeper.answered(answer, Stamp::now()).await?,
             Some((command, reply)) = commands.recv() => {
+                keeper.sources(states.iter().map(|(name, view)| (name.clone(), view.borrow().clone())));
                 let answer = keeper.person(command, Stamp::now()).await?;
                 let _ = reply.send(answer);
             }
@@ -177,7 +185,6 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
                 keeper.sources(states.iter().map(|(name, view)| (name.clone(), view.borrow().clone())));
                 keeper.tick(Stamp::now()).await?;
             }
-            _ = upkeep.tick() => upkeep::upkeep(&site, &store).await,
         }
         if now {
             due = match commit(&mut keeper, &mut batch, &acks).await? {
@@ -187,6 +194,8 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
         }
     }
     info!("stopping");
+    // Commands that were not taken yet are refused.
+    drop(commands);
     stop.send_replace(true);
     let ended = tokio::time::timeout(STOP, async { while merge.turn(&mut batch).await {} }).await;
     if ended.is_err() {
@@ -196,11 +205,13 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
         warn!("the disk is full; what was not committed stays unacknowledged with its senders");
     }
     keeper.stop(Stamp::now()).await?;
+    stop_rest.send_replace(true);
     for task in tasks.into_iter().chain(others) {
         if tokio::time::timeout(STOP, task).await.is_err() {
             warn!("a task did not end in time");
         }
     }
+    store.close().await?;
     info!("stopped");
     Ok(Exit::Done)
 }
