@@ -25,6 +25,8 @@ const TYPICAL_DISCREPANCY: f64 = 0.001;
 const TYPICAL_GAIN: f64 = 0.005;
 /// Largest step of a logarithm in one round.
 const LONGEST_STEP: f64 = 0.4;
+/// Times that readings which are missing are worked out anew before anything is learned.
+const FILLS: usize = 2;
 /// Least history \[s\].
 const LEAST_HISTORY: f64 = 5.0 * 86_400.0;
 
@@ -83,7 +85,8 @@ struct Fit<'a> {
     past: f64,
     /// Spread of a parameter between pairs: other wells, own well.
     apart: [f64; 2],
-    coefficients: Option<DVector<f64>>,
+    /// Coefficients of the last round less what it moved into parameters and skins.
+    rest: Option<DVector<f64>>,
 }
 
 impl<'a> Fit<'a> {
@@ -153,7 +156,7 @@ impl<'a> Fit<'a> {
             gain: TYPICAL_GAIN,
             past: 0.1,
             apart: [0.1, 0.03],
-            coefficients: None,
+            rest: None,
         })
     }
 
@@ -215,15 +218,26 @@ impl<'a> Fit<'a> {
         let mut columns = self.columns()?;
         let mut history = History::run(&mut columns, self.history)?;
         self.priors.pair_spread.clone_from(&history.pair_spread);
-        if let Some(coefficients) = &self.coefficients {
-            history.fill(coefficients);
-        }
         if round == 0 {
             columns = self.columns()?;
             history = History::run(&mut columns, self.history)?;
         }
-        let regression = history.whiten(&self.whitener(&columns)?);
+        match &self.rest {
+            Some(rest) => history.fill(rest),
+            None => history.fill(&DVector::zeros(0)),
+        }
+        let whitener = self.whitener(&columns)?;
+        let mut regression = history.whiten(&whitener);
+        if round == 0 && !history.missing.is_empty() {
+            // Before anything is learned, what was not read must fit in with what was.
+            for _ in 0..FILLS {
+                let (spread, centre) = self.spread(&columns, regression.z.len());
+                history.fill(&regression.solve(&spread, &centre)?.mean);
+                regression = history.whiten(&whitener);
+            }
+        }
         let solved = self.learn_scales(&columns, &regression, round)?;
+        let mut rest = solved.mean.clone();
         let mut moved = 0.0_f64;
         for (index, kind) in columns.kinds.iter().enumerate() {
             match *kind {
@@ -232,6 +246,7 @@ impl<'a> Fit<'a> {
                         let step = (solved.mean[index] * self.priors.parameter)
                             .clamp(-LONGEST_STEP, LONGEST_STEP);
                         moved = moved.max(step.abs());
+                        rest[index] -= step / self.priors.parameter;
                         let value = factor(&self.factors, tilted.parameter) * step.exp();
                         self.factors = with_factor(&self.factors, tilted.parameter, value);
                     }
@@ -241,6 +256,7 @@ impl<'a> Fit<'a> {
                         && let Some(skin) = self.skins.get_mut(well)
                     {
                         *skin += solved.mean[index] * self.priors.skin;
+                        rest[index] = 0.0;
                     }
                 }
                 _ => {}
@@ -250,7 +266,7 @@ impl<'a> Fit<'a> {
         if (1..6).contains(&round) {
             self.learn_noise(&columns, &history, &solved)?;
         }
-        self.coefficients = Some(solved.mean);
+        self.rest = Some(rest);
         Ok(moved)
     }
 
@@ -408,8 +424,8 @@ impl<'a> Fit<'a> {
     fn finish(&mut self, blocks: &[Block], span: (i64, i64)) -> Result<Calibration, ModelError> {
         let mut columns = self.columns()?;
         let mut history = History::run(&mut columns, self.history)?;
-        if let Some(coefficients) = &self.coefficients {
-            history.fill(coefficients);
+        if let Some(rest) = &self.rest {
+            history.fill(rest);
         }
         let mut whitener = self.whitener(&columns)?;
         let regression = history.whiten(&whitener);
