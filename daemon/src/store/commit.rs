@@ -7,7 +7,7 @@ use sqlx::{Connection, SqliteConnection};
 use super::error::Result;
 use super::rows;
 use super::sql;
-use super::writer::{Known, Statements, Writer};
+use super::writer::{CLOCK_EPOCH, Known, Statements, Writer};
 use crate::record::{
     AckToken, ChannelId, Delivery, EntryKind, Reading, RejectReason, Rejected, SourceName, Stamp,
 };
@@ -63,6 +63,9 @@ impl Writer {
         });
         let seq = known.last_seq.saturating_add(1);
         let journalled = !plan.fresh.is_empty();
+        // A clock that was stepped began a run of its own: the next start must not give its number again.
+        let clock = plan.fresh.iter().map(|(_, r)| r.epoch.0).max();
+        let clock = clock.filter(|&run| run > known.clock);
         if journalled || !plan.rejected.is_empty() {
             let mut tx = self.conn.begin_with("begin immediate").await?;
             for (number, name) in &plan.new_channels {
@@ -79,6 +82,13 @@ impl Writer {
                 super::append::insert_entry(&mut tx, seq, wall, &kind).await?;
                 insert_readings(&mut tx, &self.statements, &plan.fresh, seq).await?;
             }
+            if let Some(run) = clock {
+                sqlx::query(sql::SET_META)
+                    .bind(CLOCK_EPOCH)
+                    .bind(run.to_string())
+                    .execute(&mut *tx)
+                    .await?;
+            }
             insert_rejected(&mut tx, &self.statements, &plan.rejected).await?;
             tx.commit().await?;
         }
@@ -86,6 +96,7 @@ impl Writer {
             if journalled {
                 known.last_seq = seq;
             }
+            known.clock = clock.unwrap_or(known.clock);
             for (number, name) in plan.new_channels {
                 known.channels.insert(name, number);
             }

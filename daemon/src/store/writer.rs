@@ -83,6 +83,8 @@ pub(super) struct Known {
     pub(super) newest: HashMap<i64, Stamp>,
     pub(super) last_seq: i64,
     pub(super) position: i64,
+    /// Highest number of a clock's run that is kept.
+    pub(super) clock: u32,
 }
 
 impl Known {
@@ -106,6 +108,7 @@ impl Known {
             position: sqlx::query_scalar(sql::DESK_POSITION)
                 .fetch_one(&mut *conn)
                 .await?,
+            clock: clock(conn).await?,
         })
     }
 }
@@ -220,14 +223,8 @@ impl Writer {
 
     /// Adds one to the counter of clock runs and gives the new number.
     async fn advance_clock(&mut self) -> Result<ClockEpoch> {
-        let stored: Option<String> = sqlx::query_scalar(sql::META)
-            .bind(CLOCK_EPOCH)
-            .fetch_optional(&mut self.conn)
-            .await?;
-        let next = stored
-            .and_then(|text| text.parse::<u32>().ok())
-            .unwrap_or(0)
-            .saturating_add(1);
+        let next = clock(&mut self.conn).await?.saturating_add(1);
+        self.known = None;
         self.set_meta(CLOCK_EPOCH, Some(&next.to_string())).await?;
         Ok(ClockEpoch(next))
     }
@@ -258,6 +255,14 @@ impl Writer {
         self.conn.close().await?;
         Ok(())
     }
+}
+
+async fn clock(conn: &mut SqliteConnection) -> Result<u32> {
+    let stored: Option<String> = sqlx::query_scalar(sql::META)
+        .bind(CLOCK_EPOCH)
+        .fetch_optional(conn)
+        .await?;
+    Ok(stored.and_then(|text| text.parse().ok()).unwrap_or(0))
 }
 
 /// Keys of the meta table that are the store's own.

@@ -1,6 +1,6 @@
 use super::super::{Checkpoint, CheckpointKind, StoreError};
 use super::{delivery, fresh, open, reading, step};
-use crate::record::{EntryKind, Stamp};
+use crate::record::{ClockEpoch, EntryKind, Reading, Stamp};
 
 fn judged(block: i64, log_mixture: f64, rerun: Option<&str>) -> EntryKind {
     EntryKind::Judged {
@@ -155,4 +155,20 @@ async fn attempts_and_clock_runs_are_counted_across_restarts() {
     store.clear_attempts().await.unwrap();
     assert_eq!(store.mark_attempt(9).await.unwrap(), 1);
     assert_eq!(store.advance_clock().await.unwrap().0, 2);
+}
+
+#[tokio::test]
+async fn a_run_of_the_clock_that_readings_bear_is_not_given_again() {
+    let (_dir, store) = fresh().await;
+    assert_eq!(store.advance_clock().await.unwrap().0, 1);
+    // The clock was stepped twice while the daemon ran.
+    let stepped = Reading {
+        epoch: ClockEpoch(3),
+        ..reading("p", 10, 1.0)
+    };
+    store
+        .commit(vec![delivery(vec![stepped])], Stamp(0))
+        .await
+        .unwrap();
+    assert_eq!(store.advance_clock().await.unwrap().0, 4);
 }
