@@ -65,7 +65,11 @@ pub fn borewake_in<A: AsRef<OsStr>>(folder: &Path, arguments: &[A]) -> Output {
 }
 
 /// The program built beside this test, built now where it is not there yet.
-fn program() -> &'static Path {
+///
+/// # Panics
+/// It does not build.
+#[must_use]
+pub fn program() -> &'static Path {
     static PROGRAM: OnceLock<PathBuf> = OnceLock::new();
     PROGRAM.get_or_init(|| {
         // target/<profile>/deps/<this test>

@@ -18,7 +18,7 @@ use std::time::{Duration, Instant};
 
 pub use broker::Broker;
 pub use collect::{Collector, Message};
-pub use daemon::{Daemon, Output, borewake, borewake_in};
+pub use daemon::{Daemon, Output, borewake, borewake_in, program};
 pub use modbus::ModbusServer;
 pub use pty::TextDevice;
 pub use publisher::Publisher;

@@ -61,14 +61,6 @@ impl Failure {
         }
     }
 
-    /// Somebody interrupted it.
-    pub fn interrupted(error: impl Into<anyhow::Error>) -> Self {
-        Self {
-            exit: Exit::Interrupted,
-            error: error.into(),
-        }
-    }
-
     /// How the program ends.
     #[must_use]
     pub fn exit(&self) -> Exit {

@@ -10,6 +10,7 @@ mod commission;
 mod demo;
 mod exit;
 mod export;
+mod interrupt;
 mod logs;
 mod progress;
 mod replay;
@@ -93,6 +94,13 @@ pub fn main(arguments: impl IntoIterator<Item = OsString>) -> Exit {
     };
     logs::start();
     let context = Context { json: cli.json };
+    // The daemon stops in good order by itself.
+    if !matches!(cli.verb, Verb::Run(_))
+        && let Err(why) = interrupt::end_when_interrupted()
+    {
+        let _ = writeln!(std::io::stderr(), "borewake: {why}");
+        return Exit::Unusable;
+    }
     match cli.verb.run(&context) {
         Ok(exit) => exit,
         Err(failure) => {

@@ -205,6 +205,7 @@ impl Scratch {
         }
         let name = format!("borewake-{}-{:08x}", std::process::id(), fastrand::u32(..));
         let folder = std::env::temp_dir().join(name);
+        super::interrupt::scratch(&folder);
         std::fs::create_dir(&folder).with_context(|| folder.display().to_string())?;
         Ok(Self {
             folder,
