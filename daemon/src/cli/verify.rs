@@ -12,7 +12,7 @@ use crate::alarm::Desk;
 use crate::config::{self, Site};
 use crate::keeper::settings::block_plan;
 use crate::keeper::{KeeperSettings, Pace, saved};
-use crate::record::{Adoption, Alarm, AlarmId, EntryKind};
+use crate::record::{Adoption, Alarm, AlarmId, AlarmKind, EntryKind};
 use crate::store::{Reader, StoreError};
 use crate::watch::ground_file::GroundFile;
 use crate::watch::rerun::{Comparison, compare};
@@ -38,8 +38,17 @@ pub(super) struct Verify {
 struct Report {
     integrity: Vec<String>,
     watch: Result<Comparison, String>,
-    alarms: Vec<String>,
+    alarms: Alarms,
+}
+
+/// What became of the alarms.
+struct Alarms {
+    /// Those that come out otherwise, in words.
+    wrong: Vec<String>,
+    /// Journal entries gone through.
     entries: i64,
+    /// Alarms that were not compared, because raw readings they rest on are gone.
+    passed_over: usize,
 }
 
 impl Verify {
@@ -85,16 +94,30 @@ async fn examine(site: &Site, reader: &Reader) -> anyhow::Result<Report> {
         None => (0, saved::Saved::default()),
     };
     let watch = match GroundFile::read(&site.store.folder, &site.ground_digest()) {
+        Ok(ground) if lacks_readings(site, reader, &ground).await? => Err(
+            "not re-run: raw readings since the end of commissioning were dropped, as `keep_raw` and `max_size` ask"
+                .to_owned(),
+        ),
         Ok(ground) => again(site, reader, &ground, &saved.adoptions).await,
         Err(why) => Err(format!("not re-run: {why}")),
     };
-    let (alarms, entries) = desk_again(site, reader, position).await?;
+    let alarms = desk_again(site, reader, position).await?;
     Ok(Report {
         integrity,
         watch,
         alarms,
-        entries,
     })
+}
+
+/// Whether raw readings that a re-run from the end of commissioning needs may have been dropped.
+async fn lacks_readings(
+    site: &Site,
+    reader: &Reader,
+    ground: &GroundFile,
+) -> Result<bool, StoreError> {
+    let first = block_plan(site).start_of(ground.last_block.saturating_add(1));
+    let oldest = reader.first_sample().await?;
+    Ok(reader.raw_readings_dropped().await? && oldest.is_none_or(|oldest| oldest > first))
 }
 
 async fn again(
@@ -113,32 +136,48 @@ async fn again(
 }
 
 /// Takes a fresh desk through the whole journal and compares its alarms with the stored ones.
-async fn desk_again(
-    site: &Site,
-    reader: &Reader,
-    position: i64,
-) -> Result<(Vec<String>, i64), StoreError> {
+///
+/// The daemon may go on meanwhile: then the desk follows it until both stand at the same entry.
+async fn desk_again(site: &Site, reader: &Reader, mut position: i64) -> Result<Alarms, StoreError> {
     let settings = KeeperSettings::of(site, Pace::Lockstep, false);
     let mut desk = Desk::new(settings.alarms);
     let mut again: BTreeMap<AlarmId, Alarm> = BTreeMap::new();
     let mut seq = 0;
-    while seq < position {
-        let entries = reader.entries_after(seq, 1000).await?;
-        if entries.is_empty() {
-            break;
-        }
-        for entry in entries.iter().take_while(|e| e.seq <= position) {
-            let readings = match entry.kind {
-                EntryKind::Batch { .. } => reader.readings_of(entry.seq).await?,
-                _ => Vec::new(),
+    let mut stored = loop {
+        while seq < position {
+            let entries = reader
+                .entries_after(seq, (position - seq).min(1000))
+                .await?;
+            let Some(last) = entries.last().map(|e| e.seq) else {
+                break;
             };
-            for transition in desk.entry(entry, &readings).transitions {
-                again.insert(transition.alarm.id.clone(), transition.alarm);
+            for entry in &entries {
+                let readings = match entry.kind {
+                    EntryKind::Batch { .. } => reader.readings_of(entry.seq).await?,
+                    _ => Vec::new(),
+                };
+                for transition in desk.entry(entry, &readings).transitions {
+                    again.insert(transition.alarm.id.clone(), transition.alarm);
+                }
             }
+            seq = last;
         }
-        seq = entries.last().map_or(position, |e| e.seq);
+        let stored = reader.alarms().await?;
+        let now = reader.restore().await?.map_or(0, |(position, _)| position);
+        if now == position {
+            break stored;
+        }
+        position = now;
+    };
+    // Without all raw readings only the watch's own alarms, which rest on what was said of blocks, can be worked out.
+    let thinned = reader.raw_readings_dropped().await?;
+    let mut passed_over = 0;
+    if thinned {
+        let rests_on_readings = |alarm: &Alarm| alarm.kind != AlarmKind::Watch;
+        passed_over = stored.iter().filter(|a| rests_on_readings(a)).count();
+        stored.retain(|a| !rests_on_readings(a));
+        again.retain(|_, a| !rests_on_readings(a));
     }
-    let stored = reader.alarms().await?;
     let mut wrong = Vec::new();
     for alarm in &stored {
         match again.get(&alarm.id) {
@@ -165,13 +204,17 @@ async fn desk_again(
             ));
         }
     }
-    Ok((wrong, position))
+    Ok(Alarms {
+        wrong,
+        entries: position,
+        passed_over,
+    })
 }
 
 impl Report {
     fn holds(&self) -> bool {
         let watch = self.watch.as_ref().map_or(true, |c| c.differing.is_empty());
-        self.integrity.is_empty() && self.alarms.is_empty() && watch
+        self.integrity.is_empty() && self.alarms.wrong.is_empty() && watch
     }
 
     fn text(&self) -> String {
@@ -189,8 +232,14 @@ impl Report {
         part("integrity", "sound".into(), &self.integrity);
         part(
             "alarms",
-            format!("as {} journal entries give them", self.entries),
-            &self.alarms,
+            match self.alarms.passed_over {
+                0 => format!("as {} journal entries give them", self.alarms.entries),
+                n => format!(
+                    "those of the watch are as {} journal entries give them; {n} others are not compared, because raw readings were dropped",
+                    self.alarms.entries
+                ),
+            },
+            &self.alarms.wrong,
         );
         match &self.watch {
             Ok(c) => {
@@ -218,8 +267,8 @@ impl Report {
             Err(why) => json!({ "not_run": why }),
         };
         let document = json!({
-            "holds": self.holds(), "integrity": self.integrity, "alarms": self.alarms,
-            "journal_entries": self.entries, "watch": watch,
+            "holds": self.holds(), "integrity": self.integrity, "alarms": self.alarms.wrong,
+            "alarms_not_compared": self.alarms.passed_over, "journal_entries": self.alarms.entries, "watch": watch,
         });
         format!("{document:#}\n")
     }

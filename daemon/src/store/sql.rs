@@ -39,6 +39,10 @@ statements! {
         where channel = ?1 order by sampled desc, epoch desc limit 1";
     LAST_BEFORE = "select channel, sampled, epoch, received, value, raw, quality, device, clock from reading \
         where channel = ?1 and sampled < ?2 order by sampled desc, epoch desc limit 1";
+    // What is no use is passed over here, not by asking again: a gauge may deliver nothing else for days.
+    LAST_USABLE_BEFORE = "select channel, sampled, epoch, received, value, raw, quality, device, clock from reading \
+        where channel = ?1 and sampled < ?2 and value is not null and quality not in (4, 9) \
+        order by sampled desc, epoch desc limit 1";
     FIRST_SAMPLE = "select min((select min(sampled) from reading where channel = id)) from channel";
     LAST_SAMPLE = "select max((select max(sampled) from reading where channel = id)) from channel";
     REJECTED_AFTER = "select id, channel, source, sampled, received, raw, reason, detail from rejected where id > ?1 order by id limit ?2";

@@ -25,13 +25,8 @@ pub async fn stored_block(reader: &Reader, plan: &BlockPlan, index: i64) -> Resu
     }
     let mut before = BTreeMap::new();
     for channel in &channels {
-        let mut instant = start;
-        while let Some(reading) = reader.last_before(channel, instant).await? {
-            if reading.is_usable() {
-                before.insert(channel.clone(), reading);
-                break;
-            }
-            instant = reading.sampled;
+        if let Some(reading) = reader.last_usable_before(channel, start).await? {
+            before.insert(channel.clone(), reading);
         }
     }
     Ok(plan.build(index, &within, &before))

@@ -15,6 +15,7 @@ use super::channels::Names;
 use super::error::{Result, StoreError};
 use super::options;
 use super::sql;
+use super::writer::THINNED_THROUGH;
 
 pub use journal::Judged;
 pub(in crate::store) use journal::entry_kind;
@@ -72,6 +73,14 @@ impl Reader {
             .bind(key)
             .fetch_optional(&self.pool)
             .await?)
+    }
+
+    /// Whether raw readings were ever dropped for age or room.
+    ///
+    /// # Errors
+    /// The database cannot be read.
+    pub async fn raw_readings_dropped(&self) -> Result<bool> {
+        Ok(self.meta(THINNED_THROUGH).await?.is_some())
     }
 
     /// Bytes of the database in use, free pages not counted.

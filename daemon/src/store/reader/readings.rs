@@ -110,6 +110,19 @@ impl Reader {
         self.one(sql::LAST_BEFORE, channel, Some(instant)).await
     }
 
+    /// The last usable reading of a channel sampled before an instant.
+    ///
+    /// # Errors
+    /// The database cannot be read.
+    pub async fn last_usable_before(
+        &self,
+        channel: &ChannelId,
+        instant: Stamp,
+    ) -> Result<Option<Reading>> {
+        self.one(sql::LAST_USABLE_BEFORE, channel, Some(instant))
+            .await
+    }
+
     /// The first sampled instant of all channels.
     ///
     /// # Errors
