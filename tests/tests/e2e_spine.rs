@@ -158,11 +158,9 @@ async fn the_broker_tells_of_a_daemon_that_died() {
     let watchkeeping = Collector::start(broker.port(), "w", "borewake/bench/watchkeeping").await;
     let daemon = Daemon::start(&site.file()).await;
     let alive = watchkeeping.wait_for("a heartbeat", |_| true).await;
+    assert_eq!(alive.json()["data"]["online"], true);
     daemon.kill();
-    let seen = watchkeeping.all().len();
-    let will = until("the last will", async || {
-        watchkeeping.all().into_iter().nth(seen)
-    })
-    .await;
-    assert_ne!(will.payload, alive.payload);
+    watchkeeping
+        .wait_for("the last will", |m| m.json()["data"]["online"] == false)
+        .await;
 }

@@ -93,16 +93,21 @@ impl Site {
         self.sources.iter().find(|s| s.name == *name)
     }
 
-    /// Every secret file named, in file order.
-    pub fn secrets(&self) -> impl Iterator<Item = &SecretFile> {
+    /// Every broker named, in file order.
+    pub fn brokers(&self) -> impl Iterator<Item = &MqttEndpoint> {
         let sources = self.sources.iter().filter_map(|s| match &s.config {
-            SourceConfig::Mqtt(source) => source.endpoint.password.as_ref(),
+            SourceConfig::Mqtt(source) => Some(&source.endpoint),
             _ => None,
         });
-        let publish = self.publish.iter().filter_map(|p| match p {
-            PublishSettings::Mqtt(publish) => publish.endpoint.password.as_ref(),
+        let publish = self.publish.iter().map(|p| match p {
+            PublishSettings::Mqtt(publish) => &publish.endpoint,
         });
         sources.chain(publish)
+    }
+
+    /// Every secret file named, in file order.
+    pub fn secrets(&self) -> impl Iterator<Item = &SecretFile> {
+        self.brokers().filter_map(|broker| broker.password.as_ref())
     }
 
     /// The command that renews the ground file, for messages.

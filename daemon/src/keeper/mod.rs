@@ -197,6 +197,8 @@ impl Keeper {
         self.start_due(wall).await?;
         if self.settings.pace == Pace::Lockstep {
             self.settle(wall).await?;
+        } else {
+            self.snapshot.health.outbox = self.store.reader().outbox_len().await?;
         }
         self.show(wall);
         Ok(())
@@ -212,6 +214,7 @@ impl Keeper {
         wall: Stamp,
     ) -> Result<Reply, KeeperError> {
         if command.kind == CommandKind::Show {
+            self.snapshot.health.outbox = self.store.reader().outbox_len().await?;
             self.show(wall);
             return Ok(Reply::State {
                 snapshot: Box::new(self.snapshot.clone()),

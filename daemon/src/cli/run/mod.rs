@@ -54,6 +54,14 @@ pub(super) struct Run {
 impl Run {
     pub(super) fn run(self, _context: &Context) -> Result<Exit, Failure> {
         let site = config::load(&self.site)?;
+        // Before any device is opened: a source that cannot start must not stop a daemon that runs already.
+        if let Some(broker) = site.brokers().find(|b| b.tls) {
+            return Err(Failure::wrong(anyhow::anyhow!(
+                "{}: mqtts:// to {} is not in this build; use mqtt:// to a broker on this machine that bridges over TLS",
+                self.site.display(),
+                broker.host
+            )));
+        }
         exit_on_panic();
         let runtime = tokio::runtime::Builder::new_multi_thread()
             .worker_threads(2)
