@@ -52,7 +52,7 @@ async fn main() -> Result<()> {
         .await?
         .store;
     let settings = KeeperSettings::of(&site, Pace::Lockstep, true);
-    let keeper = Keeper::open(settings, store, Ok(ground), start).await?;
+    let keeper = Keeper::open(settings, store, Ok(ground), start, None).await?;
     let mut player = Player::new(keeper, log);
     while player.next().await?.is_some() {}
     player.stop().await?;

@@ -4,7 +4,7 @@
 //! [`merge::Merge`] takes deliveries from all of them in turn, so that a flooded broker cannot starve a serial line.
 //! What can be refused is refused alone: it is counted, logged once per [`burst`], and handed on as rejected.
 //!
-//! Each protocol is a pure codec with a thin task round it: [`modbus`], [`line`], [`mqtt`]; [`log`] reads files without any task.
+//! Each protocol is a pure codec with a thin task round it: [`modbus`], [`mod@line`], [`mqtt`]; [`log`] reads files without any task.
 
 pub mod backoff;
 pub mod burst;
