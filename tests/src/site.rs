@@ -128,7 +128,7 @@ fn undelivered(text: &str) -> String {
     format!("\n[[source]]\nname = \"log\"\nkind = \"log\"\n{channels}")
 }
 
-/// Rate and well pressure from a Modbus RTU device: unit 3, floats at 100 [m3/d] and 200 [kPa].
+/// Rate and well pressure from a Modbus RTU device: unit 3, floats at 100 in m3/d and 200 in kPa.
 ///
 /// The two lie apart, so that they are asked for one after the other in requests of the same length: a late answer to the
 /// one fits the other in all but its meaning.
