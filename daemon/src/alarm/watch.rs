@@ -269,6 +269,7 @@ impl WatchState {
             cause: leading.cause,
             subject: leading.subject,
             onset: finding.onset,
+            onset_sd: finding.onset_sd,
             size: finding.size,
             place: finding.place,
         })

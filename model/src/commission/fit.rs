@@ -9,10 +9,12 @@ use nalgebra::{DMatrix, DVector};
 
 use super::history::{History, Regression, Solved};
 use super::relevance::{Group, learn};
-use super::{Calibration, CommissionSettings};
+use super::unsteady::relative_square;
+use super::{Calibration, CommissionSettings, Unsteady, calm};
 use crate::ModelError;
 use crate::block::Block;
-use crate::expect::columns::{Columns, Kind, LAGS, Priors};
+use crate::expect::columns::{Columns, Kind, LAGS, LONG_LAGS, Priors};
+use crate::expect::drive::Sampled;
 use crate::expect::frame::{Frame, factor, free_parameters, with_factor};
 use crate::expect::noise::{Noise, Path};
 use crate::expect::whitener::Whitener;
@@ -23,10 +25,20 @@ use crate::reduce::{Factors, Reduced};
 const TYPICAL_DISCREPANCY: f64 = 0.001;
 /// The same of a meter's gain in one rate epoch.
 const TYPICAL_GAIN: f64 = 0.005;
+/// Discrepancy at lags of weeks, and of the ground beyond the array, as multiples of the spread between pairs.
+const LONG: f64 = 0.5;
+const FAR: f64 = 0.5;
 /// Largest step of a logarithm in one round.
 const LONGEST_STEP: f64 = 0.4;
 /// Times that readings which are missing are worked out anew before anything is learned.
 const FILLS: usize = 2;
+/// Rounds in which all pairs are taken to see one ground; what makes them differ is learned about the best such ground,
+/// or parameters and differences would run off against each other.
+const PLAIN_ROUNDS: usize = 4;
+/// Round in which the noise is settled.
+const ROUND_FINE: usize = PLAIN_ROUNDS + 1;
+/// Largest step of a logarithm in a later round.
+const SHORT_STEP: f64 = 0.05;
 /// Least history \[s\].
 const LEAST_HISTORY: f64 = 5.0 * 86_400.0;
 
@@ -59,7 +71,7 @@ pub fn commission(
     for round in 0..settings.rounds {
         progress(0.05 + 0.6 * round as f64 / settings.rounds as f64);
         let moved = fit.round(round)?;
-        if round >= 3 && moved < 1e-3 {
+        if round >= PLAIN_ROUNDS + 2 && moved < 2e-3 {
             break;
         }
     }
@@ -67,6 +79,21 @@ pub fn commission(
     let calibration = fit.finish(history, (first.index, last.index))?;
     progress(1.0);
     Ok(calibration)
+}
+
+/// Declared rates as stretches before the record: when each began and ended before it, and its rate.
+fn declared(past: &[Vec<(f64, f64)>], record: f64) -> Vec<Vec<(f64, f64, f64)>> {
+    past.iter()
+        .map(|rates| {
+            let ends = rates.iter().skip(1).map(|r| r.0).chain([record]);
+            rates
+                .iter()
+                .zip(ends)
+                .map(|(&(began, rate), ended)| (record - began, (record - ended).max(0.0), rate))
+                .filter(|(began, ended, _)| began > ended)
+                .collect()
+        })
+        .collect()
 }
 
 /// The state of the fit.
@@ -131,7 +158,11 @@ impl<'a> Fit<'a> {
             bias: settings.meter_bias,
             gain: 1.0,
             past: 1.0,
+            declared: declared(&settings.past, history.first().map_or(0.0, Block::start)),
             apart: [1.0; 2],
+            long: 1.0,
+            far: 1.0,
+            rate_rms: rates.rms.clone(),
             discrepancy: vec![1.0; gauges * wells],
             pair_spread: vec![0.0; gauges * wells],
             lag_spread: rates.lag_spread.clone(),
@@ -152,34 +183,39 @@ impl<'a> Fit<'a> {
             skins,
             noise,
             priors,
-            share: vec![0.01; gauges * wells],
+            share: vec![0.003; gauges * wells],
             gain: TYPICAL_GAIN,
-            past: 0.1,
-            apart: [0.1, 0.03],
+            past: 0.01,
+            apart: [0.03, 0.02],
             rest: None,
         })
     }
 
     fn columns(&self) -> Result<Columns, ModelError> {
         let frame = Frame::new(self.ground, self.reduced, &self.factors)?;
-        Ok(Columns::new(
-            frame,
-            self.priors.clone(),
-            &self.skins,
-            Vec::new(),
-        ))
+        Ok(Columns::new(frame, self.priors.clone(), &self.skins))
     }
 
     /// Prior standard deviation and mean of every coefficient.
-    fn spread(&self, columns: &Columns, width: usize) -> (DVector<f64>, DVector<f64>) {
+    fn spread(
+        &self,
+        columns: &Columns,
+        width: usize,
+        renewals: usize,
+    ) -> (DVector<f64>, DVector<f64>) {
         let mut spread = DVector::from_element(width, 1.0);
         let mut centre = DVector::zeros(width);
         for (index, kind) in columns.kinds.iter().enumerate() {
             match *kind {
-                Kind::Discrepancy { gauge, well, .. } => {
-                    spread[index] = self.share[gauge * columns.frame.wells + well];
+                Kind::Discrepancy { gauge, well, lag } => {
+                    spread[index] = if lag < LONG_LAGS {
+                        self.share[gauge * columns.frame.wells + well]
+                    } else {
+                        LONG * self.apart[0]
+                    };
                 }
                 Kind::Past { .. } => spread[index] = self.past,
+                Kind::Far { .. } => spread[index] = FAR * self.apart[0],
                 // The prior is about the described value, wherever the fit now stands.
                 Kind::Parameter(i) => {
                     if let Some(tilted) = columns.frame.tilted.get(i) {
@@ -202,7 +238,7 @@ impl<'a> Fit<'a> {
                 _ => {}
             }
         }
-        for index in columns.len()..width {
+        for index in columns.len()..width - 2 * renewals {
             spread[index] = self.gain;
         }
         (spread, centre)
@@ -231,20 +267,26 @@ impl<'a> Fit<'a> {
         if round == 0 && !history.missing.is_empty() {
             // Before anything is learned, what was not read must fit in with what was.
             for _ in 0..FILLS {
-                let (spread, centre) = self.spread(&columns, regression.z.len());
+                let (spread, centre) =
+                    self.spread(&columns, regression.z.len(), history.renewals.len());
                 history.fill(&regression.solve(&spread, &centre)?.mean);
                 regression = history.whiten(&whitener);
             }
         }
-        let solved = self.learn_scales(&columns, &regression, round)?;
+        let solved = self.learn_scales(&columns, &regression, history.renewals.len(), round)?;
         let mut rest = solved.mean.clone();
+        let longest = if round < PLAIN_ROUNDS {
+            LONGEST_STEP
+        } else {
+            SHORT_STEP
+        };
         let mut moved = 0.0_f64;
         for (index, kind) in columns.kinds.iter().enumerate() {
             match *kind {
                 Kind::Parameter(i) => {
                     if let Some(tilted) = columns.frame.tilted.get(i) {
-                        let step = (solved.mean[index] * self.priors.parameter)
-                            .clamp(-LONGEST_STEP, LONGEST_STEP);
+                        let step =
+                            (solved.mean[index] * self.priors.parameter).clamp(-longest, longest);
                         moved = moved.max(step.abs());
                         rest[index] -= step / self.priors.parameter;
                         let value = factor(&self.factors, tilted.parameter) * step.exp();
@@ -263,15 +305,21 @@ impl<'a> Fit<'a> {
             }
         }
         self.factors.sort_by_key(|(p, _)| *p);
-        if (1..6).contains(&round) {
-            self.learn_noise(&columns, &history, &solved)?;
+        let strides: &[f64] = match round {
+            1 | PLAIN_ROUNDS => &[2.0],
+            2 => &[1.4],
+            ROUND_FINE => &[1.4, 1.2],
+            _ => &[],
+        };
+        if !strides.is_empty() {
+            self.learn_noise(&columns, &history, &solved, strides)?;
         }
         self.rest = Some(rest);
         Ok(moved)
     }
 
     /// Groups of columns whose scale is learned.
-    fn groups(&self, columns: &Columns, width: usize) -> Vec<Group> {
+    fn groups(&self, columns: &Columns, width: usize, renewals: usize) -> Vec<Group> {
         let (gauges, wells) = (columns.frame.gauges, columns.frame.wells);
         let mut groups: Vec<Group> = (0..gauges * wells)
             .map(|pair| Group {
@@ -289,6 +337,8 @@ impl<'a> Fit<'a> {
         };
         for (index, kind) in columns.kinds.iter().enumerate() {
             match *kind {
+                // What history is too short to show is tied to how much pairs differ otherwise.
+                Kind::Discrepancy { lag, .. } if lag >= LONG_LAGS => {}
                 Kind::Discrepancy { gauge, well, .. } => {
                     if let Some(group) = groups.get_mut(gauge * wells + well) {
                         group.columns.push(index);
@@ -318,7 +368,7 @@ impl<'a> Fit<'a> {
             });
         }
         groups.push(Group {
-            columns: (columns.len()..width).collect(),
+            columns: (columns.len()..width - 2 * renewals).collect(),
             scale: self.gain,
             typical: TYPICAL_GAIN,
             weight: 4.0,
@@ -330,64 +380,71 @@ impl<'a> Fit<'a> {
         &mut self,
         columns: &Columns,
         regression: &Regression,
+        renewals: usize,
         round: usize,
     ) -> Result<Solved, ModelError> {
         let width = regression.z.len();
-        let (mut spread, centre) = self.spread(columns, width);
-        if round == 0 {
+        let (mut spread, centre) = self.spread(columns, width, renewals);
+        if round < PLAIN_ROUNDS {
             return regression.solve(&spread, &centre);
         }
-        let mut groups = self.groups(columns, width);
+        let mut groups = self.groups(columns, width, renewals);
         let solved = learn(regression, &mut groups, &mut spread, &centre)?;
         let pairs = self.share.len();
         for (share, group) in self.share.iter_mut().zip(&groups) {
             *share = group.scale;
         }
         if let Some([past, other, own, gain]) = groups.get(pairs..) {
-            self.past = past.scale;
+            self.past = past.scale.min(1.0);
             self.apart = [other.scale, own.scale];
             self.gain = gain.scale;
         }
         Ok(solved)
     }
 
-    /// Log likelihood of what the coefficients leave, under other noise.
+    /// Log marginal likelihood under other noise.
     fn try_noise(
         &self,
         columns: &Columns,
         path: &Path,
-        left: &DMatrix<f64>,
+        part: &History,
+        spread: &DVector<f64>,
         noise: &Noise,
     ) -> Result<f64, ModelError> {
         let whitener = Whitener::new(path, noise, &columns.skin_paths(), self.block)?;
-        let gauges = columns.frame.gauges;
-        let mut state = DMatrix::zeros(whitener.states(), 1);
-        let mut square = 0.0;
-        for at in (0..left.nrows()).step_by(gauges) {
-            square += whitener
-                .step(&mut state, &left.rows(at, gauges).into_owned())
-                .norm_squared();
-        }
-        Ok(-0.5 * square - whitener.log_scale() * (left.nrows() / gauges) as f64)
+        let regression = part.whiten(&whitener);
+        let solved = regression.solve(spread, &DVector::zeros(spread.len()))?;
+        Ok(solved.log_likelihood - whitener.log_scale() * self.history.len() as f64)
     }
 
-    /// Moves each figure of the noise while the likelihood of the residuals grows.
+    /// Moves each figure of the noise while the marginal likelihood grows. What could pass for a meter's or a gauge's slow
+    /// error is marginalised, or it would make that error look shorter than it is; the rest is taken as fitted.
     fn learn_noise(
         &mut self,
         columns: &Columns,
         history: &History,
         solved: &Solved,
+        strides: &[f64],
     ) -> Result<(), ModelError> {
         let width = history.raw.ncols() - 1;
-        let mut left = history.raw.columns(0, 1).into_owned();
-        left.gemm(
-            -1.0,
-            &history.raw.columns(1, width),
-            &DMatrix::from_column_slice(width, 1, solved.mean.as_slice()),
-            1.0,
-        );
+        let (spread, _) = self.spread(columns, width, history.renewals.len());
+        let kept: Vec<usize> = (0..width)
+            .filter(|&index| {
+                !matches!(
+                    columns.kinds.get(index),
+                    Some(
+                        Kind::PairParameter { .. }
+                            | Kind::Discrepancy { .. }
+                            | Kind::Far { .. }
+                            | Kind::Past { .. }
+                    )
+                )
+            })
+            .collect();
+        let part = history.part(&kept, &solved.mean);
+        let spread = DVector::from_iterator(kept.len(), kept.iter().map(|&i| spread[i]));
         let path = Path::of(&columns.frame.modal, self.block);
-        let mut best = self.try_noise(columns, &path, &left, &self.noise)?;
+        let mut best = self.try_noise(columns, &path, &part, &spread, &self.noise)?;
         let gauges = self.noise.gauge.len();
         let mut knobs: Vec<Knob> = vec![
             Knob::Gauges,
@@ -396,15 +453,18 @@ impl<'a> Fit<'a> {
             Knob::MeterMemory,
             Knob::MeterFresh,
         ];
-        knobs.extend((0..gauges).map(Knob::Gauge));
-        for stride in [2.0_f64, 1.25] {
+        // A gauge's own noise is told from the common figure only once the rest is settled.
+        if strides.len() > 1 {
+            knobs.extend((0..gauges).map(Knob::Gauge));
+        }
+        for &stride in strides {
             for &knob in &knobs {
                 for factor in [stride, 1.0 / stride] {
                     let mut improved = false;
                     for _ in 0..3 {
                         let mut next = self.noise.clone();
                         knob.turn(&mut next, factor);
-                        let value = self.try_noise(columns, &path, &left, &next)?;
+                        let value = self.try_noise(columns, &path, &part, &spread, &next)?;
                         if value <= best + 0.5 {
                             break;
                         }
@@ -428,11 +488,47 @@ impl<'a> Fit<'a> {
             history.fill(rest);
         }
         let mut whitener = self.whitener(&columns)?;
-        let regression = history.whiten(&whitener);
+        let mut regression = history.whiten(&whitener);
         let width = regression.z.len();
-        let (spread, centre) = self.spread(&columns, width);
+        let (spread, centre) = self.spread(&columns, width, history.renewals.len());
         let solved = regression.solve(&spread, &centre)?;
-        let gauges = columns.frame.gauges;
+        let (gauges, wells) = (columns.frame.gauges, columns.frame.wells);
+        let sampled: Vec<Sampled> = blocks
+            .iter()
+            .map(|b| Sampled::of(b, wells, gauges))
+            .collect::<Result<_, _>>()?;
+        let left = regression.left(&solved.mean);
+        let unsteady: Vec<Unsteady> = columns
+            .frame
+            .in_wells
+            .iter()
+            .map(|&(gauge, well, _)| {
+                let squares: Vec<(f64, f64)> = sampled
+                    .iter()
+                    .enumerate()
+                    .map(|(block, s)| {
+                        (
+                            relative_square(s, well, &self.priors.rate),
+                            left[block * gauges + gauge].powi(2),
+                        )
+                    })
+                    .collect();
+                Unsteady::fit(gauge, well, &squares)
+            })
+            .collect();
+        for (block, s) in sampled.iter().enumerate() {
+            for (gauge, factor) in calm(&unsteady, s, &self.priors.rate, gauges)
+                .into_iter()
+                .enumerate()
+            {
+                regression
+                    .rows
+                    .row_mut(block * gauges + gauge)
+                    .scale_mut(factor);
+            }
+        }
+        let regression = Regression::of(regression.rows);
+        let solved = regression.solve(&spread, &centre)?;
         let left = regression.left(&solved.mean);
         let summary = |left: &DVector<f64>| -> Vec<(f64, f64)> {
             (0..gauges)
@@ -480,6 +576,8 @@ impl<'a> Fit<'a> {
         priors.gain = self.gain;
         priors.past = self.past;
         priors.apart = self.apart;
+        priors.long = LONG * self.apart[0];
+        priors.far = FAR * self.apart[0];
         priors.discrepancy.clone_from(&self.share);
         let rates = Rates::of(blocks, columns.frame.wells);
         Ok(Calibration {
@@ -496,6 +594,7 @@ impl<'a> Fit<'a> {
             stochastic: self.noise.clone(),
             priors,
             inflate,
+            unsteady,
             longest_unchanged: longest_unchanged(blocks, gauges),
             flow: rates.flow,
         })
@@ -533,6 +632,8 @@ impl Knob {
 
 /// What the rates of the history are like.
 struct Rates {
+    /// Root mean square rate of each well \[m3/s\].
+    rms: Vec<f64>,
     /// Largest rate of each well \[m3/s\].
     largest: Vec<f64>,
     /// Spread of each well's lagged rate (lag by well) \[m3/s\].
@@ -546,6 +647,7 @@ impl Rates {
         let mut largest = vec![0.0_f64; wells];
         let mut lag_spread = vec![0.0; LAGS.len() * wells];
         let mut flow = 0.0;
+        let mut rms = Vec::with_capacity(wells);
         for well in 0..wells {
             let mut series = Vec::with_capacity(history.len());
             for block in history {
@@ -571,9 +673,13 @@ impl Rates {
                     .collect();
                 lag_spread[lag * wells + well] = spread_and_correlation(&lagged).0;
             }
+            rms.push(
+                (series.iter().map(|q| q * q).sum::<f64>() / series.len().max(1) as f64).sqrt(),
+            );
             flow += series.iter().map(|q| q.abs()).sum::<f64>() / series.len().max(1) as f64;
         }
         Self {
+            rms,
             largest,
             lag_spread,
             flow,

@@ -20,6 +20,8 @@ pub(crate) struct History {
     pub(crate) raw: DMatrix<f64>,
     /// Number of gauges.
     pub(crate) gauges: usize,
+    /// Block, well and size of each jump of a meter's error; two columns each, at the end.
+    pub(crate) renewals: Vec<(usize, usize, f64)>,
     /// Rows without a reading.
     pub(crate) missing: Vec<usize>,
     /// Reference subtracted from each gauge \[Pa\].
@@ -40,14 +42,20 @@ impl History {
         let rows = history.len() * gauges;
         let mut raw = DMatrix::zeros(rows, 1 + fixed);
         let mut missing = Vec::new();
+        let mut renewals = Vec::new();
         let mut pairs = DMatrix::zeros(gauges * wells, history.len());
         for (index, block) in history.iter().enumerate() {
             let sampled = Sampled::of(block, wells, gauges)?;
-            let step = columns.step(&mut memory, &sampled, block.start())?;
+            let step = columns.step(&mut memory, &sampled)?;
             let width = 1 + fixed + step.epochs.ncols();
             if raw.ncols() < width {
                 raw = raw.resize_horizontally(width, 0.0);
             }
+            renewals.extend(
+                step.renewals
+                    .iter()
+                    .map(|&(well, size)| (index, well, size)),
+            );
             let at = index * gauges;
             raw.view_mut((at, 1), (gauges, fixed))
                 .copy_from(&step.fixed);
@@ -63,6 +71,8 @@ impl History {
                 }
             }
         }
+        let width = raw.ncols() + 2 * renewals.len();
+        let mut raw = raw.resize_horizontally(width, 0.0);
         let mut reference = Vec::with_capacity(gauges);
         for gauge in 0..gauges {
             let seen: Vec<f64> = (0..history.len())
@@ -77,19 +87,17 @@ impl History {
             }
             let middle = median(seen);
             reference.push(middle);
-            for block in 0..history.len() {
-                let row = block * gauges + gauge;
-                raw[(row, 0)] = if missing.binary_search(&row).is_ok() {
-                    0.0
-                } else {
-                    raw[(row, 0)] - middle
-                };
+            let rows: Vec<usize> = (0..history.len()).map(|b| b * gauges + gauge).collect();
+            for &row in &rows {
+                raw[(row, 0)] -= middle;
             }
+            bridge(&mut raw, &rows, &missing);
         }
         let pair_spread = pairs.row_iter().map(|r| r.variance().sqrt()).collect();
         Ok(Self {
             raw,
             gauges,
+            renewals,
             missing,
             reference,
             pair_spread,
@@ -123,22 +131,44 @@ impl History {
         }
     }
 
+    /// The same history with some columns only; the rest are taken off the readings as `coefficients` say.
+    pub(crate) fn part(&self, kept: &[usize], coefficients: &DVector<f64>) -> Self {
+        let mut rest = coefficients.clone();
+        for &column in kept {
+            rest[column] = 0.0;
+        }
+        let mut raw = DMatrix::zeros(self.raw.nrows(), 1 + kept.len());
+        let said = self.raw.columns(1, rest.len()) * &rest;
+        raw.set_column(0, &(self.raw.column(0) - said));
+        for (at, &column) in kept.iter().enumerate() {
+            raw.set_column(1 + at, &self.raw.column(1 + column));
+        }
+        Self {
+            raw,
+            ..self.clone()
+        }
+    }
+
     /// Whitens everything.
     pub(crate) fn whiten(&self, whitener: &Whitener) -> Regression {
         let mut state = DMatrix::zeros(whitener.states(), self.raw.ncols());
         let mut rows = DMatrix::zeros(self.raw.nrows(), self.raw.ncols());
         for at in (0..self.raw.nrows()).step_by(self.gauges) {
+            let index = at / self.gauges;
+            for (column, &(block, well, size)) in self.renewals.iter().enumerate() {
+                let first = self.raw.ncols() - 2 * self.renewals.len() + 2 * column;
+                if block == index {
+                    whitener.renew(&mut state, first, well, size, true);
+                }
+                if block + 1 == index {
+                    whitener.renew(&mut state, first + 1, well, size, false);
+                }
+            }
             let block = self.raw.rows(at, self.gauges).into_owned();
             rows.rows_mut(at, self.gauges)
                 .copy_from(&whitener.step(&mut state, &block));
         }
-        let gram = rows.transpose() * &rows;
-        let width = gram.ncols() - 1;
-        Regression {
-            z: gram.view((1, 0), (width, 1)).column(0).into_owned(),
-            gram: gram.view((1, 1), (width, width)).into_owned(),
-            rows,
-        }
+        Regression::of(rows)
     }
 }
 
@@ -147,6 +177,8 @@ impl History {
 pub(crate) struct Regression {
     /// Whitened readings, then columns.
     pub(crate) rows: DMatrix<f64>,
+    /// `e'e`.
+    pub(crate) square: f64,
     /// `W'e`.
     pub(crate) z: DVector<f64>,
     /// `W'W`.
@@ -160,9 +192,23 @@ pub(crate) struct Solved {
     pub(crate) mean: DVector<f64>,
     /// Their covariance.
     pub(crate) factor: Cholesky<f64, Dyn>,
+    /// Log marginal likelihood of the readings, up to a constant, but for the filter's share.
+    pub(crate) log_likelihood: f64,
 }
 
 impl Regression {
+    /// Sums of whitened rows.
+    pub(crate) fn of(rows: DMatrix<f64>) -> Self {
+        let gram = rows.transpose() * &rows;
+        let width = gram.ncols() - 1;
+        Self {
+            square: gram[(0, 0)],
+            z: gram.view((1, 0), (width, 1)).column(0).into_owned(),
+            gram: gram.view((1, 1), (width, width)).into_owned(),
+            rows,
+        }
+    }
+
     /// Solves with prior mean `centre` and prior standard deviation `spread` of each coefficient.
     ///
     /// # Errors
@@ -174,22 +220,51 @@ impl Regression {
     ) -> Result<Solved, ModelError> {
         let mut r = self.gram.clone();
         let mut z = self.z.clone();
+        let (mut square, mut log_prior) = (self.square, 0.0);
         for (index, sd) in spread.iter().enumerate() {
             let precision = 1.0 / (sd * sd);
             r[(index, index)] += precision;
             z[index] += precision * centre[index];
+            square += precision * centre[index] * centre[index];
+            log_prior -= sd.ln();
         }
         let factor = Cholesky::new(r).ok_or(ModelError::NotPositive {
             what: "the matrix of the nuisances",
         })?;
         let mean = factor.solve(&z);
-        Ok(Solved { mean, factor })
+        let log_determinant: f64 = factor.l_dirty().diagonal().map(f64::ln).sum();
+        let log_likelihood = -0.5 * (square - z.dot(&mean)) - log_determinant + log_prior;
+        Ok(Solved {
+            mean,
+            factor,
+            log_likelihood,
+        })
     }
 
     /// What the coefficients leave, whitened.
     pub(crate) fn left(&self, mean: &DVector<f64>) -> DVector<f64> {
         let width = self.rows.ncols() - 1;
         self.rows.column(0) - self.rows.columns(1, width) * mean
+    }
+}
+
+/// Bridges rows without a reading from the last reading before to the first after: what is left of readings less
+/// prediction moves slowly, while a zero would be an outlier as large as the pressure itself.
+fn bridge(raw: &mut DMatrix<f64>, rows: &[usize], missing: &[usize]) {
+    let read = |row: &usize| missing.binary_search(row).is_err();
+    let known: Vec<usize> = (0..rows.len()).filter(|&b| read(&rows[b])).collect();
+    for block in (0..rows.len()).filter(|&b| !read(&rows[b])) {
+        let after = known.partition_point(|&b| b < block);
+        let left = after.checked_sub(1).and_then(|k| known.get(k));
+        let value = match (left, known.get(after)) {
+            (Some(&l), Some(&r)) => {
+                let share = (block - l) as f64 / (r - l) as f64;
+                raw[(rows[l], 0)] * (1.0 - share) + raw[(rows[r], 0)] * share
+            }
+            (Some(&one), None) | (None, Some(&one)) => raw[(rows[one], 0)],
+            (None, None) => 0.0,
+        };
+        raw[(rows[block], 0)] = value;
     }
 }
 
@@ -214,6 +289,7 @@ mod tests {
         let mut history = History {
             raw: DMatrix::from_fn(8, 2, |r, c| if c == 0 { read[r] } else { column[r] }),
             gauges: 2,
+            renewals: Vec::new(),
             missing: vec![3, 5, 6],
             reference: vec![0.0; 2],
             pair_spread: Vec::new(),

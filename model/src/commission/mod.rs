@@ -10,9 +10,12 @@ mod fit;
 pub(crate) mod history;
 pub(crate) mod places;
 mod relevance;
+mod unsteady;
 
 pub use fit::commission;
 pub use places::{Line, Places, places};
+pub use unsteady::Unsteady;
+pub(crate) use unsteady::calm;
 
 /// A ground as commissioned: all that the watch needs, as the ground file keeps it.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
@@ -36,6 +39,9 @@ pub struct CommissionSettings {
     pub meter_bias: f64,
     /// Rounds of Gauss-Newton at most.
     pub rounds: usize,
+    /// Declared rates before the record, one list a well: when each began \[s since the epoch\] and its rate \[m3/s\]; it
+    /// holds until the next one or the record. Empty where nothing is declared.
+    pub past: Vec<Vec<(f64, f64)>>,
 }
 
 impl Default for CommissionSettings {
@@ -45,6 +51,7 @@ impl Default for CommissionSettings {
             skin_sd: 5.0,
             meter_bias: 0.01,
             rounds: 10,
+            past: Vec::new(),
         }
     }
 }
@@ -78,6 +85,8 @@ pub struct Calibration {
     pub priors: Priors,
     /// Factor on the innovations' scale of each gauge that history asks for.
     pub inflate: Vec<f64>,
+    /// How innovations of gauges in wells grow with the rate.
+    pub unsteady: Vec<Unsteady>,
     /// Longest run of blocks in which the raw value of each gauge never changed.
     pub longest_unchanged: Vec<u32>,
     /// Mean total injection \[m3/s\].

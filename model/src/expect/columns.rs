@@ -14,7 +14,6 @@
 use nalgebra::{DMatrix, DVector};
 use serde::{Deserialize, Serialize};
 
-use super::adopted::Adopted;
 use super::drive::{Drive, Driven, Sampled, Tables, gain};
 use super::epochs::Epochs;
 use super::frame::{Frame, held, means, seen};
@@ -39,15 +38,25 @@ pub struct Priors {
     pub gain: f64,
     /// Rates before the record, as a share of each well's largest rate (learned).
     pub past: f64,
+    /// Declared rates of each well before the record: how long before it each stretch began and ended \[s\], and its
+    /// rate \[m3/s\].
+    pub declared: Vec<Vec<(f64, f64, f64)>>,
     /// Spread of the logarithm of a parameter between pairs of well and gauge: other wells, own well (learned). In a
     /// ground that varies, every pair sees a transmissivity and a storativity of its own.
     pub apart: [f64; 2],
     /// Discrepancy of each pair as a share of its response (learned; gauge by well, row-major by gauge).
     pub discrepancy: Vec<f64>,
+    /// The same at lags of weeks and months, of all pairs (learned).
+    pub long: f64,
+    /// Discrepancy that all gauges feel alike, or growing across the array, at lags of days and longer: the ground beyond
+    /// the array is not that within (tied to the spread between pairs).
+    pub far: f64,
     /// Spread of each pair's response over the history \[Pa\], in the same order.
     pub pair_spread: Vec<f64>,
     /// Spread of each well's lagged rate over the history \[m3/s\] (lag by well, row-major by lag).
     pub lag_spread: Vec<f64>,
+    /// Root mean square rate of each well in the history \[m3/s\].
+    pub rate_rms: Vec<f64>,
     /// Largest rate of each well in the history \[m3/s\].
     pub rate: Vec<f64>,
 }
@@ -65,10 +74,18 @@ pub(crate) const LAGS: [f64; 10] = [
     3_600_000.0,
     11_384_000.0,
 ];
+/// From which of [`LAGS`] on the discrepancy is too slow for a season's history to show.
+pub(crate) const LONG_LAGS: usize = 7;
+/// From which of [`LAGS`] on what lies beyond the array is felt by all gauges alike.
+pub(crate) const FAR_LAGS: usize = 6;
 /// How many of [`LAGS`] are for a well's own gauge only.
 pub(crate) const OWN_LAGS: usize = 2;
 /// Time constant of a new gauge's settling \[s\].
 const SETTLING: f64 = 15.0 * 86_400.0;
+/// A meter's error jumps by this much of its standard deviation when its rate changes by its root mean square.
+const RENEWED: f64 = 1.5;
+/// Time in which the discrepancy's prior variance is regained \[s\].
+const FORGOTTEN: f64 = 1e5 * 86_400.0;
 /// Ends of the windows of past rates \[s before the record\].
 const PAST: [f64; 8] = [
     21_600.0,
@@ -100,10 +117,14 @@ pub(crate) enum Kind {
         well: usize,
         lag: usize,
     },
+    Far {
+        well: usize,
+        lag: usize,
+        moment: usize,
+    },
     Past {
         well: usize,
     },
-    Adopted(usize),
 }
 
 /// The fixed columns of a site.
@@ -112,7 +133,6 @@ pub(crate) struct Columns {
     pub(crate) frame: Frame,
     pub(crate) kinds: Vec<Kind>,
     pub(crate) priors: Priors,
-    pub(crate) adopted: Vec<Adopted>,
     lags: Drive,
     skins: Vec<f64>,
 }
@@ -153,13 +173,15 @@ pub(crate) struct Raw {
     pub(crate) tables: Tables,
     /// What the block's rates drove.
     pub(crate) driven: Driven,
+    /// Wells whose rate changed level in the block, with the jump of their meter's error in its standard deviations.
+    pub(crate) renewals: Vec<(usize, f64)>,
     /// Rate of each well before the block \[m3/s\].
     pub(crate) entering: Vec<f64>,
 }
 
 impl Columns {
     /// Lays out the columns.
-    pub(crate) fn new(frame: Frame, priors: Priors, skins: &[f64], adopted: Vec<Adopted>) -> Self {
+    pub(crate) fn new(frame: Frame, priors: Priors, skins: &[f64]) -> Self {
         let mut kinds = Vec::new();
         let (gauges, wells) = (frame.gauges, frame.wells);
         kinds.extend((0..gauges).map(Kind::Offset));
@@ -183,10 +205,12 @@ impl Columns {
             }
         }
         for well in 0..wells {
-            kinds.extend(PAST.iter().map(|_| Kind::Past { well }));
+            for lag in FAR_LAGS..LAGS.len() {
+                kinds.extend((0..3).map(|moment| Kind::Far { well, lag, moment }));
+            }
         }
-        for (index, one) in adopted.iter().enumerate() {
-            kinds.extend((0..one.columns()).map(|_| Kind::Adopted(index)));
+        for well in 0..wells {
+            kinds.extend(PAST.iter().map(|_| Kind::Past { well }));
         }
         let lags = Drive::new(DVector::from_iterator(
             LAGS.len(),
@@ -196,7 +220,6 @@ impl Columns {
             frame,
             kinds,
             priors,
-            adopted,
             lags,
             skins: skins.to_vec(),
         }
@@ -205,6 +228,20 @@ impl Columns {
     /// Number of fixed columns.
     pub(crate) fn len(&self) -> usize {
         self.kinds.len()
+    }
+
+    /// Prior variance that each fixed column regains in a second: what is known of a ground unlike the model wears off,
+    /// because its columns only stand for it as rates have been.
+    pub(crate) fn forgetting(&self) -> Vec<f64> {
+        self.kinds
+            .iter()
+            .map(|kind| match kind {
+                Kind::PairParameter { .. } | Kind::Discrepancy { .. } | Kind::Far { .. } => {
+                    1.0 / FORGOTTEN
+                }
+                _ => 0.0,
+            })
+            .collect()
     }
 
     /// Pressure per rate through skin, of each gauge in a well: gauge, well, Pa per m3/s.
@@ -222,8 +259,8 @@ impl Columns {
 
     /// Memory before the first block.
     pub(crate) fn start(&self) -> Memory {
-        let modes = self.frame.base.drive.len();
         let wells = self.frame.wells;
+        let declared = &self.priors.declared;
         let lambda = &self.frame.modal.lambda;
         let mut past = Vec::new();
         for well in 0..wells {
@@ -236,9 +273,14 @@ impl Columns {
         }
         Memory {
             elapsed: 0.0,
-            base: DMatrix::zeros(modes, wells),
-            tilted: vec![DMatrix::zeros(modes, wells); self.frame.tilted.len()],
-            lags: DMatrix::zeros(self.lags.len(), wells),
+            base: self.frame.base.drive.after(declared, wells),
+            tilted: self
+                .frame
+                .tilted
+                .iter()
+                .map(|t| t.stepped.drive.after(declared, wells))
+                .collect(),
+            lags: self.lags.after(declared, wells),
             past,
             entering: vec![0.0; wells],
             epochs: Epochs::new(wells),
@@ -253,7 +295,6 @@ impl Columns {
         &mut self,
         memory: &mut Memory,
         sampled: &Sampled,
-        start: f64,
     ) -> Result<Raw, ModelError> {
         let gauges = self.frame.gauges;
         let class = &sampled.class;
@@ -295,7 +336,6 @@ impl Columns {
         let mut fixed = DMatrix::zeros(gauges, self.kinds.len());
         let at = |list: &[f64], index: usize| list.get(index).copied().unwrap_or(0.0);
         let mut past_index = 0;
-        let mut adopted_from = None;
         for (column, kind) in self.kinds.iter().enumerate() {
             match *kind {
                 Kind::Offset(g) => fixed[(g, column)] = priors.offset,
@@ -333,10 +373,30 @@ impl Columns {
                 Kind::Discrepancy { gauge, well, lag } => {
                     let pair = gauge * self.frame.wells + well;
                     let spread = at(&priors.lag_spread, lag * self.frame.wells + well);
-                    let size = at(&priors.discrepancy, pair) * at(&priors.pair_spread, pair);
+                    let share = if lag < LONG_LAGS {
+                        at(&priors.discrepancy, pair)
+                    } else {
+                        priors.long
+                    };
+                    let size = share * at(&priors.pair_spread, pair);
                     let mean = class.get(gauge).and_then(|&c| lag_means.get(c));
                     if let (Some(mean), Some(time), true) = (mean, LAGS.get(lag), spread > 0.0) {
                         fixed[(gauge, column)] = size * mean[(lag, well)] / time / spread;
+                    }
+                }
+                Kind::Far { well, lag, moment } => {
+                    let spread = at(&priors.lag_spread, lag * self.frame.wells + well);
+                    let size =
+                        priors.far * remote_spread(&priors.pair_spread, well, self.frame.wells);
+                    for gauge in 0..gauges {
+                        let mean = class.get(gauge).and_then(|&c| lag_means.get(c));
+                        let place = self.frame.moments.get(gauge).and_then(|m| m.get(moment));
+                        if let (Some(mean), Some(time), Some(place), true) =
+                            (mean, LAGS.get(lag), place, spread > 0.0)
+                        {
+                            fixed[(gauge, column)] =
+                                size * place * mean[(lag, well)] / time / spread;
+                        }
                     }
                 }
                 Kind::Past { well } => {
@@ -352,16 +412,6 @@ impl Columns {
                     }
                     past_index += 1;
                 }
-                Kind::Adopted(_) => {
-                    adopted_from.get_or_insert(column);
-                }
-            }
-        }
-        if let Some(mut column) = adopted_from {
-            for one in &mut self.adopted {
-                let rows = one.rows(&self.frame, &tables, sampled, &pairs, start)?;
-                fixed.columns_mut(column, rows.ncols()).copy_from(&rows);
-                column += rows.ncols();
             }
         }
         let epochs = memory.epochs.step(
@@ -372,6 +422,17 @@ impl Columns {
             priors,
             &|well| self.skins.get(well).copied().unwrap_or(0.0),
         );
+        let renewals = memory
+            .epochs
+            .changes
+            .iter()
+            .map(|&(well, change)| {
+                (
+                    well,
+                    RENEWED * change.abs() / at(&priors.rate_rms, well).max(f64::MIN_POSITIVE),
+                )
+            })
+            .collect();
         decay(&mut memory.base, &tables.decay);
         memory.base += &driven.end;
         decay(&mut memory.lags, &lag_tables.decay);
@@ -392,8 +453,16 @@ impl Columns {
             tables,
             driven,
             entering,
+            renewals,
         })
     }
+}
+
+/// Smallest spread of a well's pairs: what comes from beyond the array is felt no more than by its remotest gauge.
+fn remote_spread(pair_spread: &[f64], well: usize, wells: usize) -> f64 {
+    let mine = pair_spread.iter().skip(well).step_by(wells.max(1));
+    let least = mine.copied().fold(f64::INFINITY, f64::min);
+    if least.is_finite() { least } else { 0.0 }
 }
 
 fn decay(state: &mut DMatrix<f64>, by: &DVector<f64>) {

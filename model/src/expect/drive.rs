@@ -190,6 +190,20 @@ pub(crate) struct Driven {
 }
 
 impl Drive {
+    /// Unit-port states (modes by wells) at the end of declared stretches: how long before it each began and ended
+    /// \[s\], and its rate \[m3/s\].
+    pub(crate) fn after(&self, declared: &[Vec<(f64, f64, f64)>], wells: usize) -> DMatrix<f64> {
+        let mut state = DMatrix::zeros(self.lambda.len(), wells);
+        for (mut column, stretches) in state.column_iter_mut().zip(declared) {
+            for &(began, ended, rate) in stretches {
+                column += self
+                    .lambda
+                    .map(|l| rate * (-l * ended).exp() * gain(l, began - ended));
+            }
+        }
+        state
+    }
+
     /// Modes with decay rates `lambda` \[1/s\].
     pub(crate) fn new(lambda: DVector<f64>) -> Self {
         Self { lambda, last: None }

@@ -42,6 +42,8 @@ pub(crate) struct Epochs {
     pub(crate) list: Vec<Epoch>,
     /// Level and age \[s\] of each well's present epoch.
     level: Vec<Option<(f64, f64)>>,
+    /// Wells that changed level in the last step, with the change \[m3/s\].
+    pub(crate) changes: Vec<(usize, f64)>,
     /// Epochs opened so far.
     opened: u32,
 }
@@ -51,6 +53,7 @@ impl Epochs {
         Self {
             list: Vec::new(),
             level: vec![None; wells],
+            changes: Vec::new(),
             opened: 0,
         }
     }
@@ -65,6 +68,7 @@ impl Epochs {
         priors: &Priors,
         skin: &dyn Fn(usize) -> f64,
     ) -> DMatrix<f64> {
+        self.changes.clear();
         // For every well: the epoch of each piece, as an index into the list.
         let mut owner: Vec<Vec<Option<usize>>> = Vec::with_capacity(sampled.rates.len());
         let mut owned_before: Vec<Option<usize>> = Vec::new();
@@ -88,6 +92,9 @@ impl Epochs {
                     _ => {
                         if let Some(old) = now.and_then(|i| self.list.get_mut(i)) {
                             old.current = false;
+                        }
+                        if let Some((level, _)) = level {
+                            self.changes.push((well, rate - level));
                         }
                         now = None;
                         if rate.abs() > SHUT * scale {

@@ -95,6 +95,8 @@ pub(crate) struct Frame {
     pub(crate) tilted: Vec<Tilted>,
     /// Gauges in wells without storage: gauge, well, pressure per rate and unit of skin \[Pa s/m3\].
     pub(crate) in_wells: Vec<(usize, usize, f64)>,
+    /// One, east and north of each gauge, in half-widths of the array from its centre.
+    pub(crate) moments: Vec<[f64; 3]>,
     /// Number of gauges.
     pub(crate) gauges: usize,
     /// Number of wells.
@@ -140,6 +142,7 @@ impl Frame {
             base,
             tilted,
             in_wells,
+            moments: moments(ground),
             gauges: ground.gauges.len(),
             wells: ground.wells.len(),
         })
@@ -152,6 +155,24 @@ impl Frame {
             .find(|(g, _, _)| *g == gauge)
             .map(|&(_, well, unit)| (well, unit))
     }
+}
+
+fn moments(ground: &Ground) -> Vec<[f64; 3]> {
+    let at: Vec<[f64; 2]> = (0..ground.gauges.len())
+        .map(|g| ground.gauge_at(g).map_or([0.0; 2], |(p, _)| p))
+        .collect();
+    let count = at.len().max(1) as f64;
+    let centre = [
+        at.iter().map(|p| p[0]).sum::<f64>() / count,
+        at.iter().map(|p| p[1]).sum::<f64>() / count,
+    ];
+    let width = at
+        .iter()
+        .map(|p| (p[0] - centre[0]).hypot(p[1] - centre[1]))
+        .fold(1.0, f64::max);
+    at.iter()
+        .map(|p| [1.0, (p[0] - centre[0]) / width, (p[1] - centre[1]) / width])
+        .collect()
 }
 
 /// Parameters of the reduced ground that history may correct, each once, in order.

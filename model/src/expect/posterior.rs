@@ -71,6 +71,13 @@ impl Posterior {
             .remove_columns_at(columns);
     }
 
+    /// Lets coefficients forget: each gains `lost` of its prior variance.
+    pub(crate) fn forget(&mut self, lost: &[f64]) {
+        for (index, share) in lost.iter().enumerate().take(self.mean.len()) {
+            self.covariance[(index, index)] += share;
+        }
+    }
+
     /// Takes a batch in.
     ///
     /// # Errors

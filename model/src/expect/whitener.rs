@@ -27,6 +27,8 @@ pub(crate) struct Whitener {
     drive: DMatrix<f64>,
     /// Share of a block's fresh error that the memory keeps, by well.
     link: DVector<f64>,
+    /// Fresh errors in one standard deviation of the remembered one, by well.
+    per_fresh: DVector<f64>,
     /// Observation (gauges by states).
     observe: DMatrix<f64>,
     /// `F K` (states by gauges).
@@ -116,6 +118,7 @@ impl Whitener {
         }
         let mut q = DMatrix::zeros(states, states);
         let mut link = DVector::zeros(wells);
+        let mut per_fresh = DVector::zeros(wells);
         for well in 0..wells {
             q[(fresh + well, fresh + well)] = 1.0;
             let shared = match (noise.meter.get(well), new.get(well)) {
@@ -123,6 +126,9 @@ impl Whitener {
                 _ => 0.0,
             };
             link[well] = shared;
+            if let (Some(sd), Some(new)) = (noise.meter.get(well), new.get(well)) {
+                per_fresh[well] = if *new > 0.0 { sd / new } else { 0.0 };
+            }
             q[(remembered + well, remembered + well)] =
                 (1.0 - keep * keep - shared * shared).max(0.0);
         }
@@ -159,6 +165,7 @@ impl Whitener {
             decay,
             drive,
             link,
+            per_fresh,
             observe,
             feedback,
             scale,
@@ -199,6 +206,25 @@ impl Whitener {
     /// What the next block would feel of one column if its raw values ended here, whitened.
     pub(crate) fn echo(&self, state: &DMatrix<f64>, column: usize) -> f64 {
         (&self.scale * (&self.observe * state.column(column))).norm()
+    }
+
+    /// Lets a meter's error jump by `size` of its standard deviations in one column: within the coming block only, or from
+    /// its start on. A meter's error goes with its rate, so it jumps when the rate does.
+    pub(crate) fn renew(
+        &self,
+        state: &mut DMatrix<f64>,
+        column: usize,
+        well: usize,
+        size: f64,
+        within: bool,
+    ) {
+        let modes = self.drive.nrows();
+        let wells = self.link.len();
+        if within {
+            state[(modes + wells + well, column)] += size * self.per_fresh[well];
+        } else {
+            state[(modes + well, column)] += size;
+        }
     }
 
     /// Whitens one block of any number of columns (`values`: gauges by columns) and moves their states on.

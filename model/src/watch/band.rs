@@ -94,7 +94,7 @@ impl Band {
             let column = row.column(fixed + index);
             match snapshot.live.iter().position(|l| l == name) {
                 Some(at) => known.column_mut(fixed + at).copy_from(&column),
-                None if matches!(name, Live::Missing { .. }) => {}
+                None if matches!(name, Live::Missing { .. } | Live::Renewal { .. }) => {}
                 None => {
                     for (sum, value) in fresh.iter_mut().zip(column.iter()) {
                         *sum += value * value;

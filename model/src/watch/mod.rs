@@ -34,10 +34,26 @@ pub struct Adoption {
     pub subject: Option<Subject>,
     /// Onset \[s since the epoch\].
     pub onset: f64,
+    /// Standard deviation of the onset \[s\].
+    pub onset_sd: f64,
     /// Size with its spread.
     pub size: Option<Size>,
     /// Place with its spread.
     pub place: Option<Place>,
+}
+
+impl Adoption {
+    /// First block that must be stepped with this adoption: a checkpoint due at it or before it serves.
+    #[must_use]
+    pub fn first_block(&self, block_length: f64) -> i64 {
+        let early = self.onset - (1.5 * self.onset_sd).max(5.0 * block_length);
+        #[expect(
+            clippy::cast_possible_truncation,
+            reason = "a block number far below 2^53"
+        )]
+        let first = (early / block_length).floor() as i64;
+        first.min(self.block)
+    }
 }
 
 /// What one block gave.
@@ -78,6 +94,24 @@ pub enum Blind {
 pub(crate) enum Live {
     /// A meter's gain in a rate epoch, by the epoch's id.
     Epoch(u32),
+    /// A column of an adopted finding.
+    Adopted {
+        /// Adoption, by order.
+        adoption: usize,
+        /// Column of it.
+        column: usize,
+    },
+    /// A jump of a meter's error where its rate changed.
+    Renewal {
+        /// Well, by order.
+        well: usize,
+        /// Block of the change.
+        block: i64,
+        /// Size in the error's standard deviations.
+        size: f64,
+        /// Within that block only, or from the next on.
+        within: bool,
+    },
     /// A missing reading.
     Missing {
         /// Gauge, by order.
@@ -93,10 +127,14 @@ pub struct WatchState {
     /// Next block due; `None` before the first.
     next: Option<i64>,
     memory: Option<Memory>,
+    /// Unit-port states of each adoption.
+    adopted: Vec<nalgebra::DMatrix<f64>>,
     /// Filter state of readings and columns.
     filter: nalgebra::DMatrix<f64>,
     /// Rows of the present batch: whitened readings, then columns.
     pending: nalgebra::DMatrix<f64>,
+    /// Factor on each row of the batch.
+    calm: Vec<f64>,
     live: Vec<Live>,
     posterior: Posterior,
     band: band::Band,
@@ -105,6 +143,8 @@ pub struct WatchState {
     barriers: Barriers,
     log_mixture: f64,
     finding: Option<Finding>,
+    /// First block that may hold an onset.
+    first_onset: i64,
 }
 
 impl WatchState {

@@ -11,12 +11,13 @@ use super::stuck::Stuck;
 use super::{Adoption, Blind, Live, Step, WatchSettings, WatchState, band::Band};
 use crate::ModelError;
 use crate::block::{Block, RateKnown};
-use crate::commission::{Commissioned, Places};
+use crate::commission::{Commissioned, Places, Unsteady, calm};
+use crate::expect::adopted::{Adopted, AdoptedBlock};
 use crate::expect::columns::{Columns, Raw};
 use crate::expect::drive::{Sampled, size};
 use crate::expect::frame::Frame;
 use crate::expect::noise::Path;
-use crate::expect::posterior::Posterior;
+use crate::expect::posterior::{Cleared, Posterior};
 use crate::expect::whitener::Whitener;
 use crate::finding::{Cause, Expectation, Finding, Size, Subject, Weighed};
 use crate::weigh::bank::Bank;
@@ -38,6 +39,14 @@ const MISSING: usize = 24;
 const AGAIN: i64 = 40;
 /// Kinds of cause that share the prior.
 const KINDS: f64 = 7.0;
+/// A ground whose pairs differ by this share looks, as its rates go, like one with images: their evidence counts half.
+const IMAGED: f64 = 0.1;
+/// What the threshold is raised by, for a null that is never quite right (measured on invented quiet records).
+const MARGIN: f64 = 3.0;
+/// What it is raised by further in a ground whose pairs differ by all of themselves.
+const VARIETY: f64 = 30.0;
+/// Log evidence by which `unexplained` must lead: outright, and as a share of the leading cause's.
+const LEEWAY: (f64, f64) = (5.0, 0.03);
 /// Probability from which a cause may be named.
 const NAMED: f64 = 0.9;
 
@@ -50,12 +59,18 @@ pub struct Watch {
     bank: Bank,
     scales: Scales,
     places: Places,
+    adopted: Vec<Adopted>,
+    /// Gauges whose repeating of one value is accepted, with the block from which it is.
+    quiet_stuck: Vec<(usize, i64)>,
     skins: Vec<(usize, usize, f64)>,
     reference: Vec<f64>,
     inflate: Vec<f64>,
+    unsteady: Vec<Unsteady>,
+    forgetting: Vec<f64>,
     longest_unchanged: Vec<u32>,
-    settings: WatchSettings,
     block: f64,
+    /// Relative error of a signature.
+    mismatch: f64,
     log_threshold: f64,
     state: WatchState,
 }
@@ -86,12 +101,7 @@ impl Watch {
         )?;
         let frame = Frame::new(ground, &commissioned.reduced, &calibration.factors)?;
         let path = Path::of(&frame.modal, calibration.block);
-        let columns = Columns::new(
-            frame,
-            calibration.priors.clone(),
-            &calibration.skins,
-            Vec::new(),
-        );
+        let columns = Columns::new(frame, calibration.priors.clone(), &calibration.skins);
         let skins = columns.skin_paths();
         let mut whitener =
             Whitener::new(&path, &calibration.stochastic, &skins, calibration.block)?;
@@ -106,10 +116,35 @@ impl Watch {
         );
         let images = Images::new(&columns.frame.modal, &places);
         let fixed = columns.len();
-        let _ = adoptions;
+        let mismatch = calibration.priors.apart.iter().copied().fold(0.0, f64::max);
+        let apart = calibration.priors.apart.iter().copied().fold(0.0, f64::max);
+        let adopted: Vec<Adopted> = adoptions
+            .iter()
+            .map(|a| {
+                Adopted::new(
+                    a,
+                    ground,
+                    &columns.frame,
+                    &places,
+                    calibration.block,
+                    apart,
+                    &calibration.noise,
+                )
+            })
+            .collect();
+        let quiet_stuck = adoptions
+            .iter()
+            .filter_map(|a| match (a.cause, a.subject) {
+                (Cause::GaugeStuck, Some(Subject::Gauge(gauge))) => {
+                    Some((gauge, floor(a.onset / calibration.block)?))
+                }
+                _ => None,
+            })
+            .collect();
         let state = WatchState {
             next: None,
             memory: None,
+            adopted: vec![DMatrix::zeros(0, 0); adopted.len()],
             filter: DMatrix::zeros(whitener.states(), 1 + fixed),
             pending: DMatrix::zeros(0, 1 + fixed),
             live: Vec::new(),
@@ -120,17 +155,25 @@ impl Watch {
             barriers: Barriers::new(fixed, images.lines(), &whitener),
             log_mixture: 0.0,
             finding: None,
+            calm: Vec::new(),
+            first_onset: settings.first_onset,
         };
         Ok(Self {
+            adopted,
+            quiet_stuck,
             scales: Scales::of(ground, calibration),
             reference: calibration.reference.clone(),
             inflate: calibration.inflate.clone(),
+            unsteady: calibration.unsteady.clone(),
+            forgetting: columns.forgetting(),
+            mismatch,
             longest_unchanged: calibration.longest_unchanged.clone(),
-            settings: settings.clone(),
             block: calibration.block,
             log_threshold: (settings.false_alarm_interval / calibration.block)
                 .max(1.0)
-                .ln(),
+                .ln()
+                + MARGIN
+                + VARIETY * mismatch,
             columns,
             whitener,
             images,
@@ -164,6 +207,8 @@ impl Watch {
             watch.state.filter.nrows(),
         )?;
         watch.state = state;
+        let adopted = watch.adopted.len();
+        watch.state.adopted.resize(adopted, DMatrix::zeros(0, 0));
         Ok(watch)
     }
 
@@ -200,16 +245,36 @@ impl Watch {
             Some(memory) => memory,
             None => self.columns.start(),
         };
-        let raw = self.columns.step(&mut memory, &sampled, block.start())?;
+        let raw = self.columns.step(&mut memory, &sampled)?;
         let blind = self.blind(block);
         let missing: Vec<usize> = (0..gauges)
             .filter(|&g| {
                 block.gauges.get(g).is_none_or(Option::is_none) || self.stuck_since(g).is_some()
             })
             .collect();
+        let images = self
+            .images
+            .raw(&self.columns.frame.modal, &raw.means, &sampled.class);
+        let adopted: Vec<DMatrix<f64>> = self
+            .adopted
+            .iter()
+            .zip(&mut self.state.adopted)
+            .map(|(one, memory)| {
+                let with = AdoptedBlock {
+                    frame: &self.columns.frame,
+                    tables: &raw.tables,
+                    sampled: &sampled,
+                    entering: &raw.entering,
+                    block: block.index,
+                    skins: &self.skins,
+                };
+                one.rows(memory, &with, &images)
+            })
+            .collect();
         self.add_columns(
             &memory.epochs.list.iter().map(|e| e.id).collect::<Vec<_>>(),
             &missing,
+            &raw.renewals,
             block.index,
         );
         let row = self.raw_row(
@@ -217,13 +282,38 @@ impl Watch {
             &raw,
             &memory.epochs.list.iter().map(|e| e.id).collect::<Vec<_>>(),
             &missing,
+            &adopted,
         );
-        let white = self.whitener.step(&mut self.state.filter, &row);
+        let fixed = self.columns.len();
+        for (index, live) in self.state.live.iter().enumerate() {
+            if let Live::Renewal {
+                well,
+                block: of,
+                size,
+                within,
+            } = *live
+                && block.index == if within { of } else { of + 1 }
+            {
+                self.whitener.renew(
+                    &mut self.state.filter,
+                    1 + fixed + index,
+                    well,
+                    size,
+                    within,
+                );
+            }
+        }
+        let mut white = self.whitener.step(&mut self.state.filter, &row);
+        let calm = calm(&self.unsteady, &sampled, &self.columns.priors.rate, gauges);
+        for (gauge, factor) in calm.iter().enumerate() {
+            white.row_mut(gauge).scale_mut(*factor);
+        }
+        self.state.calm.extend(calm);
         let at = self.state.pending.nrows();
         self.state.pending.resize_vertically_mut(at + gauges, 0.0);
         self.state.pending.rows_mut(at, gauges).copy_from(&white);
 
-        if block.index >= self.settings.first_onset {
+        if block.index >= self.state.first_onset {
             self.state.ladder.open(
                 block.index,
                 self.state.posterior.len(),
@@ -244,9 +334,6 @@ impl Watch {
                 skins: &self.skins,
             },
         );
-        let images = self
-            .images
-            .raw(&self.columns.frame.modal, &raw.means, &sampled.class);
         self.state.barriers.step(&images, &self.whitener);
 
         let (expectations, departures) = self.expectation(block, &raw, &row, &blind);
@@ -273,11 +360,54 @@ impl Watch {
     }
 
     /// Appends columns for new epochs and missing readings.
-    fn add_columns(&mut self, epochs: &[u32], missing: &[usize], block: i64) {
+    fn add_columns(
+        &mut self,
+        epochs: &[u32],
+        missing: &[usize],
+        renewals: &[(usize, f64)],
+        block: i64,
+    ) {
         let before = self.state.live.len();
         for &id in epochs {
             if !self.state.live.contains(&Live::Epoch(id)) {
                 self.state.live.push(Live::Epoch(id));
+            }
+        }
+        for &(well, size) in renewals {
+            for within in [true, false] {
+                self.state.live.push(Live::Renewal {
+                    well,
+                    block,
+                    size,
+                    within,
+                });
+            }
+        }
+        let mut taken = Vec::new();
+        for (index, one) in self.adopted.iter().enumerate() {
+            let known = self
+                .state
+                .live
+                .iter()
+                .any(|l| matches!(l, Live::Adopted { adoption, .. } if *adoption == index));
+            if block >= one.from && !known {
+                let columns = one.columns(self.columns.frame.gauges);
+                if let Some((lines, scale)) = one.lines() {
+                    taken.push((self.state.live.len(), lines.to_vec(), scale));
+                }
+                self.state
+                    .live
+                    .extend((0..columns).map(|column| Live::Adopted {
+                        adoption: index,
+                        column,
+                    }));
+                if one.anew {
+                    self.state.ladder = Ladder::new();
+                    self.state.first_onset = self.state.first_onset.max(block);
+                    self.state.barriers.sums =
+                        Cleared::new(self.state.posterior.len(), self.images.lines());
+                    self.state.finding = None;
+                }
             }
         }
         for &gauge in missing {
@@ -293,10 +423,24 @@ impl Watch {
             state.ladder.append(added);
             state.barriers.sums.append(added);
         }
+        for (at, lines, scale) in taken {
+            for (column, line) in lines.into_iter().enumerate() {
+                let filter = self.state.barriers.filter_of(line) * scale;
+                let to = 1 + self.columns.len() + at + column;
+                self.state.filter.column_mut(to).copy_from(&filter);
+            }
+        }
     }
 
     /// Readings less prediction, then all columns, of one block (gauges by 1 + columns).
-    fn raw_row(&self, block: &Block, raw: &Raw, epochs: &[u32], missing: &[usize]) -> DMatrix<f64> {
+    fn raw_row(
+        &self,
+        block: &Block,
+        raw: &Raw,
+        epochs: &[u32],
+        missing: &[usize],
+        adopted: &[DMatrix<f64>],
+    ) -> DMatrix<f64> {
         let gauges = self.columns.frame.gauges;
         let fixed = self.columns.len();
         let mut row = DMatrix::zeros(gauges, 1 + fixed + self.state.live.len());
@@ -315,6 +459,15 @@ impl Watch {
                             .copy_from(&raw.epochs.column(at));
                     }
                 }
+                Live::Adopted { adoption, column } => {
+                    if let Some(rows) = adopted.get(adoption)
+                        && column < rows.ncols()
+                    {
+                        row.column_mut(1 + fixed + index)
+                            .copy_from(&rows.column(column));
+                    }
+                }
+                Live::Renewal { .. } => {}
                 Live::Missing { gauge, block: of } => {
                     if of == block.index {
                         row[(gauge, 1 + fixed + index)] = UNKNOWN;
@@ -327,7 +480,7 @@ impl Watch {
                 row[(gauge, column)] = 0.0;
             }
             for (index, live) in self.state.live.iter().enumerate() {
-                if matches!(live, Live::Epoch(_)) {
+                if !matches!(live, Live::Missing { .. }) {
                     row[(gauge, 1 + fixed + index)] = 0.0;
                 }
             }
@@ -364,14 +517,18 @@ impl Watch {
         let width = state.pending.ncols();
         let pending = std::mem::replace(&mut state.pending, DMatrix::zeros(0, width));
         let blocks = i64::try_from(pending.nrows() / gauges.max(1)).unwrap_or(0);
+        let calm = std::mem::take(&mut state.calm);
         let readings: DVector<f64> = pending.column(0).into_owned();
+        let elapsed = blocks as f64 * self.block;
+        let lost: Vec<f64> = self.forgetting.iter().map(|f| f * elapsed).collect();
+        state.posterior.forget(&lost);
         let lesson = state
             .posterior
             .learn(pending.columns(1, width - 1).into_owned(), &readings)?;
         state
             .ladder
-            .learn(&lesson, block.index, blocks, &self.bank, gauges);
-        state.barriers.learn(&lesson);
+            .learn(&lesson, block.index, blocks, &self.bank, gauges, &calm);
+        state.barriers.learn(&lesson, &calm);
 
         // Columns whose influence has passed.
         let mut struck: Vec<Live> = memory
@@ -403,6 +560,17 @@ impl Watch {
                 let left = self.whitener.echo(&state.filter, 1 + fixed + index);
                 if of < block.index && sd * left < 0.02 {
                     struck.push(live);
+                }
+            }
+        }
+        for (index, live) in state.live.iter().enumerate() {
+            if let Live::Renewal { block: of, .. } = *live {
+                let sd = state.posterior.covariance[(fixed + index, fixed + index)]
+                    .max(0.0)
+                    .sqrt();
+                let left = self.whitener.echo(&state.filter, 1 + fixed + index);
+                if (block.index - of) as f64 * self.block > 5.0 * 86_400.0 && sd * left < 0.01 {
+                    struck.push(*live);
                 }
             }
         }
@@ -444,6 +612,7 @@ impl Watch {
             gauges: self.columns.frame.gauges,
             wells: self.columns.frame.wells,
             block: self.block,
+            mismatch: self.mismatch,
         };
         let state = &mut self.state;
         if state.ladder.onsets.is_empty() {
@@ -460,16 +629,18 @@ impl Watch {
         let mut sums = Weights::sums(&state.ladder);
         sums.push((
             Cause::Barrier,
-            state.barriers.evidence(self.scales.barrier).0,
+            state.barriers.evidence(self.scales.barrier).0 / (1.0 + self.mismatch / IMAGED),
         ));
         let prior = -KINDS.ln();
         let stuck: Vec<(usize, i64, u32)> = (0..self.columns.frame.gauges)
             .filter_map(|g| {
                 let longest = self.longest_unchanged.get(g).copied().unwrap_or(0);
-                state
-                    .stuck
-                    .since(g, longest)
-                    .map(|since| (g, since, state.stuck.run(g)))
+                let since = state.stuck.since(g, longest)?;
+                let accepted = self
+                    .quiet_stuck
+                    .iter()
+                    .any(|(gauge, from)| *gauge == g && (since - from).abs() <= 1);
+                (!accepted).then(|| (g, since, state.stuck.run(g)))
             })
             .collect();
         let logs: Vec<f64> = sums.iter().map(|(_, log)| log + prior).collect();
@@ -513,7 +684,25 @@ impl Watch {
             state.finding = None;
             return;
         }
-        let total = log_sum(&[log_mixture, self.log_threshold]);
+        // Every signature is a little wrong, so free steps and ramps always fit a strong cause a little better than its own
+        // signature does; they count only where they fit much better.
+        let told = sums
+            .iter()
+            .filter(|(cause, _)| *cause != Cause::Unexplained)
+            .map(|(_, log)| *log)
+            .fold(0.0, f64::max);
+        let logs: Vec<f64> = sums
+            .iter()
+            .zip(&logs)
+            .map(|((cause, _), log)| {
+                if *cause == Cause::Unexplained {
+                    log - LEEWAY.0 - LEEWAY.1 * told
+                } else {
+                    *log
+                }
+            })
+            .collect();
+        let total = log_sum(&[log_sum(&logs), self.log_threshold]);
         let mut order: Vec<usize> = (0..sums.len()).collect();
         order.sort_by(|&a, &b| {
             let of = |i: usize| logs.get(i).copied().unwrap_or(f64::NEG_INFINITY);
@@ -547,7 +736,12 @@ impl Watch {
             block: now,
             causes,
             named,
-            onset: lead.onset,
+            // A barrier has always been there: it is dated to where the watch began to look.
+            onset: if lead.onset.is_finite() {
+                lead.onset
+            } else {
+                state.first_onset as f64 * self.block
+            },
             onset_sd: lead.onset_sd,
             size: lead.size,
             place: lead.place,

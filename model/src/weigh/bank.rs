@@ -17,7 +17,9 @@ use crate::expect::whitener::Whitener;
 use crate::reduce::Modal;
 
 /// Days over which a source may grow; zero is at once.
-pub(crate) const GROWTHS: [f64; 5] = [0.0, 2.0, 6.0, 15.0, 40.0];
+pub(crate) const GROWTHS: [f64; 7] = [0.0, 2.0, 4.0, 8.0, 12.0, 20.0, 40.0];
+/// Which of [`GROWTHS`] are weighed for detection.
+pub(crate) const COARSE: [usize; 4] = [0, 2, 4, 6];
 /// Share of a signature that the basis may miss.
 const MISSED: f64 = 2e-3;
 /// Most directions kept.

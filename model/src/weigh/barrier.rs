@@ -11,11 +11,14 @@
 use nalgebra::{DMatrix, DVector};
 use serde::{Deserialize, Serialize};
 
-use super::evidence::{log_bayes_positive, log_sum};
+use super::evidence::{log_bayes_about, log_sum};
 use crate::commission::Places;
 use crate::expect::posterior::{Cleared, Lesson};
 use crate::expect::whitener::Whitener;
 use crate::reduce::Modal;
+
+/// Strength of an image behind a line that seals nearly or wholly.
+pub(crate) const SEALING: f64 = 0.9;
 
 /// Ports of the images, by well (modes by lines).
 #[derive(Debug, Clone)]
@@ -70,7 +73,7 @@ impl Images {
                     column.component_mul_assign(&mean.column(well));
                 }
             }
-            out.gemm_tr(1.0, &seen, ports, 1.0);
+            out.gemm(1.0, &seen.transpose(), ports, 1.0);
         }
         out
     }
@@ -92,15 +95,28 @@ impl Barriers {
         self.pending.rows_mut(at, white.nrows()).copy_from(&white);
     }
 
-    pub(crate) fn learn(&mut self, lesson: &Lesson) {
-        let rows = std::mem::replace(&mut self.pending, DMatrix::zeros(0, self.filter.ncols()));
+    /// Filter state of one line's signature.
+    pub(crate) fn filter_of(&self, line: usize) -> DVector<f64> {
+        self.filter.column(line).into_owned()
+    }
+
+    pub(crate) fn learn(&mut self, lesson: &Lesson, calm: &[f64]) {
+        let mut rows = std::mem::replace(&mut self.pending, DMatrix::zeros(0, self.filter.ncols()));
+        for (mut row, factor) in rows.row_iter_mut().zip(calm) {
+            row *= *factor;
+        }
         self.sums.learn(lesson, &rows);
     }
 
     /// Log evidence of a barrier anywhere in the fan, with the log evidence of each line.
     pub(crate) fn evidence(&self, variance: f64) -> (f64, DVector<f64>) {
         let each = DVector::from_fn(self.sums.c.len(), |line, _| {
-            log_bayes_positive(self.sums.c[line], self.sums.n[(line, line)], variance)
+            log_bayes_about(
+                self.sums.c[line],
+                self.sums.n[(line, line)],
+                SEALING,
+                variance,
+            )
         });
         (
             log_sum(each.as_slice()) - (each.len().max(1) as f64).ln(),

@@ -27,6 +27,12 @@ pub fn log_bayes_positive(c: f64, n: f64, variance: f64) -> f64 {
         + log_normal_cdf(c * (variance / spread).sqrt())
 }
 
+/// Log Bayes factor of a signature whose amplitude is known to lie about `expected`.
+#[must_use]
+pub fn log_bayes_about(c: f64, n: f64, expected: f64, variance: f64) -> f64 {
+    log_bayes(c - n * expected, n, variance) + c * expected - 0.5 * n * expected * expected
+}
+
 /// Mean and standard deviation of the amplitude's posterior.
 #[must_use]
 pub fn amplitude(c: f64, n: f64, variance: f64) -> (f64, f64) {

@@ -206,6 +206,7 @@ impl Ladder {
         blocks: i64,
         bank: &Bank,
         gauges: usize,
+        calm: &[f64],
     ) {
         for onset in &mut self.onsets {
             let rows = lesson.rows.nrows();
@@ -229,6 +230,11 @@ impl Ladder {
                 .rows_mut(rows - held, held)
                 .copy_from(&onset.pending.rows(onset.pending.nrows() - held, held));
             onset.pending = DMatrix::zeros(0, onset.pending.ncols());
+            for part in [&mut sources, &mut own, &mut meters] {
+                for (mut row, factor) in part.row_iter_mut().zip(calm) {
+                    row *= *factor;
+                }
+            }
             onset.sources.learn(lesson, &sources);
             onset.own.learn(lesson, &own);
             onset.meters.learn(lesson, &meters);

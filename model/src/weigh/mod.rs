@@ -1,7 +1,7 @@
 //! Weighing causes: signatures, evidence, the ladder of onsets and what is said of them.
 //!
-//! [`evidence`] holds the formulas, [`bank`] the signatures of sources anywhere in the ground, [`ladder`] the onsets
-//! with their running sums, [`barrier`] the images, [`verdict`] what is made of it all.
+//! [`evidence`] holds the formulas, `bank` the signatures of sources anywhere in the ground, `ladder` the onsets
+//! with their running sums, `barrier` the images, `verdict` what is made of it all.
 
 pub(crate) mod bank;
 pub(crate) mod barrier;

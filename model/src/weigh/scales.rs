@@ -50,7 +50,7 @@ impl Scales {
                 })
                 .collect(),
             meter: vec![0.02_f64.powi(2), 0.06_f64.powi(2), 0.2_f64.powi(2)],
-            barrier: 1.0,
+            barrier: 0.3_f64.powi(2),
         }
     }
 }

@@ -7,8 +7,8 @@
 
 use nalgebra::{DMatrix, DVector};
 
-use super::bank::{Bank, GROWTHS, Source};
-use super::barrier::Barriers;
+use super::bank::{Bank, COARSE, GROWTHS, Source};
+use super::barrier::{Barriers, SEALING};
 use super::evidence::{amplitude, log_bayes, log_bayes_joint, log_bayes_positive, log_sum};
 use super::ladder::{CAUSES, Ladder, Onset};
 use super::scales::Scales;
@@ -21,6 +21,8 @@ use crate::finding::{Cause, Place, Size, SizeUnit, Subject};
 const THINNED: usize = 3;
 /// Parts of a block in which an abrupt cause may begin.
 const PARTS: [f64; 6] = [0.0, 0.2, 0.4, 0.6, 0.8, 1.0];
+/// Relative error of a leak's signature between lattice places and growths even in the plainest ground.
+const LATTICE: f64 = 0.03;
 /// Weight of a leak outside the outline, beside one inside.
 const OUTSIDE: f64 = 0.1;
 
@@ -33,6 +35,8 @@ pub(crate) struct Weights<'a> {
     pub(crate) wells: usize,
     /// Length of a block \[s\].
     pub(crate) block: f64,
+    /// Relative error of a source's signature, from how much pairs differ.
+    pub(crate) mismatch: f64,
 }
 
 /// A leading cause in detail.
@@ -62,9 +66,9 @@ impl Weights<'_> {
     pub(crate) fn weigh(&self, onset: &mut Onset, now: i64) {
         let mut leaks = Vec::new();
         let mut others = Vec::new();
-        for growth in 0..GROWTHS.len() {
+        for growth in COARSE {
             for (source, weight, c, n) in self.sources(onset, growth, THINNED) {
-                let share = -(GROWTHS.len() as f64).ln();
+                let share = -(COARSE.len() as f64).ln();
                 match source {
                     Source::Place(_) => {
                         for variance in &self.scales.leak {
@@ -333,6 +337,16 @@ impl Weights<'_> {
                 hypothesis.log += weight;
             }
         }
+        if cause == Cause::Leak {
+            // A signature that is off by a share of itself may lose that share squared of its evidence by chance.
+            let best = all.iter().map(|h| h.log).fold(0.0, f64::max);
+            let share = self.mismatch.max(LATTICE);
+            let doubt = 1.0 + share.powi(2) * best / self.gauges.max(1) as f64;
+            for hypothesis in &mut all {
+                hypothesis.log = best + (hypothesis.log - best) / doubt;
+                hypothesis.sd *= doubt.sqrt();
+            }
+        }
         self.summary(cause, ladder, &all)
     }
 
@@ -391,11 +405,9 @@ impl Weights<'_> {
             .enumerate()
             .max_by(|a, b| a.1.total_cmp(b.1))
             .map(|(i, _)| i)?;
-        let (mean, sd) = amplitude(
-            barriers.sums.c[line],
-            barriers.sums.n[(line, line)],
-            self.scales.barrier,
-        );
+        let n = barriers.sums.n[(line, line)];
+        let (off, sd) = amplitude(barriers.sums.c[line] - n * SEALING, n, self.scales.barrier);
+        let mean = SEALING + off;
         let at = self.places.lines.get(line)?;
         let foot = [
             self.places.centre[0] + at.distance * at.azimuth.cos(),
