@@ -9,7 +9,7 @@ use borewake_model::watch::{Watch, WatchSettings};
 use borewake_model::weak_form::{Scheme, discretise};
 
 use super::ground_file::GroundFile;
-use crate::config::Site;
+use crate::config::{Site, WellSettings};
 use crate::record::{Block, Stamp};
 
 /// A stage of commissioning, for progress.
@@ -70,7 +70,11 @@ pub fn make(
         ModelError::History("no whole block of readings lies in the span given".into())
     })?;
     let reduced = reduce_ground(&site.ground, progress)?;
-    let settings = CommissionSettings::default();
+    let past = |w: &WellSettings| w.past.iter().map(|p| (p.from.seconds(), p.rate)).collect();
+    let settings = CommissionSettings {
+        past: site.wells.iter().map(past).collect(),
+        ..CommissionSettings::default()
+    };
     let calibration = commission(&site.ground, &reduced, history, &settings, &mut |share| {
         progress(Stage::Calibrate, share)
     })?;
