@@ -41,7 +41,7 @@ const AGAIN: i64 = 40;
 const KINDS: f64 = 7.0;
 /// A ground whose pairs differ by this share looks, as its rates go, like one with images: their evidence counts half.
 const IMAGED: f64 = 0.1;
-/// What the threshold is raised by, for a null that is never quite right (measured on invented quiet records).
+/// What the threshold is raised by, for a null that is never quite right: chosen by hand, until a simulated null says it.
 const MARGIN: f64 = 3.0;
 /// What it is raised by further in a ground whose pairs differ by all of themselves.
 const VARIETY: f64 = 30.0;
