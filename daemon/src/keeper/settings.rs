@@ -5,7 +5,6 @@ use std::time::Duration;
 use super::{KeeperSettings, Pace};
 use crate::alarm::{AlarmSettings, ChannelWatch, LimitSettings, Side};
 use crate::config::{self, Site};
-use crate::record::Names;
 use crate::watch::blocks::{BlockPlan, WellFeed};
 
 /// How blocks of a site are built.
@@ -44,19 +43,6 @@ impl KeeperSettings {
 }
 
 fn alarm_settings(site: &Site) -> AlarmSettings {
-    let names = Names {
-        site: site.id.clone(),
-        units: site.units,
-        gauges: site.gauges.iter().map(|g| g.name.clone()).collect(),
-        wells: site.wells.iter().map(|w| w.name.clone()).collect(),
-        neighbours: site
-            .ground
-            .neighbours
-            .iter()
-            .map(|n| n.name.clone())
-            .collect(),
-        layers: site.ground.layers.iter().map(|l| l.name.clone()).collect(),
-    };
     let limits = site
         .limits
         .iter()
@@ -70,7 +56,7 @@ fn alarm_settings(site: &Site) -> AlarmSettings {
     AlarmSettings {
         limits,
         channels,
-        ..AlarmSettings::new(names, site.watch.block.as_secs_f64())
+        ..AlarmSettings::new(site.names(), site.watch.block.as_secs_f64())
     }
 }
 
