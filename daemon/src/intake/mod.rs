@@ -12,11 +12,13 @@ pub mod clock;
 pub mod conversions;
 mod decode;
 pub mod line;
+mod link;
 pub mod log;
 pub mod merge;
 pub mod modbus;
 pub mod mqtt;
 mod outlet;
+mod poll;
 mod serial;
 mod window;
 
@@ -103,7 +105,7 @@ pub fn start(
         SourceConfig::ModbusRtu(settings) => {
             let settings = settings.clone();
             spawn(name, around, 0, |outlet, around, _| {
-                modbus::run(settings, outlet, around)
+                modbus::run_rtu(settings, outlet, around)
             })
         }
         SourceConfig::TextLine(settings) => {

@@ -9,6 +9,7 @@ use tokio_serial::{
     StopBits,
 };
 
+use super::link::Link;
 use crate::config::{Parity, SerialSettings};
 
 /// A line whose unread input can be thrown away.
@@ -23,11 +24,22 @@ impl Wire for SerialStream {
     }
 }
 
+impl Link for SerialSettings {
+    type Wire = SerialStream;
+
+    async fn open(&self) -> io::Result<SerialStream> {
+        let mut port = open(self)?;
+        // What came before anybody listened belongs to no request and may begin anywhere.
+        port.discard_input()?;
+        Ok(port)
+    }
+}
+
 /// Opens a device.
 ///
 /// # Errors
 /// It is not there, not ours, or in use; the message names it.
-pub(crate) fn open(settings: &SerialSettings) -> io::Result<SerialStream> {
+fn open(settings: &SerialSettings) -> io::Result<SerialStream> {
     let data_bits = match settings.data_bits {
         7 => DataBits::Seven,
         _ => DataBits::Eight,

@@ -1,6 +1,6 @@
 //! Lines of text over a serial device, one scan each.
 //!
-//! [`framer`] cuts bytes into lines, [`scan`] reads a line, and this file is the port.
+//! [`framer`] cuts bytes into lines, [`scan`] reads a line, and this file is what goes on over the port.
 
 pub mod framer;
 pub mod scan;
@@ -10,66 +10,27 @@ use std::time::Duration;
 use tokio::io::AsyncRead;
 use tokio::time::{Instant, MissedTickBehavior, timeout_at};
 
-use super::backoff::Backoff;
 use super::burst::Burst;
-use super::outlet::{Closed, Outlet};
-use super::serial::{self, Wire as _};
-use super::{Surroundings, stopped};
+use super::link::{Over, SourceEnd, Talk};
+use super::outlet::Outlet;
+use super::{Surroundings, link, serial};
 use crate::config::TextLineSource;
 use framer::Framer;
 
 /// A device that was silent this long after opening is between two lines.
 const BETWEEN: Duration = Duration::from_millis(500);
 
-/// Why a session with an open port ended.
-enum End {
-    /// The port is gone.
-    Gone(std::io::Error),
-    /// Nobody takes readings any more.
-    Closed(Closed),
-}
-
 /// Reads lines until shutdown.
-pub(super) async fn run(settings: TextLineSource, mut outlet: Outlet, around: Surroundings) {
-    let mut shutdown = around.shutdown.clone();
-    tokio::select! {
-        () = stopped(&mut shutdown) => {}
-        () = keep_reading(&settings, &mut outlet, &around) => {}
-    }
-    outlet.say("stopped");
+pub(super) async fn run(settings: TextLineSource, outlet: Outlet, around: Surroundings) {
+    link::run(settings.serial.clone(), Reader(settings), outlet, around).await;
 }
 
-/// Opens the port again and again, and reads while it is open.
-async fn keep_reading(settings: &TextLineSource, outlet: &mut Outlet, around: &Surroundings) {
-    let mut backoff = Backoff::default();
-    loop {
-        let error = match session(settings, outlet, around, &mut backoff).await {
-            End::Closed(Closed) => return,
-            End::Gone(error) => error,
-        };
-        outlet.waiting(&error);
-        outlet.settle();
-        tokio::time::sleep(backoff.wait()).await;
-    }
-}
+/// Reads what a device says by itself.
+struct Reader(TextLineSource);
 
-/// One opening of the port.
-async fn session(
-    settings: &TextLineSource,
-    outlet: &mut Outlet,
-    around: &Surroundings,
-    backoff: &mut Backoff,
-) -> End {
-    let opened = serial::open(&settings.serial).and_then(|mut port| {
-        port.discard_input()?;
-        Ok(port)
-    });
-    match opened {
-        Ok(port) => {
-            outlet.connected();
-            read_lines(port, settings, outlet, around, backoff).await
-        }
-        Err(error) => End::Gone(error),
+impl<W: AsyncRead + Unpin + Send> Talk<W> for Reader {
+    async fn talk(&mut self, wire: W, end: &mut SourceEnd) -> Over {
+        read_lines(wire, &self.0, end).await
     }
 }
 
@@ -77,10 +38,8 @@ async fn session(
 async fn read_lines(
     mut port: impl AsyncRead + Unpin,
     settings: &TextLineSource,
-    outlet: &mut Outlet,
-    around: &Surroundings,
-    backoff: &mut Backoff,
-) -> End {
+    end: &mut SourceEnd,
+) -> Over {
     let between = Instant::now() + BETWEEN;
     let mut framer = Framer::new(settings.max_line);
     let mut ticks = tokio::time::interval(Burst::QUIET / 2);
@@ -92,7 +51,7 @@ async fn read_lines(
             framer.skip_rest_of_line();
             Some(count)
         }
-        Ok(Err(error)) => return End::Gone(error),
+        Ok(Err(error)) => return error.into(),
         Err(_) => None,
     };
     loop {
@@ -101,22 +60,23 @@ async fn read_lines(
             None => tokio::select! {
                 read = serial::read(&mut port, &mut buffer) => match read {
                     Ok(count) => count,
-                    Err(error) => return End::Gone(error),
+                    Err(error) => return error.into(),
                 },
                 _ = ticks.tick() => {
-                    outlet.settle();
+                    end.outlet.settle();
                     continue;
                 }
             },
         };
-        let now = around.clock.read();
+        let now = end.around.clock.read();
         framer.push(buffer.get(..count).unwrap_or_default());
         while let Some(line) = framer.next() {
-            backoff.reset();
+            end.alive();
+            let conversions = &end.around.conversions;
             let (readings, rejected) =
-                scan::read(&line, settings, &around.conversions, outlet.source(), now);
-            if let Err(closed) = outlet.offer(readings, rejected) {
-                return End::Closed(closed);
+                scan::read(&line, settings, conversions, end.outlet.source(), now);
+            if let Err(closed) = end.outlet.offer(readings, rejected) {
+                return closed.into();
             }
         }
     }

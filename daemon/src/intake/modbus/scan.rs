@@ -6,26 +6,16 @@ use std::time::Duration;
 
 use tokio::time::Instant;
 
-use super::codec::{FrameError, Remedy, number};
+use super::codec::{Exception, FrameError, Remedy, number};
 use super::master::{Master, ReadError};
 use super::plan::{Block, Member, plan};
-use crate::config::ModbusRtuSource;
+use crate::config::ModbusChannel;
 use crate::intake::Surroundings;
 use crate::intake::backoff::Backoff;
-use crate::intake::decode::{Refusal, When, missing, reading};
+use crate::intake::decode::{Refusal, When, reading};
+use crate::intake::poll::{Round, Scan};
 use crate::intake::serial::Wire;
-use crate::record::{DeviceStatus, Reading, RejectReason, Rejected, SourceName};
-
-/// What a round brought.
-#[derive(Debug, Default)]
-pub(crate) struct Scan {
-    pub(crate) readings: Vec<Reading>,
-    pub(crate) rejected: Vec<Rejected>,
-    /// Whether any device answered at all.
-    pub(crate) answered: bool,
-    /// What else to say.
-    pub(crate) trouble: Option<String>,
-}
+use crate::record::{ChannelId, DeviceStatus, Reading, RejectReason, SourceName};
 
 /// Asks all devices, and remembers which of them are not worth asking for a while.
 pub(crate) struct Scanner {
@@ -56,171 +46,190 @@ impl Scanner {
     /// Scans without an answer after which a device is asked less often, so that it does not slow down the others.
     const SILENT: u32 = 3;
 
-    pub(crate) fn new(settings: &ModbusRtuSource, source: SourceName) -> Self {
+    pub(crate) fn new(channels: &[ModbusChannel], source: SourceName) -> Self {
         let planned = |block| Planned { block, held: None };
         Self {
             source,
-            blocks: plan(&settings.channels).into_iter().map(planned).collect(),
+            blocks: plan(channels).into_iter().map(planned).collect(),
             units: BTreeMap::new(),
         }
     }
 
-    /// Asks every device once.
-    ///
-    /// # Errors
-    /// The port is gone.
-    pub(crate) async fn scan<W: Wire>(
+    /// Rounds through this master.
+    pub(crate) fn over<W>(&mut self, master: Master<W>) -> Over<'_, W> {
+        Over {
+            scanner: self,
+            master,
+        }
+    }
+
+    /// What an answer, or the want of one, means for a block's channels. True where the block must be taken apart: which
+    /// of several channels is at fault is found out by asking for each alone.
+    fn settle(
         &mut self,
-        master: &mut Master<W>,
+        index: usize,
+        answer: Result<Vec<u16>, ReadError>,
+        scan: &mut Scan,
         around: &Surroundings,
-    ) -> io::Result<Scan> {
-        let mut scan = Scan::default();
-        let mut silent_now = Vec::new();
-        let mut split = Vec::new();
-        for (index, planned) in self.blocks.iter_mut().enumerate() {
-            let now = Instant::now();
-            let request = planned.block.request;
-            let unit = self.units.entry(request.unit).or_default();
-            let held = |until: Option<Instant>| until.is_some_and(|u| u > now);
-            if held(planned.held) || held(unit.held) {
-                continue;
-            }
-            if silent_now.contains(&request.unit) {
-                let when = When::arrival(around.clock.read());
-                scan.lose(&planned.block, when, DeviceStatus::Normal);
-                continue;
-            }
-            let answer = master.read(&request).await;
-            let when = When::arrival(around.clock.read());
-            if !matches!(answer, Err(ReadError::Silent { .. })) {
-                *unit = Unit::default();
-                scan.answered = true;
-            }
-            match answer {
-                Ok(registers) => scan.take(&planned.block, &registers, when, &self.source, around),
-                Err(ReadError::Gone(error)) => return Err(error),
-                Err(ReadError::Silent { unit: address }) => {
-                    scan.lose(&planned.block, when, DeviceStatus::Normal);
-                    scan.trouble = Some(format!("device {address} does not answer"));
-                    silent_now.push(address);
-                    unit.silent += 1;
-                    if unit.silent >= Self::SILENT {
-                        unit.held = Some(Instant::now() + unit.backoff.wait());
-                    }
+    ) -> io::Result<bool> {
+        let when = When::arrival(around.clock.read());
+        let Some(planned) = self.blocks.get_mut(index) else {
+            return Ok(false);
+        };
+        let block = &planned.block;
+        let unit = self.units.entry(block.request.unit).or_default();
+        if !matches!(answer, Err(ReadError::Silent { .. })) {
+            *unit = Unit::default();
+            scan.answered = true;
+        }
+        match answer {
+            Ok(registers) => take(scan, block, &registers, when, &self.source, around),
+            Err(ReadError::Gone(error)) => return Err(error),
+            Err(ReadError::Silent { unit: address }) => {
+                scan.lose(block.channels(), when, DeviceStatus::Normal);
+                scan.trouble = Some(format!("device {address} does not answer"));
+                unit.silent += 1;
+                if unit.silent >= Self::SILENT {
+                    unit.held = Some(Instant::now() + unit.backoff.wait());
                 }
-                Err(ReadError::Garbled { why, raw }) => {
-                    scan.lose(&planned.block, when, DeviceStatus::Normal);
-                    let reason = match why {
-                        FrameError::Checksum { .. } => RejectReason::Checksum,
-                        _ => RejectReason::Malformed,
-                    };
-                    let detail = format!("{}: {why}", describe(&planned.block));
-                    scan.refuse(
-                        &planned.block,
-                        Refusal::new(reason, detail),
-                        when,
-                        &self.source,
-                        &hex(&raw),
-                    );
+            }
+            Err(ReadError::Garbled { why, raw }) => {
+                scan.lose(block.channels(), when, DeviceStatus::Normal);
+                let reason = match why {
+                    FrameError::Checksum { .. } => RejectReason::Checksum,
+                    _ => RejectReason::Malformed,
+                };
+                let refusal = Refusal::new(reason, format!("{}: {why}", describe(block)));
+                let raw = hex(&raw);
+                scan.refuse(
+                    block.channels(),
+                    &refusal,
+                    when,
+                    &self.source,
+                    raw.as_bytes(),
+                );
+            }
+            Err(ReadError::Exception(exception)) => {
+                let remedy = exception.remedy();
+                let device = match remedy {
+                    Remedy::Device => DeviceStatus::Failure,
+                    Remedy::Settings | Remedy::Later => DeviceStatus::Normal,
+                };
+                scan.lose(block.channels(), when, device);
+                if remedy == Remedy::Settings && block.members.len() > 1 {
+                    return Ok(true);
                 }
-                Err(ReadError::Exception(exception)) => {
-                    if exception.remedy() == Remedy::Settings {
-                        // Which of several channels is at fault is found out by asking for each alone.
-                        if planned.block.members.len() > 1 {
-                            split.push(index);
-                            scan.lose(&planned.block, when, DeviceStatus::Normal);
-                            continue;
-                        }
-                        planned.held = Some(Instant::now() + Self::REFUSED);
-                    }
-                    let device = match exception.remedy() {
-                        Remedy::Device => DeviceStatus::Failure,
-                        Remedy::Settings | Remedy::Later => DeviceStatus::Normal,
-                    };
-                    scan.lose(&planned.block, when, device);
-                    let mend = match exception.remedy() {
-                        Remedy::Settings => {
-                            "; mend unit_id, table, address or type in the site file"
-                        }
-                        Remedy::Later | Remedy::Device => "",
-                    };
-                    let detail = format!(
-                        "{}: exception {:02X}, {}{mend}",
-                        describe(&planned.block),
-                        exception.0,
-                        exception.name(),
-                    );
-                    let raw = format!("exception {:02X}", exception.0);
-                    scan.refuse(
-                        &planned.block,
-                        Refusal::new(RejectReason::DeviceError, detail),
-                        when,
-                        &self.source,
-                        &raw,
-                    );
+                let refusal = refused(block, exception);
+                let raw = format!("exception {:02X}", exception.0);
+                scan.refuse(
+                    block.channels(),
+                    &refusal,
+                    when,
+                    &self.source,
+                    raw.as_bytes(),
+                );
+                if remedy == Remedy::Settings {
+                    planned.held = Some(Instant::now() + Self::REFUSED);
                 }
             }
         }
+        Ok(false)
+    }
+
+    /// Whether a block is left alone for now.
+    fn held(&self, planned: &Planned) -> bool {
+        let now = Instant::now();
+        let held = |until: Option<Instant>| until.is_some_and(|u| u > now);
+        let unit = self.units.get(&planned.block.request.unit);
+        held(planned.held) || held(unit.and_then(|u| u.held))
+    }
+}
+
+/// Rounds of all devices through one master.
+pub(crate) struct Over<'s, W> {
+    scanner: &'s mut Scanner,
+    master: Master<W>,
+}
+
+impl<W: Wire> Round for Over<'_, W> {
+    async fn round(&mut self, around: &Surroundings) -> io::Result<Scan> {
+        let scanner = &mut *self.scanner;
+        let mut scan = Scan::default();
+        let mut silent_now = Vec::new();
+        let mut split = Vec::new();
+        for index in 0..scanner.blocks.len() {
+            let Some(planned) = scanner.blocks.get(index).filter(|p| !scanner.held(p)) else {
+                continue;
+            };
+            let request = planned.block.request;
+            if silent_now.contains(&request.unit) {
+                let when = When::arrival(around.clock.read());
+                scan.lose(planned.block.channels(), when, DeviceStatus::Normal);
+                continue;
+            }
+            let answer = self.master.read(&request).await;
+            if matches!(answer, Err(ReadError::Silent { .. })) {
+                silent_now.push(request.unit);
+            }
+            if scanner.settle(index, answer, &mut scan, around)? {
+                split.push(index);
+            }
+        }
         for index in split.into_iter().rev() {
-            let parts = self.blocks.remove(index).block.split();
+            let parts = scanner.blocks.remove(index).block.split();
             let planned = |block| Planned { block, held: None };
-            self.blocks
+            scanner
+                .blocks
                 .splice(index..index, parts.into_iter().map(planned));
         }
         Ok(scan)
     }
 }
 
-impl Scan {
-    /// Decodes an answer.
-    fn take(
-        &mut self,
-        block: &Block,
-        registers: &[u16],
-        when: When,
-        source: &SourceName,
-        around: &Surroundings,
-    ) {
-        for member in &block.members {
-            let range =
-                usize::from(member.offset)..usize::from(member.offset + member.kind.registers());
-            let own = registers.get(range).unwrap_or_default();
-            match decode(member, own, when, around) {
-                Ok(reading) => self.readings.push(reading),
-                Err(refusal) => {
-                    let words: Vec<String> = own.iter().map(|r| format!("{r:04X}")).collect();
-                    let raw = words.join(" ");
-                    let kept =
-                        refusal.keep(source, Some(&member.channel), when.received, raw.as_bytes());
-                    self.rejected.push(kept);
-                }
+impl Block {
+    /// Its channels.
+    fn channels(&self) -> impl Iterator<Item = &ChannelId> {
+        self.members.iter().map(|m| &m.channel)
+    }
+}
+
+/// Decodes an answer.
+fn take(
+    scan: &mut Scan,
+    block: &Block,
+    registers: &[u16],
+    when: When,
+    source: &SourceName,
+    around: &Surroundings,
+) {
+    for member in &block.members {
+        let range =
+            usize::from(member.offset)..usize::from(member.offset + member.kind.registers());
+        let own = registers.get(range).unwrap_or_default();
+        match decode(member, own, when, around) {
+            Ok(reading) => scan.readings.push(reading),
+            Err(refusal) => {
+                let words: Vec<String> = own.iter().map(|r| format!("{r:04X}")).collect();
+                let raw = words.join(" ");
+                scan.refuse([&member.channel], &refusal, when, source, raw.as_bytes());
             }
         }
     }
+}
 
-    /// Readings without a value for all channels of a block.
-    fn lose(&mut self, block: &Block, when: When, device: DeviceStatus) {
-        let gap = |m: &Member| missing(&m.channel, when, device);
-        self.readings.extend(block.members.iter().map(gap));
-    }
-
-    /// The same refusal for all channels of a block.
-    fn refuse(
-        &mut self,
-        block: &Block,
-        refusal: Refusal,
-        when: When,
-        source: &SourceName,
-        raw: &str,
-    ) {
-        for member in &block.members {
-            let kept =
-                refusal
-                    .clone()
-                    .keep(source, Some(&member.channel), when.received, raw.as_bytes());
-            self.rejected.push(kept);
-        }
-    }
+/// A device's refusal in words, with what can be mended.
+fn refused(block: &Block, exception: Exception) -> Refusal {
+    let mend = match exception.remedy() {
+        Remedy::Settings => "; mend unit_id, table, address or type in the site file",
+        Remedy::Later | Remedy::Device => "",
+    };
+    let detail = format!(
+        "{}: exception {:02X}, {}{mend}",
+        describe(block),
+        exception.0,
+        exception.name(),
+    );
+    Refusal::new(RejectReason::DeviceError, detail)
 }
 
 fn decode(
