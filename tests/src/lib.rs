@@ -1,4 +1,4 @@
-//! Helpers shared by the end-to-end tests: a real broker, a real Modbus device on a pty, the real daemon.
+//! Helpers shared by the end-to-end tests: a real broker, real Modbus devices, the real daemon.
 //!
 //! Every helper owns what it starts and ends it when dropped. Ports are free ones found at run time; folders are
 //! temporary. Waits are for a state to be reached, with a generous limit that only a broken program meets.
@@ -10,6 +10,7 @@ pub mod modbus;
 pub mod pty;
 pub mod publisher;
 pub mod readings;
+pub mod sdi12;
 pub mod site;
 pub mod stored;
 
@@ -19,9 +20,10 @@ use std::time::{Duration, Instant};
 pub use broker::Broker;
 pub use collect::{Collector, Message};
 pub use daemon::{Daemon, Output, borewake, borewake_in, program};
-pub use modbus::ModbusServer;
+pub use modbus::{ModbusServer, ModbusTcpServer};
 pub use pty::TextDevice;
 pub use publisher::Publisher;
+pub use sdi12::Sdi12Line;
 
 /// How long a state may take to be reached before the test gives up. Two loaded cores must do.
 pub const PATIENCE: Duration = Duration::from_secs(60);

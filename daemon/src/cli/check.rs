@@ -1,6 +1,7 @@
 //! `borewake check`: reads the site file and explains every mistake.
 
 use std::path::PathBuf;
+use std::time::Duration;
 
 use borewake_model::units::Dimension;
 use clap::Args;
@@ -9,24 +10,42 @@ use serde_json::{Value, json};
 use super::summary::{summary_json, summary_text};
 use super::{Context, Exit, Failure, GroundSummary, print};
 use crate::config::{self, ConfigError, Mistake, Note, Site};
+use crate::intake::probe::{SourceProbe, probe};
 use crate::watch::ground_file::GroundFile;
+
+mod sources;
 
 /// Reads the site file and explains every mistake with line, value and mend
 #[derive(Debug, Args)]
 #[command(after_help = "\
 Example:
   borewake check site.toml
+  borewake check site.toml --sources     (stop `borewake run` first: a serial port has one reader)
 
 Ends with 0 where the file holds, with 1 where it has mistakes, with 2 where it cannot be read.")]
 pub(super) struct Check {
     /// The site file
     #[arg(value_name = "SITE")]
     site: PathBuf,
+
+    /// Talks to every source and prints what it decodes; registers in all four orders of bytes
+    #[arg(long)]
+    sources: bool,
+
+    /// How long a source that speaks by itself is listened to, in seconds
+    #[arg(
+        long,
+        value_name = "SECONDS",
+        default_value_t = 10.0,
+        requires = "sources"
+    )]
+    wait: f64,
 }
 
 impl Check {
     pub(super) fn run(self, context: &Context) -> Result<Exit, Failure> {
         match config::load(&self.site) {
+            Ok(site) if self.sources => talk(&site, self.wait, context),
             Ok(site) => {
                 print(&held(&site, Some(&ground_summary(&site)), context.json))?;
                 Ok(Exit::Done)
@@ -43,6 +62,30 @@ impl Check {
             Err(unreadable) => Err(unreadable.into()),
         }
     }
+}
+
+/// Talks to the sources of a site file that holds.
+fn talk(site: &Site, wait: f64, context: &Context) -> Result<Exit, Failure> {
+    let wait = Duration::try_from_secs_f64(wait).map_err(|_| {
+        Failure::wrong(anyhow::anyhow!(
+            "--wait takes a time in seconds, such as 10"
+        ))
+    })?;
+    let runtime = tokio::runtime::Builder::new_current_thread()
+        .enable_all()
+        .build()
+        .map_err(Failure::unusable)?;
+    let probes = runtime.block_on(probe(site, wait));
+    print(&if context.json {
+        document(&sources::json(site, &probes))
+    } else {
+        sources::text(site, &probes)
+    })?;
+    Ok(if probes.iter().all(SourceProbe::holds) {
+        Exit::Done
+    } else {
+        Exit::DoesNotHold
+    })
 }
 
 /// Size and certificate of the ground file, or why there is none to use.

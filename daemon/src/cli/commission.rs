@@ -85,11 +85,7 @@ impl Commission {
     }
 
     fn logged(&self, site: &Site) -> anyhow::Result<History> {
-        let channels = site
-            .channels
-            .iter()
-            .map(|(id, c)| (id.clone(), c.conversion));
-        let mut log = LogReader::open(&self.log, channels)?;
+        let mut log = LogReader::of_site(&self.log, site)?;
         let bar = progress::bytes(log.total_bytes(), "reading logs");
         let mut history = History::default();
         while let Some(delivery) = log.next_delivery()? {

@@ -123,11 +123,7 @@ pub(super) async fn open_player(
     folder: &std::path::Path,
     logs: &[PathBuf],
 ) -> anyhow::Result<(Player, mpsc::UnboundedReceiver<Happening>)> {
-    let channels = site
-        .channels
-        .iter()
-        .map(|(id, c)| (id.clone(), c.conversion));
-    let log = LogReader::open(logs, channels)?;
+    let log = LogReader::of_site(logs, site)?;
     let ground = GroundFile::read(ground_folder, &site.ground_digest());
     if let Err(why) = &ground {
         eprintln!(

@@ -4,10 +4,13 @@
 //! resolved and every quantity is SI. Nothing but this room reads the file.
 
 mod digest;
+mod instrument;
 mod mistake;
 mod pattern;
+mod quality;
 mod read;
 mod report;
+mod sdi12;
 mod secret;
 mod section;
 mod site;
@@ -16,9 +19,16 @@ mod values;
 
 use std::path::Path;
 
+pub use instrument::{
+    Barometric, Companion, CurrentLoop, FluidColumn, Instrument, Polynomial, Quartz,
+    ReferenceChange, Thermal, Thermistor, Totaliser, VibratingWire, WireForm, WireReading,
+    WireSense, Zero,
+};
 pub use mistake::{ConfigError, Mistake, Note};
 pub use pattern::{PatternError, TopicPattern};
+pub use quality::QualityTests;
 pub use read::read;
+pub use sdi12::{Sdi12Address, Sdi12Channel, Sdi12Command, Sdi12Kind, Sdi12Source};
 pub use secret::{Secret, SecretError, SecretFile};
 pub use site::{
     GaugeSettings, GaugeString, LimitSettings, Meter, MqttPublish, PastRate, PatternChannel,
@@ -26,8 +36,9 @@ pub use site::{
 };
 pub use source::{
     ByteOrder, ChannelSettings, Checksum, Conversion, LogSource, ModbusChannel, ModbusRtuSource,
-    MqttChannel, MqttEndpoint, MqttSource, Parity, Register, RegisterNumber, RegisterTable,
-    Separator, SerialSettings, SourceConfig, SourceSettings, TextChannel, TextLineSource,
+    ModbusTcpSource, MqttChannel, MqttEndpoint, MqttSource, Parity, Register, RegisterNumber,
+    RegisterTable, Separator, SerialSettings, SourceConfig, SourceSettings, TextChannel,
+    TextLineSource,
 };
 
 /// Largest site file read \[bytes\].

@@ -1,9 +1,13 @@
 //! Sources and channels as read: what intake is given.
 
 use std::path::PathBuf;
+use std::sync::Arc;
 use std::time::Duration;
 
-use super::{SecretFile, TopicPattern};
+use super::{
+    Companion, FluidColumn, Instrument, QualityTests, ReferenceChange, Sdi12Source, SecretFile,
+    TopicPattern,
+};
 use crate::record::{ChannelId, ChannelKind, Holds, SourceName};
 
 /// What a channel's numbers mean.
@@ -21,6 +25,29 @@ pub struct ChannelSettings {
     pub conversion: Conversion,
     /// How the value stands to its instant.
     pub holds: Holds,
+    /// The instrument behind the number; with one, [`ChannelSettings::conversion`] leads to the instrument's own number.
+    pub instrument: Option<Arc<Instrument>>,
+    /// What the zero of the pressures is changed to.
+    pub reference: Option<Arc<ReferenceChange>>,
+    /// What carries the pressures to another depth.
+    pub column: Option<FluidColumn>,
+    /// What is asked of its readings.
+    pub quality: Option<Arc<QualityTests>>,
+}
+
+impl ChannelSettings {
+    /// Whether a value needs more than the number and [`ChannelSettings::conversion`].
+    #[must_use]
+    pub fn is_instrument(&self) -> bool {
+        self.instrument.is_some() || self.reference.is_some() || self.column.is_some()
+    }
+
+    /// Channels whose values are needed beside the number.
+    pub fn companions(&self) -> impl Iterator<Item = &Companion> {
+        let instrument = self.instrument.iter().flat_map(|i| i.companions());
+        let reference = self.reference.iter().filter_map(|r| r.barometer.as_ref());
+        instrument.chain(reference)
+    }
 }
 
 /// An affine conversion, `scale * raw + offset`.
@@ -62,6 +89,10 @@ pub enum SourceConfig {
     TextLine(TextLineSource),
     /// Registers polled over a serial device.
     ModbusRtu(ModbusRtuSource),
+    /// Registers polled over TCP.
+    ModbusTcp(ModbusTcpSource),
+    /// Sensors of an SDI-12 line behind a serial adapter.
+    Sdi12(Sdi12Source),
     /// Topics of a broker.
     Mqtt(MqttSource),
     /// Log files.
@@ -75,6 +106,8 @@ impl SourceConfig {
         match self {
             Self::TextLine(_) => "text-line",
             Self::ModbusRtu(_) => "modbus-rtu",
+            Self::ModbusTcp(_) => "modbus-tcp",
+            Self::Sdi12(_) => "sdi-12",
             Self::Mqtt(_) => "mqtt",
             Self::Log(_) => "log",
         }
@@ -86,6 +119,8 @@ impl SourceConfig {
         match self {
             Self::TextLine(s) => s.channels.len(),
             Self::ModbusRtu(s) => s.channels.len(),
+            Self::ModbusTcp(s) => s.channels.len(),
+            Self::Sdi12(s) => s.channels.len(),
             Self::Mqtt(s) => s.channels.len(),
             Self::Log(s) => s.channels.len(),
         }
@@ -183,12 +218,29 @@ pub struct ModbusRtuSource {
     pub channels: Vec<ModbusChannel>,
 }
 
+/// Registers polled over TCP, of a device or of the devices behind a gateway.
+#[derive(Debug, Clone, PartialEq)]
+pub struct ModbusTcpSource {
+    /// Name or address of the device or gateway.
+    pub host: String,
+    /// Its port.
+    pub port: u16,
+    /// Time from one scan's start to the next.
+    pub every: Duration,
+    /// How long an answer may take; more than the gateway's own patience with its devices.
+    pub timeout: Duration,
+    /// How often a request without a good answer is made again within a scan.
+    pub retries: u32,
+    /// Channels, in file order.
+    pub channels: Vec<ModbusChannel>,
+}
+
 /// A channel of a Modbus device.
 #[derive(Debug, Clone, PartialEq)]
 pub struct ModbusChannel {
     /// The channel.
     pub id: ChannelId,
-    /// Address of the device on the line, 1 to 247.
+    /// Address of the device: 1 to 247 on a serial line, 0 to 255 over TCP.
     pub unit_id: u8,
     /// Where the number is.
     pub register: Register,
@@ -227,10 +279,29 @@ pub enum RegisterNumber {
     U32,
     /// 32 bits, signed.
     I32,
+    /// 64 bits, unsigned.
+    U64,
+    /// 64 bits, signed.
+    I64,
     /// IEEE 754, 32 bits.
     F32,
     /// IEEE 754, 64 bits.
     F64,
+}
+
+impl Register {
+    /// Its number in manuals that count from 1 and put the table before it: 40103 for holding register 102, six digits
+    /// beyond the 9999th.
+    #[must_use]
+    pub fn manual_number(&self) -> u32 {
+        let table = match self.table {
+            RegisterTable::Holding => 4,
+            RegisterTable::Input => 3,
+        };
+        let ordinal = u32::from(self.address) + 1;
+        let place = if ordinal > 9999 { 100_000 } else { 10_000 };
+        table * place + ordinal
+    }
 }
 
 impl RegisterNumber {
@@ -240,7 +311,7 @@ impl RegisterNumber {
         match self {
             Self::U16 | Self::I16 => 1,
             Self::U32 | Self::I32 | Self::F32 => 2,
-            Self::F64 => 4,
+            Self::U64 | Self::I64 | Self::F64 => 4,
         }
     }
 }

@@ -41,7 +41,8 @@ impl Section<'_> {
         self.quantity_of(key, found, dimension, sign)
     }
 
-    fn quantity_of(
+    /// The same for one item of a list.
+    pub(super) fn quantity_of(
         &self,
         key: &str,
         found: &Spanned<DeValue<'_>>,
@@ -234,7 +235,7 @@ impl Section<'_> {
 }
 
 /// A bare number in the spelling Rust reads.
-fn plain_number(value: &DeValue<'_>) -> Option<String> {
+pub(super) fn plain_number(value: &DeValue<'_>) -> Option<String> {
     match value {
         DeValue::Integer(n) => i64::from_str_radix(n.as_str(), n.radix())
             .ok()

@@ -14,6 +14,8 @@ pub struct Meaning {
     pub conversion: Conversion,
     /// The unit that may stand behind the number, where the device writes it; any other is refused.
     pub unit: Option<Arc<str>>,
+    /// The value needs more than the number: the [`Appraiser`](super::Appraiser) gives it.
+    pub deferred: bool,
 }
 
 impl From<Conversion> for Meaning {
@@ -22,6 +24,7 @@ impl From<Conversion> for Meaning {
         Self {
             conversion,
             unit: None,
+            deferred: false,
         }
     }
 }
@@ -30,7 +33,12 @@ impl From<&ChannelSettings> for Meaning {
     fn from(settings: &ChannelSettings) -> Self {
         Self {
             conversion: settings.conversion,
-            unit: Some(settings.unit.as_str().into()),
+            // Behind an instrument's own number stands no unit of what it measures.
+            unit: settings
+                .instrument
+                .is_none()
+                .then(|| settings.unit.as_str().into()),
+            deferred: settings.is_instrument(),
         }
     }
 }
@@ -93,5 +101,6 @@ pub(crate) fn kilo() -> Meaning {
             offset: 0.0,
         },
         unit: Some("kPa".into()),
+        deferred: false,
     }
 }

@@ -101,9 +101,13 @@ pub(crate) fn reading(
         sampled: when.sampled,
         received: when.received,
         epoch: when.epoch,
-        value: Some(value),
+        value: Some(value).filter(|_| !meaning.deferred),
         raw: Some(raw),
-        quality: Quality::Good,
+        quality: if meaning.deferred {
+            Quality::NotEvaluated
+        } else {
+            Quality::Good
+        },
         device: DeviceStatus::Normal,
         clock: when.clock,
     })

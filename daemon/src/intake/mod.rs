@@ -4,13 +4,17 @@
 //! [`merge::Merge`] takes deliveries from all of them in turn, so that a flooded broker cannot starve a serial line.
 //! What can be refused is refused alone: it is counted, logged once per [`burst`], and handed on as rejected.
 //!
-//! Each protocol is a pure codec with a thin task round it: [`modbus`], [`mod@line`], [`mqtt`]; [`log`] reads files without any task.
+//! Each protocol is a pure codec with a thin task round it: [`modbus`], [`sdi12`], [`mod@line`], [`mqtt`]; [`log`] reads files without any task.
 
+mod absence;
+pub mod appraise;
 pub mod backoff;
 pub mod burst;
 pub mod clock;
 pub mod conversions;
+mod crc;
 mod decode;
+pub mod instrument;
 pub mod line;
 mod link;
 pub mod log;
@@ -19,6 +23,9 @@ pub mod modbus;
 pub mod mqtt;
 mod outlet;
 mod poll;
+pub mod probe;
+mod quality;
+pub mod sdi12;
 mod serial;
 mod window;
 
@@ -33,6 +40,7 @@ use tracing::Instrument as _;
 use crate::config::{SourceConfig, SourceSettings};
 use crate::record::{AckToken, Delivery, SourceName, SourceView};
 
+pub use appraise::Appraiser;
 pub use clock::{Clock, ClockReading};
 pub use conversions::{Conversions, Meaning};
 pub use merge::{Acks, Merge};
@@ -106,6 +114,18 @@ pub fn start(
             let settings = settings.clone();
             spawn(name, around, 0, |outlet, around, _| {
                 modbus::run_rtu(settings, outlet, around)
+            })
+        }
+        SourceConfig::ModbusTcp(settings) => {
+            let settings = settings.clone();
+            spawn(name, around, 0, |outlet, around, _| {
+                modbus::run_tcp(settings, outlet, around)
+            })
+        }
+        SourceConfig::Sdi12(settings) => {
+            let settings = settings.clone();
+            spawn(name, around, 0, |outlet, around, _| {
+                sdi12::run(settings, outlet, around)
             })
         }
         SourceConfig::TextLine(settings) => {

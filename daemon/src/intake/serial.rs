@@ -16,11 +16,22 @@ use crate::config::{Parity, SerialSettings};
 pub(crate) trait Wire: AsyncRead + AsyncWrite + Unpin + Send {
     /// Throws away what has arrived and was not read, the system's own buffer included.
     fn discard_input(&mut self) -> io::Result<()>;
+
+    /// Begins or ends a break, on a line that has one.
+    fn set_break(&mut self, on: bool) -> io::Result<()>;
 }
 
 impl Wire for SerialStream {
     fn discard_input(&mut self) -> io::Result<()> {
         Ok(self.clear(ClearBuffer::Input)?)
+    }
+
+    fn set_break(&mut self, on: bool) -> io::Result<()> {
+        Ok(if on {
+            tokio_serial::SerialPort::set_break(self)?
+        } else {
+            self.clear_break()?
+        })
     }
 }
 

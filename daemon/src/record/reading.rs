@@ -84,6 +84,23 @@ impl Quality {
         })
     }
 
+    /// The more worrying of the two: bad and missing before suspect, before not evaluated, before good.
+    #[must_use]
+    pub fn max_concern(self, other: Self) -> Self {
+        let concern = |q: Self| match q {
+            Self::Good => 0,
+            Self::NotEvaluated => 1,
+            Self::Suspect => 2,
+            Self::Bad => 3,
+            Self::Missing => 4,
+        };
+        if concern(other) > concern(self) {
+            other
+        } else {
+            self
+        }
+    }
+
     /// Whether the watch and limits may use the value.
     #[must_use]
     pub fn usable(self) -> bool {

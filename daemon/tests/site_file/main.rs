@@ -6,6 +6,7 @@
     reason = "a test says what it expects"
 )]
 
+mod instruments;
 mod messages;
 mod reading;
 mod strange;

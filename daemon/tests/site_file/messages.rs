@@ -172,12 +172,6 @@ fn references_name_what_there_is() {
 #[test]
 fn what_is_not_in_this_build_is_refused() {
     one(
-        "kind = \"modbus-rtu\"",
-        "kind = \"modbus-tcp\"",
-        "\"modbus-tcp\"",
-        "source \"skid\": kind = \"modbus-tcp\"\n    this kind of source is not in this build\n    mend: take text-line, modbus-rtu, mqtt or log, or leave the source out",
-    );
-    one(
         "[[publish]]\nkind = \"mqtt\"",
         "[[publish]]\nkind = \"webhook\"",
         "\"webhook\"",

@@ -119,11 +119,7 @@ fn quiet_blocks(
     log: &Path,
     truth: &Truth,
 ) -> anyhow::Result<Vec<crate::record::Block>> {
-    let channels = site
-        .channels
-        .iter()
-        .map(|(id, c)| (id.clone(), c.conversion));
-    let mut reader = LogReader::open(&[log.to_path_buf()], channels)?;
+    let mut reader = LogReader::of_site(&[log.to_path_buf()], site)?;
     let mut history = History::default();
     while let Some(delivery) = reader.next_delivery()? {
         history.add(delivery.readings);

@@ -162,6 +162,9 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
     let mut tick = tokio::time::interval_at(tokio::time::Instant::now() + TICK, TICK);
     tick.set_missed_tick_behavior(tokio::time::MissedTickBehavior::Skip);
     let mut batch = Vec::new();
+    let mut appraiser = intake::Appraiser::new(&site);
+    // Deliveries of the batch that have passed the appraiser.
+    let mut appraised = 0;
     let mut due = None;
     let mut listening = true;
     loop {
@@ -178,6 +181,8 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
             // Nothing more is taken while the disk is full: sources hold back, or count gaps.
             open = merge.turn(&mut batch), if listening && batch.len() < HELD => {
                 listening = open;
+                appraiser.appraise(batch.get_mut(appraised..).unwrap_or_default());
+                appraised = batch.len();
                 due.get_or_insert_with(|| tokio::time::Instant::now() + GROUP);
                 let rows: usize = batch.iter().map(|d| d.readings.len()).sum();
                 now = rows >= ROWS || merge.full().next().is_some();
@@ -199,6 +204,7 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
                 Committed::All => None,
                 Committed::NoSpace => Some(tokio::time::Instant::now() + FULL),
             };
+            appraised = batch.len();
         }
     }
     info!("stopping");
@@ -209,6 +215,7 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
     if ended.is_err() {
         warn!("a source did not end in time; what it had not handed over stays with its sender");
     }
+    appraiser.appraise(batch.get_mut(appraised..).unwrap_or_default());
     if commit(&mut keeper, &mut batch, &acks).await? == Committed::NoSpace {
         warn!("the disk is full; what was not committed stays unacknowledged with its senders");
     }

@@ -1,5 +1,7 @@
 //! Words of the site file, as `check` says them.
 
+use std::time::Duration;
+
 use borewake_model::ground::EdgeKind;
 use borewake_model::units::significant;
 
@@ -61,16 +63,24 @@ pub(super) fn broker_words(endpoint: &MqttEndpoint) -> String {
     format!("{scheme}://{host}:{}{user}", endpoint.port)
 }
 
+fn every_words(every: Duration) -> String {
+    format!("every {} s", significant(every.as_secs_f64(), 4))
+}
+
 pub(super) fn source_words(config: &SourceConfig) -> String {
     match config {
         SourceConfig::TextLine(source) => serial_words(&source.serial),
         SourceConfig::ModbusRtu(source) => {
-            let every = source.every.as_secs_f64();
-            format!(
-                "{}, every {} s",
-                serial_words(&source.serial),
-                significant(every, 4)
-            )
+            let line = serial_words(&source.serial);
+            format!("{line}, {}", every_words(source.every))
+        }
+        SourceConfig::ModbusTcp(source) => {
+            let every = every_words(source.every);
+            format!("{}:{}, {every}", source.host, source.port)
+        }
+        SourceConfig::Sdi12(source) => {
+            let line = serial_words(&source.serial);
+            format!("{line}, {}", every_words(source.every))
         }
         SourceConfig::Mqtt(source) => broker_words(&source.endpoint),
         SourceConfig::Log(source) => match &source.path {

@@ -81,6 +81,12 @@ pub(super) fn channels(
         let key = format!("{}: channel", gauge.path);
         channels.resolve(report, key, &gauge.channel, ChannelKind::Pressure);
     }
+    for read in sources.iter().flat_map(|s| &s.channels) {
+        for companion in &read.companions {
+            let key = companion.key.clone();
+            channels.resolve(report, key, &companion.channel, companion.kind);
+        }
+    }
     shares(report, wells);
     one_gauge_each(report, gauges);
     one_source_a_port(report, sources);

@@ -3,9 +3,13 @@
 mod basics;
 mod cross;
 mod ground;
+mod instrument;
 mod limits;
+mod modbus;
 mod mqtt;
 mod points;
+mod quality;
+mod sdi12;
 mod serial;
 mod sources;
 

@@ -1,15 +1,18 @@
 //! `[[source]]` and its channels: what all kinds share, and the log.
 
 use std::path::Path;
+use std::sync::Arc;
 use std::time::Duration;
 
 use borewake_model::units::Dimension;
 
 use super::super::section::{At, Section};
 use super::super::{
-    ChannelSettings, Conversion, LogSource, SourceConfig, SourceSettings, TopicPattern,
+    ChannelSettings, Conversion, Instrument, LogSource, SourceConfig, SourceSettings, TopicPattern,
 };
-use super::{mqtt, serial};
+use super::instrument::{CompanionRead, instrument};
+use super::quality::quality;
+use super::{modbus, mqtt, sdi12, serial};
 use crate::record::{ChannelId, ChannelKind, Holds, SourceName};
 
 /// A source as written.
@@ -26,6 +29,8 @@ pub(super) struct ChannelRead {
     pub(super) id: At<String>,
     pub(super) pattern: TopicPattern,
     pub(super) settings: ChannelSettings,
+    /// Channels it names.
+    pub(super) companions: Vec<CompanionRead>,
     pub(super) path: String,
 }
 
@@ -64,24 +69,16 @@ pub(super) fn sources(root: &mut Section<'_>, folder: &Path) -> Vec<SourceRead> 
         let name = SourceName::from(name.map(|n| n.value).unwrap_or_default().as_str());
         let kind = section.must(
             "kind",
-            "kind = \"modbus-rtu\", \"text-line\", \"mqtt\" or \"log\"",
+            "kind = \"modbus-rtu\", \"modbus-tcp\", \"sdi-12\", \"text-line\", \"mqtt\" or \"log\"",
             |s, k| s.word(k, &kinds),
         );
         let (config, channels, port) = match kind {
             Some(Kind::TextLine) => serial::text_line(&mut section, &name),
-            Some(Kind::ModbusRtu) => serial::modbus(&mut section, &name),
+            Some(Kind::ModbusRtu) => modbus::rtu(&mut section, &name),
             Some(Kind::Mqtt) => mqtt::source(&mut section, &name, folder),
             Some(Kind::Log) => log(&mut section, &name, folder),
-            Some(Kind::ModbusTcp | Kind::Sdi12) => {
-                root.report.value(
-                    &section.value_span("kind"),
-                    section.key("kind"),
-                    "this kind of source is not in this build",
-                    "take text-line, modbus-rtu, mqtt or log, or leave the source out",
-                );
-                sources.push(unread(section, name));
-                continue;
-            }
+            Some(Kind::ModbusTcp) => modbus::tcp(&mut section, &name),
+            Some(Kind::Sdi12) => sdi12::source(&mut section, &name),
             None => {
                 sources.push(unread(section, name));
                 continue;
@@ -165,9 +162,27 @@ pub(super) fn channel(table: &mut Section<'_>, source: &SourceName) -> ChannelRe
     let kind = table.must("kind", "kind = \"pressure\" or \"rate\"", |t, k| {
         t.word(k, &kinds)
     });
-    let (unit, conversion) = unit(table, kind);
+    let (unit, plain, si) = unit(table, kind);
+    let instrument = instrument(table, kind, (si.scale, si.offset));
+    let quality = quality(table, kind).map(Arc::new);
+    let conversion = if instrument.instrument.is_some() {
+        plain
+    } else {
+        Conversion {
+            scale: si.scale * plain.scale,
+            offset: si.to_si(plain.offset),
+        }
+    };
     let holds = [("after", Holds::After), ("before", Holds::Before)];
-    let holds = table.word("holds", &holds);
+    let mut holds = table.word("holds", &holds);
+    if let Some(Instrument::Totaliser(_)) = instrument.instrument.as_deref() {
+        if holds == Some(Holds::After) {
+            let what = "the rate of a totaliser is the mean since the count before";
+            let (span, key) = (table.value_span("holds"), table.key("holds"));
+            table.report.value(&span, key, what, "leave it out");
+        }
+        holds = Some(Holds::Before);
+    }
     if holds.is_some() && kind.is_some_and(|k| !matches!(k, ChannelKind::Rate | ChannelKind::Rain))
     {
         table.noted("holds", "only a rate holds: this key changes nothing here");
@@ -180,7 +195,12 @@ pub(super) fn channel(table: &mut Section<'_>, source: &SourceName) -> ChannelRe
             unit,
             conversion,
             holds: holds.unwrap_or_default(),
+            instrument: instrument.instrument,
+            reference: instrument.reference,
+            column: instrument.column,
+            quality,
         },
+        companions: instrument.companions,
         id,
         pattern,
         path: table.path().to_owned(),
@@ -188,7 +208,7 @@ pub(super) fn channel(table: &mut Section<'_>, source: &SourceName) -> ChannelRe
 }
 
 /// What a kind of channel measures.
-fn dimension(kind: ChannelKind) -> Dimension {
+pub(super) fn dimension(kind: ChannelKind) -> Dimension {
     match kind {
         ChannelKind::Pressure | ChannelKind::Barometer => Dimension::Pressure,
         ChannelKind::Rate => Dimension::Rate,
@@ -198,8 +218,8 @@ fn dimension(kind: ChannelKind) -> Dimension {
     }
 }
 
-/// Reads `unit`, `scale` and `offset`: SI = unit of (scale times number plus offset).
-fn unit(table: &mut Section<'_>, kind: Option<ChannelKind>) -> (String, Conversion) {
+/// Reads `unit`, `scale` and `offset`: the unit's text, scale and offset, and what leads from the unit to SI.
+fn unit(table: &mut Section<'_>, kind: Option<ChannelKind>) -> (String, Conversion, Conversion) {
     let mend = kind.map_or("unit = \"…\"".to_owned(), |k| {
         format!(
             "unit = \"{}\"",
@@ -217,19 +237,23 @@ fn unit(table: &mut Section<'_>, kind: Option<ChannelKind>) -> (String, Conversi
     }
     let scale = scale.map_or(1.0, |s| s.value);
     let offset = offset.map_or(0.0, |o| o.value);
-    let mut conversion = Conversion { scale, offset };
+    let mut si = Conversion {
+        scale: 1.0,
+        offset: 0.0,
+    };
     if let (Some(unit), Some(kind)) = (&unit, kind) {
         match dimension(kind).conversion(&unit.value) {
             Ok(found) => {
-                conversion = Conversion {
-                    scale: found.scale * scale,
-                    offset: found.to_si(offset),
+                si = Conversion {
+                    scale: found.scale,
+                    offset: found.to_si(0.0),
                 };
             }
             Err(wrong) => table.wrong("unit", unit, wrong.what(), wrong.mend()),
         }
     }
-    (unit.map(|u| u.value).unwrap_or_default(), conversion)
+    let unit = unit.map(|u| u.value).unwrap_or_default();
+    (unit, Conversion { scale, offset }, si)
 }
 
 /// Reads placeholders.

@@ -6,6 +6,8 @@ use std::path::PathBuf;
 use thiserror::Error;
 
 use super::table::{Sink, Table};
+use crate::config::{ChannelSettings, Site};
+use crate::intake::Appraiser;
 use crate::intake::conversions::Meaning;
 use crate::record::{ChannelId, Delivery, SourceName, Stamp};
 
@@ -42,6 +44,7 @@ pub struct LogReader {
     tables: Vec<Table>,
     sink: Sink,
     source: SourceName,
+    appraiser: Appraiser,
 }
 
 impl LogReader {
@@ -71,6 +74,24 @@ impl LogReader {
             tables,
             sink,
             source: "log".into(),
+            appraiser: Appraiser::default(),
+        })
+    }
+
+    /// Opens log files of a site: their numbers are what the site's instruments deliver, and come out converted and judged
+    /// as they do live.
+    ///
+    /// # Errors
+    /// A file cannot be read, or its header is of no known form.
+    pub fn of_site(paths: &[PathBuf], site: &Site) -> Result<Self, LogError> {
+        let meaning = |settings: &ChannelSettings| Meaning {
+            unit: None,
+            ..Meaning::from(settings)
+        };
+        let channels = site.channels.iter().map(|(id, c)| (id.clone(), meaning(c)));
+        Ok(Self {
+            appraiser: Appraiser::new(site),
+            ..Self::open(paths, channels)?
         })
     }
 
@@ -92,12 +113,14 @@ impl LogReader {
         if readings.is_empty() && rejected.is_empty() {
             return Ok(None);
         }
-        Ok(Some(Delivery {
+        let mut delivery = Delivery {
             source: self.source.clone(),
             readings,
             rejected,
             ack: None,
-        }))
+        };
+        self.appraiser.appraise(std::slice::from_mut(&mut delivery));
+        Ok(Some(delivery))
     }
 
     /// Instant of the next row; `None` at the end of all files.

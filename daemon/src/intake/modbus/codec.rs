@@ -1,6 +1,7 @@
-//! Frames and numbers of Modbus RTU. Pure: bytes in, bytes or values out.
+//! Requests, answers and numbers of Modbus, as every kind of line carries them. Pure: bytes in, bytes or values out.
 //!
-//! After the MODBUS application protocol specification V1.1b3 and the MODBUS over serial line guide V1.02 (Modbus Organization).
+//! After the MODBUS application protocol specification V1.1b3 (Modbus Organization). [`super::rtu`] and [`super::tcp`] put
+//! frames round what is here.
 
 use thiserror::Error;
 
@@ -8,20 +9,6 @@ use crate::config::{ByteOrder, RegisterNumber, RegisterTable};
 
 /// Registers one request may ask for.
 pub const MOST_REGISTERS: u16 = 125;
-
-/// CRC-16 of the serial line guide: polynomial 0xA001 reflected, beginning with 0xFFFF. Sent low byte first.
-#[must_use]
-pub fn crc16(bytes: &[u8]) -> u16 {
-    bytes.iter().fold(0xFFFF, |crc, &byte| {
-        (0..8).fold(crc ^ u16::from(byte), |crc, _| {
-            if crc & 1 == 1 {
-                crc >> 1 ^ 0xA001
-            } else {
-                crc >> 1
-            }
-        })
-    })
-}
 
 /// A request for neighbouring registers of one device.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -54,6 +41,14 @@ pub enum FrameError {
         /// As delivered.
         found: u16,
         /// As computed.
+        due: u16,
+    },
+    /// The answer carries another number than the request: it belongs to an earlier one.
+    #[error("answer to request {found}, request {due} was asked")]
+    Transaction {
+        /// As delivered.
+        found: u16,
+        /// As asked.
         due: u16,
     },
     /// Another device speaks.
@@ -98,14 +93,12 @@ impl Request {
         }
     }
 
-    /// The frame to send.
+    /// What is asked, without address of the device, number or checksum.
     #[must_use]
-    pub fn frame(&self) -> [u8; 8] {
+    pub fn pdu(&self) -> [u8; 5] {
         let [a, b] = self.address.to_be_bytes();
         let [c, d] = self.count.to_be_bytes();
-        let (unit, function) = (self.unit, self.function());
-        let [low, high] = crc16(&[unit, function, a, b, c, d]).to_le_bytes();
-        [unit, function, a, b, c, d, low, high]
+        [self.function(), a, b, c, d]
     }
 
     /// Bytes of registers in the answer; a request over the limit gives 250, which no answer of its own can have.
@@ -114,7 +107,7 @@ impl Request {
         u8::try_from(self.count.min(MOST_REGISTERS) * 2).unwrap_or(u8::MAX)
     }
 
-    /// Length of the answer that begins with `head`; `None` while that cannot be told.
+    /// Length of the answer that begins with `head`: first the device, then the function; `None` while it cannot be told.
     ///
     /// # Errors
     /// It is not the beginning of an answer to this request.
@@ -125,7 +118,7 @@ impl Request {
                 found,
                 due: self.unit,
             }),
-            [_, found, ..] if found == function | 0x80 => Ok(Some(5)),
+            [_, found, ..] if found == function | 0x80 => Ok(Some(3)),
             [_, found, ..] if found != function => Err(FrameError::Function {
                 found,
                 due: function,
@@ -134,28 +127,23 @@ impl Request {
                 found,
                 due: self.payload(),
             }),
-            [_, _, payload, ..] => Ok(Some(usize::from(payload) + 5)),
+            [_, _, payload, ..] => Ok(Some(usize::from(payload) + 3)),
             _ => Ok(None),
         }
     }
 
-    /// Reads a whole answer.
+    /// Reads a whole answer: device, function, and what follows.
     ///
     /// # Errors
-    /// It is not an answer to this request, or is damaged.
-    pub fn read_reply(&self, frame: &[u8]) -> Result<Reply, FrameError> {
-        let short = FrameError::Short(frame.len());
-        let length = self.reply_length(frame)?.ok_or(short)?;
-        if frame.len() > length {
-            return Err(FrameError::Trailing(frame.len() - length));
+    /// It is not an answer to this request.
+    pub fn read_reply(&self, body: &[u8]) -> Result<Reply, FrameError> {
+        let short = FrameError::Short(body.len());
+        let length = self.reply_length(body)?.ok_or(short)?;
+        if body.len() > length {
+            return Err(FrameError::Trailing(body.len() - length));
         }
-        if frame.len() < length {
+        if body.len() < length {
             return Err(short);
-        }
-        let (body, crc) = frame.split_last_chunk::<2>().ok_or(short)?;
-        let (found, due) = (u16::from_le_bytes(*crc), crc16(body));
-        if found != due {
-            return Err(FrameError::Checksum { found, due });
         }
         match *body {
             [_, _, code] => Ok(Reply::Exception(Exception(code))),
@@ -193,6 +181,12 @@ impl Exception {
             5 | 6 | 0x0A | 0x0B => Remedy::Later,
             _ => Remedy::Device,
         }
+    }
+
+    /// Whether a gateway says that the device behind it does not answer.
+    #[must_use]
+    pub fn unreachable(self) -> bool {
+        matches!(self.0, 0x0A | 0x0B)
     }
 
     /// Its name in the specification.
@@ -240,6 +234,9 @@ pub fn number(registers: &[u16], kind: RegisterNumber, order: ByteOrder) -> Opti
         RegisterNumber::U32 => f64::from(u32::from_be_bytes([a, b, c, d])),
         RegisterNumber::I32 => f64::from(i32::from_be_bytes([a, b, c, d])),
         RegisterNumber::F32 => f64::from(f32::from_be_bytes([a, b, c, d])),
+        // Counts beyond 2^53 come out as the nearest number there is.
+        RegisterNumber::U64 => u64::from_be_bytes(bytes) as f64,
+        RegisterNumber::I64 => i64::from_be_bytes(bytes) as f64,
         RegisterNumber::F64 => f64::from_be_bytes(bytes),
     })
 }
@@ -249,85 +246,20 @@ mod tests {
     use super::*;
     use proptest::prelude::*;
 
-    fn hex(text: &str) -> Vec<u8> {
-        text.split(' ')
-            .map(|b| u8::from_str_radix(b, 16).unwrap())
-            .collect()
-    }
-
-    /// Serial line guide V1.02 and application protocol V1.1b3: the example 11 03 00 6B 00 03; the check value of
-    /// CRC-16/MODBUS over "123456789"; the rest computed with the same polynomial.
+    /// Application protocol V1.1b3, section 7: what is wrong with the request is not asked again, what passes is.
     #[test]
-    fn checksums_fit_the_published_frames() {
-        assert_eq!(crc16(b"123456789"), 0x4B37);
-        for (frame, crc) in [
-            ("11 03 00 6B 00 03", "76 87"),
-            ("11 03 06 AE 41 56 52 43 40", "49 AD"),
-            ("01 03 00 00 00 0A", "C5 CD"),
-            ("01 04 00 00 00 02", "71 CB"),
-            ("01 83 02", "C0 F1"),
-            ("11 05 00 AC FF 00", "4E 8B"),
-            ("11 06 00 01 00 03", "9A 9B"),
-            ("11 10 00 01 00 02 04 00 0A 01 02", "C6 F0"),
-        ] {
-            let mut bytes = hex(frame);
-            assert_eq!(crc16(&bytes).to_le_bytes().to_vec(), hex(crc), "{frame}");
-            bytes.extend(hex(crc));
-            assert_eq!(crc16(&bytes), 0, "over its own checksum: {frame}");
+    fn exceptions_are_mapped_to_what_helps() {
+        let remedy = |code| Exception(code).remedy();
+        for settings in [1, 2, 3] {
+            assert_eq!(remedy(settings), Remedy::Settings);
         }
-    }
-
-    const SPEC: Request = Request {
-        unit: 0x11,
-        table: RegisterTable::Holding,
-        address: 0x6B,
-        count: 3,
-    };
-
-    /// The example of the application protocol specification, section 6.3.
-    #[test]
-    fn the_specifications_example_is_asked_and_read() {
-        assert_eq!(SPEC.frame().to_vec(), hex("11 03 00 6B 00 03 76 87"));
-        let reply = hex("11 03 06 AE 41 56 52 43 40 49 AD");
-        let registers = vec![0xAE41, 0x5652, 0x4340];
-        assert_eq!(SPEC.read_reply(&reply), Ok(Reply::Registers(registers)));
-    }
-
-    #[test]
-    fn what_is_no_answer_is_told_apart() {
-        let reply = hex("11 03 06 AE 41 56 52 43 40 49 AD");
-        let other = |unit, table, count| Request {
-            unit,
-            table,
-            count,
-            ..SPEC
-        };
-        let read = |r: Request| r.read_reply(&reply).unwrap_err();
-        assert!(matches!(
-            read(other(1, RegisterTable::Holding, 3)),
-            FrameError::Unit { .. }
-        ));
-        assert!(matches!(
-            read(other(0x11, RegisterTable::Input, 3)),
-            FrameError::Function { .. }
-        ));
-        assert!(matches!(
-            read(other(0x11, RegisterTable::Holding, 2)),
-            FrameError::Length { .. }
-        ));
-        assert!(matches!(
-            SPEC.read_reply(&reply[..10]),
-            Err(FrameError::Short(10))
-        ));
-        assert!(matches!(
-            SPEC.read_reply(&[&reply[..], &[0]].concat()),
-            Err(FrameError::Trailing(1))
-        ));
-        let exception = Request { unit: 1, ..SPEC }.read_reply(&hex("01 83 02 C0 F1"));
-        assert_eq!(exception, Ok(Reply::Exception(Exception(2))));
-        assert_eq!(Exception(2).remedy(), Remedy::Settings);
-        assert_eq!(Exception(6).remedy(), Remedy::Later);
-        assert_eq!(Exception(4).remedy(), Remedy::Device);
+        for later in [5, 6, 0x0A, 0x0B] {
+            assert_eq!(remedy(later), Remedy::Later);
+        }
+        for device in [4, 8, 7, 200] {
+            assert_eq!(remedy(device), Remedy::Device);
+        }
+        assert!(Exception(0x0B).unreachable() && !Exception(6).unreachable());
     }
 
     /// 123.456 as IEEE 754 single precision is 42 F6 E9 79; the four orders computed.
@@ -384,29 +316,6 @@ mod tests {
             prop_assert_eq!(number(&words, RegisterNumber::I32, order), Some(f64::from(int)));
             let words = registers(&float.to_be_bytes(), order);
             prop_assert_eq!(number(&words, RegisterNumber::F64, order), Some(float));
-        }
-
-        #[test]
-        fn registers_come_back_and_any_flipped_bit_is_seen(
-            words in prop::collection::vec(any::<u16>(), 1..=125),
-            flip in any::<prop::sample::Index>(),
-        ) {
-            let count = u16::try_from(words.len()).unwrap();
-            let request = Request { unit: 9, table: RegisterTable::Input, address: 0, count };
-            let mut frame = vec![9, 4, request.payload()];
-            frame.extend(words.iter().flat_map(|w| w.to_be_bytes()));
-            frame.extend(crc16(&frame).to_le_bytes());
-            prop_assert_eq!(request.read_reply(&frame), Ok(Reply::Registers(words)));
-            let bit = flip.index(frame.len() * 8);
-            frame[bit / 8] ^= 1 << (bit % 8);
-            prop_assert!(request.read_reply(&frame).is_err());
-        }
-
-        #[test]
-        fn no_bytes_upset_the_reader(bytes in prop::collection::vec(any::<u8>(), 0..300), count in 1_u16..=125) {
-            let request = Request { count, ..SPEC };
-            let _ = request.reply_length(&bytes);
-            let _ = request.read_reply(&bytes);
         }
     }
 }

@@ -7,21 +7,20 @@ use std::time::Duration;
 use tokio::time::Instant;
 
 use super::codec::{Exception, FrameError, Remedy, number};
-use super::master::{Master, ReadError};
+use super::master::{Line, Master, ReadError};
 use super::plan::{Block, Member, plan};
 use crate::config::ModbusChannel;
 use crate::intake::Surroundings;
-use crate::intake::backoff::Backoff;
+use crate::intake::absence::Absence;
 use crate::intake::decode::{Refusal, When, reading};
 use crate::intake::poll::{Round, Scan};
-use crate::intake::serial::Wire;
 use crate::record::{ChannelId, DeviceStatus, Reading, RejectReason, SourceName};
 
 /// Asks all devices, and remembers which of them are not worth asking for a while.
 pub(crate) struct Scanner {
     source: SourceName,
     blocks: Vec<Planned>,
-    units: BTreeMap<u8, Unit>,
+    units: BTreeMap<u8, Absence>,
 }
 
 /// A block, and until when it is not asked for.
@@ -30,21 +29,9 @@ struct Planned {
     held: Option<Instant>,
 }
 
-/// A device on the line.
-#[derive(Default)]
-struct Unit {
-    /// Scans in a row without an answer.
-    silent: u32,
-    backoff: Backoff,
-    held: Option<Instant>,
-}
-
 impl Scanner {
     /// A block whose settings the device refuses is asked for again after this long, in case the device was mended.
     const REFUSED: Duration = Duration::from_secs(600);
-
-    /// Scans without an answer after which a device is asked less often, so that it does not slow down the others.
-    const SILENT: u32 = 3;
 
     pub(crate) fn new(channels: &[ModbusChannel], source: SourceName) -> Self {
         let planned = |block| Planned { block, held: None };
@@ -56,7 +43,7 @@ impl Scanner {
     }
 
     /// Rounds through this master.
-    pub(crate) fn over<W>(&mut self, master: Master<W>) -> Over<'_, W> {
+    pub(crate) fn over<L>(&mut self, master: Master<L>) -> Over<'_, L> {
         Over {
             scanner: self,
             master,
@@ -78,20 +65,19 @@ impl Scanner {
         };
         let block = &planned.block;
         let unit = self.units.entry(block.request.unit).or_default();
-        if !matches!(answer, Err(ReadError::Silent { .. })) {
-            *unit = Unit::default();
-            scan.answered = true;
+        let silent = matches!(answer, Err(ReadError::Silent { .. }));
+        if is_absent(&answer) {
+            unit.missed();
+        } else {
+            unit.answered();
         }
+        scan.answered |= !silent;
         match answer {
             Ok(registers) => take(scan, block, &registers, when, &self.source, around),
             Err(ReadError::Gone(error)) => return Err(error),
             Err(ReadError::Silent { unit: address }) => {
                 scan.lose(block.channels(), when, DeviceStatus::Normal);
                 scan.trouble = Some(format!("device {address} does not answer"));
-                unit.silent += 1;
-                if unit.silent >= Self::SILENT {
-                    unit.held = Some(Instant::now() + unit.backoff.wait());
-                }
             }
             Err(ReadError::Garbled { why, raw }) => {
                 scan.lose(block.channels(), when, DeviceStatus::Normal);
@@ -138,20 +124,19 @@ impl Scanner {
 
     /// Whether a block is left alone for now.
     fn held(&self, planned: &Planned) -> bool {
-        let now = Instant::now();
-        let held = |until: Option<Instant>| until.is_some_and(|u| u > now);
         let unit = self.units.get(&planned.block.request.unit);
-        held(planned.held) || held(unit.and_then(|u| u.held))
+        planned.held.is_some_and(|until| until > Instant::now())
+            || unit.is_some_and(Absence::is_held)
     }
 }
 
 /// Rounds of all devices through one master.
-pub(crate) struct Over<'s, W> {
+pub(crate) struct Over<'s, L> {
     scanner: &'s mut Scanner,
-    master: Master<W>,
+    master: Master<L>,
 }
 
-impl<W: Wire> Round for Over<'_, W> {
+impl<L: Line> Round for Over<'_, L> {
     async fn round(&mut self, around: &Surroundings) -> io::Result<Scan> {
         let scanner = &mut *self.scanner;
         let mut scan = Scan::default();
@@ -168,7 +153,7 @@ impl<W: Wire> Round for Over<'_, W> {
                 continue;
             }
             let answer = self.master.read(&request).await;
-            if matches!(answer, Err(ReadError::Silent { .. })) {
+            if is_absent(&answer) {
                 silent_now.push(request.unit);
             }
             if scanner.settle(index, answer, &mut scan, around)? {
@@ -190,6 +175,15 @@ impl Block {
     /// Its channels.
     fn channels(&self) -> impl Iterator<Item = &ChannelId> {
         self.members.iter().map(|m| &m.channel)
+    }
+}
+
+/// Whether the device does not answer, or a gateway says so of it.
+fn is_absent(answer: &Result<Vec<u16>, ReadError>) -> bool {
+    match answer {
+        Err(ReadError::Silent { .. }) => true,
+        Err(ReadError::Exception(exception)) => exception.unreachable(),
+        _ => false,
     }
 }
 

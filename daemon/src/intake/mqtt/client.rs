@@ -51,6 +51,15 @@ pub struct Message {
     pub packet: Option<u16>,
 }
 
+/// Whether the broker keeps what we did not acknowledge.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub(super) enum Session {
+    /// It does, for the next connection.
+    Kept,
+    /// It forgets us.
+    Passing,
+}
+
 /// A connection to a broker, made again and again.
 pub(super) struct Broker {
     client: AsyncClient,
@@ -75,10 +84,11 @@ impl Broker {
         client_id: &str,
         password: Option<&Secret>,
         waiting: usize,
+        session: Session,
     ) -> Self {
         let mut options = MqttOptions::new(client_id, &endpoint.host, endpoint.port);
         options
-            .set_clean_session(false)
+            .set_clean_session(session == Session::Passing)
             .set_manual_acks(true)
             .set_keep_alive(KEEP_ALIVE)
             .set_max_packet_size(LONGEST, 64 * 1024);

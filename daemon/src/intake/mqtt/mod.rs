@@ -20,8 +20,8 @@ use super::burst::Burst;
 use super::outlet::{Closed, Outlet};
 use super::{IntakeError, Surroundings, stopped};
 use crate::config::MqttSource;
-use crate::record::{AckToken, SourceName};
-use client::{Acknowledger, Broker, Event, Message};
+use crate::record::{AckToken, Reading, Rejected, SourceName};
+use client::{Acknowledger, Broker, Event, Message, Session};
 
 /// Messages that brokers send before they wait for an acknowledgement: the usual default of 20, which a client of MQTT 3.1.1
 /// cannot ask about. With so many waiting, the store commits at once.
@@ -73,6 +73,64 @@ impl Entry {
                 .map_err(secret)?,
         })
     }
+
+    /// The same entry under a name of its own: whoever only looks must neither push the daemon out of its session nor take
+    /// its messages.
+    #[must_use]
+    pub(crate) fn to_look(self) -> Self {
+        Self {
+            client_id: format!("{}-look-{:08x}", self.client_id, fastrand::u32(..)),
+            ..self
+        }
+    }
+}
+
+/// Listens to topics until `until`, or until `enough` of what they say.
+///
+/// # Errors
+/// The broker cannot be entered, or refuses a subscription.
+pub(crate) async fn look(
+    settings: &MqttSource,
+    entry: &Entry,
+    source: &SourceName,
+    around: &Surroundings,
+    until: Instant,
+    mut enough: impl FnMut(Vec<Reading>, Vec<Rejected>) -> bool,
+) -> Result<(), String> {
+    let password = entry.password.as_ref();
+    let mut broker = Broker::new(
+        &settings.endpoint,
+        &entry.client_id,
+        password,
+        MOST_WAITING,
+        Session::Passing,
+    );
+    let decoder = payload::Decoder::new(&settings.channels);
+    loop {
+        let (mut events, _) = broker.split();
+        let Ok(event) = tokio::time::timeout_at(until, events.next()).await else {
+            return Ok(());
+        };
+        match event {
+            Event::Connected { .. } => {
+                broker.subscribe(decoder.filters());
+            }
+            Event::Refused(topics) => {
+                let topics = topics.join(", ");
+                return Err(format!("the broker refuses the subscription to {topics}"));
+            }
+            Event::Message(message) => {
+                let now = around.clock.read();
+                let (readings, rejected) = decoder.read(&message, &around.conversions, source, now);
+                if enough(readings, rejected) {
+                    broker.leave(until).await;
+                    return Ok(());
+                }
+            }
+            Event::Lost(why) => return Err(why),
+            Event::Other => {}
+        }
+    }
 }
 
 /// Which connection a message came over, and its number there. Numbers begin again with every connection, so a token of an
@@ -109,6 +167,7 @@ pub(super) async fn run(
         &entry.client_id,
         entry.password.as_ref(),
         MOST_WAITING,
+        Session::Kept,
     );
     let mut task = Task {
         decoder: payload::Decoder::new(&settings.channels),
