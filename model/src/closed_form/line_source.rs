@@ -33,14 +33,23 @@ pub fn superpose(path: Path<'_>, t: f64, step: impl Fn(f64) -> f64) -> f64 {
     sum
 }
 
-/// Line source at `well`, felt at `gauge`, beside a sealed straight line through `on` and `through`.
+/// What a straight line through the ground does to pressure.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Line {
+    /// Nothing passes: the image of a well has its sign.
+    Sealed,
+    /// The pressure on it is held: the image has the opposite sign.
+    Held,
+}
+
+/// Line source at `well`, felt at `gauge`, beside a straight line through `on` and `through`, by its image.
 ///
 /// The gauge lies on the well's side; beyond the line nothing is felt. Source: Ferris et al. 1962, USGS WSP 1536-E.
 #[must_use]
-pub fn sealed(
-    well: Point,
-    gauge: Point,
+pub fn beside_line(
+    line: Line,
     (on, through): (Point, Point),
+    (well, gauge): (Point, Point),
     transmissivity: f64,
     storativity: f64,
     t: f64,
@@ -49,26 +58,12 @@ pub fn sealed(
     if beyond {
         return 0.0;
     }
+    let sign = match line {
+        Line::Sealed => 1.0,
+        Line::Held => -1.0,
+    };
     line_source(direct, transmissivity, storativity, t)
-        + line_source(image, transmissivity, storativity, t)
-}
-
-/// As [`sealed`], for a straight line on which the pressure is held.
-#[must_use]
-pub fn constant_head(
-    well: Point,
-    gauge: Point,
-    (on, through): (Point, Point),
-    transmissivity: f64,
-    storativity: f64,
-    t: f64,
-) -> f64 {
-    let (direct, image, beyond) = distances(well, gauge, on, through);
-    if beyond {
-        return 0.0;
-    }
-    line_source(direct, transmissivity, storativity, t)
-        - line_source(image, transmissivity, storativity, t)
+        + sign * line_source(image, transmissivity, storativity, t)
 }
 
 /// Distance to the well, to its image, and whether the gauge lies beyond the line.

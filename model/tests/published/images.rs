@@ -1,6 +1,6 @@
 //! Superposition and images against exact values.
 
-use borewake_model::closed_form::{constant_head, line_source, sealed, superpose};
+use borewake_model::closed_form::{Line, beside_line, line_source, superpose};
 
 // Heads in metres, T = 1e-3 m2/s, S = 1e-4, r = 50 m: the same formula in other units.
 const T: f64 = 1e-3;
@@ -59,11 +59,10 @@ fn images_behind_a_sealed_and_a_held_line() {
     ] {
         let at = |f: f64, exact: f64| assert!((0.01 * f - exact).abs() < 1e-10, "{t}: {f} {exact}");
         at(line_source(50.0, T, S, t), endless);
-        at(sealed([0.0, 0.0], [50.0, 0.0], line, T, S, t), barrier);
-        at(
-            constant_head([0.0, 0.0], [50.0, 0.0], line, T, S, t),
-            recharge,
-        );
-        at(sealed([0.0, 0.0], [300.0, 0.0], line, T, S, t), 0.0);
+        let beside = |kind, x| beside_line(kind, line, ([0.0, 0.0], [x, 0.0]), T, S, t);
+        at(beside(Line::Sealed, 50.0), barrier);
+        at(beside(Line::Held, 50.0), recharge);
+        at(beside(Line::Sealed, 300.0), 0.0);
+        at(beside(Line::Held, 250.0), 0.0);
     }
 }
