@@ -25,7 +25,7 @@ fn a_site_that_holds_is_summed_up() {
     let told = text(&output.stdout);
     for line in [
         "Sorrel Flat (sorrel-flat)",
-        "  name        transmissivity m3/(Pa s)  storativity m/Pa  diffusivity m2/s  leakance below m/(Pa s)",
+        "  name        transmissivity m3/(Pa s)  storativity m/Pa  diffusivity m2/s  anisotropy  leakance below m/(Pa s)",
         "  O-2      310     -480  -        lower sand  o2.pressure  absolute   downhole       120             2",
         "  skid          modbus-rtu         1  /dev/ttyUSB0 19200 8E1, every 1 s",
         "  limit-O-2-above  above       6100          0.48   30 s  high      initials and date",
@@ -67,4 +67,68 @@ fn json_is_one_document() {
     assert_eq!(document["holds"], true);
     assert_eq!(document["site"]["gauges"][0]["channel"], "o2.pressure");
     assert_eq!(document["model"]["usable"], false);
+    assert!(document["mesh"]["least_angle"].as_f64().unwrap() > 15.0);
+}
+
+#[test]
+fn the_mesh_is_told_and_a_ground_without_one_names_the_place() {
+    let told = text(&check(&["check", "full.toml"]).stdout);
+    for piece in [
+        "\nMesh\n",
+        " nodes in one layer\n",
+        "least angle ",
+        "steepest grading ",
+    ] {
+        assert!(told.contains(piece), "{piece}\n--\n{told}");
+    }
+    let folder = tempfile::tempdir().unwrap();
+    let path = folder.path().join("site.toml");
+    let crossing = "[[barrier]]\nname = \"cross fault\"\nline = [[\"1 km\", \"0 m\"], [\"2 km\", \"0 m\"]]\nconductance = \"0 m3/(Pa s m)\"\n\n[[barrier]]";
+    let full = include_str!("sites/full.toml").replacen("[[barrier]]", crossing, 1);
+    std::fs::write(&path, full).unwrap();
+    let output = check(&["check", path.to_str().unwrap()]);
+    assert_eq!(output.status.code(), Some(1));
+    let told = text(&output.stdout);
+    for piece in [
+        "cannot be meshed near x = 14",
+        "barrier cross fault and barrier east fault cross",
+        "does not hold",
+    ] {
+        assert!(told.contains(piece), "{piece}\n--\n{told}");
+    }
+    let output = check(&["check", "--json", path.to_str().unwrap()]);
+    let document: serde_json::Value = serde_json::from_slice(&output.stdout).unwrap();
+    assert_eq!(document["holds"], false);
+    assert!(document["mesh"]["place_m"][0].as_f64().unwrap() > 1400.0);
+}
+
+#[test]
+fn what_cannot_be_meshed_is_named_with_its_mend() {
+    let folder = tempfile::tempdir().unwrap();
+    let path = folder.path().join("site.toml");
+    let full = include_str!("sites/full.toml");
+    for (from, to, told) in [
+        (
+            "at = [\"310 m\", \"-480 m\"]",
+            "at = [\"1.5 km\", \"0.25 km\"]",
+            "barrier east fault passes through gauge O-2; move the barrier or the point",
+        ),
+        (
+            "at = [\"2.4 km\", \"-0.8 km\"]",
+            "at = [\"40 km\", \"-0.8 km\"]",
+            "neighbour old quarry well lies outside the edge; give the edge a distance above",
+        ),
+        (
+            "line = [[\"1.4 km\", \"-2 km\"], [\"1.6 km\", \"2.5 km\"]]",
+            "line = [[\"90 km\", \"-2 km\"], [\"90 km\", \"2.5 km\"]]",
+            "barrier east fault lies outside the edge; remove it",
+        ),
+    ] {
+        assert_eq!(full.matches(from).count(), 1, "{from}");
+        std::fs::write(&path, full.replace(from, to)).unwrap();
+        let output = check(&["check", path.to_str().unwrap()]);
+        assert_eq!(output.status.code(), Some(1), "{told}");
+        let found = text(&output.stdout);
+        assert!(found.contains(told), "{told}\n--\n{found}");
+    }
 }

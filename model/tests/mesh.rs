@@ -52,7 +52,11 @@ fn bad_geometry_is_refused_with_its_place() {
 
     let mut g = three_wells();
     g.barriers = vec![barrier(&[[-420.0, -2000.0], [-420.0, 2000.0]])];
-    refused(&g, [-420.0, 980.0], &["barrier passes through well I-3"]);
+    refused(
+        &g,
+        [-420.0, 980.0],
+        &["barrier fault passes through well I-3"],
+    );
 
     let mut g = three_wells();
     g.barriers = vec![

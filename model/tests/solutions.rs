@@ -171,6 +171,7 @@ fn two_leaky_layers() {
             name: "lower".into(),
             transmissivity: t2,
             storativity: s2,
+            anisotropy: None,
             leakance_below: None,
         },
     ];

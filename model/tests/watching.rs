@@ -72,8 +72,10 @@ fn ground() -> Ground {
             name: "sand".to_owned(),
             transmissivity: 4e-9,
             storativity: 4e-9,
+            anisotropy: None,
             leakance_below: None,
         }],
+        zones: Vec::new(),
         edge: Edge {
             kind: EdgeKind::Fixed,
             distance: HALF,

@@ -3,6 +3,7 @@
 use std::path::PathBuf;
 use std::time::Duration;
 
+use borewake_model::ground::mesh::{Mesh, MeshOptions};
 use borewake_model::units::Dimension;
 use clap::Args;
 use serde_json::{Value, json};
@@ -13,6 +14,7 @@ use crate::config::{self, ConfigError, Mistake, Note, Site};
 use crate::intake::probe::{SourceProbe, probe};
 use crate::watch::ground_file::GroundFile;
 
+mod mesh;
 mod sources;
 
 /// Reads the site file and explains every mistake with line, value and mend
@@ -46,10 +48,17 @@ impl Check {
     pub(super) fn run(self, context: &Context) -> Result<Exit, Failure> {
         match config::load(&self.site) {
             Ok(site) if self.sources => talk(&site, self.wait, context),
-            Ok(site) => {
-                print(&held(&site, Some(&ground_summary(&site)), context.json))?;
-                Ok(Exit::Done)
-            }
+            Ok(site) => match Mesh::fit(&site.ground, &MeshOptions::default()) {
+                Ok(mesh) => {
+                    let parts = [mesh::summary(&site, &mesh.quality()), ground_summary(&site)];
+                    print(&held(&site, &parts, context.json))?;
+                    Ok(Exit::Done)
+                }
+                Err(why) => {
+                    print(&mesh::refused(&site, &why, context.json))?;
+                    Ok(Exit::DoesNotHold)
+                }
+            },
             Err(ConfigError::Wrong { path, mistakes }) => {
                 let text = if context.json {
                     document(&wrong_json(&path.display().to_string(), &mistakes))
@@ -119,8 +128,8 @@ fn ground_summary(site: &Site) -> GroundSummary {
     }
 }
 
-/// What is said of a site file that holds, with the model's size and certificate where there is a ground file.
-fn held(site: &Site, ground: Option<&GroundSummary>, json: bool) -> String {
+/// What is said of a site file that holds, with its mesh, and the model's size and certificate where there is a ground file.
+fn held(site: &Site, [mesh, ground]: &[GroundSummary; 2], json: bool) -> String {
     let notes = notes(site);
     if json {
         return document(&json!({
@@ -129,13 +138,12 @@ fn held(site: &Site, ground: Option<&GroundSummary>, json: bool) -> String {
             "mistakes": [],
             "notes": notes,
             "site": summary_json(site),
-            "model": ground.map(|g| g.json.clone()),
+            "mesh": mesh.json,
+            "model": ground.json,
         }));
     }
     let mut text = summary_text(site);
-    if let Some(ground) = ground {
-        text += &format!("\nModel\n{}", ground.text);
-    }
+    text += &format!("\nMesh\n{}\nModel\n{}", mesh.text, ground.text);
     if !notes.is_empty() {
         text += "\nTo know\n";
         for note in &notes {

@@ -237,6 +237,17 @@ fn describe(site: &Site, parameter: Parameter) -> (String, Shown) {
             Some(l) => (format!("S of {} [m/Pa]", l.name), shown(l.storativity, "")),
             None => (format!("S of layer {i}"), shown(1.0, "x")),
         },
+        Parameter::ZoneTransmissivity(i) => match site.ground.zones.get(i) {
+            Some(z) => (
+                format!("T of {} [m3/(Pa s)]", z.name),
+                shown(z.transmissivity, ""),
+            ),
+            None => (format!("T of zone {i}"), shown(1.0, "x")),
+        },
+        Parameter::ZoneStorativity(i) => match site.ground.zones.get(i) {
+            Some(z) => (format!("S of {} [m/Pa]", z.name), shown(z.storativity, "")),
+            None => (format!("S of zone {i}"), shown(1.0, "x")),
+        },
         other => (format!("{other:?}").to_lowercase(), shown(1.0, "x")),
     }
 }

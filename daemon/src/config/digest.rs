@@ -6,10 +6,10 @@ use sha2::{Digest as _, Sha256};
 use super::Site;
 
 /// Changes when what is digested, or how, changes.
-const FORM: &str = "borewake ground 1\n";
+const FORM: &str = "borewake ground 2\n";
 
 impl Site {
-    /// SHA-256, in hexadecimal, over what is under the site and nothing else: layers, edge, barriers, wells, gauges and
+    /// SHA-256, in hexadecimal, over what is under the site and nothing else: layers, zones, edge, barriers, wells, gauges and
     /// neighbours as read. Comments, layout, and the way a quantity is spelled do not change it, nor do channels or limits.
     #[must_use]
     pub fn ground_digest(&self) -> String {

@@ -177,11 +177,48 @@ fn what_is_not_in_this_build_is_refused() {
         "\"webhook\"",
         "publish 1: kind = \"webhook\"\n    a webhook is not in this build\n    mend: take mqtt, or leave this [[publish]] out",
     );
+}
+
+#[test]
+fn a_zone_needs_an_area_and_a_property() {
+    let zone = |rest: &str| format!("[[zone]]\nname = \"channel\"\n{rest}\n\n[[barrier]]");
     one(
         "[[barrier]]",
-        "[[zone]]\nname = \"pool\"\n[[barrier]]",
-        "zone]]\nname",
-        "zone\n    zones are not in this build, and leaving one out would make the expectation wrong without a word\n    mend: leave the zone out and give the layer its mean properties",
+        &zone(
+            "outline = [[\"0 m\", \"1 km\"], [\"1 km\", \"1 km\"], [\"2 km\", \"1 km\"]]\ntransmissivity = \"3 m2/d\"",
+        ),
+        "[[\"0 m\", \"1 km\"]",
+        "zone \"channel\": outline = [[\"0 m\", \"1 km\"], [\"1 km\", \"1 km\"], [\"2 km\", \"1 km\"]]\n    an outline encloses an area\n    mend: give it three corners or more, in order; the last joins the first",
+    );
+    one(
+        "[[barrier]]",
+        &zone("outline = [[\"0 m\", \"1 km\"], [\"1 km\", \"1 km\"], [\"1 km\", \"2 km\"]]"),
+        "[[zone]]\nname",
+        "zone \"channel\"\n    nothing tells it from its layer\n    mend: give `transmissivity`, `permeability`, `storativity` or another property of the rock",
+    );
+    one(
+        "[[barrier]]",
+        &zone(
+            "layer = \"upper sand\"\noutline = [[\"0 m\", \"1 km\"], [\"1 km\", \"1 km\"], [\"1 km\", \"2 km\"]]\npermeability = \"10 mD\"",
+        ),
+        "\"upper sand\"",
+        "zone \"channel\": layer = \"upper sand\"\n    \"upper sand\" is no [[layer]]\n    mend: did you mean \"lower sand\"? there is \"lower sand\"",
+    );
+}
+
+#[test]
+fn a_fluid_and_a_direction_are_checked() {
+    one(
+        "viscosity = \"0.62 cP\"",
+        "fluid = { temperature = \"60 degC\", pressure = \"150 MPa\" }",
+        "{ temperature",
+        "layer \"lower sand\": fluid = { temperature = \"60 degC\", pressure = \"150 MPa\" }\n    the formulas for water and brine do not reach it: pressure of water is 150000000, but it must lie from 0.1 MPa (1.6 MPa above 99 degC) to 100 MPa\n    mend: mend it, or leave `fluid` out and give `viscosity` and `compressibility`",
+    );
+    one(
+        "viscosity = \"0.62 cP\"",
+        "viscosity = \"0.62 cP\"\nanisotropy = { ratio = 0.25, azimuth = \"30 deg\" }",
+        "0.25",
+        "layer \"lower sand\": anisotropy.ratio = 0.25\n    the greatest transmissivity over the least lies from 1 to 100\n    mend: give the direction that conducts best as the azimuth",
     );
 }
 

@@ -381,3 +381,76 @@ fn the_demonstration_site_holds() {
     assert_eq!((site.wells.len(), site.gauges.len()), (3, 6));
     assert_eq!(site.notes, []);
 }
+
+#[test]
+fn zones_take_what_they_do_not_state_from_their_layer() {
+    let text = FULL.replace(
+        "[[barrier]]",
+        "[[zone]]\nname = \"channel\"\noutline = [[\"0.2 km\", \"1 km\"], [\"1 km\", \"1 km\"], [\"1 km\", \"2 km\"]]\npermeability = \"400 mD\"\nthickness = \"11 m\"\n[[zone]]\nname = \"silt\"\noutline = [[\"-1 km\", \"1 km\"], [\"-2 km\", \"1 km\"], [\"-2 km\", \"2 km\"]]\ntransmissivity = \"1e-12 m3/(Pa s)\"\nstorativity = \"1e-8 m/Pa\"\n[[barrier]]",
+    );
+    let zones = site(&text).ground.zones;
+    assert_eq!(
+        (zones.len(), zones[0].layer, zones[0].outline.len()),
+        (2, 0, 3)
+    );
+    assert!(close(
+        zones[0].transmissivity,
+        0.400 * DARCY * 11.0 / 0.62e-3
+    ));
+    assert!(close(zones[0].storativity, 0.21 * 9.5e-10 * 11.0));
+    assert!(close(zones[1].transmissivity, 1e-12) && close(zones[1].storativity, 1e-8));
+    // The ground file belongs to the zones too.
+    assert_ne!(site(&text).ground_digest(), site(FULL).ground_digest());
+}
+
+#[test]
+fn a_fluid_stands_for_viscosity_and_for_its_share_of_the_compressibility() {
+    let text = FULL
+        .replace(
+            "viscosity = \"0.62 cP\"",
+            "fluid = { temperature = \"60 degC\", pressure = \"15 MPa\", salinity = \"5 %\" }",
+        )
+        .replace(
+            "compressibility = \"9.5e-10 /Pa\"",
+            "rock_compressibility = \"5e-10 /Pa\"",
+        );
+    let fluid = borewake_model::fluid::brine(60.0, 15e6, 0.05).unwrap();
+    let layer = &site(&text).ground.layers[0];
+    assert!(close(
+        layer.transmissivity,
+        0.110 * DARCY * 22.0 / fluid.viscosity
+    ));
+    assert!(close(
+        layer.storativity,
+        0.21 * (fluid.compressibility + 5e-10) * 22.0
+    ));
+    let both = FULL.replace(
+        "viscosity = \"0.62 cP\"",
+        "viscosity = \"0.62 cP\"\nfluid = { temperature = \"20 degC\", pressure = \"15 MPa\" }",
+    );
+    let site = site(&both);
+    assert!(close(
+        site.ground.layers[0].transmissivity,
+        0.110 * DARCY * 22.0 / 0.62e-3
+    ));
+    assert!(
+        site.notes
+            .iter()
+            .any(|n| n.text.contains("what is stated here holds"))
+    );
+}
+
+#[test]
+fn the_best_direction_is_an_azimuth() {
+    let text = FULL.replace(
+        "viscosity = \"0.62 cP\"",
+        "viscosity = \"0.62 cP\"\nanisotropy = { ratio = 4, azimuth = \"30 deg\" }",
+    );
+    let anisotropy = site(&text).ground.layers[0].anisotropy.unwrap();
+    assert!(
+        close(anisotropy.ratio, 4.0) && close(anisotropy.direction, std::f64::consts::PI / 3.0)
+    );
+    // North conducts better than east.
+    let [[east, _], [_, north]] = anisotropy.tensor();
+    assert!(north > east);
+}

@@ -56,8 +56,10 @@ pub(crate) fn ground() -> Ground {
             name: "sand".into(),
             transmissivity: TRANSMISSIVITY,
             storativity: STORATIVITY,
+            anisotropy: None,
             leakance_below: None,
         }],
+        zones: Vec::new(),
         edge: Edge {
             kind: EdgeKind::Open,
             distance: 3.5 * (TRANSMISSIVITY / STORATIVITY * year).sqrt(),

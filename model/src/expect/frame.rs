@@ -7,7 +7,7 @@ use super::drive::{Drive, Sampled, Tables};
 use crate::ModelError;
 use crate::ground::{Ground, Seat};
 use crate::reduce::{Factors, Modal, Reduced};
-use crate::weak_form::Parameter;
+use crate::weak_form::{Parameter, Rock};
 
 /// Step of a parameter's logarithm for its sensitivity.
 const TILT: f64 = 2e-3;
@@ -130,10 +130,9 @@ impl Frame {
             if let Seat::InWell(well) = seat.seat
                 && let Some(w) = ground.wells.get(well)
                 && w.storage <= 0.0
-                && let Some(layer) = ground.layers.get(w.layer)
             {
-                let transmissivity =
-                    layer.transmissivity * factor(factors, Parameter::Transmissivity(w.layer));
+                let (parameter, described) = Rock::at(ground, w.at, w.layer).transmissivity;
+                let transmissivity = described * factor(factors, parameter);
                 in_wells.push((gauge, well, 1.0 / (std::f64::consts::TAU * transmissivity)));
             }
         }

@@ -12,6 +12,8 @@ pub type Point = [f64; 2];
 pub struct Ground {
     /// Conducting layers, top first; at least one.
     pub layers: Vec<Layer>,
+    /// Parts of layers with properties of their own; where they overlap the last listed holds.
+    pub zones: Vec<Zone>,
     /// The outer boundary, shared by all layers.
     pub edge: Edge,
     /// Lines that resist flow.
@@ -29,12 +31,86 @@ pub struct Ground {
 pub struct Layer {
     /// Name in the site file.
     pub name: String,
+    /// `T = k h / mu` \[m3/(Pa s)\], positive; the geometric mean of the greatest and the least by direction.
+    pub transmissivity: f64,
+    /// `S = phi c_t h` \[m/Pa\], positive.
+    pub storativity: f64,
+    /// How conduction depends on direction; `None` where it does not.
+    pub anisotropy: Option<Anisotropy>,
+    /// Exchange with the next layer below \[m/(Pa s)\]; `None` where there is none.
+    pub leakance_below: Option<f64>,
+}
+
+/// Conduction that depends on direction.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub struct Anisotropy {
+    /// Greatest transmissivity over least, one or more.
+    pub ratio: f64,
+    /// Direction of the greatest, counter-clockwise from east \[radians\].
+    pub direction: f64,
+}
+
+/// A symmetric matrix of determinant one that scales conduction by direction.
+pub type Tensor = [[f64; 2]; 2];
+
+/// Conduction the same in all directions.
+pub const ISOTROPIC: Tensor = [[1.0, 0.0], [0.0, 1.0]];
+
+impl Anisotropy {
+    /// The tensor of determinant one.
+    #[must_use]
+    pub fn tensor(&self) -> Tensor {
+        if self.ratio == 1.0 {
+            return ISOTROPIC;
+        }
+        let (sin, cos) = self.direction.sin_cos();
+        let (most, least) = (self.ratio.sqrt(), self.ratio.sqrt().recip());
+        let across = (most - least) * sin * cos;
+        [
+            [most * cos * cos + least * sin * sin, across],
+            [across, most * sin * sin + least * cos * cos],
+        ]
+    }
+}
+
+impl Layer {
+    /// Conduction by direction, of determinant one.
+    #[must_use]
+    pub fn tensor(&self) -> Tensor {
+        self.anisotropy.map_or(ISOTROPIC, |a| a.tensor())
+    }
+}
+
+/// A part of a layer with properties of its own. It takes the anisotropy of its layer.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Zone {
+    /// Name in the site file.
+    pub name: String,
+    /// Layer, by order.
+    pub layer: usize,
+    /// Its corners in order, at least three; the last joins the first. What lies beyond the edge does not count.
+    pub outline: Vec<Point>,
     /// `T = k h / mu` \[m3/(Pa s)\], positive.
     pub transmissivity: f64,
     /// `S = phi c_t h` \[m/Pa\], positive.
     pub storativity: f64,
-    /// Exchange with the next layer below \[m/(Pa s)\]; `None` where there is none.
-    pub leakance_below: Option<f64>,
+}
+
+impl Zone {
+    /// Whether a point lies inside the outline.
+    #[must_use]
+    pub fn holds(&self, point: Point) -> bool {
+        let last = self.outline.last().copied();
+        let starts = last.into_iter().chain(self.outline.iter().copied());
+        let mut inside = false;
+        for (a, b) in starts.zip(&self.outline) {
+            if (a[1] > point[1]) != (b[1] > point[1]) {
+                let x = a[0] + (point[1] - a[1]) / (b[1] - a[1]) * (b[0] - a[0]);
+                inside ^= point[0] < x;
+            }
+        }
+        inside
+    }
 }
 
 /// The outer boundary.
@@ -126,6 +202,14 @@ pub struct Neighbour {
 }
 
 impl Ground {
+    /// The zone that holds a point of a layer, by order: the last of those whose outline holds it.
+    #[must_use]
+    pub fn zone_at(&self, point: Point, layer: usize) -> Option<usize> {
+        self.zones
+            .iter()
+            .rposition(|zone| zone.layer == layer && zone.holds(point))
+    }
+
     /// Where gauge `index` sits: position and layer.
     #[must_use]
     pub fn gauge_at(&self, index: usize) -> Option<(Point, usize)> {

@@ -76,8 +76,8 @@ fn corner(system: &System, transmissivity: f64, storativity: f64) -> Factors {
     let mut factors = Factors::new();
     for block in system.mass.iter().chain(&system.stiffness) {
         let factor = match block.parameter {
-            Parameter::Transmissivity(_) => transmissivity,
-            Parameter::Storativity(_) => storativity,
+            Parameter::Transmissivity(_) | Parameter::ZoneTransmissivity(_) => transmissivity,
+            Parameter::Storativity(_) | Parameter::ZoneStorativity(_) => storativity,
             _ => continue,
         };
         if !factors.iter().any(|f| f.0 == block.parameter) {

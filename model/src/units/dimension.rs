@@ -46,6 +46,8 @@ pub enum Dimension {
     Density,
     /// Rain \[m/s\].
     Rain,
+    /// Angle \[radians\].
+    Angle,
 }
 
 /// From a number in some unit to SI: `scale * number + offset`.
@@ -89,9 +91,16 @@ const TEMPERATURES: &[(&str, f64, f64)] = &[
     ("F", 5.0 / 9.0, -160.0 / 9.0),
 ];
 
+/// Spellings of angle units, with scale to radians.
+const ANGLES: &[(&str, f64, f64)] = &[
+    ("deg", std::f64::consts::PI / 180.0, 0.0),
+    ("°", std::f64::consts::PI / 180.0, 0.0),
+    ("rad", 1.0, 0.0),
+];
+
 impl Dimension {
     /// All of them.
-    pub const ALL: [Self; 19] = [
+    pub const ALL: [Self; 20] = [
         Self::Pressure,
         Self::Length,
         Self::Rate,
@@ -111,6 +120,7 @@ impl Dimension {
         Self::Temperature,
         Self::Density,
         Self::Rain,
+        Self::Angle,
     ];
 
     /// Its name in messages.
@@ -136,6 +146,7 @@ impl Dimension {
             Self::Temperature => "temperature",
             Self::Density => "density",
             Self::Rain => "rain",
+            Self::Angle => "angle",
         }
     }
 
@@ -176,6 +187,7 @@ impl Dimension {
             Self::Temperature => &["degC", "degF", "K"],
             Self::Density => &["kg/m3", "g/cm3", "lb/ft3", "lb/gal"],
             Self::Rain => &["mm/h", "mm/d", "in/h", "in/d", "m/s"],
+            Self::Angle => &["deg", "rad"],
         }
     }
 
@@ -202,6 +214,7 @@ impl Dimension {
             Self::Temperature => "12 degC",
             Self::Density => "1030 kg/m3",
             Self::Rain => "4 mm/h",
+            Self::Angle => "30 deg",
         }
     }
 
@@ -240,8 +253,10 @@ impl Dimension {
     /// An unknown unit or one of something else.
     pub fn conversion(self, unit: &str) -> Result<UnitConversion, UnitError> {
         let unit = unit.trim();
-        if self == Self::Temperature {
-            return self.temperature(unit);
+        match self {
+            Self::Temperature => return self.listed(TEMPERATURES, unit),
+            Self::Angle => return self.listed(ANGLES, unit),
+            _ => {}
         }
         if unit.is_empty() {
             return self.fit(
@@ -328,7 +343,7 @@ impl Dimension {
             Self::Size => &[([0, 0, 0, 1], 1.0)],
             Self::Density => &[([-3, 1, 0, 0], 1.0)],
             Self::Rain => &[([1, 0, -1, 0], 1.0)],
-            Self::Temperature => &[],
+            Self::Temperature | Self::Angle => &[],
         }
     }
 
@@ -350,9 +365,9 @@ impl Dimension {
         }
     }
 
-    /// The conversion of a temperature.
-    fn temperature(self, unit: &str) -> Result<UnitConversion, UnitError> {
-        let found = TEMPERATURES.iter().find(|(name, _, _)| *name == unit);
+    /// The conversion of a unit that is no product of symbols.
+    fn listed(self, units: &[(&str, f64, f64)], unit: &str) -> Result<UnitConversion, UnitError> {
+        let found = units.iter().find(|(name, _, _)| *name == unit);
         if let Some(&(_, scale, offset)) = found {
             return Ok(UnitConversion { scale, offset });
         }

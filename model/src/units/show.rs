@@ -78,6 +78,7 @@ impl UnitSystem {
             (D::Density, Self::Field) => "lb/ft3",
             (D::Rain, Self::Metric | Self::Head) => "mm/h",
             (D::Rain, Self::Field) => "in/h",
+            (D::Angle, _) => "deg",
         }
     }
 

@@ -93,6 +93,8 @@ fn spellings_of_all_trades_are_read() {
         (D::Size, "20 GB", 2e10),
         (D::Time, "400 d", 400.0 * DAY),
         (D::Density, "1.03 g/cm3", 1030.0),
+        (D::Angle, "30 deg", std::f64::consts::FRAC_PI_6),
+        (D::Angle, "-90°", -std::f64::consts::FRAC_PI_2),
         (D::Temperature, "50 degF", 10.0),
         (D::Temperature, "283.15 K", 10.0),
         (D::Rain, "36 mm/h", 1e-5),

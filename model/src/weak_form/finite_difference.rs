@@ -6,8 +6,8 @@
 
 use super::space::{Local, MOST, Space};
 use crate::ModelError;
-use crate::ground::Point;
 use crate::ground::mesh::{Mesh, distance};
+use crate::ground::{Point, Tensor};
 
 pub(super) struct FiniteDifference;
 
@@ -29,13 +29,27 @@ impl Space for FiniteDifference {
         local
     }
 
-    fn conduction(&self, corners: &[Point; 3]) -> Local {
+    fn takes(&self, tensor: &Tensor) -> bool {
+        // A five-point lattice knows no flow across its lines but along them.
+        tensor[0][1].abs() < 1e-12 * tensor[0][0].max(tensor[1][1])
+    }
+
+    fn conduction(&self, corners: &[Point; 3], tensor: &Tensor) -> Local {
         let right = right_corner(corners).0;
         let (a, b) = legs(corners, right);
+        let at = |i: usize| corners.get(i % 3).copied().unwrap_or([f64::NAN; 2]);
+        let along = |i: usize| {
+            let (p, q) = (at(right), at(i));
+            if (p[0] - q[0]).abs() > (p[1] - q[1]).abs() {
+                tensor[0][0]
+            } else {
+                tensor[1][1]
+            }
+        };
         let mut local = Local::zero(3);
         for (other, flux) in [
-            ((right + 1) % 3, 0.5 * b / a),
-            ((right + 2) % 3, 0.5 * a / b),
+            ((right + 1) % 3, 0.5 * along(right + 1) * b / a),
+            ((right + 2) % 3, 0.5 * along(right + 2) * a / b),
         ] {
             for (i, row) in local.entries.iter_mut().enumerate().take(3) {
                 for (j, entry) in row.iter_mut().enumerate().take(3) {

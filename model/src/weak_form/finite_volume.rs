@@ -7,7 +7,7 @@
 //! On such a mesh the conduction equals that of linear elements (Bank & Rose 1987, SIAM J. Numer. Anal. 24).
 
 use super::space::{Local, MOST, Space};
-use crate::ground::Point;
+use crate::ground::{ISOTROPIC, Point, Tensor};
 
 pub(super) struct FiniteVolume;
 
@@ -31,7 +31,12 @@ impl Space for FiniteVolume {
         local
     }
 
-    fn conduction(&self, corners: &[Point; 3]) -> Local {
+    fn takes(&self, tensor: &Tensor) -> bool {
+        // Two pressures tell the flux through a face only where that flows straight across it.
+        *tensor == ISOTROPIC
+    }
+
+    fn conduction(&self, corners: &[Point; 3], _tensor: &Tensor) -> Local {
         let mut local = Local::zero(3);
         for (k, (face, side)) in faces(corners).into_iter().enumerate() {
             let flux = face / side;
@@ -72,18 +77,18 @@ impl Space for FiniteVolume {
 }
 
 /// For the side opposite to each corner: the signed length of the face part on it, and its own length.
+///
+/// The circumcentre stands above the middle of a side by half the side's length times the cotangent of the angle
+/// opposite to it. Differences of corners are all that is used, so that small triangles far from the origin lose nothing.
 fn faces(&[a, b, c]: &[Point; 3]) -> [(f64, f64); 3] {
-    let (u, v) = ([b[0] - a[0], b[1] - a[1]], [c[0] - a[0], c[1] - a[1]]);
-    let twice = u[0] * v[1] - u[1] * v[0];
-    let (uu, vv) = (u[0] * u[0] + u[1] * u[1], v[0] * v[0] + v[1] * v[1]);
-    let middle = [
-        a[0] + (v[1] * uu - u[1] * vv) / (2.0 * twice),
-        a[1] + (u[0] * vv - v[0] * uu) / (2.0 * twice),
-    ];
-    let of = |p: Point, q: Point| {
+    let twice = (b[0] - a[0]) * (c[1] - a[1]) - (b[1] - a[1]) * (c[0] - a[0]);
+    let of = |top: Point, p: Point, q: Point| {
+        let (u, v) = (
+            [p[0] - top[0], p[1] - top[1]],
+            [q[0] - top[0], q[1] - top[1]],
+        );
         let side = (q[0] - p[0]).hypot(q[1] - p[1]);
-        let height = (q[0] - p[0]) * (middle[1] - p[1]) - (q[1] - p[1]) * (middle[0] - p[0]);
-        (height / side, side)
+        (0.5 * side * (u[0] * v[0] + u[1] * v[1]) / twice, side)
     };
-    [of(b, c), of(c, a), of(a, b)]
+    [of(a, b, c), of(b, c, a), of(c, a, b)]
 }

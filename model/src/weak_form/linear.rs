@@ -3,8 +3,8 @@
 //! The value error falls with the second power of the size of triangles. Gathered storage keeps that order
 //! and, on a Delaunay mesh, a maximum principle.
 
-use super::space::{Local, MOST, Space, gradients};
-use crate::ground::Point;
+use super::space::{Local, MOST, Space, gradients, product};
+use crate::ground::{Point, Tensor};
 
 pub(super) struct Linear {
     /// Whether storage and line joints are gathered at the nodes.
@@ -30,12 +30,16 @@ impl Space for Linear {
         )
     }
 
-    fn conduction(&self, corners: &[Point; 3]) -> Local {
+    fn takes(&self, _tensor: &Tensor) -> bool {
+        true
+    }
+
+    fn conduction(&self, corners: &[Point; 3], tensor: &Tensor) -> Local {
         let (hat, area) = gradients(corners);
         let mut local = Local::zero(3);
         for (row, a) in local.entries.iter_mut().zip(&hat) {
             for (entry, b) in row.iter_mut().zip(&hat) {
-                *entry = area * (a[0] * b[0] + a[1] * b[1]);
+                *entry = area * product(*a, tensor, *b);
             }
         }
         local

@@ -44,6 +44,41 @@ pub enum Parameter {
     Storage(usize),
     /// Nothing: the block never changes.
     Fixed,
+    /// Transmissivity of a zone, by order.
+    ZoneTransmissivity(usize),
+    /// Storativity of a zone, by order.
+    ZoneStorativity(usize),
+}
+
+/// What a point of the ground conducts and stores, and by which parameters.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Rock {
+    /// Transmissivity \[m3/(Pa s)\].
+    pub transmissivity: (Parameter, f64),
+    /// Storativity \[m/Pa\].
+    pub storativity: (Parameter, f64),
+}
+
+impl Rock {
+    /// That of the zone which holds the point, else of the layer; zero in a layer that is not there.
+    #[must_use]
+    pub fn at(ground: &Ground, point: Point, layer: usize) -> Self {
+        let zone = ground.zone_at(point, layer);
+        if let Some((z, zone)) = zone.and_then(|z| Some((z, ground.zones.get(z)?))) {
+            return Self {
+                transmissivity: (Parameter::ZoneTransmissivity(z), zone.transmissivity),
+                storativity: (Parameter::ZoneStorativity(z), zone.storativity),
+            };
+        }
+        let (t, s) = ground
+            .layers
+            .get(layer)
+            .map_or((0.0, 0.0), |l| (l.transmissivity, l.storativity));
+        Self {
+            transmissivity: (Parameter::Transmissivity(layer), t),
+            storativity: (Parameter::Storativity(layer), s),
+        }
+    }
 }
 
 /// One parameter's share of a symmetric sparse matrix (both triangles stored), at the described value.
@@ -135,7 +170,7 @@ pub fn discretise(
     scheme: Scheme,
     options: &MeshOptions,
 ) -> Result<Discrete, ModelError> {
-    statement::check(ground)?;
+    statement::check(ground, scheme.space())?;
     let mesh = match scheme {
         Scheme::FiniteDifference => Mesh::lattice(ground, options)?,
         _ => Mesh::fit(ground, options)?,
@@ -148,7 +183,7 @@ pub fn discretise(
 /// # Errors
 /// As [`discretise`]; [`ModelError::Size`] where the mesh was fitted to another ground.
 pub fn discretise_on(ground: &Ground, scheme: Scheme, mesh: Mesh) -> Result<Discrete, ModelError> {
-    statement::check(ground)?;
+    statement::check(ground, scheme.space())?;
     if scheme == Scheme::FiniteDifference {
         finite_difference::check(&mesh)?;
     }

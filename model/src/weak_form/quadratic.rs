@@ -3,8 +3,8 @@
 //! Trial and test space are the same (Galerkin); integrals are exact. The value error falls with the third
 //! power of the size of triangles, and with the fourth at the ports.
 
-use super::space::{Local, MOST, Space, gradients};
-use crate::ground::Point;
+use super::space::{Local, MOST, Space, gradients, product};
+use crate::ground::{Point, Tensor};
 
 pub(super) struct Quadratic;
 
@@ -31,7 +31,11 @@ impl Space for Quadratic {
         Local::scaled(area / 180.0, &STORAGE)
     }
 
-    fn conduction(&self, corners: &[Point; 3]) -> Local {
+    fn takes(&self, _tensor: &Tensor) -> bool {
+        true
+    }
+
+    fn conduction(&self, corners: &[Point; 3], tensor: &Tensor) -> Local {
         let (hat, area) = gradients(corners);
         let mut local = Local::zero(6);
         // Products of gradients are quadratic: the three mid-sides integrate them exactly.
@@ -39,7 +43,7 @@ impl Space for Quadratic {
             let slope = slopes(&hat, shares);
             for (row, a) in local.entries.iter_mut().zip(&slope) {
                 for (entry, b) in row.iter_mut().zip(&slope) {
-                    *entry += area / 3.0 * (a[0] * b[0] + a[1] * b[1]);
+                    *entry += area / 3.0 * product(*a, tensor, *b);
                 }
             }
         }

@@ -1,6 +1,6 @@
 //! What a scheme must answer so that the weak statement can be put into it.
 
-use crate::ground::Point;
+use crate::ground::{Point, Tensor};
 
 /// Most nodes of one triangle in any scheme.
 pub(super) const MOST: usize = 6;
@@ -46,8 +46,11 @@ pub(super) trait Space: Sync {
     /// The integral of `w p` over a triangle \[m2\].
     fn storage(&self, corners: &[Point; 3]) -> Local;
 
-    /// The integral of `grad w . grad p` over a triangle, or the flux that stands for it.
-    fn conduction(&self, corners: &[Point; 3]) -> Local;
+    /// Whether conduction by this tensor can be put into the space.
+    fn takes(&self, tensor: &Tensor) -> bool;
+
+    /// The integral of `grad w . A grad p` over a triangle, or the flux that stands for it.
+    fn conduction(&self, corners: &[Point; 3], tensor: &Tensor) -> Local;
 
     /// The integral of `w p` along a segment of this length \[m\].
     fn line(&self, length: f64) -> Local;
@@ -61,4 +64,10 @@ pub(super) fn gradients(&[a, b, c]: &[Point; 3]) -> ([Point; 3], f64) {
     let twice = (b[0] - a[0]) * (c[1] - a[1]) - (b[1] - a[1]) * (c[0] - a[0]);
     let of = |p: Point, q: Point| [(p[1] - q[1]) / twice, (q[0] - p[0]) / twice];
     ([of(b, c), of(c, a), of(a, b)], 0.5 * twice)
+}
+
+/// `a . A b`, to the bit the same as `b . A a`.
+pub(super) fn product(a: Point, tensor: &Tensor, b: Point) -> f64 {
+    let [[xx, xy], [_, yy]] = *tensor;
+    xx * (a[0] * b[0]) + xy * (a[0] * b[1] + a[1] * b[0]) + yy * (a[1] * b[1])
 }

@@ -3,11 +3,12 @@
 //! For every test function `w` of every layer `l`, with `p` the pressure change from rest,
 //!
 //! ```text
-//! int w S dp/dt + int T grad w . grad p + int (w - w') L (p - p')    (p' in the layer below)
-//!   + int_barrier c [w][p] + int_edge w (T/R) p                      ([.] the jump across a barrier)
+//! int w S dp/dt + int T grad w . A grad p + int (w - w') L (p - p')    (p' in the layer below)
+//!   + int_barrier c [w][p] + int_edge w (T/(R n.A^-1 n)) p           ([.] the jump across a barrier)
 //!   = sum over wells q w(x)
 //! ```
 //!
+//! `T` and `S` are the zone's inside a zone, else the layer's. `A`, of determinant one, is the layer's anisotropy.
 //! In a cut-out nothing is stored or conducted, and its ring has one pressure. The edge at distance `R` lets
 //! pressure out where it is open, holds it where it is fixed, and keeps it where it is closed. Barriers and
 //! the edge pass through all layers.
@@ -17,10 +18,10 @@ use std::f64::consts::PI;
 use super::assembly::Assembly;
 use super::nodes::{Nodes, Slot};
 use super::space::{Local, MOST, Space};
-use super::{Functional, Parameter, System};
+use super::{Functional, Parameter, Rock, System};
 use crate::ModelError;
 use crate::ground::mesh::{Mesh, distance};
-use crate::ground::{EdgeKind, Ground, Well};
+use crate::ground::{EdgeKind, Ground, ISOTROPIC, Point, Tensor, Well};
 
 /// Puts the statement into a space. Gauges and neighbours are left to the caller.
 pub(super) fn assemble(
@@ -31,24 +32,21 @@ pub(super) fn assemble(
 ) -> Result<System, ModelError> {
     let mut sum = Assembly::new(nodes.places.len());
     for (l, layer) in ground.layers.iter().enumerate() {
-        let (storativity, transmissivity) =
-            (Parameter::Storativity(l), Parameter::Transmissivity(l));
+        let tensor = layer.tensor();
         for t in 0..mesh.triangles.len() {
             let corners = mesh.corners(t);
             let Some(here) = nodes.triangle(mesh, t, l) else {
                 continue;
             };
-            sum.store(
-                storativity,
-                layer.storativity,
-                &here,
-                &space.storage(&corners),
-            );
+            let rock = Rock::at(ground, middle_of(&corners), l);
+            let (parameter, value) = rock.storativity;
+            sum.store(parameter, value, &here, &space.storage(&corners));
+            let (parameter, value) = rock.transmissivity;
             sum.conduct(
-                transmissivity,
-                layer.transmissivity,
+                parameter,
+                value,
                 &here,
-                &space.conduction(&corners),
+                &space.conduction(&corners, &tensor),
             );
             if let Some(leakance) = layer.leakance_below
                 && let Some(below) = nodes.triangle(mesh, t, l + 1)
@@ -67,10 +65,10 @@ pub(super) fn assemble(
             sum.exchange(Parameter::Barrier(joint.barrier), conductance, sides, &line);
         }
         if ground.edge.kind == EdgeKind::Open {
-            let beta = layer.transmissivity / ground.edge.distance;
             for &segment in &mesh.edge {
                 let line = space.line(length(mesh, segment));
-                sum.let_out(transmissivity, beta, &nodes.segment(segment, l), &line);
+                let (parameter, share) = outlet(ground, mesh, segment, (l, &tensor));
+                sum.let_out(parameter, share, &nodes.segment(segment, l), &line);
             }
         }
     }
@@ -111,10 +109,7 @@ fn bore(ground: &Ground, w: usize, well: &Well, nodes: &Nodes, sum: &mut Assembl
     };
     sum.store(Parameter::Storage(w), well.storage, &alone(bore), &one);
     if bore != ring {
-        let transmissivity = ground
-            .layers
-            .get(well.layer)
-            .map_or(0.0, |l| l.transmissivity);
+        let (_, transmissivity) = Rock::at(ground, well.at, well.layer).transmissivity;
         let conductance = 2.0 * PI * transmissivity / well.skin;
         sum.exchange(
             Parameter::Skin(w),
@@ -125,6 +120,36 @@ fn bore(ground: &Ground, w: usize, well: &Well, nodes: &Nodes, sum: &mut Assembl
     }
 }
 
+/// What an open edge lets out along a segment, per metre and Pascal.
+///
+/// An endless ground beyond is felt as a circle in the stretched plane where conduction is even: the outflow is
+/// `T/R` there, and `T/(R n.A^-1 n)` here, `n` pointing from the centre.
+fn outlet(
+    ground: &Ground,
+    mesh: &Mesh,
+    [a, b]: [usize; 2],
+    (layer, tensor): (usize, &Tensor),
+) -> (Parameter, f64) {
+    let at = |v: usize| mesh.points.get(v).copied().unwrap_or([f64::NAN; 2]);
+    let (a, b, centre) = (at(a), at(b), mesh.centre);
+    let out = [
+        0.5 * (a[0] + b[0]) - centre[0],
+        0.5 * (a[1] + b[1]) - centre[1],
+    ];
+    // Just inside, so that a zone that reaches beyond the edge counts.
+    let inside = [centre[0] + 0.999 * out[0], centre[1] + 0.999 * out[1]];
+    let (parameter, transmissivity) = Rock::at(ground, inside, layer).transmissivity;
+    let [[xx, xy], [_, yy]] = *tensor;
+    // The inverse of a symmetric matrix of determinant one.
+    let stretched = yy * out[0] * out[0] - 2.0 * xy * out[0] * out[1] + xx * out[1] * out[1];
+    let stretch = stretched / (out[0] * out[0] + out[1] * out[1]);
+    (parameter, transmissivity / (ground.edge.distance * stretch))
+}
+
+fn middle_of(&[a, b, c]: &[Point; 3]) -> Point {
+    [(a[0] + b[0] + c[0]) / 3.0, (a[1] + b[1] + c[1]) / 3.0]
+}
+
 fn length(mesh: &Mesh, [a, b]: [usize; 2]) -> f64 {
     match (mesh.points.get(a), mesh.points.get(b)) {
         (Some(&a), Some(&b)) => distance(a, b),
@@ -133,7 +158,7 @@ fn length(mesh: &Mesh, [a, b]: [usize; 2]) -> f64 {
 }
 
 /// Refuses numbers that the statement cannot take.
-pub(super) fn check(ground: &Ground) -> Result<(), ModelError> {
+pub(super) fn check(ground: &Ground, space: &dyn Space) -> Result<(), ModelError> {
     let demand = |good: bool, what: String, value: f64, must: &'static str| {
         if good {
             Ok(())
@@ -165,6 +190,21 @@ pub(super) fn check(ground: &Ground) -> Result<(), ModelError> {
             s,
             "it must be positive",
         )?;
+        if let Some(anisotropy) = layer.anisotropy {
+            let ratio = anisotropy.ratio;
+            demand(
+                ratio.is_finite() && ratio >= 1.0 && anisotropy.direction.is_finite(),
+                format!("anisotropy of layer {}", layer.name),
+                ratio,
+                "its ratio must be one or more",
+            )?;
+            demand(
+                layer.tensor() == ISOTROPIC || space.takes(&layer.tensor()),
+                format!("anisotropy of layer {}", layer.name),
+                ratio,
+                "this scheme cannot follow its direction; use finite elements",
+            )?;
+        }
         if let Some(leakance) = layer.leakance_below {
             let what = format!("leakance below layer {}", layer.name);
             demand(
@@ -176,6 +216,27 @@ pub(super) fn check(ground: &Ground) -> Result<(), ModelError> {
             let what = format!("leakance below layer {}", layer.name);
             demand(l + 1 < layers, what, leakance, "there is no layer below")?;
         }
+    }
+    for zone in &ground.zones {
+        let (t, s) = (zone.transmissivity, zone.storativity);
+        demand(
+            positive(t),
+            format!("transmissivity of zone {}", zone.name),
+            t,
+            "it must be positive",
+        )?;
+        demand(
+            positive(s),
+            format!("storativity of zone {}", zone.name),
+            s,
+            "it must be positive",
+        )?;
+        demand(
+            zone.layer < layers,
+            format!("layer of zone {}", zone.name),
+            zone.layer as f64,
+            "the ground has no such layer",
+        )?;
     }
     for barrier in &ground.barriers {
         let what = format!("conductance of barrier {}", barrier.name);

@@ -46,6 +46,7 @@ pub fn layer() -> Layer {
         name: "sand".into(),
         transmissivity: T,
         storativity: S,
+        anisotropy: None,
         leakance_below: None,
     }
 }
@@ -53,6 +54,7 @@ pub fn layer() -> Layer {
 pub fn ground(kind: EdgeKind, distance: f64) -> Ground {
     Ground {
         layers: vec![layer()],
+        zones: Vec::new(),
         edge: Edge { kind, distance },
         barriers: Vec::new(),
         wells: Vec::new(),

@@ -21,6 +21,7 @@ pub(in crate::cli) fn summary_json(site: &Site) -> Value {
             "block_s": site.watch.block.as_secs_f64(),
         },
         "layers": site.ground.layers,
+        "zones": site.ground.zones,
         "edge": site.ground.edge,
         "barriers": site.ground.barriers,
         "wells": site.ground.wells.iter().zip(&site.wells).map(|(w, s)| json!({

@@ -13,8 +13,8 @@ use super::table::{Align, Table};
 use crate::config::{PublishSettings, Site};
 pub(super) use json::summary_json;
 use words::{
-    broker_words, edge_word, layer_name, priority_word, reference_word, side_word, source_words,
-    string_word,
+    azimuth_words, broker_words, edge_word, layer_name, priority_word, reference_word, side_word,
+    source_words, string_word,
 };
 
 /// The model as commissioned, for people and for programs.
@@ -43,6 +43,7 @@ pub(super) fn summary_text(site: &Site) -> String {
     );
     let parts = [
         ("Layers", layers(site)),
+        ("Zones", zones(site)),
         ("Edge", edge(site)),
         ("Barriers", barriers(site)),
         ("Wells", wells(site)),
@@ -101,6 +102,7 @@ fn layers(site: &Site) -> String {
             Align::Right,
         ),
         ("diffusivity m2/s", Align::Right),
+        ("anisotropy", Align::Left),
         (
             &head(site, "leakance below", Dimension::Leakance),
             Align::Right,
@@ -113,7 +115,38 @@ fn layers(site: &Site) -> String {
             number(site, Dimension::Transmissivity, layer.transmissivity),
             number(site, Dimension::Storativity, layer.storativity),
             significant(layer.transmissivity / layer.storativity, 4),
+            layer
+                .anisotropy
+                .map_or_else(|| "-".to_owned(), azimuth_words),
             below.map_or_else(|| "-".to_owned(), |l| number(site, Dimension::Leakance, l)),
+        ]);
+    }
+    text_of(&table)
+}
+
+fn zones(site: &Site) -> String {
+    let mut table = Table::new(&[
+        ("name", Align::Left),
+        ("layer", Align::Left),
+        ("corners", Align::Right),
+        (
+            &head(site, "transmissivity", Dimension::Transmissivity),
+            Align::Right,
+        ),
+        (
+            &head(site, "storativity", Dimension::Storativity),
+            Align::Right,
+        ),
+        ("diffusivity m2/s", Align::Right),
+    ]);
+    for zone in &site.ground.zones {
+        table.row([
+            zone.name.clone(),
+            layer_name(site, zone.layer),
+            zone.outline.len().to_string(),
+            number(site, Dimension::Transmissivity, zone.transmissivity),
+            number(site, Dimension::Storativity, zone.storativity),
+            significant(zone.transmissivity / zone.storativity, 4),
         ]);
     }
     text_of(&table)

@@ -2,7 +2,7 @@
 
 use std::time::Duration;
 
-use borewake_model::ground::EdgeKind;
+use borewake_model::ground::{Anisotropy, EdgeKind};
 use borewake_model::units::significant;
 
 use crate::config::{
@@ -16,6 +16,16 @@ pub(super) fn edge_word(kind: EdgeKind) -> &'static str {
         EdgeKind::Closed => "closed",
         EdgeKind::Fixed => "fixed",
     }
+}
+
+/// An anisotropy as the site file has it: its ratio, and the azimuth from 0 to 180 degrees.
+pub(super) fn azimuth_words(anisotropy: Anisotropy) -> String {
+    let azimuth = 90.0 - anisotropy.direction.to_degrees();
+    format!(
+        "{} toward {} deg",
+        significant(anisotropy.ratio, 3),
+        significant(azimuth.rem_euclid(180.0), 3)
+    )
 }
 
 pub(super) fn reference_word(reference: Reference) -> &'static str {

@@ -4,6 +4,7 @@ mod basics;
 mod cross;
 mod ground;
 mod instrument;
+mod layer;
 mod limits;
 mod modbus;
 mod mqtt;
@@ -12,6 +13,7 @@ mod quality;
 mod sdi12;
 mod serial;
 mod sources;
+mod zone;
 
 use std::path::Path;
 
@@ -50,7 +52,8 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
     let store = basics::store(&mut root, folder, &basics.id);
     let watch = basics::watch(&mut root);
 
-    let layers = ground::layers(&mut root);
+    let layers = layer::layers(&mut root);
+    let zones = zone::zones(&mut root, &layers);
     let edge = ground::edge(&mut root);
     let barriers = ground::barriers(&mut root);
     let neighbours = ground::neighbours(&mut root, &layers);
@@ -66,8 +69,9 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
 
     let points: Vec<Point> = cross::points(&wells, &gauges);
     let ground = Ground {
-        edge: ground::edge_of(report, edge, &layers, &points),
+        edge: ground::edge_of(report, edge, &layers, &zones, &points),
         layers: layers.iter().map(|l| l.layer.clone()).collect(),
+        zones: zones.into_iter().map(|z| z.value).collect(),
         barriers: barriers.iter().map(|b| b.value.clone()).collect(),
         wells: wells.iter().map(|w| w.well.clone()).collect(),
         gauges: gauges.iter().map(|g| g.gauge.clone()).collect(),

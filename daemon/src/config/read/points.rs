@@ -9,7 +9,8 @@ use borewake_model::units::{Dimension, YEAR};
 use super::super::section::{At, Section};
 use super::super::values::Sign;
 use super::super::{GaugeSettings, GaugeString, Meter, PastRate, Reference, WellSettings};
-use super::ground::{LayerRead, layer};
+use super::ground::layer;
+use super::layer::LayerRead;
 use crate::record::{ChannelId, Holds};
 
 /// Noise of a pressure gauge whose site file states none \[Pa\]. Common practice, no source.

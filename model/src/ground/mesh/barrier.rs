@@ -1,4 +1,6 @@
 //! What of the barriers lies inside the edge, and which of them cannot be meshed.
+//!
+//! Barriers and outlines of zones are both lines that triangles must not cross: traces.
 
 use std::f64::consts::PI;
 
@@ -8,12 +10,38 @@ use super::triangulate::fail;
 use super::{distance, line};
 use crate::ModelError;
 
-/// A part of a barrier inside the edge.
+/// What a line belongs to, by its order in the ground.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub(super) enum Trace {
+    Barrier(usize),
+    Zone(usize),
+}
+
+impl Trace {
+    /// What it is, for messages.
+    pub(super) fn name(self, ground: &Ground) -> String {
+        match self {
+            Self::Barrier(b) => {
+                let name = ground.barriers.get(b).map_or("", |b| b.name.as_str());
+                format!("barrier {name}")
+            }
+            Self::Zone(z) => {
+                let name = ground.zones.get(z).map_or("", |z| z.name.as_str());
+                format!("the outline of zone {name}")
+            }
+        }
+    }
+}
+
+/// A part of a line inside the edge.
 #[derive(Debug, Clone)]
 pub(super) struct Part {
-    pub(super) barrier: usize,
+    pub(super) of: Trace,
     pub(super) line: Vec<Point>,
 }
+
+/// A piece of a line from corner to corner.
+pub(super) type Segment = (Point, Point);
 
 impl Plan {
     /// Lays the parts of all barriers that lie inside the edge.
@@ -39,13 +67,13 @@ impl Plan {
             }
             for part in parts {
                 self.place_ends(&barrier.name, &part);
-                self.barriers.push(Part {
-                    barrier: b,
+                self.lines.push(Part {
+                    of: Trace::Barrier(b),
                     line: part,
                 });
             }
         }
-        self.check_barriers(ground)
+        Ok(())
     }
 
     /// Flow crowds at the ends of a barrier and at its sharp corners: they are centres too.
@@ -77,11 +105,12 @@ impl Plan {
         }
     }
 
-    fn check_barriers(&self, ground: &Ground) -> Result<(), ModelError> {
-        let name = |b: usize| ground.barriers.get(b).map_or("", |b| b.name.as_str());
+    /// Refuses lines that cross, and lines that leave a corner too close together.
+    pub(super) fn check_lines(&self, ground: &Ground) -> Result<(), ModelError> {
         let all = self.segments();
         for (i, &(b, s)) in all.iter().enumerate() {
             for &(c, t) in all.iter().skip(i + 1) {
+                let zones = matches!(b, Trace::Zone(_)) || matches!(c, Trace::Zone(_));
                 let same = |p: Point, q: Point| distance(p, q) <= self.apart;
                 let shared = [
                     (s.0, s.1, t.0, t.1),
@@ -92,47 +121,42 @@ impl Plan {
                 .into_iter()
                 .find(|&(p, _, q, _)| same(p, q));
                 if let Some((p, q, _, r)) = shared {
-                    if line::angle(p, q, r) < 0.1 {
+                    // An outline may follow a barrier or another outline.
+                    let one = zones && same(q, r);
+                    if !one && line::angle(p, q, r) < 0.1 {
                         let why = format!(
-                            "barriers {} and {} run back along each other; leave one of them out",
-                            name(b),
-                            name(c)
+                            "{} and {} run back along each other; {}",
+                            b.name(ground),
+                            c.name(ground),
+                            if zones {
+                                "let them share a line or part at a wider angle"
+                            } else {
+                                "leave one of them out"
+                            }
                         );
                         return Err(fail(p, &why));
                     }
                 } else if line::between(s, t) <= 1e3 * self.apart {
                     let why = format!(
-                        "barriers {} and {} cross; give both a corner at the crossing",
-                        name(b),
-                        name(c)
+                        "{} and {} cross; give both a corner at the crossing",
+                        b.name(ground),
+                        c.name(ground)
                     );
-                    return Err(fail(meeting(s, t), &why));
+                    return Err(fail(line::meeting(s, t), &why));
                 }
             }
         }
         Ok(())
     }
 
-    /// All segments of barriers inside the edge, with their barrier.
-    pub(super) fn segments(&self) -> Vec<(usize, (Point, Point))> {
-        let pairs = self.barriers.iter().flat_map(|part| {
+    /// All segments of lines inside the edge, with what they belong to.
+    pub(super) fn segments(&self) -> Vec<(Trace, Segment)> {
+        let pairs = self.lines.iter().flat_map(|part| {
             part.line.windows(2).filter_map(move |w| match w {
-                &[a, b] => Some((part.barrier, (a, b))),
+                &[a, b] => Some((part.of, (a, b))),
                 _ => None,
             })
         });
         pairs.collect()
     }
-}
-
-/// Where two crossing segments meet, or the first's start where they only touch.
-fn meeting((a, b): (Point, Point), (c, d): (Point, Point)) -> Point {
-    let (u, v) = ([b[0] - a[0], b[1] - a[1]], [d[0] - c[0], d[1] - c[1]]);
-    let det = u[0] * v[1] - u[1] * v[0];
-    if det == 0.0 {
-        return a;
-    }
-    let t = ((c[0] - a[0]) * v[1] - (c[1] - a[1]) * v[0]) / det;
-    let t = t.clamp(0.0, 1.0);
-    [a[0] + t * u[0], a[1] + t * u[1]]
 }

@@ -3,7 +3,7 @@
 use std::f64::consts::PI;
 
 use super::super::{Ground, Point, Seat};
-use super::barrier::Part;
+use super::barrier::{Part, Trace};
 use super::size::Size;
 use super::triangulate::fail;
 use super::{MeshOptions, capacity, distance, line, outline_factor};
@@ -46,7 +46,8 @@ pub(super) struct Plan {
     pub(super) gauges: Vec<Option<usize>>,
     /// Centre of each neighbour that has one.
     pub(super) neighbours: Vec<Option<usize>>,
-    pub(super) barriers: Vec<Part>,
+    /// Barriers and outlines of zones.
+    pub(super) lines: Vec<Part>,
     pub(super) middle: Point,
     /// Circumradius of the outline.
     pub(super) outline: f64,
@@ -79,7 +80,7 @@ impl Plan {
             wells: Vec::new(),
             gauges: Vec::new(),
             neighbours: Vec::new(),
-            barriers: Vec::new(),
+            lines: Vec::new(),
             middle: middle(ground),
             outline,
             outline_points,
@@ -109,7 +110,9 @@ impl Plan {
             plan.neighbours.push(place);
         }
         plan.place_barriers(ground)?;
-        plan.settle()?;
+        plan.place_zones(ground)?;
+        plan.check_lines(ground)?;
+        plan.settle(ground)?;
         plan.size.centres = plan
             .centres
             .iter()
@@ -230,7 +233,7 @@ impl Plan {
     }
 
     /// First rings, once all centres are known, and what makes them impossible.
-    fn settle(&mut self) -> Result<(), ModelError> {
+    fn settle(&mut self, ground: &Ground) -> Result<(), ModelError> {
         let segments = self.segments();
         let all = self.centres.clone();
         for (i, centre) in self.centres.iter_mut().enumerate() {
@@ -261,17 +264,25 @@ impl Plan {
                 }
                 nearest = nearest.min(d);
             }
-            let mut barrier = f64::INFINITY;
-            for &(_, (a, b)) in &segments {
+            let (mut barrier, mut nearest_line) = (f64::INFINITY, None);
+            for &(of, (a, b)) in &segments {
                 let own = distance(a, centre.at).min(distance(b, centre.at)) <= self.apart;
                 if own && barrier_end {
                     continue;
                 }
-                barrier = barrier.min(line::from_segment(centre.at, a, b));
+                let away = line::from_segment(centre.at, a, b);
+                if away < barrier {
+                    (barrier, nearest_line) = (away, Some(of));
+                }
             }
             if barrier < (3.0 * reach).max(100.0 * self.apart) {
+                let passes = match nearest_line {
+                    Some(Trace::Zone(_)) => "the outline or the point",
+                    _ => "the barrier or the point",
+                };
                 let why = format!(
-                    "a barrier passes through {}; move the barrier or the point to the side it belongs to",
+                    "{} passes through {}; move {passes} to the side it belongs to",
+                    nearest_line.map_or_else(String::new, |of| of.name(ground)),
                     centre.name
                 );
                 return Err(fail(centre.at, &why));
@@ -308,7 +319,9 @@ fn middle(ground: &Ground) -> Point {
 
 fn check_numbers(ground: &Ground) -> Result<(), ModelError> {
     let finite = |p: Point| p[0].is_finite() && p[1].is_finite();
-    let corners = ground.barriers.iter().flat_map(|b| b.line.iter().copied());
+    let corners = ground.barriers.iter().map(|b| &b.line);
+    let corners = corners.chain(ground.zones.iter().map(|z| &z.outline));
+    let corners = corners.flatten().copied();
     let mut places = ground
         .wells
         .iter()

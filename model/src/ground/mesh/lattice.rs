@@ -125,7 +125,7 @@ fn stations(mut places: Vec<f64>, middle: f64, radius: f64, share: f64, apart: f
         (Some(a), Some(b)) if b > a => b - a,
         _ => radius / 10.0,
     };
-    let least = 0.01 * extent;
+    let least = 0.08 * share * extent;
     let mut ends = vec![middle - radius];
     ends.extend(places);
     ends.push(middle + radius);

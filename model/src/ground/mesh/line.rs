@@ -29,6 +29,18 @@ pub(super) fn between((a, b): (Point, Point), (c, d): (Point, Point)) -> f64 {
         .min(from_segment(d, a, b))
 }
 
+/// Where two crossing segments meet, or the first's start where they only touch.
+pub(super) fn meeting((a, b): (Point, Point), (c, d): (Point, Point)) -> Point {
+    let (u, v) = ([b[0] - a[0], b[1] - a[1]], [d[0] - c[0], d[1] - c[1]]);
+    let det = u[0] * v[1] - u[1] * v[0];
+    if det == 0.0 {
+        return a;
+    }
+    let t = ((c[0] - a[0]) * v[1] - (c[1] - a[1]) * v[0]) / det;
+    let t = t.clamp(0.0, 1.0);
+    [a[0] + t * u[0], a[1] + t * u[1]]
+}
+
 /// Angle between the directions `p -> q` and `p -> r` \[radians, 0 to pi\].
 pub(super) fn angle(p: Point, q: Point, r: Point) -> f64 {
     let dot = (q[0] - p[0]) * (r[0] - p[0]) + (q[1] - p[1]) * (r[1] - p[1]);

@@ -12,9 +12,11 @@ mod lattice;
 mod line;
 mod points;
 mod polygon;
+mod quality;
 mod size;
 mod split;
 mod triangulate;
+mod zone;
 
 use serde::{Deserialize, Serialize};
 
@@ -22,6 +24,7 @@ use super::{EdgeKind, Ground, Point};
 use crate::ModelError;
 
 pub use polygon::capacity;
+pub use quality::Quality;
 
 /// How fine a mesh is to be.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
@@ -101,19 +104,6 @@ pub struct Joint {
     pub other: [usize; 2],
 }
 
-/// What a mesh is like.
-#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
-pub struct Quality {
-    /// Vertices.
-    pub vertices: usize,
-    /// Triangles.
-    pub triangles: usize,
-    /// Vertices and sides together: the nodes of quadratic elements in one layer.
-    pub quadratic_nodes: usize,
-    /// The smallest angle of any triangle outside the cut-outs \[degrees\].
-    pub least_angle: f64,
-}
-
 impl Mesh {
     /// Meshes the ground.
     ///
@@ -146,23 +136,6 @@ impl Mesh {
         all.sort_unstable();
         all.dedup();
         all
-    }
-
-    /// What the mesh is like.
-    #[must_use]
-    pub fn quality(&self) -> Quality {
-        let mut inside: Vec<usize> = self.wells.iter().flat_map(|w| w.inside.clone()).collect();
-        inside.sort_unstable();
-        let least = (0..self.triangles.len())
-            .filter(|t| inside.binary_search(t).is_err())
-            .map(|t| least_angle(self.corners(t)))
-            .fold(180.0, f64::min);
-        Quality {
-            vertices: self.points.len(),
-            triangles: self.triangles.len(),
-            quadratic_nodes: self.points.len() + self.sides().len(),
-            least_angle: least,
-        }
     }
 
     /// Checks that the mesh is one: every triangle counter-clockwise, every inner side shared by two, every
@@ -255,15 +228,6 @@ pub(crate) fn cross(a: Point, b: Point, c: Point) -> f64 {
 /// Distance between two points.
 pub(crate) fn distance(a: Point, b: Point) -> f64 {
     (a[0] - b[0]).hypot(a[1] - b[1])
-}
-
-fn least_angle([a, b, c]: [Point; 3]) -> f64 {
-    let twice = cross(a, b, c);
-    let angle = |p: Point, q: Point, r: Point| {
-        let dot = (q[0] - p[0]) * (r[0] - p[0]) + (q[1] - p[1]) * (r[1] - p[1]);
-        twice.atan2(dot).to_degrees()
-    };
-    angle(a, b, c).min(angle(b, c, a)).min(angle(c, a, b))
 }
 
 /// Circumradius factor of the outer boundary: a closed edge keeps the circle's area.

@@ -3,6 +3,7 @@
 use std::f64::consts::PI;
 
 use super::super::Point;
+use super::barrier::{Segment, Trace};
 use super::centre::{Centre, Plan};
 use super::triangulate::{fail, triangulate};
 use super::{cross, distance, line};
@@ -49,8 +50,11 @@ pub(super) fn lay(plan: &Plan) -> Result<Laid, ModelError> {
     }
     constraints.sort_unstable();
     constraints.dedup();
-    let pieces = lay_barriers(plan, &mut points)?;
-    constraints.extend(pieces.iter().map(|(_, piece)| *piece));
+    let (barriers, outlines) = lay_lines(plan, &mut points)?;
+    constraints.extend(barriers.iter().map(|(_, piece)| *piece));
+    constraints.extend(outlines);
+    constraints.sort_unstable();
+    constraints.dedup();
     lay_outline(plan, &mut points);
     lay_rings(plan, &mut points);
     let mut triangles = triangulate(&points, &constraints, plan.apart)?;
@@ -71,7 +75,7 @@ pub(super) fn lay(plan: &Plan) -> Result<Laid, ModelError> {
         points,
         triangles,
         rings,
-        pieces,
+        pieces: barriers,
     })
 }
 
@@ -97,13 +101,19 @@ fn on_ring(centre: &Centre, radius: f64, k: usize, offset: f64) -> Point {
     ]
 }
 
-/// Points along barriers, spaced as the size asks, and the pieces between them.
-fn lay_barriers(
-    plan: &Plan,
-    points: &mut Vec<Point>,
-) -> Result<Vec<(usize, [usize; 2])>, ModelError> {
-    let mut pieces: Vec<(usize, [usize; 2])> = Vec::new();
-    for (barrier, (a, b)) in plan.segments() {
+/// Pieces of barriers, with their barrier, and pieces of outlines of zones.
+type Pieces = (Vec<(usize, [usize; 2])>, Vec<[usize; 2]>);
+
+/// Points along barriers and outlines of zones, spaced as the size asks, and the pieces between them.
+fn lay_lines(plan: &Plan, points: &mut Vec<Point>) -> Result<Pieces, ModelError> {
+    let (mut barriers, mut outlines): Pieces = Default::default();
+    let all = plan.segments();
+    for &(of, segment) in &all {
+        // Lines that run together must lay the same points, whichever way they run.
+        let (a, b) = match segment {
+            (a, b) if (a[0], a[1]) > (b[0], b[1]) => (b, a),
+            both => both,
+        };
         let mut add = |p: Point| {
             let known = points.iter().position(|q| distance(*q, p) <= plan.apart);
             known.unwrap_or_else(|| {
@@ -112,13 +122,17 @@ fn lay_barriers(
             })
         };
         let mut before = add(a);
-        for share in shares(plan, a, b) {
+        for share in shares(plan, &all, (a, b)) {
             let here = add([a[0] + share * (b[0] - a[0]), a[1] + share * (b[1] - a[1])]);
-            pieces.push((barrier, super::ordered(before, here)));
+            let piece = super::ordered(before, here);
+            match of {
+                Trace::Barrier(barrier) => barriers.push((barrier, piece)),
+                Trace::Zone(_) => outlines.push(piece),
+            }
             before = here;
         }
     }
-    let mut seen: Vec<[usize; 2]> = pieces.iter().map(|p| p.1).collect();
+    let mut seen: Vec<[usize; 2]> = barriers.iter().map(|p| p.1).collect();
     seen.sort_unstable();
     for pair in seen.windows(2) {
         if let [a, b] = pair
@@ -131,20 +145,35 @@ fn lay_barriers(
             ));
         }
     }
-    Ok(pieces)
+    Ok((barriers, outlines))
+}
+
+/// Size asked for at a point of a line: no larger than the gap to a line beside it, down to a twentieth.
+fn size_on_line(plan: &Plan, beside: &[Segment], p: Point) -> f64 {
+    let h = plan.size.at(p);
+    let gap = beside
+        .iter()
+        .map(|&(a, b)| line::from_segment(p, a, b))
+        .fold(f64::INFINITY, f64::min);
+    h.min(gap.max(0.05 * h))
 }
 
 /// Ends of the pieces of a segment, as ascending shares of it that end with one; at least two, so that a
 /// barrier always has a point with two sides.
-fn shares(plan: &Plan, a: Point, b: Point) -> Vec<f64> {
+fn shares(plan: &Plan, all: &[(Trace, Segment)], (a, b): Segment) -> Vec<f64> {
     let length = distance(a, b);
+    let meets = |&(c, d): &Segment| {
+        let ends = [(a, c), (a, d), (b, c), (b, d)];
+        ends.into_iter().any(|(p, q)| distance(p, q) <= plan.apart)
+    };
+    let beside: Vec<Segment> = all.iter().map(|s| s.1).filter(|s| !meets(s)).collect();
     let at = |s: f64| [a[0] + s * (b[0] - a[0]), a[1] + s * (b[1] - a[1])];
     // The number of pieces up to each station, found by small steps, since the size varies with place.
     let (mut s, mut count, mut track) = (0.0, 0.0, vec![(0.0, 0.0)]);
     while s < 1.0 {
-        let h = plan.size.at(at(s));
+        let h = size_on_line(plan, &beside, at(s));
         let step = (0.1 * h / length).max(1e-5).min(1.0 - s);
-        let middle = plan.size.at(at(s + 0.5 * step));
+        let middle = size_on_line(plan, &beside, at(s + 0.5 * step));
         count += step * length / middle;
         s = if 1.0 - s - step < 1e-12 {
             1.0
