@@ -67,7 +67,9 @@ fn json_is_one_document() {
     assert_eq!(document["holds"], true);
     assert_eq!(document["site"]["gauges"][0]["channel"], "o2.pressure");
     assert_eq!(document["model"]["usable"], false);
-    assert!(document["mesh"]["least_angle"].as_f64().unwrap() > 15.0);
+    let mesh = &document["mesh"];
+    assert!(mesh["quality"]["least_angle"].as_f64().unwrap() > 15.0);
+    assert!(mesh["spread"]["sizes"].as_f64().unwrap() < 1e-3);
 }
 
 #[test]
@@ -78,6 +80,7 @@ fn the_mesh_is_told_and_a_ground_without_one_names_the_place() {
         " nodes in one layer\n",
         "least angle ",
         "steepest grading ",
+        "moves them by ",
     ] {
         assert!(told.contains(piece), "{piece}\n--\n{told}");
     }

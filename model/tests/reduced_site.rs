@@ -5,7 +5,7 @@ mod support;
 use borewake_model::closed_form::line_source;
 use borewake_model::ground::mesh::MeshOptions;
 use borewake_model::ground::{Barrier, Seat};
-use borewake_model::reduce::{BoxCorners, ReduceOptions, reduce};
+use borewake_model::reduce::{BoxCorners, ReduceOptions, reduce, spread};
 use borewake_model::weak_form::{Scheme, discretise};
 use support::{S, T, three_wells};
 
@@ -76,4 +76,17 @@ fn a_site_with_barrier_skin_and_storage_keeps_its_certificate_over_the_box() {
     println!("{said:?}");
     assert!(said.ports < 2e-4, "{said:?}");
     assert!(said.box_corners.unwrap() < 2e-3, "{said:?}");
+}
+
+#[test]
+fn the_spread_between_discretisations_brackets_the_error() {
+    let found = spread(&three_wells(), &MeshOptions::default()).unwrap();
+    println!("{found:?}");
+    // The error against the line source is below 1e-4 of a peak on the finer mesh, and some percent for linear elements.
+    assert!(found.sizes > 1e-5 && found.sizes < 6e-4, "{found:?}");
+    assert!(
+        found.schemes > found.sizes && found.schemes < 0.05,
+        "{found:?}"
+    );
+    assert!(found.unknowns.1 < found.unknowns.0);
 }

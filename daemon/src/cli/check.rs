@@ -3,7 +3,10 @@
 use std::path::PathBuf;
 use std::time::Duration;
 
-use borewake_model::ground::mesh::{Mesh, MeshOptions};
+use borewake_model::ModelError;
+use borewake_model::ground::Ground;
+use borewake_model::ground::mesh::{Mesh, MeshOptions, Quality};
+use borewake_model::reduce::{Spread, spread};
 use borewake_model::units::Dimension;
 use clap::Args;
 use serde_json::{Value, json};
@@ -48,10 +51,10 @@ impl Check {
     pub(super) fn run(self, context: &Context) -> Result<Exit, Failure> {
         match config::load(&self.site) {
             Ok(site) if self.sources => talk(&site, self.wait, context),
-            Ok(site) => match Mesh::fit(&site.ground, &MeshOptions::default()) {
-                Ok(mesh) => {
-                    let parts = [mesh::summary(&site, &mesh.quality()), ground_summary(&site)];
-                    print(&held(&site, &parts, context.json))?;
+            Ok(site) => match meshed(&site.ground) {
+                Ok((quality, spread)) => {
+                    let mesh = mesh::summary(&site, &quality, &spread);
+                    print(&held(&site, &[mesh, ground_summary(&site)], context.json))?;
                     Ok(Exit::Done)
                 }
                 Err(why) => {
@@ -71,6 +74,13 @@ impl Check {
             Err(unreadable) => Err(unreadable.into()),
         }
     }
+}
+
+/// What the mesh of a ground is like, and how far discretisation moves what the model says.
+fn meshed(ground: &Ground) -> Result<(Quality, Spread), ModelError> {
+    let options = MeshOptions::default();
+    let quality = Mesh::fit(ground, &options)?.quality();
+    Ok((quality, spread(ground, &options)?))
 }
 
 /// Talks to the sources of a site file that holds.

@@ -18,6 +18,7 @@ mod propagate;
 mod rows;
 mod search;
 mod span;
+mod spread;
 mod step;
 #[cfg(test)]
 mod tests;
@@ -27,6 +28,7 @@ pub use basis::Basis;
 pub use factor::ShiftedCholesky;
 pub use options::{BoxCorners, ReduceOptions};
 pub use propagate::Propagator;
+pub use spread::{Spread, spread};
 pub use step::Gains;
 
 use nalgebra::{DMatrix, DVector};

@@ -2,6 +2,7 @@
 
 use borewake_model::ModelError;
 use borewake_model::ground::mesh::Quality;
+use borewake_model::reduce::Spread;
 use borewake_model::units::Dimension;
 use serde_json::{Value, json};
 
@@ -14,8 +15,8 @@ const SLIVER: f64 = 15.0;
 /// Neighbouring triangles that differ by more than this, as lengths, spoil it too. Common practice, no source.
 const STEEP: f64 = 4.0;
 
-/// What the mesh of a ground is like.
-pub(super) fn summary(site: &Site, quality: &Quality) -> GroundSummary {
+/// What the mesh of a ground is like, and what another mesh or scheme would say instead.
+pub(super) fn summary(site: &Site, quality: &Quality, spread: &Spread) -> GroundSummary {
     let place = |[x, y]: [f64; 2]| {
         let show = |v| site.units.show(Dimension::Length, v);
         format!("{} east, {} north", show(x), show(y))
@@ -44,9 +45,13 @@ pub(super) fn summary(site: &Site, quality: &Quality) -> GroundSummary {
     if quality.least_angle < SLIVER || quality.grading > STEEP {
         text += "  the model is less accurate there: move lines and points that nearly touch apart, or let them meet\n";
     }
+    text += &format!(
+        "  responses from an hour to a year, as a share of their peak: a mesh with three quarters of the points on a ring\n  moves them by {:.1e}, linear in place of quadratic elements by {:.1e}\n",
+        spread.sizes, spread.schemes,
+    );
     GroundSummary {
         text,
-        json: json!(quality),
+        json: json!({ "quality": quality, "spread": spread }),
     }
 }
 
