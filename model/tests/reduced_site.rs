@@ -4,9 +4,9 @@ mod support;
 
 use borewake_model::closed_form::line_source;
 use borewake_model::ground::mesh::MeshOptions;
-use borewake_model::ground::{Barrier, Seat};
+use borewake_model::ground::{Barrier, Seat, Zone};
 use borewake_model::reduce::{BoxCorners, ReduceOptions, reduce, spread};
-use borewake_model::weak_form::{Scheme, discretise};
+use borewake_model::weak_form::{Parameter, Scheme, discretise};
 use support::{S, T, three_wells};
 
 #[test]
@@ -89,4 +89,50 @@ fn the_spread_between_discretisations_brackets_the_error() {
         "{found:?}"
     );
     assert!(found.unknowns.1 < found.unknowns.0);
+}
+
+#[test]
+fn a_zone_is_a_parameter_like_any_other() {
+    let mut g = three_wells();
+    g.zones = vec![Zone {
+        name: "channel".into(),
+        layer: 0,
+        outline: vec![
+            [250.0, -900.0],
+            [1600.0, -700.0],
+            [1900.0, 900.0],
+            [900.0, 1300.0],
+        ],
+        transmissivity: 0.3 * T,
+        storativity: S,
+    }];
+    let coarse = MeshOptions {
+        points_per_ring: 8,
+        ..MeshOptions::default()
+    };
+    let options = ReduceOptions {
+        checked_times: 2,
+        checked_nodes: 2,
+        ..ReduceOptions::default()
+    };
+    let modal = |g: &_, factors| {
+        let system = discretise(g, Scheme::Quadratic, &coarse).unwrap().system;
+        let reduced = reduce(&system, &[], &options).unwrap();
+        reduced.modal(&factors).unwrap()
+    };
+    let moved = modal(&g, vec![(Parameter::ZoneTransmissivity(0), 1.4)]);
+    g.zones[0].transmissivity *= 1.4;
+    let anew = modal(&g, Vec::new());
+    for w in 0..g.wells.len() {
+        for i in 0..g.gauges.len() {
+            let at = |m: &borewake_model::reduce::Modal, t| {
+                m.step_response(m.gauges.column(i), m.wells.column(w), t)
+            };
+            let peak = at(&anew, 3.156e7);
+            for t in [3600.0, 86_400.0, 2.6e6, 3.156e7] {
+                let error = (at(&moved, t) - at(&anew, t)) / peak;
+                assert!(error.abs() < 5e-4, "well {w} gauge {i} t {t}: {error:.1e}");
+            }
+        }
+    }
 }

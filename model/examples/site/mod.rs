@@ -122,6 +122,14 @@ fn processor_seconds() -> Option<f64> {
         .map(|ns| ns * 1e-9)
 }
 
+/// Largest memory this process has held so far \[MB\], where the system tells it.
+pub(crate) fn peak_memory() -> f64 {
+    let text = std::fs::read_to_string("/proc/self/status").unwrap_or_default();
+    let line = text.lines().find_map(|l| l.strip_prefix("VmHWM:"));
+    let kilobytes = line.and_then(|l| l.trim().strip_suffix(" kB")?.parse::<f64>().ok());
+    kilobytes.map_or(f64::NAN, |k| k / 1024.0)
+}
+
 /// Log-spaced times \[s\].
 pub(crate) fn log_times(first: f64, last: f64, count: u32) -> Vec<f64> {
     (0..count)

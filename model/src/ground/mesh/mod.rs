@@ -10,6 +10,7 @@ mod barrier;
 mod centre;
 mod lattice;
 mod line;
+mod near;
 mod points;
 mod polygon;
 mod quality;

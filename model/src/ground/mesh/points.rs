@@ -5,6 +5,7 @@ use std::f64::consts::PI;
 use super::super::Point;
 use super::barrier::{Segment, Trace};
 use super::centre::{Centre, Plan};
+use super::near::Near;
 use super::triangulate::{fail, triangulate};
 use super::{cross, distance, line};
 use crate::ModelError;
@@ -223,6 +224,7 @@ fn lay_outline(plan: &Plan, points: &mut Vec<Point>) {
 
 /// Rings round every centre, as far as it is the nearest one.
 fn lay_rings(plan: &Plan, points: &mut Vec<Point>) {
+    let lines = plan.segments();
     let mut wanted: Vec<(f64, Point)> = Vec::new();
     for (i, centre) in plan.centres.iter().enumerate() {
         let growth = (0.5 * 3f64.sqrt() * centre.share()).exp();
@@ -234,15 +236,22 @@ fn lay_rings(plan: &Plan, points: &mut Vec<Point>) {
             let offset = if k % 2 == 0 { 0.0 } else { 0.5 };
             for j in 0..centre.ring {
                 let p = on_ring(centre, radius, j, offset);
-                if plan.size.owner(p) == Some(i) && clear(plan, p) {
+                if plan.size.owner(p) == Some(i) && clear(plan, &lines, p) {
                     wanted.push((plan.size.at(p), p));
                 }
             }
         }
     }
     wanted.sort_by(|a, b| a.0.total_cmp(&b.0));
-    for (h, p) in wanted {
-        if points.iter().all(|q| distance(*q, p) > CLOSE * h) {
+    add_apart(plan, points, wanted.into_iter().map(|(h, p)| (p, h)));
+}
+
+/// Adds points in order, each unless another lies close for the size asked for there.
+fn add_apart(plan: &Plan, points: &mut Vec<Point>, wanted: impl Iterator<Item = (Point, f64)>) {
+    let mut near = Near::of(points, plan.middle, plan.outline);
+    for (p, h) in wanted {
+        if !near.any(p, CLOSE * h) {
+            near.add(p);
             points.push(p);
         }
     }
@@ -282,18 +291,18 @@ fn radii(centre: &Centre, growth: f64, reach: f64) -> Vec<(f64, bool)> {
 }
 
 /// Whether a point is inside the edge and keeps off it and off barriers.
-fn clear(plan: &Plan, p: Point) -> bool {
+fn clear(plan: &Plan, lines: &[(Trace, Segment)], p: Point) -> bool {
     let h = plan.size.at(p);
     let apothem = plan.outline * (PI / plan.outline_points as f64).cos();
     apothem - distance(p, plan.middle) > CLEAR * h
-        && plan
-            .segments()
+        && lines
             .iter()
             .all(|&(_, (a, b))| line::from_segment(p, a, b) > CLEAR * h)
 }
 
 /// Puts points into the middle of triangles that are too large. Says whether there was one.
 fn fill(plan: &Plan, points: &mut Vec<Point>, triangles: &[[usize; 3]]) -> bool {
+    let lines = plan.segments();
     let mut wanted: Vec<(f64, Point)> = Vec::new();
     for t in triangles {
         let [Some(&a), Some(&b), Some(&c)] = t.map(|v| points.get(v)) else {
@@ -307,18 +316,14 @@ fn fill(plan: &Plan, points: &mut Vec<Point>, triangles: &[[usize; 3]]) -> bool 
             .centres
             .iter()
             .any(|centre| distance(centre.at, middle) < 0.99 * centre.start);
-        if radius > GAP * h && !in_first_ring && clear(plan, middle) {
+        if radius > GAP * h && !in_first_ring && clear(plan, &lines, middle) {
             wanted.push((h / radius, middle));
         }
     }
     wanted.sort_by(|a, b| a.0.total_cmp(&b.0));
     let before = points.len();
-    for (_, p) in wanted {
-        let h = plan.size.at(p);
-        if points.iter().all(|q| distance(*q, p) > CLOSE * h) {
-            points.push(p);
-        }
-    }
+    let sized = wanted.into_iter().map(|(_, p)| (p, plan.size.at(p)));
+    add_apart(plan, points, sized);
     points.len() > before
 }
 
