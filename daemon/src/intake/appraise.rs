@@ -57,28 +57,45 @@ impl Appraiser {
         }
     }
 
+    /// Channels whose last values are to be [recalled](Self::recall) at a start.
+    pub fn companions(&self) -> impl Iterator<Item = &ChannelId> {
+        self.latest.keys()
+    }
+
+    /// Takes up a stored reading: a start must not leave an instrument without its companions until they report again, which
+    /// may take as long as the barometer likes.
+    pub fn recall(&mut self, reading: &Reading) {
+        let settings = self.settings(&reading.channel);
+        self.remember(settings.as_deref(), reading);
+    }
+
     /// Gives every reading of an instrument its value, and every tested one its quality. The rest passes through untouched.
     pub fn appraise(&mut self, deliveries: &mut [Delivery]) {
         if self.named.is_empty() && self.patterns.is_empty() {
             return;
         }
         for delivery in deliveries {
-            // Companions come first: those of one scan belong together, in whatever order they stand.
-            let waits = |a: &Self, r: &Reading| {
-                a.settings(&r.channel)
-                    .is_some_and(|s| s.companions().next().is_some())
-            };
-            for last in [false, true] {
-                for index in 0..delivery.readings.len() {
-                    let Some(reading) = delivery.readings.get_mut(index) else {
-                        continue;
-                    };
-                    if waits(self, reading) == last {
-                        self.one(reading);
+            // Of one instant companions come first, in whatever order they stand; else everything goes in its order, so that
+            // it makes no difference how readings are gathered into deliveries.
+            let scans = delivery
+                .readings
+                .chunk_by_mut(|a, b| a.sampled == b.sampled);
+            for scan in scans {
+                for last in [false, true] {
+                    for reading in scan.iter_mut() {
+                        if self.waits(&reading.channel) == last {
+                            self.one(reading);
+                        }
                     }
                 }
             }
         }
+    }
+
+    /// Whether a channel needs another's value.
+    fn waits(&self, channel: &ChannelId) -> bool {
+        let settings = self.settings(channel);
+        settings.is_some_and(|s| s.companions().next().is_some())
     }
 
     fn settings(&self, channel: &ChannelId) -> Option<Arc<ChannelSettings>> {
@@ -107,6 +124,11 @@ impl Appraiser {
             let found = judge(tests, history, candidate);
             reading.quality = reading.quality.max_concern(found);
         }
+        self.remember(settings.as_deref(), reading);
+    }
+
+    /// Keeps what another channel may need.
+    fn remember(&mut self, settings: Option<&ChannelSettings>, reading: &Reading) {
         let Some(latest) = self.latest.get_mut(&reading.channel) else {
             return;
         };

@@ -31,6 +31,8 @@ pub struct StoreOptions {
     pub reserve: u64,
     /// Rejected deliveries kept; older ones go.
     pub keep_rejected: i64,
+    /// Messages that wait for one publisher at most; the oldest go, counted, when a far end stays away for ever.
+    pub keep_outbox: i64,
 }
 
 impl Default for StoreOptions {
@@ -42,6 +44,7 @@ impl Default for StoreOptions {
             floor: 4 << 20,
             reserve: 8 << 20,
             keep_rejected: 200_000,
+            keep_outbox: 50_000,
         }
     }
 }

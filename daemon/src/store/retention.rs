@@ -1,5 +1,9 @@
-//! Raw readings go when they are old enough, oldest first and a bounded chunk at a time. Journal, steps,
-//! alarms and their history stay.
+//! Raw readings go when they are old enough, oldest first and a bounded chunk at a time, and with them the batches of the
+//! journal that they came in. The rest of the journal, steps, alarms and their history stay: from them `verify` still works
+//! out the watch's alarms.
+//!
+//! The outbox is bounded too: messages for a far end that stays away for ever go, oldest first. What they told stays in the
+//! history of alarms, and the state of every alarm is told anew with every connection.
 
 use sqlx::Connection;
 
@@ -24,6 +28,8 @@ pub struct Retained {
     pub readings: u64,
     /// Rejected deliveries deleted.
     pub rejected: u64,
+    /// Batches deleted of which no reading is left.
+    pub batches: u64,
     /// Whether there may be more to delete: call again.
     pub more: bool,
 }
@@ -77,6 +83,12 @@ impl Writer {
                 .execute(&mut *tx)
                 .await?;
         }
+        retained.batches = sqlx::query(sql::DROP_EMPTY_BATCHES)
+            .bind(thinned)
+            .bind(chunk)
+            .execute(&mut *tx)
+            .await?
+            .rows_affected();
         retained.rejected = sqlx::query(sql::TRIM_REJECTED)
             .bind(self.options.keep_rejected)
             .bind(retention.before.0)
@@ -85,9 +97,30 @@ impl Writer {
             .await?
             .rows_affected();
         tx.commit().await?;
-        retained.more |= left <= 0 || retained.rejected >= u64::from(retention.chunk.max(1));
+        let full = u64::from(retention.chunk.max(1));
+        retained.more |= left <= 0 || retained.rejected >= full || retained.batches >= full;
         // A channel whose readings are all gone has no newest any more.
         self.known = None;
         Ok(retained)
+    }
+
+    /// Drops the oldest messages of every publisher that has too many waiting, and counts them.
+    pub(super) async fn trim_outbox(&mut self) -> Result<u64> {
+        let mut trimmed: u64 = 0;
+        for target in &self.options.targets {
+            trimmed += sqlx::query(sql::TRIM_OUTBOX)
+                .bind(target)
+                .bind(self.options.keep_outbox)
+                .execute(&mut self.conn)
+                .await?
+                .rows_affected();
+        }
+        if trimmed > 0 {
+            tracing::warn!(
+                trimmed,
+                "the oldest messages waiting for a publisher were given up; the history of alarms has them"
+            );
+        }
+        Ok(trimmed)
     }
 }

@@ -101,12 +101,20 @@ statements! {
     OLDEST_CHUNK = "select max(sampled) from (select sampled from reading where channel = ?1 and sampled < ?2 order by sampled limit ?3)";
     LAST_ARRIVAL_UNTIL = "select coalesce(max(arrival), 0) from reading where channel = ?1 and sampled <= ?2";
     DROP_UNTIL = "delete from reading where channel = ?1 and sampled <= ?2";
+    // A batch whose readings are all gone says no more than that it was. Nothing beyond the desk's position is touched, nor the
+    // last entry, whose number the next one counts from.
+    DROP_EMPTY_BATCHES = "delete from journal where seq in \
+        (select seq from journal j where kind = 'batch' and seq <= ?1 and seq <= (select coalesce(max(position), 0) from desk) \
+        and seq < (select max(seq) from journal) \
+        and not exists (select 1 from reading where arrival = j.seq) order by seq limit ?2)";
+    TRIM_OUTBOX = "delete from outbox where target = ?1 and number <= \
+        (select number from outbox where target = ?1 order by number desc limit 1 offset ?2)";
     TRIM_REJECTED = "delete from rejected where id in \
         (select id from rejected where id <= (select max(id) from rejected) - ?1 or received < ?2 order by id limit ?3)";
 
     // Verifying
     STRAY_CHANNEL = "select count(*) from reading where channel not in (select id from channel)";
-    SEQ_GAPS = "select count(*), coalesce(min(seq), 0), coalesce(max(seq), 0) from journal";
+    SEQ_GAPS = "select count(*), coalesce(min(seq), 0), coalesce(max(seq), 0) from journal where seq > ?1";
     BATCH_ENTRIES = "select seq, payload, (select count(*) from reading where arrival = seq) from journal \
         where kind = 'batch' and seq > ?1 order by seq limit ?2";
     STRAY_ARRIVAL = "select count(*) from reading where arrival not in (select seq from journal where kind = 'batch')";

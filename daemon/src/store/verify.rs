@@ -97,14 +97,19 @@ impl Reader {
     }
 
     async fn check_journal(&self, problems: &mut Vec<Problem>) -> Result<()> {
-        let (count, first, last): (i64, i64, i64) =
-            sqlx::query_as(sql::SEQ_GAPS).fetch_one(&self.pool).await?;
-        if count > 0 && (first != 1 || last != count) {
+        // Up to here batches may have gone with their readings.
+        let thinned = self.thinned_through().await?;
+        let (count, first, last): (i64, i64, i64) = sqlx::query_as(sql::SEQ_GAPS)
+            .bind(thinned)
+            .fetch_one(&self.pool)
+            .await?;
+        if count > 0 && (first != thinned + 1 || last != thinned + count) {
             problems.push(problem(
                 "journal",
-                format!("{count} entries are numbered {first} to {last}"),
+                format!("{count} entries after {thinned} are numbered {first} to {last}"),
             ));
         }
+        let last = last.max(thinned);
         let position: i64 = sqlx::query_scalar(sql::DESK_POSITION)
             .fetch_one(&self.pool)
             .await?;
@@ -136,11 +141,7 @@ impl Reader {
 
     /// Every batch has the readings it was journalled with; from the oldest ones retention may have taken some.
     async fn check_batches(&self, problems: &mut Vec<Problem>) -> Result<()> {
-        let thinned: i64 = self
-            .meta(THINNED_THROUGH)
-            .await?
-            .and_then(|text| text.parse().ok())
-            .unwrap_or(0);
+        let thinned = self.thinned_through().await?;
         let mut seq = 0;
         loop {
             let rows: Vec<(i64, String, i64)> = sqlx::query_as(sql::BATCH_ENTRIES)
@@ -166,6 +167,12 @@ impl Reader {
             }
             seq = end;
         }
+    }
+
+    /// The last batch that may have lost readings.
+    async fn thinned_through(&self) -> Result<i64> {
+        let stored = self.meta(THINNED_THROUGH).await?;
+        Ok(stored.and_then(|text| text.parse().ok()).unwrap_or(0))
     }
 
     async fn check_alarms(&self, problems: &mut Vec<Problem>) -> Result<()> {

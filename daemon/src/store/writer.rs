@@ -238,8 +238,9 @@ impl Writer {
         Ok(())
     }
 
-    /// Empties the write-ahead log into the database.
+    /// Bounds the outbox, and empties the write-ahead log into the database.
     async fn tidy(&mut self) -> Result<()> {
+        self.trim_outbox().await?;
         sqlx::query(sql::TRUNCATE_LOG)
             .execute(&mut self.conn)
             .await?;

@@ -163,6 +163,13 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
     tick.set_missed_tick_behavior(tokio::time::MissedTickBehavior::Skip);
     let mut batch = Vec::new();
     let mut appraiser = intake::Appraiser::new(&site);
+    let needed: Vec<_> = appraiser.companions().cloned().collect();
+    for channel in needed {
+        let last = store.reader().last_usable_before(&channel, Stamp::now());
+        if let Some(last) = last.await? {
+            appraiser.recall(&last);
+        }
+    }
     // Deliveries of the batch that have passed the appraiser.
     let mut appraised = 0;
     let mut due = None;

@@ -306,3 +306,73 @@ quality = { span = ["0 kPa", "400 kPa"], usual = ["50 kPa", "300 kPa"], flat = 3
     );
     assert!(!scans[0][2].is_usable());
 }
+
+#[test]
+fn a_start_takes_up_what_companions_said_last() {
+    let site = site(WIRE, BESIDE);
+    let scans = play(&site, &[&[("baro", 0, 998.0), ("p1.ohm", 0, 3000.0)]]);
+    let mut appraiser = Appraiser::new(&site);
+    let needed: Vec<String> = appraiser.companions().map(ToString::to_string).collect();
+    assert_eq!(needed, ["baro", "p1.ohm"]);
+    for reading in &scans[0] {
+        appraiser.recall(reading);
+    }
+    let mut deliveries = [Delivery {
+        source: "logger".into(),
+        readings: vec![delivered(&site, "p1", 60, 7400.0)],
+        rejected: Vec::new(),
+        ack: None,
+    }];
+    appraiser.appraise(&mut deliveries);
+    let reading = &deliveries[0].readings[0];
+    assert_eq!(
+        (reading.quality, reading.value.is_some()),
+        (Quality::Good, true)
+    );
+}
+
+/// A broker repeats what it was not told of: the same count again is the same reading, not another one.
+#[test]
+fn a_count_that_comes_twice_gives_its_rate_twice() {
+    let meter = r#"
+[[source.channel]]
+id = "meter"
+kind = "rate"
+unit = "m3/d"
+convert = { kind = "totaliser", count = "100 L", most = "2 m3/s" }
+"#;
+    let site = site("", meter);
+    let scans = play(
+        &site,
+        &[
+            &[("meter", 0, 10.0)],
+            &[("meter", 10, 30.0)],
+            &[("meter", 10, 30.0)],
+        ],
+    );
+    assert_eq!(scans[1][0], scans[2][0]);
+    assert!((scans[2][0].value.unwrap() - 0.2).abs() < 1e-12);
+}
+
+/// A log delivers a thousand readings at once, a line one scan at a time: both must give the same.
+#[test]
+fn how_readings_are_gathered_makes_no_difference() {
+    let reference = r#"reference = { from = "vented", to = "absolute", barometer = "baro" }
+quality = { jump = 4, flat = 5, window = "10 min" }"#;
+    let site = site(reference, BESIDE);
+    let rows: Vec<(&str, i64, f64)> = (0..200)
+        .flat_map(|i| {
+            let wave = f64::from(i % 7);
+            let second = i64::from(i) * 10;
+            [
+                ("p1", second, 50.0 + wave),
+                ("baro", second + i64::from(i % 2), 990.0 + wave),
+            ]
+        })
+        .collect();
+    let scans: Vec<&[(&str, i64, f64)]> = rows.chunks(2).collect();
+    let apart: Vec<Reading> = play(&site, &scans).concat();
+    let together = play(&site, &[&rows]).concat();
+    assert_eq!(apart, together);
+    assert!(apart.iter().filter(|r| r.value.is_some()).count() > 390);
+}

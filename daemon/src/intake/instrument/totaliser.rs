@@ -11,6 +11,8 @@ pub(crate) struct Last {
     count: f64,
     sampled: Stamp,
     epoch: ClockEpoch,
+    /// What came of it: a count delivered twice is one reading.
+    outcome: Outcome,
 }
 
 /// Mean rate \[m3/s\] since the count before. There is none for the first count, after a reset, for a count that comes late,
@@ -22,19 +24,40 @@ pub(crate) fn convert(
     sampled: Stamp,
     epoch: ClockEpoch,
 ) -> Outcome {
+    let again = |l: &Last| (l.sampled, l.epoch) == (sampled, epoch) && l.count == count;
+    if let Some(known) = (*last).filter(again) {
+        return known.outcome;
+    }
+    let outcome = since(settings, *last, count, sampled, epoch);
+    let late = last.is_some_and(|l| l.epoch == epoch && sampled <= l.sampled);
+    if !late && is_count(settings, count) {
+        *last = Some(Last {
+            count,
+            sampled,
+            epoch,
+            outcome,
+        });
+    }
+    outcome
+}
+
+fn is_count(settings: &Totaliser, count: f64) -> bool {
+    count >= 0.0 && settings.wrap.is_none_or(|wrap| count < wrap)
+}
+
+/// What a count says together with the one before.
+fn since(
+    settings: &Totaliser,
+    last: Option<Last>,
+    count: f64,
+    sampled: Stamp,
+    epoch: ClockEpoch,
+) -> Outcome {
     let none = Outcome::of(None, Quality::NotEvaluated);
-    if count < 0.0 || settings.wrap.is_some_and(|wrap| count >= wrap) {
+    if !is_count(settings, count) {
         return Outcome::of(None, Quality::Bad);
     }
-    if last.is_some_and(|l| l.epoch == epoch && sampled <= l.sampled) {
-        return none;
-    }
-    let now = Last {
-        count,
-        sampled,
-        epoch,
-    };
-    let Some(before) = last.replace(now).filter(|l| l.epoch == epoch) else {
+    let Some(before) = last.filter(|l| l.epoch == epoch && l.sampled < sampled) else {
         return none;
     };
     let seconds = (sampled.0 - before.sampled.0) as f64 / Stamp::SECOND as f64;

@@ -151,6 +151,39 @@ async fn each_publisher_has_its_own_row_and_a_removed_one_leaves_none() {
 }
 
 #[tokio::test]
+async fn a_far_end_that_stays_away_keeps_the_newest_messages_only() {
+    let dir = tempfile::tempdir().unwrap();
+    let few = StoreOptions {
+        targets: vec!["broker".to_owned(), "hook".to_owned()],
+        keep_outbox: 3,
+        ..options()
+    };
+    let store = Store::open(dir.path(), few).await.unwrap().store;
+    ticks(&store, 6).await;
+    for position in 1..=6 {
+        let sequence = u32::try_from(position).unwrap();
+        let applied = Applied {
+            position,
+            outgoing: vec![message("limit-a", sequence, "{}")],
+            ..Applied::default()
+        };
+        store.apply(applied).await.unwrap();
+    }
+    // One of the two takes its messages; the other is away.
+    let taken = store.reader().outbox_after("hook", 0, 9).await.unwrap();
+    let numbers = taken.iter().take(5).map(|w| w.number).collect();
+    store.sent("hook", numbers).await.unwrap();
+    store.tidy().await.unwrap();
+    let left = async |target: &str| {
+        let waiting = store.reader().outbox_after(target, 0, 9).await.unwrap();
+        let sequences = waiting.iter().map(|w| w.message.id.sequence);
+        sequences.collect::<Vec<_>>()
+    };
+    assert_eq!(left("broker").await, [4, 5, 6]);
+    assert_eq!(left("hook").await, [6]);
+}
+
+#[tokio::test]
 async fn the_digest_tells_alarms_apart_and_not_wall_clocks() {
     let mut digests = Vec::new();
     for (sequence, recorded) in [(1, 10), (1, 20), (2, 10)] {

@@ -5,7 +5,7 @@ use super::{delivery, fresh, open, options, reading};
 use crate::record::{
     AckToken, ClockEpoch, Delivery, EntryKind, Reading, RejectReason, Rejected, Stamp,
 };
-use crate::store::Store;
+use crate::store::{Applied, Store};
 
 #[tokio::test]
 async fn new_readings_are_stored_and_read_back_in_commit_order() {
@@ -214,6 +214,38 @@ async fn retention_takes_the_oldest_in_chunks_and_nothing_else() {
     assert_eq!(left[0], reading("a", 7, 1.0));
     assert_eq!(store.reader().last_seq().await.unwrap(), 10);
     assert!(store.reader().verify_integrity().await.unwrap().is_empty());
+}
+
+#[tokio::test]
+async fn a_batch_goes_with_its_last_reading_and_nothing_else_of_the_journal_does() {
+    let (_dir, store) = fresh().await;
+    for second in 0..10 {
+        let batch = vec![reading("a", second, 1.0)];
+        store.commit(vec![delivery(batch)], Stamp(0)).await.unwrap();
+        store.append(EntryKind::Tick, Stamp(0)).await.unwrap();
+    }
+    let retention = Retention {
+        before: Stamp(7 * Stamp::SECOND),
+        chunk: 100,
+    };
+    // The desk has not been there yet: what it must still process stays.
+    let first = store.retain(retention).await.unwrap();
+    assert_eq!((first.readings, first.batches), (7, 0));
+    let applied = Applied {
+        position: 20,
+        ..Applied::default()
+    };
+    store.apply(applied).await.unwrap();
+    let second = store.retain(retention).await.unwrap();
+    assert_eq!((second.readings, second.batches), (0, 7));
+    let entries = store.reader().entries_after(0, 100).await.unwrap();
+    assert_eq!(entries.len(), 13);
+    let ticks = entries.iter().filter(|e| e.kind == EntryKind::Tick).count();
+    assert_eq!(ticks, 10);
+    assert_eq!(store.reader().last_seq().await.unwrap(), 20);
+    assert!(store.reader().verify_integrity().await.unwrap().is_empty());
+    store.append(EntryKind::Tick, Stamp(0)).await.unwrap();
+    assert_eq!(store.reader().last_seq().await.unwrap(), 21);
 }
 
 #[tokio::test]
