@@ -1,4 +1,4 @@
-//! Zones, anisotropy and compartments against closed forms.
+//! Zones, barriers, anisotropy and compartments against closed forms.
 
 use std::f64::consts::PI;
 
@@ -55,6 +55,61 @@ fn beyond_a_straight_contact_the_image_has_the_contrast_of_transmissivities() {
                 assert!(
                     error.abs() < 2e-3,
                     "contrast {contrast} s {s:e} gauge {i}: {error:.2e}"
+                );
+            }
+        }
+    }
+}
+
+#[test]
+fn a_barrier_resists_by_its_conductance() {
+    // Along the line a wave number k decays with K = sqrt(k^2 + s S/T); of it TK/(2c + TK) comes back, the rest passes.
+    // With k = sqrt(s S/T) sinh u the integral over wave numbers settles fast.
+    let mut g = ground(EdgeKind::Open, 20_000.0);
+    g.wells = vec![well("W", [0.0, 0.0])];
+    let at = [
+        [150.0, 200.0],
+        [-500.0, 100.0],
+        [600.0, -300.0],
+        [900.0, 0.0],
+    ];
+    g.gauges = at.iter().map(|p| gauge("G", in_ground(*p))).collect();
+    // The resistance of 10 m, 200 m and 5 km of ground.
+    for length in [10.0, 200.0, 5000.0] {
+        let conductance = T / length;
+        g.barriers = vec![Barrier {
+            name: "fault".into(),
+            line: vec![[400.0, -50_000.0], [400.0, 50_000.0]],
+            conductance,
+        }];
+        let d = discretise(&g, Scheme::Quadratic, &MeshOptions::default()).unwrap();
+        for s in [1e-6, 1e-5] {
+            let x = transfer(&d.system, s, &d.system.wells);
+            let root = (s * S / T).sqrt();
+            for (i, p) in at.iter().enumerate() {
+                let step = 1e-3;
+                let wave = |reaches: f64, share: &dyn Fn(f64) -> f64| -> f64 {
+                    let terms = (0..9000).map(|n| {
+                        let u = step * f64::from(n);
+                        let decay = root * u.cosh();
+                        let weight = if n == 0 { 0.5 } else { 1.0 };
+                        weight
+                            * share(decay)
+                            * (-decay * reaches).exp()
+                            * (root * u.sinh() * p[1]).cos()
+                    });
+                    step * terms.sum::<f64>()
+                };
+                let back = |k: f64| T * k / (2.0 * conductance + T * k);
+                let exact = if p[0] > 400.0 {
+                    wave(p[0], &|k| 1.0 - back(k))
+                } else {
+                    k0(p[0].hypot(p[1]) * root) + wave(800.0 - p[0], &back)
+                };
+                let error = 2.0 * PI * T * value(&d.system.gauges[i], &x, 0) - exact;
+                assert!(
+                    error.abs() < 2e-3,
+                    "{length} m s {s:e} gauge {i}: {error:.2e} of {exact:.3}"
                 );
             }
         }
