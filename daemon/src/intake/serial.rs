@@ -27,11 +27,12 @@ impl Wire for SerialStream {
     }
 
     fn set_break(&mut self, on: bool) -> io::Result<()> {
-        Ok(if on {
-            tokio_serial::SerialPort::set_break(self)?
+        if on {
+            tokio_serial::SerialPort::set_break(self)?;
         } else {
-            self.clear_break()?
-        })
+            self.clear_break()?;
+        }
+        Ok(())
     }
 }
 

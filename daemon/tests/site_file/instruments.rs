@@ -39,9 +39,10 @@ unit = "degC"
 /// What is said of a file with one mistake.
 #[track_caller]
 fn told(text: &str) -> String {
-    let found = mistakes(text);
-    assert_eq!(found.len(), 1, "{found:?}");
-    found[0].to_string()
+    match &mistakes(text)[..] {
+        [one] => one.to_string(),
+        found => panic!("{found:?}"),
+    }
 }
 
 #[test]

@@ -53,7 +53,7 @@ mod tests {
             coefficients,
             range: (35_000.0, 40_000.0),
             temperature_range: (171_000.0, 173_000.0),
-            unit: (6894.757_293_168, 0.0),
+            unit: (6_894.757_293_168, 0.0),
         }
     }
 
@@ -75,14 +75,14 @@ mod tests {
             }
         }
         let found = quartz.pressure(36_000.0 + x, 172_000.0 + y).unwrap();
-        assert!((found - due * 6894.757_293_168).abs() < 1e-9 * found.abs());
+        assert!((found - due * 6_894.757_293_168).abs() < 1e-9 * found.abs());
     }
 
     /// The six-term form has rows that end early.
     #[test]
     fn short_rows_are_the_lower_terms() {
         let quartz = quartz(vec![vec![1.0, 2.0, 3.0], vec![4.0, 5.0], vec![6.0]]);
-        let found = quartz.pressure(36_002.0, 172_003.0).unwrap() / 6894.757_293_168;
+        let found = quartz.pressure(36_002.0, 172_003.0).unwrap() / 6_894.757_293_168;
         let due = 1.0 + 2.0 * 3.0 + 3.0 * 9.0 + 2.0 * (4.0 + 5.0 * 3.0) + 4.0 * 6.0;
         assert!((found - due).abs() < 1e-9);
     }

@@ -134,7 +134,7 @@ mod tests {
     /// 8000 digits are 2828.4 Hz and 353.55 us (computed).
     #[test]
     fn frequency_and_period_are_digits_too() {
-        let hertz = WireReading::Hertz.digits(2828.427_124_746).unwrap();
+        let hertz = WireReading::Hertz.digits(2_828.427_124_746).unwrap();
         let period = WireReading::Microseconds.digits(353.553_390_593).unwrap();
         assert!((hertz - 8000.0).abs() < 1e-6 && (period - 8000.0).abs() < 1e-5);
         assert_eq!(WireReading::Hertz.digits(0.0), None);

@@ -77,7 +77,7 @@ impl Entry {
     /// The same entry under a name of its own: whoever only looks must neither push the daemon out of its session nor take
     /// its messages.
     #[must_use]
-    pub(crate) fn to_look(self) -> Self {
+    pub(crate) fn into_look(self) -> Self {
         Self {
             client_id: format!("{}-look-{:08x}", self.client_id, fastrand::u32(..)),
             ..self

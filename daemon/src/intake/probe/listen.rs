@@ -65,7 +65,7 @@ pub(super) async fn topics(
     wait: Duration,
 ) -> SourceProbe {
     let entry = match Entry::new(settings, name, &around.site) {
-        Ok(entry) => entry.to_look(),
+        Ok(entry) => entry.into_look(),
         Err(why) => return SourceProbe::failed(name, why.to_string()),
     };
     let mut heard = Heard::default();
