@@ -17,6 +17,7 @@ use std::sync::OnceLock;
 
 use borewake_model::block::{Block, GaugeBlock, RateKnown, RatePath};
 use borewake_model::commission::{CommissionSettings, Commissioned, commission, places};
+use borewake_model::finding::Cause;
 use borewake_model::ground::{Edge, EdgeKind, Gauge, Ground, Layer, Neighbour, Point, Seat, Well};
 use borewake_model::reduce::{Certificate, Modal, Reduced, ReducedBlock};
 use borewake_model::watch::{Adoption, Watch, WatchSettings, WatchState};
@@ -339,4 +340,40 @@ fn a_block_out_of_order_is_refused() {
     let mut watch = Watch::new(commissioned(), &settings(), &[]).unwrap();
     watch.step(&blocks[0]).unwrap();
     assert!(watch.step(&blocks[2]).is_err());
+}
+
+#[test]
+fn a_leak_is_found_and_silent_once_adopted() {
+    let leak = 4e-4;
+    let blocks = record(leak, 0.0, 7);
+    let (finding, _) = watch(&blocks, &[]);
+    let finding = finding.expect("a leak of a twentieth of the flow is found");
+    assert_eq!(finding.causes[0].cause, Cause::Leak);
+    assert!(
+        (finding.onset / BLOCK - ONSET as f64).abs() < 8.0,
+        "onset {}",
+        finding.onset / BLOCK
+    );
+    let place = finding.place.unwrap();
+    assert!(
+        (place.x - LEAK_AT[0]).hypot(place.y - LEAK_AT[1]) < 200.0,
+        "{place:?}"
+    );
+    let size = finding.size.unwrap();
+    assert!((size.value / leak - 1.0).abs() < 0.2, "{size:?}");
+
+    let adoption = Adoption {
+        block: ONSET as i64 + 80,
+        cause: Cause::Leak,
+        subject: finding.causes[0].subject,
+        onset: finding.onset,
+        onset_sd: finding.onset_sd,
+        size: finding.size,
+        place: finding.place,
+    };
+    let (after, ever) = watch(&blocks, &[adoption]);
+    assert!(
+        after.is_none() && !ever,
+        "an adopted leak is no news: {after:?}"
+    );
 }

@@ -68,12 +68,17 @@ impl Keeper {
         Ok(())
     }
 
-    /// The block before an adopted finding's onset: a watch that knows the finding starts no later.
-    pub(super) fn before_onset(&self, adoption: &Adoption) -> i64 {
-        self.settings
-            .plan
-            .index_of(Stamp::from_seconds(adoption.onset))
+    /// The block before an adopted finding comes in: a watch that knows the finding starts no later.
+    pub(super) fn before_adoption(&self, adoption: &Adoption) -> i64 {
+        adoption
+            .first_block(self.settings.plan.seconds())
             .saturating_sub(1)
+    }
+
+    /// Whether an adopted finding began after the commissioning history.
+    fn after_commissioning(&self, adoption: &Adoption) -> bool {
+        let onset = Stamp::from_seconds(adoption.onset);
+        self.settings.plan.index_of(onset) > self.ground_last
     }
 
     /// Opens a lane early enough to judge from `compare_from` on, with the findings that are in the model there. Where
@@ -91,7 +96,7 @@ impl Keeper {
             .saved
             .adoptions
             .iter()
-            .filter(|a| self.before_onset(a).saturating_add(1) > self.ground_last)
+            .filter(|a| self.after_commissioning(a))
             .cloned()
             .collect();
         let known = adoptions
@@ -100,10 +105,10 @@ impl Keeper {
             .count();
         let later = adoptions.split_off(known);
         let until = later.first().map(|a| a.block);
-        // A checkpoint after the onset of a later finding may hold that finding already.
+        // A checkpoint after a later finding came in may hold that finding already.
         let from = later
             .iter()
-            .map(|a| self.before_onset(a))
+            .map(|a| self.before_adoption(a))
             .fold(from, i64::min);
         self.store.forget_checkpoints_from(from).await?;
         let found = self

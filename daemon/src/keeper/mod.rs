@@ -366,7 +366,7 @@ impl Keeper {
     }
 
     fn adopt(&mut self, adoption: &Adoption, wall: Stamp) {
-        let from = self.before_onset(adoption);
+        let from = self.before_adoption(adoption);
         self.saved.adoptions.push(adoption.clone());
         self.saved.want_rerun(Due {
             from,

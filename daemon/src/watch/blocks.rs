@@ -41,6 +41,12 @@ impl BlockPlan {
         at.0.div_euclid(self.length)
     }
 
+    /// Length of a block \[s\].
+    #[must_use]
+    pub fn seconds(&self) -> f64 {
+        seconds(self.length)
+    }
+
     /// First instant of a block.
     #[must_use]
     pub fn start_of(&self, block: i64) -> Stamp {

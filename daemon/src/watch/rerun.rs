@@ -34,7 +34,7 @@ pub enum RerunError {
 }
 
 /// Runs the watch again from the end of commissioning. An adoption counts from its block on; what was said before it
-/// was said without it, so the watch is taken back to before its onset and goes on with it from there.
+/// was said without it, so the watch is taken back to where its columns begin and goes on with it from there.
 ///
 /// # Errors
 /// The store cannot be read, or the model cannot be run.
@@ -58,17 +58,15 @@ pub async fn compare(
         .collect();
     result.passed_over =
         u64::try_from(reader.judged_between(i64::MIN, first).await?.len()).unwrap_or(u64::MAX);
-    let onset = |a: &Adoption| {
-        plan.index_of(Stamp::from_seconds(a.onset))
-            .saturating_sub(1)
-            .max(first)
-    };
+    let length = plan.seconds();
     let mut state: WatchState = ground.start.clone();
     let mut next = first;
     let mut compare_from = first;
     for taken in 0..=adoptions.len() {
         let until = adoptions.get(taken).map_or(last + 1, |a| a.block);
-        let keep_at = adoptions.get(taken).map(onset);
+        let keep_at = adoptions
+            .get(taken)
+            .map(|a| a.first_block(length).max(first));
         let known = adoptions.get(..taken).unwrap_or_default();
         let mut watch =
             Watch::restore(&ground.commissioned, &ground.settings, known, state.clone())?;

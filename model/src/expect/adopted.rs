@@ -22,12 +22,12 @@ use crate::watch::Adoption;
 use crate::weigh::bank::{GROWTHS, shape};
 
 /// Most directions of a source.
-const DIRECTIONS: usize = 14;
+const DIRECTIONS: usize = 26;
 /// Most places sampled.
-const SAMPLED: usize = 14;
+const SAMPLED: usize = 10;
 /// Lags at which signatures are sampled \[days\].
-const LAGS: [f64; 14] = [
-    0.05, 0.1, 0.2, 0.4, 0.7, 1.2, 2.0, 3.5, 6.0, 10.0, 17.0, 30.0, 50.0, 90.0,
+const LAGS: [f64; 17] = [
+    -0.5, -0.2, 0.0, 0.05, 0.1, 0.2, 0.4, 0.7, 1.2, 2.0, 3.5, 6.0, 10.0, 17.0, 30.0, 50.0, 90.0,
 ];
 /// Blocks before and after the onset that a step may fall into, at most.
 const ROUND: i64 = 4;
@@ -39,7 +39,9 @@ const DAY: f64 = 86_400.0;
 pub(crate) struct Adopted {
     /// First block with a row.
     pub(crate) from: i64,
-    /// Whether running sums begin anew when it comes in.
+    /// First block judged with it.
+    pub(crate) judged: i64,
+    /// Whether the sums of barriers begin anew with it: what they stand for has no onset.
     pub(crate) anew: bool,
     what: What,
 }
@@ -184,7 +186,12 @@ impl Adopted {
             What::Lines { .. } | What::Nothing => adoption.block,
         };
         let anew = matches!(adoption.cause, Cause::Barrier | Cause::Unexplained);
-        Self { from, anew, what }
+        Self {
+            from,
+            judged: adoption.block,
+            anew,
+            what,
+        }
     }
 
     /// Number of columns.
@@ -389,8 +396,8 @@ fn source(
     }
     let spread = adoption.onset_sd.max(3_600.0);
     let mut parts = Vec::new();
-    for growth in GROWTHS {
-        for shift in [-1.5, 0.0, 1.5] {
+    for growth in GROWTHS.into_iter().step_by(2) {
+        for shift in [-1.5, -0.75, 0.0, 0.75, 1.5] {
             parts.push((growth * DAY, adoption.onset + shift * spread));
         }
     }

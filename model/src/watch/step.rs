@@ -401,12 +401,16 @@ impl Watch {
                         adoption: index,
                         column,
                     }));
+            }
+            if block == one.judged {
+                // What began before it is no news any more.
+                self.state.ladder = Ladder::new();
+                self.state.first_onset = self.state.first_onset.max(block);
+                self.state.finding = None;
+                self.state.log_mixture = 0.0;
                 if one.anew {
-                    self.state.ladder = Ladder::new();
-                    self.state.first_onset = self.state.first_onset.max(block);
                     self.state.barriers.sums =
                         Cleared::new(self.state.posterior.len(), self.images.lines());
-                    self.state.finding = None;
                 }
             }
         }
@@ -795,6 +799,14 @@ impl Watch {
             expectations.push((!stale).then_some(expectation));
         }
         (expectations, departures)
+    }
+
+    /// Log evidence of each cause, summed over onsets.
+    #[must_use]
+    pub fn evidence(&self) -> Vec<(Cause, f64)> {
+        let mut sums = Weights::sums(&self.state.ladder);
+        sums.push((Cause::Barrier, self.state.barriers.evidence(self.scales.barrier).0));
+        sums
     }
 
     /// Bytes of the running sums (for capacity planning).

@@ -4,12 +4,7 @@
 //! against "nothing" is `c^2 g / (2 (1 + g n)) - log(1 + g n) / 2`, plus `log 2 Phi(c sqrt(g / (1 + g n)))` where the sign
 //! is known (the amplitude is then a truncated normal). The posterior amplitude is `c / (n + 1/g)`.
 
-#![expect(
-    clippy::indexing_slicing,
-    reason = "indices run over variances given with the matrix"
-)]
-
-use nalgebra::{Cholesky, DMatrix, DVector};
+use nalgebra::{Cholesky, DMatrix, DVector, Dyn};
 
 /// Log Bayes factor of a signature whose sign is not known.
 #[must_use]
@@ -40,21 +35,30 @@ pub fn amplitude(c: f64, n: f64, variance: f64) -> (f64, f64) {
     (c / precision, precision.sqrt().recip())
 }
 
-/// Log Bayes factor of several signatures at once with independent amplitudes, `c' (N + G^-1)^-1 c / 2 - log det(I + G N) / 2`.
+/// Log Bayes factor of several signatures at once whose amplitudes have a joint prior of covariance G,
+/// `c' (N + G^-1)^-1 c / 2 - log det(I + G N) / 2`.
 ///
-/// Returns minus infinity where N is no covariance.
+/// Returns minus infinity where N or G is no covariance.
 #[must_use]
-pub fn log_bayes_joint(c: &DVector<f64>, n: &DMatrix<f64>, variances: &DVector<f64>) -> f64 {
-    let mut precision = n.clone();
-    let mut log_prior = 0.0;
-    for (index, variance) in variances.iter().enumerate() {
-        precision[(index, index)] += 1.0 / variance;
-        log_prior += 0.5 * variance.ln();
-    }
-    Cholesky::new(precision).map_or(f64::NEG_INFINITY, |factor| {
-        let log_determinant: f64 = factor.l_dirty().diagonal().map(f64::ln).sum();
-        0.5 * c.dot(&factor.solve(c)) - log_determinant - log_prior
-    })
+pub fn log_bayes_joint(c: &DVector<f64>, n: &DMatrix<f64>, prior: &DMatrix<f64>) -> f64 {
+    joint(c, n, prior).map_or(f64::NEG_INFINITY, |(log, _, _)| log)
+}
+
+/// [`log_bayes_joint`] with mean and covariance of the amplitudes' posterior; `None` where N or G is no covariance.
+#[must_use]
+pub fn joint(
+    c: &DVector<f64>,
+    n: &DMatrix<f64>,
+    prior: &DMatrix<f64>,
+) -> Option<(f64, DVector<f64>, DMatrix<f64>)> {
+    let log_root = |factor: &Cholesky<f64, Dyn>| -> f64 {
+        factor.l_dirty().diagonal().iter().map(|v| v.ln()).sum()
+    };
+    let known = Cholesky::new(prior.clone())?;
+    let posterior = Cholesky::new(n + known.inverse())?;
+    let mean = posterior.solve(c);
+    let log = 0.5 * c.dot(&mean) - log_root(&posterior) - log_root(&known);
+    Some((log, mean, posterior.inverse()))
 }
 
 /// `log(sum(exp(values)))`; minus infinity of nothing.
@@ -143,7 +147,7 @@ mod tests {
         let joint = log_bayes_joint(
             &DVector::from_element(1, c),
             &DMatrix::from_element(1, 1, n),
-            &DVector::from_element(1, g),
+            &DMatrix::from_element(1, 1, g),
         );
         assert!((joint - direct).abs() < 1e-12);
     }

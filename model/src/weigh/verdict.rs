@@ -9,7 +9,9 @@ use nalgebra::{DMatrix, DVector};
 
 use super::bank::{Bank, COARSE, GROWTHS, Source};
 use super::barrier::{Barriers, SEALING};
-use super::evidence::{amplitude, log_bayes, log_bayes_joint, log_bayes_positive, log_sum};
+use super::evidence::{
+    amplitude, joint, log_bayes, log_bayes_joint, log_bayes_positive, log_sum,
+};
 use super::ladder::{CAUSES, Ladder, Onset};
 use super::scales::Scales;
 use crate::commission::Places;
@@ -19,8 +21,9 @@ use crate::finding::{Cause, Place, Size, SizeUnit, Subject};
 
 /// Every how many candidate places one is weighed for detection.
 const THINNED: usize = 3;
-/// Parts of a block in which an abrupt cause may begin.
-const PARTS: [f64; 6] = [0.0, 0.2, 0.4, 0.6, 0.8, 1.0];
+/// Prior covariance, as a share of an abrupt cause's variance, of its full effect and of its effect within the onset's
+/// block: it begins anywhere in that block.
+const ABRUPT: [[f64; 2]; 2] = [[1.0, 0.5], [0.5, 1.0 / 3.0]];
 /// Relative error of a leak's signature between lattice places and growths even in the plainest ground.
 const LATTICE: f64 = 0.03;
 /// Weight of a leak outside the outline, beside one inside.
@@ -171,26 +174,15 @@ impl Weights<'_> {
         }
     }
 
-    /// A step of each gauge, at each part of the onset's block.
+    /// A step of each gauge.
     fn steps(&self, onset: &Onset) -> Vec<Hypothesis> {
-        let mut out = Vec::new();
-        for gauge in 0..self.gauges {
-            let Some(variances) = self.scales.step.get(gauge) else {
-                continue;
-            };
-            let prior = -((self.gauges * variances.len() * PARTS.len()) as f64).ln();
-            abrupt(
-                &onset.own,
-                gauge,
-                self.gauges + gauge,
-                onset.block,
-                variances,
-                prior,
-                gauge,
-                &mut out,
-            );
-        }
-        out
+        (0..self.gauges)
+            .filter_map(|gauge| {
+                let variances = self.scales.step.get(gauge)?;
+                Some(self.abrupt(&onset.own, gauge, self.gauges, onset.block, variances))
+            })
+            .flatten()
+            .collect()
     }
 
     /// A drift of each gauge.
@@ -219,35 +211,53 @@ impl Weights<'_> {
 
     /// A change of each meter's scale.
     fn meters(&self, onset: &Onset) -> Vec<Hypothesis> {
-        let mut out = Vec::new();
-        for well in 0..self.wells {
-            let prior = -((self.wells * self.scales.meter.len() * PARTS.len()) as f64).ln();
-            abrupt(
-                &onset.meters,
-                well,
-                self.wells + well,
-                onset.block,
-                &self.scales.meter,
-                prior,
-                well,
-                &mut out,
-            );
-        }
-        out
+        (0..self.wells)
+            .flat_map(|well| {
+                self.abrupt(
+                    &onset.meters,
+                    well,
+                    self.wells,
+                    onset.block,
+                    &self.scales.meter,
+                )
+            })
+            .collect()
+    }
+
+    /// Hypotheses of an abrupt cause of one among `count`: its column acts from the block after the onset's, the column
+    /// `count` further in the onset's block, by the part of that block that was left.
+    fn abrupt(
+        &self,
+        sums: &Cleared,
+        index: usize,
+        count: usize,
+        onset: i64,
+        variances: &[f64],
+    ) -> Vec<Hypothesis> {
+        let pair = [index, count + index];
+        let c = DVector::from_fn(2, |i, _| sums.c[pair[i]]);
+        let n = DMatrix::from_fn(2, 2, |i, j| sums.n[(pair[i], pair[j])]);
+        let prior = -((count * variances.len()) as f64).ln();
+        variances
+            .iter()
+            .filter_map(|variance| {
+                let prior_of = DMatrix::from_fn(2, 2, |i, j| variance * ABRUPT[i][j]);
+                let (log, mean, covariance) = joint(&c, &n, &prior_of)?;
+                Some(Hypothesis {
+                    log: log + prior,
+                    onset,
+                    part: 1.0 - (mean[1] / mean[0]).clamp(0.0, 1.0),
+                    index,
+                    mean: mean[0],
+                    sd: covariance[(0, 0)].max(0.0).sqrt(),
+                })
+            })
+            .collect()
     }
 
     /// Independent step and ramp at every gauge.
     fn unexplained(&self, own: &Cleared) -> f64 {
-        // The step begins in the middle of the onset's block.
         let gauges = self.gauges;
-        let mut mix = DMatrix::zeros(3 * gauges, 2 * gauges);
-        for gauge in 0..gauges {
-            mix[(gauge, gauge)] = 1.0;
-            mix[(gauges + gauge, gauge)] = 0.5;
-            mix[(2 * gauges + gauge, gauges + gauge)] = 1.0;
-        }
-        let c = mix.tr_mul(&own.c);
-        let n = mix.transpose() * &own.n * &mix;
         let scales = self.scales.step.first().map_or(0, Vec::len);
         let each: Vec<f64> = (0..scales)
             .map(|scale| {
@@ -257,14 +267,18 @@ impl Weights<'_> {
                         .copied()
                         .unwrap_or(1.0)
                 };
-                let variances = DVector::from_fn(2 * gauges, |i, _| {
-                    if i < gauges {
-                        of(&self.scales.step, i)
-                    } else {
-                        of(&self.scales.drift, i - gauges)
+                let mut prior = DMatrix::zeros(3 * gauges, 3 * gauges);
+                for gauge in 0..gauges {
+                    let step = of(&self.scales.step, gauge);
+                    for (i, row) in ABRUPT.iter().enumerate() {
+                        for (j, share) in row.iter().enumerate() {
+                            prior[(i * gauges + gauge, j * gauges + gauge)] = step * share;
+                        }
                     }
-                });
-                log_bayes_joint(&c, &n, &variances)
+                    let ramp = 2 * gauges + gauge;
+                    prior[(ramp, ramp)] = of(&self.scales.drift, gauge);
+                }
+                log_bayes_joint(&own.c, &own.n, &prior)
             })
             .collect();
         log_sum(&each) - (scales.max(1) as f64).ln()
@@ -545,40 +559,6 @@ impl Weights<'_> {
             layer,
             radius_90: radius_90(&mut spread).max(grid),
         })
-    }
-}
-
-/// Hypotheses of an abrupt cause: column `after` acts from the block after the onset's, `within` in the onset's block.
-#[expect(
-    clippy::too_many_arguments,
-    reason = "one private helper for two callers"
-)]
-fn abrupt(
-    sums: &Cleared,
-    after: usize,
-    within: usize,
-    onset: i64,
-    variances: &[f64],
-    prior: f64,
-    index: usize,
-    out: &mut Vec<Hypothesis>,
-) {
-    for part in PARTS {
-        let c = sums.c[after] + part * sums.c[within];
-        let n = sums.n[(after, after)]
-            + 2.0 * part * sums.n[(after, within)]
-            + part * part * sums.n[(within, within)];
-        for variance in variances {
-            let (mean, sd) = amplitude(c, n, *variance);
-            out.push(Hypothesis {
-                log: log_bayes(c, n, *variance) + prior,
-                onset,
-                part: 1.0 - part,
-                index,
-                mean,
-                sd,
-            });
-        }
     }
 }
 
