@@ -141,6 +141,7 @@ fn reduced(ground: &Ground) -> Reduced {
         places,
         place_ports: ports(&spots, s),
         closed: 0,
+        patches: Vec::new(),
         certificate: Certificate {
             ports: 0.0,
             random_nodes: 0.0,

@@ -1,10 +1,10 @@
 //! Makes a ground file: mesh, weak form, reduction, calibration, and the watch brought to the end of history.
 
 use borewake_model::ModelError;
-use borewake_model::commission::{CommissionSettings, Commissioned, commission, places};
-use borewake_model::ground::Ground;
+use borewake_model::commission::{CommissionSettings, Commissioned, Places, commission, places};
 use borewake_model::ground::mesh::MeshOptions;
-use borewake_model::reduce::{ReduceOptions, Reduced, reduce};
+use borewake_model::ground::{Ground, Patches};
+use borewake_model::reduce::{ReduceOptions, Reduced, reduce_patched};
 use borewake_model::watch::{Watch, WatchSettings};
 use borewake_model::weak_form::{Scheme, discretise};
 
@@ -53,7 +53,15 @@ pub fn reduce_ground(
     for (point, layer) in places(ground) {
         at.push((point, layer, discrete.locate(point, layer)?));
     }
-    reduce(&discrete.system, &at, &ReduceOptions::default())
+    let array = Places::of(ground);
+    let patches = discrete.patches(
+        ground,
+        &Patches {
+            centre: array.centre,
+            half_width: array.half_width,
+        },
+    )?;
+    reduce_patched(&discrete.system, &patches, &at, &ReduceOptions::default())
 }
 
 /// Makes a ground file from quiet history.
@@ -78,11 +86,7 @@ pub fn make(
     let calibration = commission(&site.ground, &reduced, history, &settings, &mut |share| {
         progress(Stage::Calibrate, share)
     })?;
-    let commissioned = Commissioned {
-        ground: site.ground.clone(),
-        reduced,
-        calibration,
-    };
+    let commissioned = Commissioned::new(site.ground.clone(), &reduced, calibration)?;
     let settings = WatchSettings {
         false_alarm_interval: site.watch.false_alarm_interval,
         first_onset: last_block + 1,

@@ -17,17 +17,23 @@ use crate::expect::columns::{Columns, Kind, LAGS, LONG_LAGS, Priors};
 use crate::expect::drive::Sampled;
 use crate::expect::frame::{Frame, factor, free_parameters, with_factor};
 use crate::expect::noise::{Noise, Path};
+use crate::expect::patched::Patched;
 use crate::expect::whitener::Whitener;
 use crate::ground::Ground;
-use crate::reduce::{Factors, Reduced};
+use crate::reduce::{Factors, Reduced, layer_of};
+use crate::weak_form::Parameter;
 
 /// Share of a pair's response that its discrepancy is thought to be before history is asked.
 const TYPICAL_DISCREPANCY: f64 = 0.001;
 /// The same of a meter's gain in one rate epoch.
 const TYPICAL_GAIN: f64 = 0.005;
-/// Discrepancy at lags of weeks, and of the ground beyond the array, as multiples of the spread between pairs.
-const LONG: f64 = 0.5;
-const FAR: f64 = 0.5;
+/// Discrepancy at lags of weeks, and of the ground beyond the array, as multiples of the share of a pair as a rule.
+const LONG: f64 = 1.0;
+const FAR: f64 = 1.0;
+/// Spread between patches before history is asked.
+const TYPICAL_PATCH: f64 = 0.1;
+/// Error of a source's response by what is not known of the ground next to it, as a share of the spread between patches.
+const UNSEEN: f64 = 0.15;
 /// Largest step of a logarithm in one round.
 const LONGEST_STEP: f64 = 0.4;
 /// Times that readings which are missing are worked out anew before anything is learned.
@@ -96,6 +102,11 @@ fn declared(past: &[Vec<(f64, f64)>], record: f64) -> Vec<Vec<(f64, f64, f64)>> 
         .collect()
 }
 
+/// 1 for storage, 0 for conduction.
+fn storage(parameter: Parameter) -> usize {
+    usize::from(matches!(parameter, Parameter::PatchStorativity(..)))
+}
+
 /// The state of the fit.
 struct Fit<'a> {
     ground: &'a Ground,
@@ -110,8 +121,8 @@ struct Fit<'a> {
     share: Vec<f64>,
     gain: f64,
     past: f64,
-    /// Spread of a parameter between pairs: other wells, own well.
-    apart: [f64; 2],
+    /// Spread of the logarithm of transmissivity and storativity between patches.
+    patch: [f64; 2],
     /// Coefficients of the last round less what it moved into parameters and skins.
     rest: Option<DVector<f64>>,
 }
@@ -159,7 +170,8 @@ impl<'a> Fit<'a> {
             gain: 1.0,
             past: 1.0,
             declared: declared(&settings.past, history.first().map_or(0.0, Block::start)),
-            apart: [1.0; 2],
+            patch: [1.0; 2],
+            mismatch: 0.0,
             long: 1.0,
             far: 1.0,
             rate_rms: rates.rms.clone(),
@@ -186,14 +198,20 @@ impl<'a> Fit<'a> {
             share: vec![0.003; gauges * wells],
             gain: TYPICAL_GAIN,
             past: 0.01,
-            apart: [0.03, 0.02],
+            patch: [TYPICAL_PATCH; 2],
             rest: None,
         })
     }
 
     fn columns(&self) -> Result<Columns, ModelError> {
         let frame = Frame::new(self.ground, self.reduced, &self.factors)?;
-        Ok(Columns::new(frame, self.priors.clone(), &self.skins))
+        let patched = Patched::of(self.reduced, &frame.modal, &self.factors)?;
+        Ok(Columns::new(
+            frame,
+            patched,
+            self.priors.clone(),
+            &self.skins,
+        ))
     }
 
     /// Prior standard deviation and mean of every coefficient.
@@ -211,11 +229,11 @@ impl<'a> Fit<'a> {
                     spread[index] = if lag < LONG_LAGS {
                         self.share[gauge * columns.frame.wells + well]
                     } else {
-                        LONG * self.apart[0]
+                        LONG * self.usual_share()
                     };
                 }
                 Kind::Past { .. } => spread[index] = self.past,
-                Kind::Far { .. } => spread[index] = FAR * self.apart[0],
+                Kind::Far { .. } => spread[index] = FAR * self.usual_share(),
                 // The prior is about the described value, wherever the fit now stands.
                 Kind::Parameter(i) => {
                     if let Some(tilted) = columns.frame.tilted.get(i) {
@@ -231,9 +249,11 @@ impl<'a> Fit<'a> {
                         centre[index] = (described.skin.max(0.0) - skin) / self.priors.skin;
                     }
                 }
-                Kind::PairParameter { gauge, well, .. } => {
-                    let own = columns.frame.well_of(gauge).is_some_and(|(w, _)| w == well);
-                    spread[index] = self.apart[usize::from(own)];
+                Kind::Patch(i) => {
+                    if let Some(parameter) = columns.patch(i) {
+                        spread[index] = self.patch[storage(parameter)];
+                        centre[index] = -factor(&self.factors, parameter).ln();
+                    }
                 }
                 _ => {}
             }
@@ -242,6 +262,12 @@ impl<'a> Fit<'a> {
             spread[index] = self.gain;
         }
         (spread, centre)
+    }
+
+    /// Discrepancy of a pair as a rule, as a share of its response.
+    fn usual_share(&self) -> f64 {
+        let count = self.share.len().max(1) as f64;
+        (self.share.iter().map(|s| s * s).sum::<f64>() / count).sqrt()
     }
 
     fn whitener(&self, columns: &Columns) -> Result<Whitener, ModelError> {
@@ -291,6 +317,15 @@ impl<'a> Fit<'a> {
                         rest[index] -= step / self.priors.parameter;
                         let value = factor(&self.factors, tilted.parameter) * step.exp();
                         self.factors = with_factor(&self.factors, tilted.parameter, value);
+                    }
+                }
+                Kind::Patch(i) => {
+                    if let Some(parameter) = columns.patch(i) {
+                        let step = solved.mean[index].clamp(-longest, longest);
+                        moved = moved.max(0.1 * step.abs());
+                        rest[index] -= step;
+                        let value = factor(&self.factors, parameter) * step.exp();
+                        self.factors = with_factor(&self.factors, parameter, value);
                     }
                 }
                 Kind::Skin(i) => {
@@ -349,21 +384,19 @@ impl<'a> Fit<'a> {
             }
         }
         groups.push(past);
-        for own in [false, true] {
+        for side in [0, 1] {
             let members = columns
                 .kinds
                 .iter()
                 .enumerate()
                 .filter(|(_, kind)| match **kind {
-                    Kind::PairParameter { gauge, well, .. } => {
-                        columns.frame.well_of(gauge).is_some_and(|(w, _)| w == well) == own
-                    }
+                    Kind::Patch(i) => columns.patch(i).is_some_and(|p| storage(p) == side),
                     _ => false,
                 });
             groups.push(Group {
                 columns: members.map(|(index, _)| index).collect(),
-                scale: self.apart[usize::from(own)],
-                typical: TYPICAL_DISCREPANCY,
+                scale: self.patch[side],
+                typical: TYPICAL_PATCH,
                 weight: 1.0,
             });
         }
@@ -394,9 +427,9 @@ impl<'a> Fit<'a> {
         for (share, group) in self.share.iter_mut().zip(&groups) {
             *share = group.scale;
         }
-        if let Some([past, other, own, gain]) = groups.get(pairs..) {
+        if let Some([past, conduction, storage, gain]) = groups.get(pairs..) {
             self.past = past.scale.min(1.0);
-            self.apart = [other.scale, own.scale];
+            self.patch = [conduction.scale, storage.scale];
             self.gain = gain.scale;
         }
         Ok(solved)
@@ -433,7 +466,7 @@ impl<'a> Fit<'a> {
                 !matches!(
                     columns.kinds.get(index),
                     Some(
-                        Kind::PairParameter { .. }
+                        Kind::Patch(_)
                             | Kind::Discrepancy { .. }
                             | Kind::Far { .. }
                             | Kind::Past { .. }
@@ -549,16 +582,19 @@ impl<'a> Fit<'a> {
         );
         let inverse: DMatrix<f64> = solved.factor.inverse();
         let sd = |index: usize| inverse[(index, index)].max(0.0).sqrt();
-        let mut factor_sd = vec![0.0; self.factors.len()];
+        let layers: Factors = self
+            .factors
+            .iter()
+            .filter(|(p, _)| layer_of(*p) == *p)
+            .copied()
+            .collect();
+        let mut factor_sd = vec![0.0; layers.len()];
         let mut skin_sd = vec![self.settings.skin_sd; self.skins.len()];
         for (index, kind) in columns.kinds.iter().enumerate() {
             match *kind {
                 Kind::Parameter(i) => {
                     if let Some(tilted) = columns.frame.tilted.get(i)
-                        && let Some(at) = self
-                            .factors
-                            .iter()
-                            .position(|(p, _)| *p == tilted.parameter)
+                        && let Some(at) = layers.iter().position(|(p, _)| *p == tilted.parameter)
                     {
                         factor_sd[at] = sd(index) * self.priors.parameter;
                     }
@@ -575,14 +611,20 @@ impl<'a> Fit<'a> {
         let mut priors = self.priors.clone();
         priors.gain = self.gain;
         priors.past = self.past;
-        priors.apart = self.apart;
-        priors.long = LONG * self.apart[0];
-        priors.far = FAR * self.apart[0];
+        priors.patch = self.patch;
+        priors.long = LONG * self.usual_share();
+        priors.far = FAR * self.usual_share();
+        priors.mismatch = self.usual_share() + UNSEEN * self.patch[0];
         priors.discrepancy.clone_from(&self.share);
         let rates = Rates::of(blocks, columns.frame.wells);
+        let (factors, patches) = std::mem::take(&mut self.factors)
+            .into_iter()
+            .partition(|(p, _)| layer_of(*p) == *p);
         Ok(Calibration {
-            factors: self.factors.clone(),
+            factors,
             factor_sd,
+            patches,
+            patched: columns.patched.clone(),
             skins: self.skins.clone(),
             skin_sd,
             noise: (0..gauges).map(|g| innovation[(g, g)].sqrt()).collect(),

@@ -2,7 +2,8 @@
 
 use serde::{Deserialize, Serialize};
 
-use crate::expect::{Noise, Priors};
+use crate::ModelError;
+use crate::expect::{Noise, Patched, Priors};
 use crate::ground::Ground;
 use crate::reduce::{Factors, Reduced};
 
@@ -26,6 +27,24 @@ pub struct Commissioned {
     pub reduced: Reduced,
     /// What history said.
     pub calibration: Calibration,
+}
+
+impl Commissioned {
+    /// A calibrated ground. What was learned of its patches becomes part of its reduced form.
+    ///
+    /// # Errors
+    /// As [`Reduced::modal`].
+    pub fn new(
+        ground: Ground,
+        reduced: &Reduced,
+        calibration: Calibration,
+    ) -> Result<Self, ModelError> {
+        Ok(Self {
+            ground,
+            reduced: reduced.settled(&calibration.patches)?,
+            calibration,
+        })
+    }
 }
 
 /// What commissioning may assume and how far it goes.
@@ -63,6 +82,10 @@ pub struct Calibration {
     pub factors: Factors,
     /// Standard deviation of the log of each factor, in the same order.
     pub factor_sd: Vec<f64>,
+    /// Fitted factors of the patches, on top of their layers'.
+    pub patches: Factors,
+    /// What a further change of each patch does to every pair.
+    pub patched: Patched,
     /// Fitted skin of each well (`NaN`-free; the described skin where no gauge sees it).
     pub skins: Vec<f64>,
     /// Standard deviation of each skin.

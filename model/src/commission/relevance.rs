@@ -59,7 +59,7 @@ pub(crate) fn learn(
             for &column in &group.columns {
                 // The diagonal of the inverse is the squared length of a column of L^-1.
                 let variance = lower.column(column).norm_squared();
-                sum += solved.mean[column].powi(2);
+                sum += (solved.mean[column] - centre[column]).powi(2);
                 determined += (1.0 - variance / group.scale.powi(2)).max(0.0);
             }
             let next = (sum / determined).sqrt().min(MOST);

@@ -99,7 +99,7 @@ impl Adopted {
         frame: &Frame,
         places: &Places,
         block: f64,
-        apart: f64,
+        mismatch: f64,
         noise: &[f64],
     ) -> Self {
         let onset_block = (adoption.onset / block).floor();
@@ -116,7 +116,7 @@ impl Adopted {
         };
         let what = match (adoption.cause, adoption.subject) {
             (Cause::Leak | Cause::CrossLayer | Cause::Interference | Cause::Support, subject) => {
-                source(adoption, subject, frame, places, sd, apart, noise)
+                source(adoption, subject, frame, places, sd, mismatch, noise)
             }
             (
                 Cause::GaugeStep | Cause::GaugeDrift | Cause::GaugeScale | Cause::GaugeClock,
@@ -353,7 +353,7 @@ fn source(
     frame: &Frame,
     places: &Places,
     sd: f64,
-    apart: f64,
+    mismatch: f64,
     noise: &[f64],
 ) -> What {
     let modal = &frame.modal;
@@ -451,6 +451,6 @@ fn source(
         mixed,
         middle: ports.column_mean(),
         onset: adoption.onset,
-        mismatch: sd * (0.02 + 2.0 * apart).min(0.5),
+        mismatch: sd * (0.02 + 2.0 * mismatch).min(0.5),
     }
 }

@@ -2,7 +2,8 @@
 //!
 //! Every column is scaled by its prior standard deviation, so that all coefficients have a standard normal prior.
 //! Fixed columns exist from the first block on: offset, drift within specification and settling of each gauge, skin
-//! of each well with a gauge in it, error of each fitted parameter, bias of each meter, discrepancy of each pair, and
+//! of each well with a gauge in it, error of each fitted parameter, bias of each meter, what the ground may be like in
+//! each patch, discrepancy of each pair, and
 //! the rates before the record. Further columns come and go: a meter's gain in each rate epoch (a meter errs in
 //! proportion to its rate, and differently at each), readings that are missing, rates that are unknown.
 
@@ -17,7 +18,9 @@ use serde::{Deserialize, Serialize};
 use super::drive::{Drive, Driven, Sampled, Tables, gain};
 use super::epochs::Epochs;
 use super::frame::{Frame, held, means, seen};
+use super::patched::{self, Patched};
 use crate::ModelError;
+use crate::weak_form::Parameter;
 
 /// What is known before the record of the size of each nuisance; learned at commissioning where marked.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
@@ -41,15 +44,16 @@ pub struct Priors {
     /// Declared rates of each well before the record: how long before it each stretch began and ended \[s\], and its
     /// rate \[m3/s\].
     pub declared: Vec<Vec<(f64, f64, f64)>>,
-    /// Spread of the logarithm of a parameter between pairs of well and gauge: other wells, own well (learned). In a
-    /// ground that varies, every pair sees a transmissivity and a storativity of its own.
-    pub apart: [f64; 2],
+    /// Spread of the logarithm of transmissivity and of storativity between patches of the ground (learned).
+    pub patch: [f64; 2],
+    /// Relative error of the response to a source somewhere in the ground (tied to the shares and spreads learned).
+    pub mismatch: f64,
     /// Discrepancy of each pair as a share of its response (learned; gauge by well, row-major by gauge).
     pub discrepancy: Vec<f64>,
-    /// The same at lags of weeks and months, of all pairs (learned).
+    /// The same at lags of weeks and months, of all pairs (tied to the shares learned at shorter lags).
     pub long: f64,
     /// Discrepancy that all gauges feel alike, or growing across the array, at lags of days and longer: the ground beyond
-    /// the array is not that within (tied to the spread between pairs).
+    /// the array is not that within (tied to the shares learned).
     pub far: f64,
     /// Spread of each pair's response over the history \[Pa\], in the same order.
     pub pair_spread: Vec<f64>,
@@ -107,11 +111,7 @@ pub(crate) enum Kind {
     Skin(usize),
     Parameter(usize),
     Bias(usize),
-    PairParameter {
-        gauge: usize,
-        well: usize,
-        parameter: usize,
-    },
+    Patch(usize),
     Discrepancy {
         gauge: usize,
         well: usize,
@@ -133,7 +133,9 @@ pub(crate) struct Columns {
     pub(crate) frame: Frame,
     pub(crate) kinds: Vec<Kind>,
     pub(crate) priors: Priors,
+    pub(crate) patched: Patched,
     lags: Drive,
+    patch_lags: Drive,
     skins: Vec<f64>,
 }
 
@@ -148,6 +150,8 @@ pub(crate) struct Memory {
     tilted: Vec<DMatrix<f64>>,
     /// States of the lags (lags by wells).
     lags: DMatrix<f64>,
+    /// States of the patches' lags (lags by wells).
+    patch_lags: DMatrix<f64>,
     /// Well and state of each window of the past.
     past: Vec<(usize, DVector<f64>)>,
     /// Rate of each well at the end of the last block \[m3/s\].
@@ -181,7 +185,7 @@ pub(crate) struct Raw {
 
 impl Columns {
     /// Lays out the columns.
-    pub(crate) fn new(frame: Frame, priors: Priors, skins: &[f64]) -> Self {
+    pub(crate) fn new(frame: Frame, patched: Patched, priors: Priors, skins: &[f64]) -> Self {
         let mut kinds = Vec::new();
         let (gauges, wells) = (frame.gauges, frame.wells);
         kinds.extend((0..gauges).map(Kind::Offset));
@@ -190,17 +194,11 @@ impl Columns {
         kinds.extend((0..frame.in_wells.len()).map(Kind::Skin));
         kinds.extend((0..frame.tilted.len()).map(Kind::Parameter));
         kinds.extend((0..wells).map(Kind::Bias));
+        kinds.extend((0..patched.len()).map(Kind::Patch));
         for gauge in 0..gauges {
             for well in 0..wells {
                 let own = frame.well_of(gauge).is_some_and(|(w, _)| w == well);
                 let first = if own { 0 } else { OWN_LAGS };
-                kinds.extend(
-                    (0..frame.tilted.len()).map(|parameter| Kind::PairParameter {
-                        gauge,
-                        well,
-                        parameter,
-                    }),
-                );
                 kinds.extend((first..LAGS.len()).map(|lag| Kind::Discrepancy { gauge, well, lag }));
             }
         }
@@ -216,11 +214,14 @@ impl Columns {
             LAGS.len(),
             LAGS.iter().map(|t| 1.0 / t),
         ));
+        let patch_lags = Drive::new(patched::lags().map(f64::recip));
         Self {
             frame,
             kinds,
             priors,
+            patched,
             lags,
+            patch_lags,
             skins: skins.to_vec(),
         }
     }
@@ -236,9 +237,7 @@ impl Columns {
         self.kinds
             .iter()
             .map(|kind| match kind {
-                Kind::PairParameter { .. } | Kind::Discrepancy { .. } | Kind::Far { .. } => {
-                    1.0 / FORGOTTEN
-                }
+                Kind::Patch(_) | Kind::Discrepancy { .. } | Kind::Far { .. } => 1.0 / FORGOTTEN,
                 _ => 0.0,
             })
             .collect()
@@ -281,10 +280,62 @@ impl Columns {
                 .map(|t| t.stepped.drive.after(declared, wells))
                 .collect(),
             lags: self.lags.after(declared, wells),
+            patch_lags: self.patch_lags.after(declared, wells),
             past,
             entering: vec![0.0; wells],
             epochs: Epochs::new(wells),
         }
+    }
+
+    /// Prior standard deviation of the logarithm of a patch's factor.
+    pub(crate) fn patch_spread(&self, index: usize) -> f64 {
+        let [transmissivity, storativity] = self.priors.patch;
+        match self.patched.parameters.get(index) {
+            Some(Parameter::PatchStorativity(..)) => storativity,
+            _ => transmissivity,
+        }
+    }
+
+    /// Which patch a column of [`Kind::Patch`] is about.
+    pub(crate) fn patch(&self, index: usize) -> Option<Parameter> {
+        self.patched.parameters.get(index).copied()
+    }
+
+    /// Columns of the patches for a block (gauges by patches), and the states of their lags at its end.
+    fn patches(&mut self, memory: &Memory, sampled: &Sampled) -> (DMatrix<f64>, DMatrix<f64>) {
+        let (gauges, wells) = (self.frame.gauges, self.frame.wells);
+        let lags = patched::lags();
+        let mut out = DMatrix::zeros(gauges, self.patched.len());
+        if self.patched.len() == 0 {
+            return (out, memory.patch_lags.clone());
+        }
+        let tables = self.patch_lags.tables(&sampled.geometry);
+        let driven = tables.drive(sampled, &|_, _| true);
+        let mut seen = means(tables, &memory.patch_lags, &driven.mean);
+        for mean in &mut seen {
+            for mut column in mean.column_iter_mut() {
+                column.component_div_assign(&lags);
+            }
+        }
+        for (patch, shares) in self.patched.shares.iter().enumerate() {
+            for gauge in 0..gauges {
+                let Some(mean) = sampled.class.get(gauge).and_then(|&c| seen.get(c)) else {
+                    continue;
+                };
+                out[(gauge, patch)] = (0..wells)
+                    .map(|well| {
+                        let row = shares.row(gauge * wells + well);
+                        row.iter()
+                            .zip(mean.column(well).iter())
+                            .map(|(a, b)| a * b)
+                            .sum::<f64>()
+                    })
+                    .sum();
+            }
+        }
+        let mut end = memory.patch_lags.clone();
+        decay(&mut end, &tables.decay);
+        (out, end + driven.end)
     }
 
     /// Computes the raw columns of a block and moves the memory to its end.
@@ -330,6 +381,7 @@ impl Columns {
         let lag_tables = self.lags.tables(&sampled.geometry).clone();
         let lag_driven = lag_tables.drive(sampled, &|_, _| true);
         let lag_means = means(&lag_tables, &memory.lags, &lag_driven.mean);
+        let (patches, patch_end) = self.patches(memory, sampled);
 
         let mid = memory.elapsed + 0.5 * sampled.geometry.length;
         let priors = &self.priors;
@@ -358,17 +410,10 @@ impl Columns {
                 Kind::Bias(w) => fixed
                     .column_mut(column)
                     .axpy(priors.bias, &pairs.column(w), 0.0),
-                Kind::PairParameter {
-                    gauge,
-                    well,
-                    parameter,
-                } => {
-                    let own = self.frame.well_of(gauge).is_some_and(|(w, _)| w == well);
-                    if let (Some(tilt), Some(spread)) =
-                        (tilts.get(parameter), priors.apart.get(usize::from(own)))
-                    {
-                        fixed[(gauge, column)] = spread * tilt[(gauge, well)];
-                    }
+                Kind::Patch(i) => {
+                    fixed
+                        .column_mut(column)
+                        .axpy(self.patch_spread(i), &patches.column(i), 0.0)
                 }
                 Kind::Discrepancy { gauge, well, lag } => {
                     let pair = gauge * self.frame.wells + well;
@@ -437,6 +482,7 @@ impl Columns {
         memory.base += &driven.end;
         decay(&mut memory.lags, &lag_tables.decay);
         memory.lags += lag_driven.end;
+        memory.patch_lags = patch_end;
         for (_, state) in &mut memory.past {
             state.component_mul_assign(&tables.decay);
         }

@@ -10,9 +10,11 @@ pub(crate) mod drive;
 pub(crate) mod epochs;
 pub(crate) mod frame;
 pub(crate) mod noise;
+pub(crate) mod patched;
 pub(crate) mod posterior;
 pub(crate) mod riccati;
 pub(crate) mod whitener;
 
 pub use columns::Priors;
 pub use noise::Noise;
+pub use patched::Patched;

@@ -1,6 +1,9 @@
 //! What is under the site: layers, zones, barriers, edge and wells, and the mesh fitted to them.
 
 pub mod mesh;
+mod patches;
+
+pub use patches::Patches;
 
 use serde::{Deserialize, Serialize};
 

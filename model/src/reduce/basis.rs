@@ -5,11 +5,12 @@ use nalgebra::DMatrix;
 use super::rows::Rows;
 use super::search::search;
 use super::span::Span;
+use super::span::quadratic_form;
 use super::truncate::leading_directions;
 use super::{Certificate, ReduceOptions, Reduced, ReducedBlock};
 use crate::ModelError;
 use crate::ground::Point;
-use crate::weak_form::{Functional, SparseBlock, System};
+use crate::weak_form::{Functional, PatchShares, SparseBlock, System};
 
 /// A basis of the reduced space, with every block of the system projected on it.
 pub struct Basis<'a> {
@@ -100,6 +101,7 @@ impl<'a> Basis<'a> {
             closed: self.closed,
             mass: blocks(&system.mass, self.span.mass(), 0),
             stiffness: blocks(&system.stiffness, self.span.stiffness(), self.closed),
+            patches: Vec::new(),
             wells: ports(&system.wells.iter().collect::<Vec<_>>())?,
             gauges: ports(&system.gauges.iter().collect::<Vec<_>>())?,
             neighbours: ports(&system.neighbours.iter().collect::<Vec<_>>())?,
@@ -115,6 +117,31 @@ impl<'a> Basis<'a> {
                 times: (f64::NAN, f64::NAN),
             },
         })
+    }
+}
+
+impl Basis<'_> {
+    /// Projects the shares of patches.
+    ///
+    /// # Errors
+    /// [`ModelError::Size`] for a share of another mesh.
+    pub fn project_patches(&self, patches: &PatchShares) -> Result<Vec<ReducedBlock>, ModelError> {
+        if patches.mass.is_empty() && patches.stiffness.is_empty() {
+            return Ok(Vec::new());
+        }
+        let kept = self.lift(&DMatrix::identity(self.modes(), self.modes()));
+        let project = |block: &SparseBlock, zero: usize| {
+            let mut matrix = quadratic_form(block.matrix.as_ref(), &kept)?;
+            matrix.fill_rows(zero);
+            symmetrise(&mut matrix);
+            Ok(ReducedBlock {
+                parameter: block.parameter,
+                matrix,
+            })
+        };
+        let mass = patches.mass.iter().map(|b| project(b, 0));
+        let stiffness = patches.stiffness.iter().map(|b| project(b, self.closed));
+        mass.chain(stiffness).collect()
     }
 }
 

@@ -26,6 +26,7 @@ mod truncate;
 
 pub use basis::Basis;
 pub use factor::ShiftedCholesky;
+pub(crate) use modal::layer_of;
 pub use options::{BoxCorners, ReduceOptions};
 pub use propagate::Propagator;
 pub use spread::{Spread, spread};
@@ -36,7 +37,7 @@ use serde::{Deserialize, Serialize};
 
 use crate::ModelError;
 use crate::ground::Point;
-use crate::weak_form::{Functional, Parameter, System};
+use crate::weak_form::{Functional, Parameter, PatchShares, System};
 
 /// Reduces a system at its described parameters and certifies the result.
 ///
@@ -52,8 +53,23 @@ pub fn reduce(
     places: &[(Point, usize, Functional)],
     options: &ReduceOptions,
 ) -> Result<Reduced, ModelError> {
+    reduce_patched(system, &PatchShares::default(), places, options)
+}
+
+/// As [`reduce`], with the shares of patches in which the ground may differ from what is described. To first order in the
+/// patches' factors the result is as good as at the described values: states and adjoint states are both in the basis.
+///
+/// # Errors
+/// As [`reduce`].
+pub fn reduce_patched(
+    system: &System,
+    patches: &PatchShares,
+    places: &[(Point, usize, Functional)],
+    options: &ReduceOptions,
+) -> Result<Reduced, ModelError> {
     let basis = Basis::build(system, options)?;
     let mut reduced = basis.project(system, places)?;
+    reduced.patches = basis.project_patches(patches)?;
     reduced.certificate = basis.certify(system, &reduced, options)?;
     Ok(reduced)
 }
@@ -77,6 +93,8 @@ pub struct Reduced {
     pub mass: Vec<ReducedBlock>,
     /// Shares of the reduced conduction matrix.
     pub stiffness: Vec<ReducedBlock>,
+    /// What each patch contributes to the shares of its layer: with a factor f on the patch, f - 1 times its matrix is added.
+    pub patches: Vec<ReducedBlock>,
     /// Port vectors of the wells (r by number of wells).
     pub wells: DMatrix<f64>,
     /// Observation vectors of the gauges (r by number of gauges).

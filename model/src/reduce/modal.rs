@@ -52,14 +52,73 @@ impl Reduced {
         })
     }
 
+    /// The same ground with the patches' factors taken into the shares of their layers, for good.
+    ///
+    /// # Errors
+    /// As [`Reduced::modal`].
+    pub fn settled(&self, patches: &Factors) -> Result<Self, ModelError> {
+        let mut settled = self.clone();
+        for block in std::mem::take(&mut settled.patches) {
+            let more = factor_on(block.parameter, patches)? - 1.0;
+            let shares = match block.parameter {
+                Parameter::PatchStorativity(..) => &mut settled.mass,
+                _ => &mut settled.stiffness,
+            };
+            let layer = layer_of(block.parameter);
+            if let Some(share) = shares.iter_mut().find(|s| s.parameter == layer)
+                && share.matrix.shape() == block.matrix.shape()
+            {
+                share.matrix.zip_apply(&block.matrix, |s, b| *s += more * b);
+            }
+        }
+        Ok(settled)
+    }
+
+    /// The change of the diagonal pencil at `factors` with the logarithm of each patch's factor
+    /// (modes by modes), in the order of [`Reduced::patches`].
+    ///
+    /// # Errors
+    /// As [`Reduced::modal`].
+    pub(crate) fn patch_tilts(&self, factors: &Factors) -> Result<Vec<DMatrix<f64>>, ModelError> {
+        let (_, vectors) = self.pencil(factors)?;
+        self.patches
+            .iter()
+            .map(|block| {
+                let scale = factor_on(layer_of(block.parameter), factors)?
+                    * factor_on(block.parameter, factors)?;
+                Ok(vectors.tr_mul(&(&block.matrix * &vectors)) * scale)
+            })
+            .collect()
+    }
+
     /// Decay rates and M-orthonormal vectors of the reduced pencil at `factors`.
     pub(super) fn pencil(
         &self,
         factors: &Factors,
     ) -> Result<(DVector<f64>, DMatrix<f64>), ModelError> {
-        let mass = weighted(&self.mass, factors, self.modes())?;
-        let stiffness = weighted(&self.stiffness, factors, self.modes())?;
+        let mut mass = weighted(&self.mass, factors, self.modes())?;
+        let mut stiffness = weighted(&self.stiffness, factors, self.modes())?;
+        for block in &self.patches {
+            let more = factor_on(layer_of(block.parameter), factors)?
+                * (factor_on(block.parameter, factors)? - 1.0);
+            let sum = match block.parameter {
+                Parameter::PatchStorativity(..) => &mut mass,
+                _ => &mut stiffness,
+            };
+            if more != 0.0 && block.matrix.shape() == sum.shape() {
+                sum.zip_apply(&block.matrix, |s, b| *s += more * b);
+            }
+        }
         symmetric_pencil(&stiffness, mass, self.closed)
+    }
+}
+
+/// The parameter of the layer that a patch is part of; any other parameter stands for itself.
+pub(crate) fn layer_of(parameter: Parameter) -> Parameter {
+    match parameter {
+        Parameter::PatchTransmissivity(layer, _) => Parameter::Transmissivity(layer),
+        Parameter::PatchStorativity(layer, _) => Parameter::Storativity(layer),
+        other => other,
     }
 }
 

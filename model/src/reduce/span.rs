@@ -6,6 +6,7 @@
 )]
 
 use faer::linalg::matmul::matmul;
+use faer::sparse::SparseColMatRef;
 use faer::{Accum, Mat, MatRef, Par};
 use nalgebra::{Cholesky, DMatrix};
 
@@ -205,6 +206,39 @@ impl<'a> Span<'a> {
             }
         }
     }
+}
+
+/// `X^T A X` of a sparse matrix A that touches few nodes and a tall block X.
+pub(super) fn quadratic_form(
+    matrix: SparseColMatRef<'_, usize, f64>,
+    x: &Rows,
+) -> Result<DMatrix<f64>, ModelError> {
+    if matrix.ncols() != x.height {
+        return Err(ModelError::Size {
+            what: "rows of a block of the discrete ground",
+            found: matrix.ncols(),
+            expected: x.height,
+        });
+    }
+    let filled: Vec<usize> = (0..matrix.ncols())
+        .filter(|&j| !matrix.symbolic().col_range(j).is_empty())
+        .collect();
+    let (mut here, mut image) = (
+        Rows::zeros(filled.len(), x.width),
+        Rows::zeros(filled.len(), x.width),
+    );
+    for (at, &j) in filled.iter().enumerate() {
+        here.row_mut(at).copy_from_slice(x.row(j));
+        let range = matrix.symbolic().col_range(j);
+        let entries = matrix.symbolic().row_idx()[range.clone()].iter();
+        for (&i, &a) in entries.zip(&matrix.val()[range]) {
+            for (y, x) in image.row_mut(at).iter_mut().zip(x.row(i)) {
+                *y += a * x;
+            }
+        }
+    }
+    let product = transposed_times(here.matrix(), image.matrix());
+    Ok(DMatrix::from_fn(x.width, x.width, |i, j| product[(i, j)]))
 }
 
 #[derive(Clone, Copy)]

@@ -101,7 +101,12 @@ impl Watch {
         )?;
         let frame = Frame::new(ground, &commissioned.reduced, &calibration.factors)?;
         let path = Path::of(&frame.modal, calibration.block);
-        let columns = Columns::new(frame, calibration.priors.clone(), &calibration.skins);
+        let columns = Columns::new(
+            frame,
+            calibration.patched.clone(),
+            calibration.priors.clone(),
+            &calibration.skins,
+        );
         let skins = columns.skin_paths();
         let mut whitener =
             Whitener::new(&path, &calibration.stochastic, &skins, calibration.block)?;
@@ -116,8 +121,7 @@ impl Watch {
         );
         let images = Images::new(&columns.frame.modal, &places);
         let fixed = columns.len();
-        let mismatch = calibration.priors.apart.iter().copied().fold(0.0, f64::max);
-        let apart = calibration.priors.apart.iter().copied().fold(0.0, f64::max);
+        let mismatch = calibration.priors.mismatch;
         let adopted: Vec<Adopted> = adoptions
             .iter()
             .map(|a| {
@@ -127,7 +131,7 @@ impl Watch {
                     &columns.frame,
                     &places,
                     calibration.block,
-                    apart,
+                    mismatch,
                     &calibration.noise,
                 )
             })
@@ -805,7 +809,10 @@ impl Watch {
     #[must_use]
     pub fn evidence(&self) -> Vec<(Cause, f64)> {
         let mut sums = Weights::sums(&self.state.ladder);
-        sums.push((Cause::Barrier, self.state.barriers.evidence(self.scales.barrier).0));
+        sums.push((
+            Cause::Barrier,
+            self.state.barriers.evidence(self.scales.barrier).0,
+        ));
         sums
     }
 

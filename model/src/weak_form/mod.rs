@@ -22,7 +22,7 @@ use serde::{Deserialize, Serialize};
 
 use crate::ModelError;
 use crate::ground::mesh::{Mesh, MeshOptions};
-use crate::ground::{Ground, Point};
+use crate::ground::{Ground, Patches, Point};
 use nodes::Nodes;
 use space::Space;
 
@@ -42,6 +42,10 @@ pub enum Parameter {
     Skin(usize),
     /// Wellbore storage of a well, by order.
     Storage(usize),
+    /// Transmissivity of a patch of a layer, by their orders, as a factor on the layer's.
+    PatchTransmissivity(usize, usize),
+    /// Storativity of a patch of a layer, by their orders, as a factor on the layer's.
+    PatchStorativity(usize, usize),
     /// Nothing: the block never changes.
     Fixed,
     /// Transmissivity of a zone, by order.
@@ -113,6 +117,15 @@ pub struct System {
     pub closed_components: Vec<Vec<usize>>,
     /// Where each unknown sits and in which layer (a wellbore node sits at its well).
     pub nodes: Vec<(Point, usize)>,
+}
+
+/// What the patches of a ground contribute to the matrices of a [`System`].
+#[derive(Debug, Clone, Default)]
+pub struct PatchShares {
+    /// Shares of the storage matrix, one a patch of storativity.
+    pub mass: Vec<SparseBlock>,
+    /// Shares of the conduction matrix, one a patch of transmissivity.
+    pub stiffness: Vec<SparseBlock>,
 }
 
 /// How the weak form is made discrete.
@@ -210,6 +223,21 @@ impl Discrete {
     pub fn locate(&self, point: Point, layer: usize) -> Result<Functional, ModelError> {
         self.nodes
             .locate(&self.mesh, self.scheme.space(), point, layer)
+    }
+
+    /// Shares of storage and conduction that the patches of every layer have in the matrices, at their described values.
+    ///
+    /// # Errors
+    /// [`ModelError::Size`] where the mesh was fitted to another ground.
+    pub fn patches(&self, ground: &Ground, patches: &Patches) -> Result<PatchShares, ModelError> {
+        let (mass, stiffness) = statement::patches(
+            ground,
+            &self.mesh,
+            self.scheme.space(),
+            &self.nodes,
+            patches,
+        )?;
+        Ok(PatchShares { mass, stiffness })
     }
 
     fn gauges(&self, ground: &Ground) -> Result<Vec<Functional>, ModelError> {

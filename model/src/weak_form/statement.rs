@@ -18,10 +18,10 @@ use std::f64::consts::PI;
 use super::assembly::Assembly;
 use super::nodes::{Nodes, Slot};
 use super::space::{Local, MOST, Space};
-use super::{Functional, Parameter, Rock, System};
+use super::{Functional, Parameter, Rock, SparseBlock, System};
 use crate::ModelError;
 use crate::ground::mesh::{Mesh, distance};
-use crate::ground::{EdgeKind, Ground, ISOTROPIC, Point, Tensor, Well};
+use crate::ground::{EdgeKind, Ground, ISOTROPIC, Patches, Point, Tensor, Well};
 
 /// Puts the statement into a space. Gauges and neighbours are left to the caller.
 pub(super) fn assemble(
@@ -91,6 +91,40 @@ pub(super) fn assemble(
         closed_components,
         nodes: nodes.places.clone(),
     })
+}
+
+/// The patches' shares of storage and conduction: a triangle belongs to the patch of its centroid. A zone is no part of
+/// a patch; it has parameters of its own.
+pub(super) fn patches(
+    ground: &Ground,
+    mesh: &Mesh,
+    space: &dyn Space,
+    nodes: &Nodes,
+    patches: &Patches,
+) -> Result<(Vec<SparseBlock>, Vec<SparseBlock>), ModelError> {
+    let mut sum = Assembly::new(nodes.places.len());
+    for (l, layer) in ground.layers.iter().enumerate() {
+        let tensor = layer.tensor();
+        for t in 0..mesh.triangles.len() {
+            let corners = mesh.corners(t);
+            let Some(here) = nodes.triangle(mesh, t, l) else {
+                continue;
+            };
+            let middle = middle_of(&corners);
+            let rock = Rock::at(ground, middle, l);
+            if rock.storativity.0 == Parameter::Storativity(l) {
+                let parameter = Parameter::PatchStorativity(l, patches.storativity(middle));
+                let local = space.storage(&corners);
+                sum.store(parameter, rock.storativity.1, &here, &local);
+            }
+            if rock.transmissivity.0 == Parameter::Transmissivity(l) {
+                let parameter = Parameter::PatchTransmissivity(l, patches.transmissivity(middle));
+                let local = space.conduction(&corners, &tensor);
+                sum.conduct(parameter, rock.transmissivity.1, &here, &local);
+            }
+        }
+    }
+    sum.finish()
 }
 
 /// Storage in the bore of a well, and the skin between bore and ring where they are apart.

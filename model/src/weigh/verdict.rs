@@ -9,9 +9,7 @@ use nalgebra::{DMatrix, DVector};
 
 use super::bank::{Bank, COARSE, GROWTHS, Source};
 use super::barrier::{Barriers, SEALING};
-use super::evidence::{
-    amplitude, joint, log_bayes, log_bayes_joint, log_bayes_positive, log_sum,
-};
+use super::evidence::{amplitude, joint, log_bayes, log_bayes_joint, log_bayes_positive, log_sum};
 use super::ladder::{CAUSES, Ladder, Onset};
 use super::scales::Scales;
 use crate::commission::Places;
@@ -24,6 +22,8 @@ const THINNED: usize = 3;
 /// Prior covariance, as a share of an abrupt cause's variance, of its full effect and of its effect within the onset's
 /// block: it begins anywhere in that block.
 const ABRUPT: [[f64; 2]; 2] = [[1.0, 0.5], [0.5, 1.0 / 3.0]];
+/// Parts of the way from one pace of growth to the next.
+const BETWEEN: [f64; 4] = [0.0, 0.25, 0.5, 0.75];
 /// Relative error of a leak's signature between lattice places and growths even in the plainest ground.
 const LATTICE: f64 = 0.03;
 /// Weight of a leak outside the outline, beside one inside.
@@ -364,32 +364,84 @@ impl Weights<'_> {
         self.summary(cause, ladder, &all)
     }
 
+    /// Leaks at every place, growing at every pace: between two of [`GROWTHS`] a signature is a mix of theirs.
     fn leaks(&self, onset: &Onset, now: i64, all: &mut Vec<Hypothesis>) {
-        for (growth, days) in GROWTHS.iter().enumerate() {
-            for (source, weight, c, n) in self.sources(onset, growth, 1) {
-                let Source::Place(place) = source else {
+        let age = (now + 1 - onset.block) as f64 * self.block / 86_400.0;
+        let grown = |days: f64| {
+            if days > 0.0 {
+                (age / days).min(1.0)
+            } else {
+                1.0
+            }
+        };
+        let paces = (GROWTHS.len() - 1) * BETWEEN.len() + 1;
+        let share = -((self.scales.leak.len() * paces) as f64).ln();
+        for (growth, (coefficients, days)) in self.bank.coefficients.iter().zip(GROWTHS).enumerate()
+        {
+            let next = self
+                .bank
+                .coefficients
+                .get(growth + 1)
+                .zip(GROWTHS.get(growth + 1));
+            let turned = &onset.sources.n * coefficients;
+            let c = coefficients.tr_mul(&onset.sources.c);
+            let c_next = next.map(|(next, _)| next.tr_mul(&onset.sources.c));
+            let turned_next = next.map(|(next, _)| &onset.sources.n * next);
+            for (index, weight) in self.leak_weights() {
+                let Some(&Source::Place(place)) = self.bank.sources.get(index) else {
                     continue;
                 };
-                for variance in &self.scales.leak {
-                    let (mean, sd) = amplitude(-c, n, *variance);
-                    let age = (now + 1 - onset.block) as f64 * self.block / 86_400.0;
-                    let grown = if *days > 0.0 {
-                        (age / days).min(1.0)
-                    } else {
-                        1.0
-                    };
-                    all.push(Hypothesis {
-                        log: log_bayes_positive(-c, n, *variance) + weight
-                            - ((self.scales.leak.len() * GROWTHS.len()) as f64).ln(),
-                        onset: onset.block,
-                        part: 0.5,
-                        index: place,
-                        mean: mean * grown,
-                        sd: sd * grown,
-                    });
+                let n = coefficients.column(index).dot(&turned.column(index));
+                for &part in BETWEEN
+                    .iter()
+                    .take(if next.is_some() { BETWEEN.len() } else { 1 })
+                {
+                    let (mut c, mut n, mut grown_to) = (c[index], n, grown(days));
+                    if let (Some((_, days)), Some(c_next), Some(turned_next)) =
+                        (next, &c_next, &turned_next)
+                        && let Some((other, _)) = next
+                        && part > 0.0
+                    {
+                        let rest = 1.0 - part;
+                        let across = coefficients.column(index).dot(&turned_next.column(index));
+                        let beyond = other.column(index).dot(&turned_next.column(index));
+                        c = rest * c + part * c_next[index];
+                        n = rest * rest * n + 2.0 * rest * part * across + part * part * beyond;
+                        grown_to = rest * grown_to + part * grown(*days);
+                    }
+                    for variance in &self.scales.leak {
+                        let (mean, sd) = amplitude(-c, n.max(0.0), *variance);
+                        all.push(Hypothesis {
+                            log: log_bayes_positive(-c, n.max(0.0), *variance) + weight + share,
+                            onset: onset.block,
+                            part: 0.5,
+                            index: place,
+                            mean: mean * grown_to,
+                            sd: sd * grown_to,
+                        });
+                    }
                 }
             }
         }
+    }
+
+    /// Sources that may be a leak, with the log of their prior weight.
+    fn leak_weights(&self) -> Vec<(usize, f64)> {
+        let weights: Vec<(usize, f64)> = self
+            .bank
+            .sources
+            .iter()
+            .enumerate()
+            .filter_map(|(index, source)| match source {
+                Source::Place(place) => Some((index, self.inside(*place))),
+                Source::Neighbour(_) => None,
+            })
+            .collect();
+        let total: f64 = weights.iter().map(|(_, w)| w).sum();
+        weights
+            .into_iter()
+            .map(|(index, weight)| (index, (weight / total).ln()))
+            .collect()
     }
 
     fn neighbours(&self, onset: &Onset, all: &mut Vec<Hypothesis>) {
