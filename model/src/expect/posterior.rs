@@ -12,7 +12,7 @@
     reason = "indices run over matrices made square here"
 )]
 
-use nalgebra::{Cholesky, DMatrix, DVector};
+use nalgebra::{Cholesky, DMatrix, DMatrixView, DVector};
 use serde::{Deserialize, Serialize};
 
 use crate::ModelError;
@@ -125,23 +125,62 @@ fn symmetrise(matrix: &mut DMatrix<f64>) {
     }
 }
 
-/// A group of signatures cleared of the nuisances, with their running sums.
+/// Running sums of a group of signatures cleared of the nuisances.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
-pub(crate) struct Cleared {
-    /// Regression of the signatures on the columns (columns by signatures).
-    u: DMatrix<f64>,
+pub(crate) struct Sums {
     /// `c`.
     pub(crate) c: DVector<f64>,
     /// `N`.
     pub(crate) n: DMatrix<f64>,
 }
 
+impl Sums {
+    pub(crate) fn new(signatures: usize) -> Self {
+        Self {
+            c: DVector::zeros(signatures),
+            n: DMatrix::zeros(signatures, signatures),
+        }
+    }
+
+    /// Adds a batch of cleared signatures, scaled as the lesson's innovations are (readings by signatures).
+    pub(crate) fn add(&mut self, lesson: &Lesson, scaled: DMatrixView<'_, f64>) {
+        self.c.gemv_tr(1.0, &scaled, &lesson.innovation, 1.0);
+        self.n.gemm(1.0, &scaled.transpose(), &scaled, 1.0);
+    }
+
+    /// Bytes held.
+    pub(crate) fn bytes(&self) -> usize {
+        8 * (self.c.len() + self.n.len())
+    }
+}
+
+/// Regressions of signatures on the columns (columns by signatures), moved on by a batch of whitened signatures (readings
+/// by signatures). Returns what is left of the signatures, scaled as the lesson's innovations are.
+pub(crate) fn clear(
+    regressions: &mut DMatrix<f64>,
+    lesson: &Lesson,
+    mut signatures: DMatrix<f64>,
+) -> DMatrix<f64> {
+    signatures.gemm(-1.0, &lesson.rows, regressions, 1.0);
+    let scaled = &lesson.scale * signatures;
+    regressions.gemm(1.0, &lesson.gain, &scaled, 1.0);
+    scaled
+}
+
+/// A group of signatures cleared of the nuisances, with their regressions and running sums.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub(crate) struct Cleared {
+    /// Regression of the signatures on the columns (columns by signatures).
+    u: DMatrix<f64>,
+    /// Their sums.
+    pub(crate) sums: Sums,
+}
+
 impl Cleared {
     pub(crate) fn new(columns: usize, signatures: usize) -> Self {
         Self {
             u: DMatrix::zeros(columns, signatures),
-            c: DVector::zeros(signatures),
-            n: DMatrix::zeros(signatures, signatures),
+            sums: Sums::new(signatures),
         }
     }
 
@@ -155,17 +194,13 @@ impl Cleared {
     }
 
     /// Takes a batch of whitened signatures in (readings by signatures).
-    pub(crate) fn learn(&mut self, lesson: &Lesson, signatures: &DMatrix<f64>) {
-        let mut cleared = signatures.clone();
-        cleared.gemm(-1.0, &lesson.rows, &self.u, 1.0);
-        let scaled = &lesson.scale * cleared;
-        self.c.gemv_tr(1.0, &scaled, &lesson.innovation, 1.0);
-        self.n.gemm(1.0, &scaled.transpose(), &scaled, 1.0);
-        self.u.gemm(1.0, &lesson.gain, &scaled, 1.0);
+    pub(crate) fn learn(&mut self, lesson: &Lesson, signatures: DMatrix<f64>) {
+        let scaled = clear(&mut self.u, lesson, signatures);
+        self.sums.add(lesson, scaled.as_view());
     }
 
     /// Bytes held.
     pub(crate) fn bytes(&self) -> usize {
-        8 * (self.u.len() + self.c.len() + self.n.len())
+        8 * self.u.len() + self.sums.bytes()
     }
 }

@@ -36,7 +36,7 @@ const UNKNOWN: f64 = 1e5;
 /// Missing readings of one gauge that keep a column.
 const MISSING: usize = 24;
 /// An onset of age a is weighed again after a share of its age.
-const AGAIN: i64 = 40;
+const AGAIN: i64 = 20;
 /// Kinds of cause that share the prior.
 const KINDS: f64 = 7.0;
 /// A ground whose pairs differ by this share looks, as its rates go, like one with images: their evidence counts half.
@@ -413,7 +413,7 @@ impl Watch {
                 self.state.finding = None;
                 self.state.log_mixture = 0.0;
                 if one.anew {
-                    self.state.barriers.sums =
+                    self.state.barriers.cleared =
                         Cleared::new(self.state.posterior.len(), self.images.lines());
                 }
             }
@@ -429,7 +429,7 @@ impl Watch {
             state.pending.resize_horizontally_mut(width, 0.0);
             state.posterior.append(added);
             state.ladder.append(added);
-            state.barriers.sums.append(added);
+            state.barriers.cleared.append(added);
         }
         for (at, lines, scale) in taken {
             for (column, line) in lines.into_iter().enumerate() {
@@ -601,7 +601,7 @@ impl Watch {
             state.pending = DMatrix::zeros(0, state.filter.ncols());
             state.posterior.strike(&columns);
             state.ladder.strike(&columns);
-            state.barriers.sums.strike(&columns);
+            state.barriers.cleared.strike(&columns);
         }
         let day = days(1.0, self.block);
         state
@@ -820,7 +820,7 @@ impl Watch {
     #[must_use]
     pub fn running_bytes(&self) -> usize {
         self.state.ladder.bytes()
-            + self.state.barriers.sums.bytes()
+            + self.state.barriers.cleared.bytes()
             + 8 * self.state.posterior.covariance.len()
     }
 }

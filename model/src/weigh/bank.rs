@@ -24,6 +24,8 @@ pub(crate) const COARSE: [usize; 4] = [0, 2, 4, 6];
 const MISSED: f64 = 2e-3;
 /// Most directions kept.
 const LIMIT: usize = 56;
+/// Every how many candidate places one is weighed for detection.
+const THINNED: usize = 3;
 
 /// What a candidate is.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -45,6 +47,10 @@ pub(crate) struct Bank {
     own: DMatrix<f64>,
     /// Coefficients by growth (directions by sources).
     pub(crate) coefficients: Vec<DMatrix<f64>>,
+    /// The same for every few places and all neighbours, for detection.
+    pub(crate) thinned: Vec<DMatrix<f64>>,
+    /// Which sources those are.
+    pub(crate) chosen: Vec<usize>,
     /// Sources in the order of the coefficients' columns.
     pub(crate) sources: Vec<Source>,
     /// Lags held.
@@ -166,7 +172,7 @@ impl Bank {
         }
         let lifted = DMatrix::from_fn(rows, samples.ncols(), |r, c| samples[(r, c)] * weight[r]);
         let all = basis.transpose() * lifted;
-        let coefficients = (0..GROWTHS.len())
+        let coefficients: Vec<DMatrix<f64>> = (0..GROWTHS.len())
             .map(|index| {
                 all.columns(index * sources.len(), sources.len())
                     .into_owned()
@@ -174,10 +180,19 @@ impl Bank {
             .collect();
         let directions = Self::directions(modal, whitener, &ports, &raw_mix, block, horizon);
         let own = Self::own(whitener, gauges, block, horizon);
+        let chosen: Vec<usize> = (0..sources.len())
+            .filter(|&i| i % THINNED == 0 || matches!(sources.get(i), Some(Source::Neighbour(_))))
+            .collect();
+        let thinned = coefficients
+            .iter()
+            .map(|all| all.select_columns(chosen.iter()))
+            .collect();
         Self {
             gauges,
             directions,
             own,
+            thinned,
+            chosen,
             coefficients,
             sources,
             horizon,
@@ -259,6 +274,12 @@ impl Bank {
                 .copy_from(&whitener.step(&mut state, &raw));
         }
         out
+    }
+
+    /// Number of neighbours.
+    pub(crate) fn neighbours(&self) -> usize {
+        let all = self.sources.iter();
+        all.filter(|s| matches!(s, Source::Neighbour(_))).count()
     }
 
     /// Number of directions.

@@ -29,7 +29,7 @@ pub(crate) struct Images {
 /// Running sums of the lines.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 pub(crate) struct Barriers {
-    pub(crate) sums: Cleared,
+    pub(crate) cleared: Cleared,
     filter: DMatrix<f64>,
     pending: DMatrix<f64>,
 }
@@ -82,7 +82,7 @@ impl Images {
 impl Barriers {
     pub(crate) fn new(columns: usize, lines: usize, whitener: &Whitener) -> Self {
         Self {
-            sums: Cleared::new(columns, lines),
+            cleared: Cleared::new(columns, lines),
             filter: DMatrix::zeros(whitener.states(), lines),
             pending: DMatrix::zeros(0, lines),
         }
@@ -105,15 +105,15 @@ impl Barriers {
         for (mut row, factor) in rows.row_iter_mut().zip(calm) {
             row *= *factor;
         }
-        self.sums.learn(lesson, &rows);
+        self.cleared.learn(lesson, rows);
     }
 
     /// Log evidence of a barrier anywhere in the fan, with the log evidence of each line.
     pub(crate) fn evidence(&self, variance: f64) -> (f64, DVector<f64>) {
-        let each = DVector::from_fn(self.sums.c.len(), |line, _| {
+        let each = DVector::from_fn(self.cleared.sums.c.len(), |line, _| {
             log_bayes_about(
-                self.sums.c[line],
-                self.sums.n[(line, line)],
+                self.cleared.sums.c[line],
+                self.cleared.sums.n[(line, line)],
                 SEALING,
                 variance,
             )

@@ -16,7 +16,7 @@ use serde::{Deserialize, Serialize};
 use super::bank::Bank;
 use crate::expect::drive::{Driven, Sampled, Tables};
 use crate::expect::frame::{Frame, means};
-use crate::expect::posterior::{Cleared, Lesson};
+use crate::expect::posterior::{Lesson, Sums, clear};
 use crate::expect::whitener::Whitener;
 use crate::finding::Cause;
 
@@ -38,14 +38,16 @@ pub(crate) const CAUSES: [Cause; 6] = [
 pub(crate) struct Onset {
     /// First block it touches.
     pub(crate) block: i64,
+    /// Which of the ladder's slots holds its regressions.
+    slot: usize,
     /// Log of its weight in the mixture, by cause.
     pub(crate) weight: [f64; CAUSES.len()],
     /// Sources anywhere, by directions of the bank.
-    pub(crate) sources: Cleared,
+    pub(crate) sources: Sums,
     /// Steps, impulses and ramps of the gauges.
-    pub(crate) own: Cleared,
+    pub(crate) own: Sums,
     /// Scale of each meter: from the block after the onset's, and within the onset's block.
-    pub(crate) meters: Cleared,
+    pub(crate) meters: Sums,
     /// Unit-port states of each well's rate: since the next block, and within the onset's block.
     since: DMatrix<f64>,
     within: DMatrix<f64>,
@@ -63,6 +65,10 @@ pub(crate) struct Onset {
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 pub(crate) struct Ladder {
     pub(crate) onsets: Vec<Onset>,
+    /// Regressions of all onsets' signatures on the columns, side by side in slots, so that a batch is one product.
+    regressions: DMatrix<f64>,
+    /// Slots that no onset holds.
+    free: Vec<usize>,
 }
 
 /// What the meters' signatures need of a block.
@@ -78,15 +84,16 @@ pub(crate) struct Meters<'a> {
 }
 
 impl Onset {
-    fn new(block: i64, columns: usize, bank: &Bank, frame: &Frame, whitener: &Whitener) -> Self {
+    fn new(block: i64, slot: usize, bank: &Bank, frame: &Frame, whitener: &Whitener) -> Self {
         let (gauges, wells) = (frame.gauges, frame.wells);
         let modes = frame.base.drive.len();
         Self {
             block,
+            slot,
             weight: [0.0; CAUSES.len()],
-            sources: Cleared::new(columns, bank.width()),
-            own: Cleared::new(columns, 3 * gauges),
-            meters: Cleared::new(columns, 2 * wells),
+            sources: Sums::new(bank.width()),
+            own: Sums::new(3 * gauges),
+            meters: Sums::new(2 * wells),
             since: DMatrix::zeros(modes, wells),
             within: DMatrix::zeros(modes, wells),
             filter: DMatrix::zeros(whitener.states(), 2 * wells),
@@ -157,7 +164,11 @@ impl Onset {
 
 impl Ladder {
     pub(crate) fn new() -> Self {
-        Self { onsets: Vec::new() }
+        Self {
+            onsets: Vec::new(),
+            regressions: DMatrix::zeros(0, 0),
+            free: Vec::new(),
+        }
     }
 
     /// Opens an onset at a block.
@@ -169,8 +180,22 @@ impl Ladder {
         frame: &Frame,
         whitener: &Whitener,
     ) {
+        let width = bank.width() + 3 * frame.gauges + 2 * frame.wells;
+        if self.onsets.is_empty() {
+            self.regressions = DMatrix::zeros(columns, 0);
+            self.free.clear();
+        }
+        let slot = match self.free.pop() {
+            Some(slot) => slot,
+            None => {
+                let held = self.regressions.ncols();
+                self.regressions.resize_horizontally_mut(held + width, 0.0);
+                held / width
+            }
+        };
+        self.regressions.columns_mut(slot * width, width).fill(0.0);
         self.onsets
-            .push(Onset::new(block, columns, bank, frame, whitener));
+            .push(Onset::new(block, slot, bank, frame, whitener));
     }
 
     /// Steps the meters' signatures of all onsets through a block.
@@ -182,19 +207,15 @@ impl Ladder {
 
     /// Columns were added at the end.
     pub(crate) fn append(&mut self, count: usize) {
-        for onset in &mut self.onsets {
-            onset.sources.append(count);
-            onset.own.append(count);
-            onset.meters.append(count);
-        }
+        let from = self.regressions.nrows();
+        self.regressions.resize_vertically_mut(from + count, 0.0);
     }
 
     /// Columns were struck out.
     pub(crate) fn strike(&mut self, columns: &[usize]) {
-        for onset in &mut self.onsets {
-            onset.sources.strike(columns);
-            onset.own.strike(columns);
-            onset.meters.strike(columns);
+        if !self.onsets.is_empty() {
+            let all = std::mem::replace(&mut self.regressions, DMatrix::zeros(0, 0));
+            self.regressions = all.remove_rows_at(columns);
         }
     }
 
@@ -208,36 +229,43 @@ impl Ladder {
         gauges: usize,
         calm: &[f64],
     ) {
+        let rows = lesson.rows.nrows();
+        let mut signatures = DMatrix::zeros(rows, self.regressions.ncols());
+        let sources = bank.width();
         for onset in &mut self.onsets {
-            let rows = lesson.rows.nrows();
-            let mut sources = DMatrix::zeros(rows, bank.width());
-            let mut own = DMatrix::zeros(rows, 3 * gauges);
-            let mut meters = DMatrix::zeros(rows, onset.pending.ncols());
+            let meters = onset.pending.ncols();
+            let width = sources + 3 * gauges + meters;
+            let mut mine = signatures.columns_mut(onset.slot * width, width);
             let mut at = 0;
             for block in (last - blocks + 1)..=last {
                 if let Ok(lag) = usize::try_from(block - onset.block)
                     && lag < bank.horizon
                 {
-                    sources
-                        .rows_mut(at, gauges)
+                    mine.view_mut((at, 0), (gauges, sources))
                         .copy_from(&bank.directions_at(lag));
-                    own.rows_mut(at, gauges).copy_from(&bank.own_at(lag));
+                    mine.view_mut((at, sources), (gauges, 3 * gauges))
+                        .copy_from(&bank.own_at(lag));
                 }
                 at += gauges;
             }
             let held = onset.pending.nrows().min(rows);
-            meters
-                .rows_mut(rows - held, held)
+            mine.view_mut((rows - held, sources + 3 * gauges), (held, meters))
                 .copy_from(&onset.pending.rows(onset.pending.nrows() - held, held));
-            onset.pending = DMatrix::zeros(0, onset.pending.ncols());
-            for part in [&mut sources, &mut own, &mut meters] {
-                for (mut row, factor) in part.row_iter_mut().zip(calm) {
-                    row *= *factor;
-                }
-            }
-            onset.sources.learn(lesson, &sources);
-            onset.own.learn(lesson, &own);
-            onset.meters.learn(lesson, &meters);
+            onset.pending = DMatrix::zeros(0, meters);
+        }
+        for (mut row, factor) in signatures.row_iter_mut().zip(calm) {
+            row *= *factor;
+        }
+        let scaled = clear(&mut self.regressions, lesson, signatures);
+        for onset in &mut self.onsets {
+            let meters = onset.meters.c.len();
+            let width = sources + 3 * gauges + meters;
+            let mine = scaled.columns(onset.slot * width, width);
+            onset.sources.add(lesson, mine.columns(0, sources));
+            onset.own.add(lesson, mine.columns(sources, 3 * gauges));
+            onset
+                .meters
+                .add(lesson, mine.columns(sources + 3 * gauges, meters));
         }
     }
 
@@ -276,7 +304,8 @@ impl Ladder {
                         .zip(&this.weight)
                         .map(|(e, w)| e + w)
                         .fold(f64::NEG_INFINITY, f64::max);
-                    let dear = 40.0 * (strength - best).max(-60.0).exp();
+                    // Evidence that falls off steeply tells the onset well: those round the best are kept too.
+                    let dear = 40.0 * (0.2 * (strength - best).max(-300.0)).exp();
                     (
                         index + 1,
                         gap / age * (1.0 + if best > 3.0 { dear } else { 0.0 }),
@@ -293,6 +322,7 @@ impl Ladder {
     /// Drops an onset and passes its weights to the nearer neighbour.
     fn drop(&mut self, index: usize) {
         let gone = self.onsets.remove(index);
+        self.free.push(gone.slot);
         let heir = match index.checked_sub(1) {
             Some(before)
                 if self.onsets.get(index).is_none_or(|after| {
@@ -326,14 +356,16 @@ impl Ladder {
 
     /// Bytes held.
     pub(crate) fn bytes(&self) -> usize {
-        self.onsets
-            .iter()
-            .map(|o| {
-                o.sources.bytes()
-                    + o.own.bytes()
-                    + o.meters.bytes()
-                    + 8 * (o.since.len() + o.within.len() + o.filter.len())
-            })
-            .sum()
+        8 * self.regressions.len()
+            + self
+                .onsets
+                .iter()
+                .map(|o| {
+                    o.sources.bytes()
+                        + o.own.bytes()
+                        + o.meters.bytes()
+                        + 8 * (o.since.len() + o.within.len() + o.filter.len())
+                })
+                .sum::<usize>()
     }
 }

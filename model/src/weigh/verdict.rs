@@ -14,14 +14,14 @@ use super::ladder::{CAUSES, Ladder, Onset};
 use super::scales::Scales;
 use crate::commission::Places;
 use crate::commission::places::distance;
-use crate::expect::posterior::Cleared;
+use crate::expect::posterior::Sums;
 use crate::finding::{Cause, Place, Size, SizeUnit, Subject};
 
-/// Every how many candidate places one is weighed for detection.
-const THINNED: usize = 3;
 /// Prior covariance, as a share of an abrupt cause's variance, of its full effect and of its effect within the onset's
 /// block: it begins anywhere in that block.
 const ABRUPT: [[f64; 2]; 2] = [[1.0, 0.5], [0.5, 1.0 / 3.0]];
+/// Log evidence by which a place may fall short and still be looked at.
+const HOPELESS: f64 = 1_000.0;
 /// Parts of the way from one pace of growth to the next.
 const BETWEEN: [f64; 4] = [0.0, 0.25, 0.5, 0.75];
 /// Relative error of a leak's signature between lattice places and growths even in the plainest ground.
@@ -70,7 +70,7 @@ impl Weights<'_> {
         let mut leaks = Vec::new();
         let mut others = Vec::new();
         for growth in COARSE {
-            for (source, weight, c, n) in self.sources(onset, growth, THINNED) {
+            for (source, weight, c, n) in self.sources(onset, growth) {
                 let share = -(COARSE.len() as f64).ln();
                 match source {
                     Source::Place(_) => {
@@ -116,19 +116,14 @@ impl Weights<'_> {
         onset.asked = now;
     }
 
-    /// Cleared sums of sources of one growth: source, log prior weight as a leak, c, n (per unit of injection).
-    fn sources(&self, onset: &Onset, growth: usize, every: usize) -> Vec<(Source, f64, f64, f64)> {
-        let Some(all) = self.bank.coefficients.get(growth) else {
+    /// Cleared sums of the sources weighed for detection, of one growth: source, log prior weight as a leak, c, n (per unit of injection).
+    fn sources(&self, onset: &Onset, growth: usize) -> Vec<(Source, f64, f64, f64)> {
+        let Some(coefficients) = self.bank.thinned.get(growth) else {
             return Vec::new();
         };
-        let chosen: Vec<usize> = (0..self.bank.sources.len())
-            .filter(|&i| {
-                i % every == 0 || matches!(self.bank.sources.get(i), Some(Source::Neighbour(_)))
-            })
-            .collect();
-        let coefficients = all.select_columns(chosen.iter());
+        let chosen = &self.bank.chosen;
         let c = coefficients.tr_mul(&onset.sources.c);
-        let turned = &onset.sources.n * &coefficients;
+        let turned = &onset.sources.n * coefficients;
         let mut total = 0.0;
         let weights: Vec<f64> = chosen
             .iter()
@@ -162,14 +157,8 @@ impl Weights<'_> {
 
     /// Log prior weight of a source as interference.
     fn interference_weight(&self, source: Source) -> f64 {
-        let neighbours = self
-            .bank
-            .sources
-            .iter()
-            .filter(|s| matches!(s, Source::Neighbour(_)))
-            .count();
         match source {
-            Source::Neighbour(_) => -(neighbours as f64).ln(),
+            Source::Neighbour(_) => -(self.bank.neighbours() as f64).ln(),
             Source::Place(_) => f64::NEG_INFINITY,
         }
     }
@@ -228,7 +217,7 @@ impl Weights<'_> {
     /// `count` further in the onset's block, by the part of that block that was left.
     fn abrupt(
         &self,
-        sums: &Cleared,
+        sums: &Sums,
         index: usize,
         count: usize,
         onset: i64,
@@ -256,7 +245,7 @@ impl Weights<'_> {
     }
 
     /// Independent step and ramp at every gauge.
-    fn unexplained(&self, own: &Cleared) -> f64 {
+    fn unexplained(&self, own: &Sums) -> f64 {
         let gauges = self.gauges;
         let scales = self.scales.step.first().map_or(0, Vec::len);
         let each: Vec<f64> = (0..scales)
@@ -376,6 +365,7 @@ impl Weights<'_> {
         };
         let paces = (GROWTHS.len() - 1) * BETWEEN.len() + 1;
         let share = -((self.scales.leak.len() * paces) as f64).ln();
+        let mut best = f64::NEG_INFINITY;
         for (growth, (coefficients, days)) in self.bank.coefficients.iter().zip(GROWTHS).enumerate()
         {
             let next = self
@@ -409,6 +399,12 @@ impl Weights<'_> {
                         n = rest * rest * n + 2.0 * rest * part * across + part * part * beyond;
                         grown_to = rest * grown_to + part * grown(*days);
                     }
+                    // The most that any size could explain: hopeless places are passed over.
+                    let most = 0.5 * c * c / n.max(f64::MIN_POSITIVE);
+                    if c > 0.0 || most < best - HOPELESS {
+                        continue;
+                    }
+                    best = best.max(most);
                     for variance in &self.scales.leak {
                         let (mean, sd) = amplitude(-c, n.max(0.0), *variance);
                         all.push(Hypothesis {
@@ -445,7 +441,7 @@ impl Weights<'_> {
     }
 
     fn neighbours(&self, onset: &Onset, all: &mut Vec<Hypothesis>) {
-        for (source, _, c, n) in self.sources(onset, 0, THINNED) {
+        for (source, _, c, n) in self.sources(onset, 0) {
             let Source::Neighbour(neighbour) = source else {
                 continue;
             };
@@ -471,8 +467,12 @@ impl Weights<'_> {
             .enumerate()
             .max_by(|a, b| a.1.total_cmp(b.1))
             .map(|(i, _)| i)?;
-        let n = barriers.sums.n[(line, line)];
-        let (off, sd) = amplitude(barriers.sums.c[line] - n * SEALING, n, self.scales.barrier);
+        let n = barriers.cleared.sums.n[(line, line)];
+        let (off, sd) = amplitude(
+            barriers.cleared.sums.c[line] - n * SEALING,
+            n,
+            self.scales.barrier,
+        );
         let mean = SEALING + off;
         let at = self.places.lines.get(line)?;
         let foot = [
