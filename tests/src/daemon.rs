@@ -79,14 +79,13 @@ pub fn program() -> &'static Path {
             .nth(2)
             .expect("tests lie in target/<profile>/deps")
             .join("borewake");
-        if !built.exists() {
-            let status = Command::new(env!("CARGO"))
-                .args(["build", "--workspace", "--bins"])
-                .current_dir(root())
-                .status()
-                .expect("cargo starts");
-            assert!(status.success(), "borewake does not build");
-        }
+        // A test run by itself must not find the program as it was before the last change.
+        let status = Command::new(env!("CARGO"))
+            .args(["build", "--quiet", "--workspace", "--bins"])
+            .current_dir(root())
+            .status()
+            .expect("cargo starts");
+        assert!(status.success(), "borewake does not build");
         built
     })
 }

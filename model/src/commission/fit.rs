@@ -8,7 +8,9 @@
 use nalgebra::{DMatrix, DVector};
 
 use super::history::{History, Regression, Solved};
+use super::places::Places;
 use super::relevance::{Group, learn};
+use super::suspect::{BELIEVED, STRENGTH_SD, Suspect, best_line};
 use super::unsteady::relative_square;
 use super::{Calibration, CommissionSettings, Unsteady, calm};
 use crate::ModelError;
@@ -22,6 +24,7 @@ use crate::expect::whitener::Whitener;
 use crate::ground::Ground;
 use crate::reduce::{Factors, Reduced, layer_of};
 use crate::weak_form::Parameter;
+use crate::weigh::barrier::{Images, SEALING};
 
 /// Share of a pair's response that its discrepancy is thought to be before history is asked.
 const TYPICAL_DISCREPANCY: f64 = 0.001;
@@ -123,6 +126,8 @@ struct Fit<'a> {
     past: f64,
     /// Spread of the logarithm of transmissivity and storativity between patches.
     patch: [f64; 2],
+    /// A barrier that history asks for.
+    suspect: Option<Suspect>,
     /// Coefficients of the last round less what it moved into parameters and skins.
     rest: Option<DVector<f64>>,
 }
@@ -199,6 +204,7 @@ impl<'a> Fit<'a> {
             gain: TYPICAL_GAIN,
             past: 0.01,
             patch: [TYPICAL_PATCH; 2],
+            suspect: None,
             rest: None,
         })
     }
@@ -215,12 +221,7 @@ impl<'a> Fit<'a> {
     }
 
     /// Prior standard deviation and mean of every coefficient.
-    fn spread(
-        &self,
-        columns: &Columns,
-        width: usize,
-        renewals: usize,
-    ) -> (DVector<f64>, DVector<f64>) {
+    fn spread(&self, columns: &Columns, width: usize, tail: usize) -> (DVector<f64>, DVector<f64>) {
         let mut spread = DVector::from_element(width, 1.0);
         let mut centre = DVector::zeros(width);
         for (index, kind) in columns.kinds.iter().enumerate() {
@@ -258,8 +259,11 @@ impl<'a> Fit<'a> {
                 _ => {}
             }
         }
-        for index in columns.len()..width - 2 * renewals {
+        for index in columns.len()..width - tail {
             spread[index] = self.gain;
+        }
+        if self.suspect.is_some() {
+            centre[width - 1] = SEALING / STRENGTH_SD;
         }
         (spread, centre)
     }
@@ -278,11 +282,15 @@ impl<'a> Fit<'a> {
     /// One round: columns at the present parameters, scales learned, parameters and skins moved. Returns the longest move.
     fn round(&mut self, round: usize) -> Result<f64, ModelError> {
         let mut columns = self.columns()?;
-        let mut history = History::run(&mut columns, self.history)?;
+        let images = (round >= PLAIN_ROUNDS).then(|| self.images(&columns));
+        let mut history = History::run(&mut columns, self.history, images.as_ref())?;
         self.priors.pair_spread.clone_from(&history.pair_spread);
         if round == 0 {
             columns = self.columns()?;
-            history = History::run(&mut columns, self.history)?;
+            history = History::run(&mut columns, self.history, None)?;
+        }
+        if let Some(suspect) = self.suspect {
+            history.take(suspect.line, STRENGTH_SD);
         }
         match &self.rest {
             Some(rest) => history.fill(rest),
@@ -293,15 +301,26 @@ impl<'a> Fit<'a> {
         if round == 0 && !history.missing.is_empty() {
             // Before anything is learned, what was not read must fit in with what was.
             for _ in 0..FILLS {
-                let (spread, centre) =
-                    self.spread(&columns, regression.z.len(), history.renewals.len());
+                let (spread, centre) = self.spread(&columns, regression.z.len(), history.tail());
                 history.fill(&regression.solve(&spread, &centre)?.mean);
                 regression = history.whiten(&whitener);
             }
         }
-        let solved = self.learn_scales(&columns, &regression, history.renewals.len(), round)?;
+        let mut solved = None;
+        if round == PLAIN_ROUNDS {
+            let found = self.look_for_barrier(&columns, &mut history, &regression, &whitener)?;
+            if let Some((with, learned)) = found {
+                (regression, solved) = (with, Some(learned));
+            }
+        }
+        let solved = match solved {
+            Some(solved) => solved,
+            None => self.learn_scales(&columns, &regression, history.tail(), round)?,
+        };
         let mut rest = solved.mean.clone();
-        let longest = if round < PLAIN_ROUNDS {
+        // A barrier just found frees the parameters of what they stood for.
+        let freed = self.suspect.is_some() && round <= PLAIN_ROUNDS + 1;
+        let longest = if round < PLAIN_ROUNDS || freed {
             LONGEST_STEP
         } else {
             SHORT_STEP
@@ -353,8 +372,49 @@ impl<'a> Fit<'a> {
         Ok(moved)
     }
 
+    fn images(&self, columns: &Columns) -> Images {
+        Images::new(&columns.frame.modal, &Places::of(self.ground))
+    }
+
+    /// Asks history with and without the barrier that explains most. Where it is believed, it is taken in, and the
+    /// regression with it comes back solved.
+    fn look_for_barrier(
+        &mut self,
+        columns: &Columns,
+        history: &mut History,
+        regression: &Regression,
+        whitener: &Whitener,
+    ) -> Result<Option<(Regression, Solved)>, ModelError> {
+        let lines = history.whiten_lines(whitener);
+        let typical = (self.share.clone(), self.past, self.patch, self.gain);
+        let plain = self.learn_scales(columns, regression, history.tail(), PLAIN_ROUNDS)?;
+        let Some(line) = best_line(regression, &plain, &lines) else {
+            return Ok(None);
+        };
+        let without = (self.share.clone(), self.past, self.patch, self.gain);
+        (self.share, self.past, self.patch, self.gain) = typical.clone();
+        let bare = history.clone();
+        history.take(line, STRENGTH_SD);
+        self.suspect = Some(Suspect {
+            line,
+            log_evidence: 0.0,
+        });
+        let with = history.whiten(whitener);
+        let learned = self.learn_scales(columns, &with, history.tail(), PLAIN_ROUNDS)?;
+        let log_evidence =
+            learned.log_likelihood - plain.log_likelihood - (lines.ncols() as f64).ln();
+        if log_evidence > BELIEVED {
+            self.suspect = Some(Suspect { line, log_evidence });
+            return Ok(Some((with, learned)));
+        }
+        *history = bare;
+        self.suspect = None;
+        (self.share, self.past, self.patch, self.gain) = without;
+        Ok(None)
+    }
+
     /// Groups of columns whose scale is learned.
-    fn groups(&self, columns: &Columns, width: usize, renewals: usize) -> Vec<Group> {
+    fn groups(&self, columns: &Columns, width: usize, tail: usize) -> Vec<Group> {
         let (gauges, wells) = (columns.frame.gauges, columns.frame.wells);
         let mut groups: Vec<Group> = (0..gauges * wells)
             .map(|pair| Group {
@@ -401,7 +461,7 @@ impl<'a> Fit<'a> {
             });
         }
         groups.push(Group {
-            columns: (columns.len()..width - 2 * renewals).collect(),
+            columns: (columns.len()..width - tail).collect(),
             scale: self.gain,
             typical: TYPICAL_GAIN,
             weight: 4.0,
@@ -413,15 +473,15 @@ impl<'a> Fit<'a> {
         &mut self,
         columns: &Columns,
         regression: &Regression,
-        renewals: usize,
+        tail: usize,
         round: usize,
     ) -> Result<Solved, ModelError> {
         let width = regression.z.len();
-        let (mut spread, centre) = self.spread(columns, width, renewals);
+        let (mut spread, centre) = self.spread(columns, width, tail);
         if round < PLAIN_ROUNDS {
             return regression.solve(&spread, &centre);
         }
-        let mut groups = self.groups(columns, width, renewals);
+        let mut groups = self.groups(columns, width, tail);
         let solved = learn(regression, &mut groups, &mut spread, &centre)?;
         let pairs = self.share.len();
         for (share, group) in self.share.iter_mut().zip(&groups) {
@@ -460,7 +520,7 @@ impl<'a> Fit<'a> {
         strides: &[f64],
     ) -> Result<(), ModelError> {
         let width = history.raw.ncols() - 1;
-        let (spread, _) = self.spread(columns, width, history.renewals.len());
+        let (spread, _) = self.spread(columns, width, history.tail());
         let kept: Vec<usize> = (0..width)
             .filter(|&index| {
                 !matches!(
@@ -516,14 +576,18 @@ impl<'a> Fit<'a> {
 
     fn finish(&mut self, blocks: &[Block], span: (i64, i64)) -> Result<Calibration, ModelError> {
         let mut columns = self.columns()?;
-        let mut history = History::run(&mut columns, self.history)?;
+        let images = self.suspect.map(|_| self.images(&columns));
+        let mut history = History::run(&mut columns, self.history, images.as_ref())?;
+        if let Some(suspect) = self.suspect {
+            history.take(suspect.line, STRENGTH_SD);
+        }
         if let Some(rest) = &self.rest {
             history.fill(rest);
         }
         let mut whitener = self.whitener(&columns)?;
         let mut regression = history.whiten(&whitener);
         let width = regression.z.len();
-        let (spread, centre) = self.spread(&columns, width, history.renewals.len());
+        let (spread, centre) = self.spread(&columns, width, history.tail());
         let solved = regression.solve(&spread, &centre)?;
         let (gauges, wells) = (columns.frame.gauges, columns.frame.wells);
         let sampled: Vec<Sampled> = blocks
@@ -625,6 +689,7 @@ impl<'a> Fit<'a> {
             factor_sd,
             patches,
             patched: columns.patched.clone(),
+            suspect: self.suspect,
             skins: self.skins.clone(),
             skin_sd,
             noise: (0..gauges).map(|g| innovation[(g, g)].sqrt()).collect(),

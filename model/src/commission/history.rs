@@ -12,6 +12,7 @@ use crate::block::Block;
 use crate::expect::columns::Columns;
 use crate::expect::drive::Sampled;
 use crate::expect::whitener::Whitener;
+use crate::weigh::barrier::Images;
 
 /// Raw columns of the whole history.
 #[derive(Debug, Clone)]
@@ -28,6 +29,10 @@ pub(crate) struct History {
     pub(crate) reference: Vec<f64>,
     /// Spread of each pair's response \[Pa\] (gauge by well, row-major by gauge).
     pub(crate) pair_spread: Vec<f64>,
+    /// Signatures of undeclared barriers (rows by lines); without columns where none were asked for.
+    lines: DMatrix<f64>,
+    /// Columns at the very end that are barriers taken in.
+    taken: usize,
 }
 
 impl History {
@@ -35,7 +40,11 @@ impl History {
     ///
     /// # Errors
     /// [`ModelError`] where a block does not fit.
-    pub(crate) fn run(columns: &mut Columns, history: &[Block]) -> Result<Self, ModelError> {
+    pub(crate) fn run(
+        columns: &mut Columns,
+        history: &[Block],
+        images: Option<&Images>,
+    ) -> Result<Self, ModelError> {
         let (gauges, wells) = (columns.frame.gauges, columns.frame.wells);
         let mut memory = columns.start();
         let fixed = columns.len();
@@ -43,6 +52,7 @@ impl History {
         let mut raw = DMatrix::zeros(rows, 1 + fixed);
         let mut missing = Vec::new();
         let mut renewals = Vec::new();
+        let mut lines = DMatrix::zeros(rows, images.map_or(0, Images::lines));
         let mut pairs = DMatrix::zeros(gauges * wells, history.len());
         for (index, block) in history.iter().enumerate() {
             let sampled = Sampled::of(block, wells, gauges)?;
@@ -57,6 +67,10 @@ impl History {
                     .map(|&(well, size)| (index, well, size)),
             );
             let at = index * gauges;
+            if let Some(images) = images {
+                let seen = images.raw(&columns.frame.modal, &step.means, &sampled.class);
+                lines.rows_mut(at, gauges).copy_from(&seen);
+            }
             raw.view_mut((at, 1), (gauges, fixed))
                 .copy_from(&step.fixed);
             raw.view_mut((at, 1 + fixed), (gauges, step.epochs.ncols()))
@@ -101,7 +115,38 @@ impl History {
             missing,
             reference,
             pair_spread,
+            lines,
+            taken: 0,
         })
+    }
+
+    /// Takes a barrier in as a column at the end, scaled.
+    pub(crate) fn take(&mut self, line: usize, scale: f64) {
+        if line < self.lines.ncols() {
+            let width = self.raw.ncols();
+            let raw = std::mem::replace(&mut self.raw, DMatrix::zeros(0, 0));
+            self.raw = raw.resize_horizontally(width + 1, 0.0);
+            self.raw
+                .set_column(width, &(self.lines.column(line) * scale));
+            self.taken += 1;
+        }
+    }
+
+    /// Number of columns after those of the rate epochs: jumps of meters' errors, and barriers taken in.
+    pub(crate) fn tail(&self) -> usize {
+        2 * self.renewals.len() + self.taken
+    }
+
+    /// Whitened signatures of undeclared barriers (rows by lines).
+    pub(crate) fn whiten_lines(&self, whitener: &Whitener) -> DMatrix<f64> {
+        let mut state = DMatrix::zeros(whitener.states(), self.lines.ncols());
+        let mut rows = DMatrix::zeros(self.lines.nrows(), self.lines.ncols());
+        for at in (0..self.lines.nrows()).step_by(self.gauges) {
+            let block = self.lines.rows(at, self.gauges).into_owned();
+            rows.rows_mut(at, self.gauges)
+                .copy_from(&whitener.step(&mut state, &block));
+        }
+        rows
     }
 
     /// Fills rows without a reading with what the coefficients say, and with what they leave of the nearest readings
@@ -156,7 +201,7 @@ impl History {
         for at in (0..self.raw.nrows()).step_by(self.gauges) {
             let index = at / self.gauges;
             for (column, &(block, well, size)) in self.renewals.iter().enumerate() {
-                let first = self.raw.ncols() - 2 * self.renewals.len() + 2 * column;
+                let first = self.raw.ncols() - self.tail() + 2 * column;
                 if block == index {
                     whitener.renew(&mut state, first, well, size, true);
                 }
@@ -293,6 +338,8 @@ mod tests {
             missing: vec![3, 5, 6],
             reference: vec![0.0; 2],
             pair_spread: Vec::new(),
+            lines: DMatrix::zeros(8, 0),
+            taken: 0,
         };
         history.fill(&DVector::from_element(1, 2.0));
         // Left of gauge 1: 20 - 10 before, 35 - 16 after; of gauge 0: 12 - 6 before.

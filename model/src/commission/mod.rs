@@ -11,10 +11,12 @@ mod fit;
 pub(crate) mod history;
 pub(crate) mod places;
 mod relevance;
+mod suspect;
 mod unsteady;
 
 pub use fit::commission;
 pub use places::{Line, Places, places};
+pub use suspect::Suspect;
 pub use unsteady::Unsteady;
 pub(crate) use unsteady::calm;
 
@@ -86,6 +88,8 @@ pub struct Calibration {
     pub patches: Factors,
     /// What a further change of each patch does to every pair.
     pub patched: Patched,
+    /// A barrier that history already asks for; the watch has it to report.
+    pub suspect: Option<Suspect>,
     /// Fitted skin of each well (`NaN`-free; the described skin where no gauge sees it).
     pub skins: Vec<f64>,
     /// Standard deviation of each skin.
