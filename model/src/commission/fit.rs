@@ -10,7 +10,7 @@ use nalgebra::{DMatrix, DVector};
 use super::history::{History, Regression, Solved};
 use super::places::Places;
 use super::relevance::{Group, learn};
-use super::suspect::{BELIEVED, STRENGTH_SD, Suspect, best_line};
+use super::suspect::{BELIEVED, OCCAM, STRENGTH_SD, Suspect, best_line};
 use super::unsteady::relative_square;
 use super::{Calibration, CommissionSettings, Unsteady, calm};
 use crate::ModelError;
@@ -282,15 +282,16 @@ impl<'a> Fit<'a> {
     /// One round: columns at the present parameters, scales learned, parameters and skins moved. Returns the longest move.
     fn round(&mut self, round: usize) -> Result<f64, ModelError> {
         let mut columns = self.columns()?;
-        let images = (round >= PLAIN_ROUNDS).then(|| self.images(&columns));
+        let looked_for = round == PLAIN_ROUNDS;
+        let images = (looked_for || self.suspect.is_some()).then(|| self.images(&columns));
         let mut history = History::run(&mut columns, self.history, images.as_ref())?;
         self.priors.pair_spread.clone_from(&history.pair_spread);
         if round == 0 {
             columns = self.columns()?;
             history = History::run(&mut columns, self.history, None)?;
         }
-        if let Some(suspect) = self.suspect {
-            history.take(suspect.line, STRENGTH_SD);
+        if self.suspect.is_some() {
+            history.take(0, STRENGTH_SD);
         }
         match &self.rest {
             Some(rest) => history.fill(rest),
@@ -307,7 +308,7 @@ impl<'a> Fit<'a> {
             }
         }
         let mut solved = None;
-        if round == PLAIN_ROUNDS {
+        if looked_for {
             let found = self.look_for_barrier(&columns, &mut history, &regression, &whitener)?;
             if let Some((with, learned)) = found {
                 (regression, solved) = (with, Some(learned));
@@ -372,8 +373,13 @@ impl<'a> Fit<'a> {
         Ok(moved)
     }
 
+    /// The images behind the barrier that history asks for.
     fn images(&self, columns: &Columns) -> Images {
-        Images::new(&columns.frame.modal, &Places::of(self.ground))
+        let places = Places::of(self.ground);
+        let line = self
+            .suspect
+            .and_then(|s| places.line(self.ground, s.azimuth, s.distance));
+        Images::new(&columns.frame.modal, line.as_slice())
     }
 
     /// Asks history with and without the barrier that explains most. Where it is believed, it is taken in, and the
@@ -385,26 +391,34 @@ impl<'a> Fit<'a> {
         regression: &Regression,
         whitener: &Whitener,
     ) -> Result<Option<(Regression, Solved)>, ModelError> {
-        let lines = history.whiten_lines(whitener);
         let typical = (self.share.clone(), self.past, self.patch, self.gain);
         let plain = self.learn_scales(columns, regression, history.tail(), PLAIN_ROUNDS)?;
-        let Some(line) = best_line(regression, &plain, &lines) else {
+        let bare = history.clone();
+        let found = best_line(
+            self.ground,
+            columns,
+            history,
+            whitener,
+            regression,
+            &plain,
+        );
+        let Some(line) = found else {
             return Ok(None);
         };
         let without = (self.share.clone(), self.past, self.patch, self.gain);
         (self.share, self.past, self.patch, self.gain) = typical.clone();
-        let bare = history.clone();
-        history.take(line, STRENGTH_SD);
-        self.suspect = Some(Suspect {
-            line,
+        history.take(0, STRENGTH_SD);
+        let mut suspect = Suspect {
+            azimuth: line.azimuth,
+            distance: line.distance,
             log_evidence: 0.0,
-        });
+        };
+        self.suspect = Some(suspect);
         let with = history.whiten(whitener);
         let learned = self.learn_scales(columns, &with, history.tail(), PLAIN_ROUNDS)?;
-        let log_evidence =
-            learned.log_likelihood - plain.log_likelihood - (lines.ncols() as f64).ln();
-        if log_evidence > BELIEVED {
-            self.suspect = Some(Suspect { line, log_evidence });
+        suspect.log_evidence = learned.log_likelihood - plain.log_likelihood - OCCAM;
+        if suspect.log_evidence > BELIEVED {
+            self.suspect = Some(suspect);
             return Ok(Some((with, learned)));
         }
         *history = bare;
@@ -578,8 +592,8 @@ impl<'a> Fit<'a> {
         let mut columns = self.columns()?;
         let images = self.suspect.map(|_| self.images(&columns));
         let mut history = History::run(&mut columns, self.history, images.as_ref())?;
-        if let Some(suspect) = self.suspect {
-            history.take(suspect.line, STRENGTH_SD);
+        if self.suspect.is_some() {
+            history.take(0, STRENGTH_SD);
         }
         if let Some(rest) = &self.rest {
             history.fill(rest);

@@ -31,6 +31,8 @@ pub(crate) struct History {
     pub(crate) pair_spread: Vec<f64>,
     /// Signatures of undeclared barriers (rows by lines); without columns where none were asked for.
     lines: DMatrix<f64>,
+    /// What lines are made of: means of the unit-port states by class, and the gauges' classes, of every block.
+    seen: Vec<(Vec<DMatrix<f64>>, Vec<usize>)>,
     /// Columns at the very end that are barriers taken in.
     taken: usize,
 }
@@ -53,6 +55,7 @@ impl History {
         let mut missing = Vec::new();
         let mut renewals = Vec::new();
         let mut lines = DMatrix::zeros(rows, images.map_or(0, Images::lines));
+        let mut seen = Vec::new();
         let mut pairs = DMatrix::zeros(gauges * wells, history.len());
         for (index, block) in history.iter().enumerate() {
             let sampled = Sampled::of(block, wells, gauges)?;
@@ -68,8 +71,9 @@ impl History {
             );
             let at = index * gauges;
             if let Some(images) = images {
-                let seen = images.raw(&columns.frame.modal, &step.means, &sampled.class);
-                lines.rows_mut(at, gauges).copy_from(&seen);
+                let raw = images.raw(&columns.frame.modal, &step.means, &sampled.class);
+                lines.rows_mut(at, gauges).copy_from(&raw);
+                seen.push((step.means.clone(), sampled.class.clone()));
             }
             raw.view_mut((at, 1), (gauges, fixed))
                 .copy_from(&step.fixed);
@@ -116,8 +120,20 @@ impl History {
             reference,
             pair_spread,
             lines,
+            seen,
             taken: 0,
         })
+    }
+
+    /// Replaces the barriers looked at.
+    pub(crate) fn look_at(&mut self, columns: &Columns, images: &Images) {
+        self.lines = DMatrix::zeros(self.raw.nrows(), images.lines());
+        for (index, (means, class)) in self.seen.iter().enumerate() {
+            let raw = images.raw(&columns.frame.modal, means, class);
+            self.lines
+                .rows_mut(index * self.gauges, self.gauges)
+                .copy_from(&raw);
+        }
     }
 
     /// Takes a barrier in as a column at the end, scaled.
@@ -339,6 +355,7 @@ mod tests {
             reference: vec![0.0; 2],
             pair_spread: Vec::new(),
             lines: DMatrix::zeros(8, 0),
+            seen: Vec::new(),
             taken: 0,
         };
         history.fill(&DVector::from_element(1, 2.0));

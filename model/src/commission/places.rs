@@ -3,8 +3,8 @@
 //! A leak may sit anywhere inside the outline of wells and gauges and some way round it: the candidates are a
 //! hexagonal lattice with rings close to every well and gauge, where signatures change fastest. A straight sealing
 //! barrier acts like an image of every well behind it (Ferris et al. 1962, USGS WSP 1536-E): a fan of lines by
-//! distance and azimuth, each with one image place a well. Images near the outer edge are left out, because the edge
-//! of the model would answer them.
+//! distance and azimuth, each with one image a well. Images lie anywhere, so their ports are mixed from those of a polar
+//! lattice. Images near the outer edge are left out, because the edge of the model would answer them.
 
 use std::f64::consts::TAU;
 
@@ -22,6 +22,12 @@ const ON_RING: u32 = 6;
 const AZIMUTHS: u32 = 20;
 /// Distance of a line behind the outermost well or gauge, as multiples of the array's half-width.
 const BEHIND: [f64; 7] = [0.06, 0.2, 0.45, 0.8, 1.3, 2.0, 3.2];
+/// The lattice of images: its innermost ring and the farthest image, in half-widths of the array, the logarithm of the
+/// ratio of two rings, and places on a ring.
+const NEAREST: f64 = 0.3;
+const FARTHEST: f64 = 14.0;
+const RING_STEP: f64 = 0.16;
+const AROUND: u32 = 36;
 /// Share of the edge's distance within which an image may lie.
 const WITHIN_EDGE: f64 = 0.9;
 
@@ -32,8 +38,19 @@ pub struct Line {
     pub distance: f64,
     /// Direction of its normal \[rad from east, counter-clockwise\].
     pub azimuth: f64,
-    /// Place (by order in [`Places::all`]) of the image of each well.
-    pub images: Vec<usize>,
+    /// The image of each well, as a mix of places: order in [`Places::all`] and weight.
+    pub images: Vec<Vec<(usize, f64)>>,
+}
+
+impl Line {
+    /// The point of the line that is nearest to the array's centre.
+    #[must_use]
+    pub fn foot(&self, centre: Point) -> Point {
+        [
+            centre[0] + self.distance * self.azimuth.cos(),
+            centre[1] + self.distance * self.azimuth.sin(),
+        ]
+    }
 }
 
 /// All places at which the reduction is asked for a port.
@@ -49,6 +66,10 @@ pub struct Places {
     pub centre: Point,
     /// Half-width of the array: the largest distance of a well or gauge from its centre \[m\].
     pub half_width: f64,
+    /// Rings of the lattice of images.
+    rings: usize,
+    /// Distance from the centre within which an image may lie \[m\].
+    reach: f64,
 }
 
 /// Places of candidate leaks and of images, in a fixed order: what the reduction needs.
@@ -65,14 +86,93 @@ impl Places {
         let (centre, half_width) = array(&seats);
         let mut all = candidates(ground, &seats, centre, half_width);
         let candidates = all.len();
-        let lines = fan(ground, &seats, centre, half_width, &mut all);
-        Self {
+        let reach = (WITHIN_EDGE * ground.edge.distance).min(FARTHEST * half_width);
+        let rings = polar(ground, centre, half_width, reach, &mut all);
+        let mut places = Self {
             all,
             candidates,
-            lines,
+            lines: Vec::new(),
             centre,
             half_width,
+            rings,
+            reach,
+        };
+        places.lines = places.fan(ground, &seats);
+        places
+    }
+
+    /// How far the outermost well or gauge lies in a direction \[m from the array's centre\].
+    pub(crate) fn outermost(&self, ground: &Ground, azimuth: f64) -> f64 {
+        let normal = [azimuth.cos(), azimuth.sin()];
+        seats(ground)
+            .iter()
+            .map(|s| (s[0] - self.centre[0]) * normal[0] + (s[1] - self.centre[1]) * normal[1])
+            .fold(f64::MIN, f64::max)
+    }
+
+    /// A line with the images of all wells; `None` where one of them lies too far out.
+    pub(crate) fn line(&self, ground: &Ground, azimuth: f64, distance: f64) -> Option<Line> {
+        let normal = [azimuth.cos(), azimuth.sin()];
+        let images = ground
+            .wells
+            .iter()
+            .map(|well| {
+                let along = (well.at[0] - self.centre[0]) * normal[0]
+                    + (well.at[1] - self.centre[1]) * normal[1];
+                let shift = 2.0 * (distance - along);
+                let at = [
+                    well.at[0] + shift * normal[0],
+                    well.at[1] + shift * normal[1],
+                ];
+                self.mix(at, well.layer)
+            })
+            .collect::<Option<_>>()?;
+        Some(Line {
+            distance,
+            azimuth,
+            images,
+        })
+    }
+
+    /// A point as a mix of places of the lattice of images: cubic in the logarithm of the distance and in the azimuth.
+    fn mix(&self, at: Point, layer: usize) -> Option<Vec<(usize, f64)>> {
+        let (x, y) = (at[0] - self.centre[0], at[1] - self.centre[1]);
+        let radius = x.hypot(y);
+        if radius > self.reach || self.rings < 4 {
+            return None;
         }
+        let ring = (radius / (NEAREST * self.half_width)).max(1.0).ln() / RING_STEP;
+        let turn = y.atan2(x).rem_euclid(TAU) / TAU * f64::from(AROUND);
+        let first_ring = whole(ring - 1.0).min(self.rings - 4);
+        let rings = cubic(ring - first_ring as f64);
+        let first_turn = turn.floor() - 1.0;
+        let turns = cubic(turn - first_turn);
+        let around = whole(f64::from(AROUND));
+        let start = self.candidates + layer * self.rings * around;
+        let mut mix = Vec::with_capacity(16);
+        for (i, a) in rings.iter().enumerate() {
+            for (j, b) in turns.iter().enumerate() {
+                let step = whole((first_turn + j as f64).rem_euclid(f64::from(AROUND))) % around;
+                mix.push((start + (first_ring + i) * around + step, a * b));
+            }
+        }
+        Some(mix)
+    }
+
+    /// Lines behind the whole array.
+    fn fan(&self, ground: &Ground, seats: &[Point]) -> Vec<Line> {
+        let mut lines = Vec::new();
+        if seats.is_empty() {
+            return lines;
+        }
+        for step in 0..AZIMUTHS {
+            let azimuth = TAU * f64::from(step) / f64::from(AZIMUTHS);
+            let outermost = self.outermost(ground, azimuth);
+            for behind in BEHIND {
+                lines.extend(self.line(ground, azimuth, outermost + behind * self.half_width));
+            }
+        }
+        lines
     }
 }
 
@@ -152,48 +252,53 @@ fn candidates(
         .collect()
 }
 
-/// Lines behind the whole array, with the images of all wells appended to `all`.
-fn fan(
+/// The lattice of images, appended to `all` for every layer; returns the number of its rings.
+fn polar(
     ground: &Ground,
-    seats: &[Point],
     centre: Point,
     half_width: f64,
+    reach: f64,
     all: &mut Vec<(Point, usize)>,
-) -> Vec<Line> {
-    let mut lines = Vec::new();
-    for step in 0..AZIMUTHS {
-        let azimuth = TAU * f64::from(step) / f64::from(AZIMUTHS);
-        let normal = [azimuth.cos(), azimuth.sin()];
-        let along = |at: Point| (at[0] - centre[0]) * normal[0] + (at[1] - centre[1]) * normal[1];
-        let outermost = seats.iter().map(|&s| along(s)).fold(f64::MIN, f64::max);
-        for behind in BEHIND {
-            let distance_of_line = outermost + behind * half_width;
-            let images: Vec<(Point, usize)> = ground
-                .wells
-                .iter()
-                .map(|well| {
-                    let shift = 2.0 * (distance_of_line - along(well.at));
-                    let at = [
-                        well.at[0] + shift * normal[0],
-                        well.at[1] + shift * normal[1],
-                    ];
-                    (at, well.layer)
-                })
-                .collect();
-            let inside = images
-                .iter()
-                .all(|&(at, _)| distance(at, centre) <= WITHIN_EDGE * ground.edge.distance);
-            if inside {
-                lines.push(Line {
-                    distance: distance_of_line,
-                    azimuth,
-                    images: (all.len()..all.len() + images.len()).collect(),
-                });
-                all.extend(images);
+) -> usize {
+    let mut radii = Vec::new();
+    let mut radius = NEAREST * half_width;
+    while radius < reach * RING_STEP.exp() && radius < 0.98 * ground.edge.distance {
+        radii.push(radius);
+        radius *= RING_STEP.exp();
+    }
+    for layer in 0..ground.layers.len() {
+        for radius in &radii {
+            for step in 0..AROUND {
+                let turn = TAU * f64::from(step) / f64::from(AROUND);
+                let at = [
+                    centre[0] + radius * turn.cos(),
+                    centre[1] + radius * turn.sin(),
+                ];
+                all.push((at, layer));
             }
         }
     }
-    lines
+    radii.len()
+}
+
+/// Weights of four values at 0, 1, 2, 3 for the cubic through them.
+fn cubic(t: f64) -> [f64; 4] {
+    let (a, b, c) = (t - 1.0, t - 2.0, t - 3.0);
+    [
+        -a * b * c / 6.0,
+        t * b * c / 2.0,
+        -t * a * c / 2.0,
+        t * a * b / 6.0,
+    ]
+}
+
+#[expect(
+    clippy::cast_possible_truncation,
+    clippy::cast_sign_loss,
+    reason = "a small number, not negative"
+)]
+fn whole(value: f64) -> usize {
+    value.max(0.0).floor() as usize
 }
 
 fn nearest(seats: &[Point], at: Point) -> Option<usize> {
@@ -207,4 +312,22 @@ fn nearest(seats: &[Point], at: Point) -> Option<usize> {
 /// Distance between two points \[m\].
 pub(crate) fn distance(a: Point, b: Point) -> f64 {
     (a[0] - b[0]).hypot(a[1] - b[1])
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn the_cubic_passes_through_what_it_mixes() {
+        for t in [0.0, 0.4, 1.0, 1.7, 2.2, 3.0] {
+            let value = |x: f64| 2.0 - x + 0.5 * x * x + 0.1 * x * x * x;
+            let mixed: f64 = cubic(t)
+                .iter()
+                .enumerate()
+                .map(|(k, w)| w * value(k as f64))
+                .sum();
+            assert!((mixed - value(t)).abs() < 1e-12, "{t}");
+        }
+    }
 }

@@ -93,7 +93,7 @@ impl Watch {
             gauges,
         )?;
         size("skins of the calibration", calibration.skins.len(), wells)?;
-        let places = Places::of(ground);
+        let mut places = Places::of(ground);
         size(
             "places of the ground file",
             commissioned.reduced.places.len(),
@@ -119,7 +119,12 @@ impl Watch {
             calibration.block,
             horizon,
         );
-        let images = Images::new(&columns.frame.modal, &places);
+        if let Some(suspect) = &calibration.suspect {
+            places
+                .lines
+                .extend(places.line(ground, suspect.azimuth, suspect.distance));
+        }
+        let images = Images::new(&columns.frame.modal, &places.lines);
         let fixed = columns.len();
         let mismatch = calibration.priors.mismatch;
         let adopted: Vec<Adopted> = adoptions

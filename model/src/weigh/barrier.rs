@@ -12,7 +12,7 @@ use nalgebra::{DMatrix, DVector};
 use serde::{Deserialize, Serialize};
 
 use super::evidence::{log_bayes_about, log_sum};
-use crate::commission::Places;
+use crate::commission::Line;
 use crate::expect::posterior::{Cleared, Lesson};
 use crate::expect::whitener::Whitener;
 use crate::reduce::Modal;
@@ -35,16 +35,16 @@ pub(crate) struct Barriers {
 }
 
 impl Images {
-    pub(crate) fn new(modal: &Modal, places: &Places) -> Self {
+    pub(crate) fn new(modal: &Modal, wanted: &[Line]) -> Self {
         let modes = modal.lambda.len();
         let ports = (0..modal.wells.ncols())
             .map(|well| {
-                let mut ports = DMatrix::zeros(modes, places.lines.len());
-                for (mut column, line) in ports.column_iter_mut().zip(&places.lines) {
-                    if let Some(&place) = line.images.get(well)
-                        && place < modal.places.ncols()
-                    {
-                        column.copy_from(&modal.places.column(place));
+                let mut ports = DMatrix::zeros(modes, wanted.len());
+                for (mut column, line) in ports.column_iter_mut().zip(wanted) {
+                    for &(place, weight) in line.images.get(well).into_iter().flatten() {
+                        if place < modal.places.ncols() {
+                            column.axpy(weight, &modal.places.column(place), 1.0);
+                        }
                     }
                 }
                 ports
