@@ -208,6 +208,24 @@ pub(super) fn summary(site: &Site, ground: &GroundFile) -> String {
             gauge.name, noise
         );
     }
+    let [conduction, storage] = calibration.priors.patch;
+    let _ = writeln!(
+        text,
+        "\nThe ground varies by {:.0} % in transmissivity and {:.0} % in storativity from patch to patch.",
+        100.0 * conduction,
+        100.0 * storage
+    );
+    if let Some(suspect) = calibration.suspect {
+        let _ = writeln!(
+            text,
+            "This history asks for a barrier that the site file does not tell of: {:.0} m from the middle of the array,\n\
+             {:.0} degrees from east, counter-clockwise (log evidence {:.0}). The watch will report it; if you know of it,\n\
+             declare it with [[barrier]] and commission again.",
+            suspect.distance,
+            suspect.azimuth.to_degrees().rem_euclid(360.0),
+            suspect.log_evidence
+        );
+    }
     let _ = writeln!(
         text,
         "\nA leak that was already flowing in this history is part of the calibration and cannot be seen.\n"

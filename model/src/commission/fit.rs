@@ -44,8 +44,14 @@ const FILLS: usize = 2;
 /// Rounds in which all pairs are taken to see one ground; what makes them differ is learned about the best such ground,
 /// or parameters and differences would run off against each other.
 const PLAIN_ROUNDS: usize = 4;
-/// Round in which the noise is settled.
-const ROUND_FINE: usize = PLAIN_ROUNDS + 1;
+/// Rounds in which a barrier is looked for, where one is: in the first the whole fan, then about the last one found.
+const SEARCH_ROUNDS: usize = 3;
+/// The first of them: parameters have come near their best without a barrier.
+const SEARCH_FROM: usize = 3;
+/// Spread between patches while a barrier is looked for.
+const EVEN: f64 = 1e-3;
+/// Spread between patches from which a barrier is looked for.
+const UNEVEN: f64 = 0.15;
 /// Largest step of a logarithm in a later round.
 const SHORT_STEP: f64 = 0.05;
 /// Least history \[s\].
@@ -77,14 +83,22 @@ pub fn commission(
         )));
     }
     let mut fit = Fit::start(ground, reduced, history, settings, block)?;
-    for round in 0..settings.rounds {
-        progress(0.05 + 0.6 * round as f64 / settings.rounds as f64);
-        let moved = fit.round(round)?;
-        if round >= PLAIN_ROUNDS + 2 && moved < 2e-3 {
-            break;
+    fit.settle(&mut |share| progress(0.05 + 0.45 * share))?;
+    if fit.state.scales.patch.iter().copied().fold(0.0, f64::max) > UNEVEN {
+        // So uneven a ground may be an even one with a barrier.
+        let mut other = Fit::start(ground, reduced, history, settings, block)?;
+        other.state.barrier = Some(None);
+        other.state.scales.patch = [EVEN; 2];
+        other.settle(&mut |share| progress(0.5 + 0.3 * share))?;
+        let log_evidence = other.log_evidence - fit.log_evidence - OCCAM;
+        if let Some(Some(suspect)) = &mut other.state.barrier {
+            suspect.log_evidence = log_evidence;
+            if log_evidence > BELIEVED {
+                fit = other;
+            }
         }
     }
-    progress(0.7);
+    progress(0.8);
     let calibration = fit.finish(history, (first.index, last.index))?;
     progress(1.0);
     Ok(calibration)
@@ -117,19 +131,36 @@ struct Fit<'a> {
     history: &'a [Block],
     settings: &'a CommissionSettings,
     block: f64,
+    priors: Priors,
+    state: State,
+    /// Log marginal likelihood of the history in the last round.
+    log_evidence: f64,
+}
+
+/// What the rounds move.
+#[derive(Debug, Clone)]
+struct State {
     factors: Factors,
     skins: Vec<f64>,
     noise: Noise,
-    priors: Priors,
+    scales: Scales,
+    /// Whether a barrier is looked for, and the one found.
+    barrier: Option<Option<Suspect>>,
+    /// Coefficients of the last round less what it moved into parameters and skins.
+    rest: Option<DVector<f64>>,
+}
+
+/// Scales of groups of nuisances.
+#[derive(Debug, Clone)]
+struct Scales {
+    /// Discrepancy of each pair, as a share of its response.
     share: Vec<f64>,
+    /// A meter's gain in one rate epoch.
     gain: f64,
+    /// Rates before the record, as a share of the largest.
     past: f64,
     /// Spread of the logarithm of transmissivity and storativity between patches.
     patch: [f64; 2],
-    /// A barrier that history asks for.
-    suspect: Option<Suspect>,
-    /// Coefficients of the last round less what it moved into parameters and skins.
-    rest: Option<DVector<f64>>,
 }
 
 impl<'a> Fit<'a> {
@@ -196,27 +227,79 @@ impl<'a> Fit<'a> {
             history,
             settings,
             block,
-            factors,
-            skins,
-            noise,
             priors,
-            share: vec![0.003; gauges * wells],
-            gain: TYPICAL_GAIN,
-            past: 0.01,
-            patch: [TYPICAL_PATCH; 2],
-            suspect: None,
-            rest: None,
+            state: State {
+                factors,
+                skins,
+                noise,
+                scales: Scales {
+                    share: vec![0.003; gauges * wells],
+                    gain: TYPICAL_GAIN,
+                    past: 0.01,
+                    patch: [TYPICAL_PATCH; 2],
+                },
+                barrier: None,
+                rest: None,
+            },
+            log_evidence: f64::NEG_INFINITY,
         })
     }
 
+    fn suspect(&self) -> Option<Suspect> {
+        self.state.barrier.flatten()
+    }
+
+    /// First round in which scales are learned.
+    fn let_in(&self) -> usize {
+        PLAIN_ROUNDS
+            + if self.state.barrier.is_some() {
+                SEARCH_ROUNDS
+            } else {
+                0
+            }
+    }
+
+    /// All rounds.
+    fn settle(&mut self, progress: &mut dyn FnMut(f64)) -> Result<(), ModelError> {
+        let let_in = self.let_in();
+        let rounds = self.settings.rounds + let_in - PLAIN_ROUNDS;
+        let mut best = (f64::NEG_INFINITY, None);
+        for round in 0..rounds {
+            progress(round as f64 / rounds as f64);
+            if round == let_in {
+                self.state.scales.patch = [TYPICAL_PATCH; 2];
+            }
+            let before = self.state.clone();
+            let moved = self.round(round)?;
+            if round > let_in && self.log_evidence > best.0 {
+                // The evidence is that of the parameters before this round's step, under the scales learned in it.
+                let (scales, barrier) = (self.state.scales.clone(), self.state.barrier);
+                let state = State {
+                    scales,
+                    barrier,
+                    ..before
+                };
+                best = (self.log_evidence, Some(state));
+            }
+            if round >= let_in + 2 && moved < 2e-3 {
+                break;
+            }
+        }
+        if let (log_evidence, Some(state)) = best {
+            self.log_evidence = log_evidence;
+            self.state = state;
+        }
+        Ok(())
+    }
+
     fn columns(&self) -> Result<Columns, ModelError> {
-        let frame = Frame::new(self.ground, self.reduced, &self.factors)?;
-        let patched = Patched::of(self.reduced, &frame.modal, &self.factors)?;
+        let frame = Frame::new(self.ground, self.reduced, &self.state.factors)?;
+        let patched = Patched::of(self.reduced, &frame.modal, &self.state.factors)?;
         Ok(Columns::new(
             frame,
             patched,
             self.priors.clone(),
-            &self.skins,
+            &self.state.skins,
         ))
     }
 
@@ -228,41 +311,41 @@ impl<'a> Fit<'a> {
             match *kind {
                 Kind::Discrepancy { gauge, well, lag } => {
                     spread[index] = if lag < LONG_LAGS {
-                        self.share[gauge * columns.frame.wells + well]
+                        self.state.scales.share[gauge * columns.frame.wells + well]
                     } else {
                         LONG * self.usual_share()
                     };
                 }
-                Kind::Past { .. } => spread[index] = self.past,
+                Kind::Past { .. } => spread[index] = self.state.scales.past,
                 Kind::Far { .. } => spread[index] = FAR * self.usual_share(),
                 // The prior is about the described value, wherever the fit now stands.
                 Kind::Parameter(i) => {
                     if let Some(tilted) = columns.frame.tilted.get(i) {
-                        centre[index] =
-                            -factor(&self.factors, tilted.parameter).ln() / self.priors.parameter;
+                        centre[index] = -factor(&self.state.factors, tilted.parameter).ln()
+                            / self.priors.parameter;
                     }
                 }
                 Kind::Skin(i) => {
                     if let Some(&(_, well, _)) = columns.frame.in_wells.get(i)
                         && let (Some(skin), Some(described)) =
-                            (self.skins.get(well), self.ground.wells.get(well))
+                            (self.state.skins.get(well), self.ground.wells.get(well))
                     {
                         centre[index] = (described.skin.max(0.0) - skin) / self.priors.skin;
                     }
                 }
                 Kind::Patch(i) => {
                     if let Some(parameter) = columns.patch(i) {
-                        spread[index] = self.patch[storage(parameter)];
-                        centre[index] = -factor(&self.factors, parameter).ln();
+                        spread[index] = self.state.scales.patch[storage(parameter)];
+                        centre[index] = -factor(&self.state.factors, parameter).ln();
                     }
                 }
                 _ => {}
             }
         }
         for index in columns.len()..width - tail {
-            spread[index] = self.gain;
+            spread[index] = self.state.scales.gain;
         }
-        if self.suspect.is_some() {
+        if self.suspect().is_some() {
             centre[width - 1] = SEALING / STRENGTH_SD;
         }
         (spread, centre)
@@ -270,30 +353,31 @@ impl<'a> Fit<'a> {
 
     /// Discrepancy of a pair as a rule, as a share of its response.
     fn usual_share(&self) -> f64 {
-        let count = self.share.len().max(1) as f64;
-        (self.share.iter().map(|s| s * s).sum::<f64>() / count).sqrt()
+        let count = self.state.scales.share.len().max(1) as f64;
+        (self.state.scales.share.iter().map(|s| s * s).sum::<f64>() / count).sqrt()
     }
 
     fn whitener(&self, columns: &Columns) -> Result<Whitener, ModelError> {
         let path = Path::of(&columns.frame.modal, self.block);
-        Whitener::new(&path, &self.noise, &columns.skin_paths(), self.block)
+        Whitener::new(&path, &self.state.noise, &columns.skin_paths(), self.block)
     }
 
     /// One round: columns at the present parameters, scales learned, parameters and skins moved. Returns the longest move.
     fn round(&mut self, round: usize) -> Result<f64, ModelError> {
         let mut columns = self.columns()?;
-        let looked_for = round == PLAIN_ROUNDS;
-        let images = (looked_for || self.suspect.is_some()).then(|| self.images(&columns));
+        let let_in = self.let_in();
+        let searched = self.state.barrier.is_some() && round >= SEARCH_FROM;
+        let images = (searched || self.suspect().is_some()).then(|| self.images(&columns));
         let mut history = History::run(&mut columns, self.history, images.as_ref())?;
         self.priors.pair_spread.clone_from(&history.pair_spread);
         if round == 0 {
             columns = self.columns()?;
             history = History::run(&mut columns, self.history, None)?;
         }
-        if self.suspect.is_some() {
+        if self.suspect().is_some() && !searched {
             history.take(0, STRENGTH_SD);
         }
-        match &self.rest {
+        match &self.state.rest {
             Some(rest) => history.fill(rest),
             None => history.fill(&DVector::zeros(0)),
         }
@@ -307,21 +391,15 @@ impl<'a> Fit<'a> {
                 regression = history.whiten(&whitener);
             }
         }
-        let mut solved = None;
-        if looked_for {
-            let found = self.look_for_barrier(&columns, &mut history, &regression, &whitener)?;
-            if let Some((with, learned)) = found {
-                (regression, solved) = (with, Some(learned));
-            }
+        if searched {
+            self.search(&columns, &mut history, &regression, &whitener)?;
+            regression = history.whiten(&whitener);
         }
-        let solved = match solved {
-            Some(solved) => solved,
-            None => self.learn_scales(&columns, &regression, history.tail(), round)?,
-        };
+        let solved = self.learn_scales(&columns, &regression, history.tail(), round)?;
+        self.log_evidence =
+            solved.log_likelihood - whitener.log_scale() * self.history.len() as f64;
         let mut rest = solved.mean.clone();
-        // A barrier just found frees the parameters of what they stood for.
-        let freed = self.suspect.is_some() && round <= PLAIN_ROUNDS + 1;
-        let longest = if round < PLAIN_ROUNDS || freed {
+        let longest = if round < let_in {
             LONGEST_STEP
         } else {
             SHORT_STEP
@@ -335,8 +413,9 @@ impl<'a> Fit<'a> {
                             (solved.mean[index] * self.priors.parameter).clamp(-longest, longest);
                         moved = moved.max(step.abs());
                         rest[index] -= step / self.priors.parameter;
-                        let value = factor(&self.factors, tilted.parameter) * step.exp();
-                        self.factors = with_factor(&self.factors, tilted.parameter, value);
+                        let value = factor(&self.state.factors, tilted.parameter) * step.exp();
+                        self.state.factors =
+                            with_factor(&self.state.factors, tilted.parameter, value);
                     }
                 }
                 Kind::Patch(i) => {
@@ -344,13 +423,13 @@ impl<'a> Fit<'a> {
                         let step = solved.mean[index].clamp(-longest, longest);
                         moved = moved.max(0.1 * step.abs());
                         rest[index] -= step;
-                        let value = factor(&self.factors, parameter) * step.exp();
-                        self.factors = with_factor(&self.factors, parameter, value);
+                        let value = factor(&self.state.factors, parameter) * step.exp();
+                        self.state.factors = with_factor(&self.state.factors, parameter, value);
                     }
                 }
                 Kind::Skin(i) => {
                     if let Some(&(_, well, _)) = columns.frame.in_wells.get(i)
-                        && let Some(skin) = self.skins.get_mut(well)
+                        && let Some(skin) = self.state.skins.get_mut(well)
                     {
                         *skin += solved.mean[index] * self.priors.skin;
                         rest[index] = 0.0;
@@ -359,17 +438,18 @@ impl<'a> Fit<'a> {
                 _ => {}
             }
         }
-        self.factors.sort_by_key(|(p, _)| *p);
+        self.state.factors.sort_by_key(|(p, _)| *p);
         let strides: &[f64] = match round {
-            1 | PLAIN_ROUNDS => &[2.0],
+            1 => &[2.0],
             2 => &[1.4],
-            ROUND_FINE => &[1.4, 1.2],
+            _ if round == let_in => &[2.0],
+            _ if round == let_in + 1 => &[1.4, 1.2],
             _ => &[],
         };
         if !strides.is_empty() {
             self.learn_noise(&columns, &history, &solved, strides)?;
         }
-        self.rest = Some(rest);
+        self.state.rest = Some(rest);
         Ok(moved)
     }
 
@@ -377,54 +457,37 @@ impl<'a> Fit<'a> {
     fn images(&self, columns: &Columns) -> Images {
         let places = Places::of(self.ground);
         let line = self
-            .suspect
+            .suspect()
             .and_then(|s| places.line(self.ground, s.azimuth, s.distance));
         Images::new(&columns.frame.modal, line.as_slice())
     }
 
-    /// Asks history with and without the barrier that explains most. Where it is believed, it is taken in, and the
-    /// regression with it comes back solved.
-    fn look_for_barrier(
+    /// Looks for the barrier that explains most of what is left without one, and takes it in.
+    fn search(
         &mut self,
         columns: &Columns,
         history: &mut History,
         regression: &Regression,
         whitener: &Whitener,
-    ) -> Result<Option<(Regression, Solved)>, ModelError> {
-        let typical = (self.share.clone(), self.past, self.patch, self.gain);
-        let plain = self.learn_scales(columns, regression, history.tail(), PLAIN_ROUNDS)?;
-        let bare = history.clone();
+    ) -> Result<(), ModelError> {
+        let tail = history.tail();
+        let known = self.state.barrier.take();
+        let (spread, centre) = self.spread(columns, regression.z.len(), tail);
+        let solved = regression.solve(&spread, &centre)?;
+        let from = known.flatten();
         let found = best_line(
             self.ground,
             columns,
             history,
             whitener,
-            regression,
-            &plain,
+            (regression, &solved),
+            from.as_ref(),
         );
-        let Some(line) = found else {
-            return Ok(None);
-        };
-        let without = (self.share.clone(), self.past, self.patch, self.gain);
-        (self.share, self.past, self.patch, self.gain) = typical.clone();
-        history.take(0, STRENGTH_SD);
-        let mut suspect = Suspect {
-            azimuth: line.azimuth,
-            distance: line.distance,
-            log_evidence: 0.0,
-        };
-        self.suspect = Some(suspect);
-        let with = history.whiten(whitener);
-        let learned = self.learn_scales(columns, &with, history.tail(), PLAIN_ROUNDS)?;
-        suspect.log_evidence = learned.log_likelihood - plain.log_likelihood - OCCAM;
-        if suspect.log_evidence > BELIEVED {
-            self.suspect = Some(suspect);
-            return Ok(Some((with, learned)));
+        self.state.barrier = Some(found);
+        if found.is_some() {
+            history.take(0, STRENGTH_SD);
         }
-        *history = bare;
-        self.suspect = None;
-        (self.share, self.past, self.patch, self.gain) = without;
-        Ok(None)
+        Ok(())
     }
 
     /// Groups of columns whose scale is learned.
@@ -433,14 +496,14 @@ impl<'a> Fit<'a> {
         let mut groups: Vec<Group> = (0..gauges * wells)
             .map(|pair| Group {
                 columns: Vec::new(),
-                scale: self.share[pair],
+                scale: self.state.scales.share[pair],
                 typical: TYPICAL_DISCREPANCY,
                 weight: 1.0,
             })
             .collect();
         let mut past = Group {
             columns: Vec::new(),
-            scale: self.past,
+            scale: self.state.scales.past,
             typical: 0.003,
             weight: 1.0,
         };
@@ -469,14 +532,14 @@ impl<'a> Fit<'a> {
                 });
             groups.push(Group {
                 columns: members.map(|(index, _)| index).collect(),
-                scale: self.patch[side],
+                scale: self.state.scales.patch[side],
                 typical: TYPICAL_PATCH,
                 weight: 1.0,
             });
         }
         groups.push(Group {
             columns: (columns.len()..width - tail).collect(),
-            scale: self.gain,
+            scale: self.state.scales.gain,
             typical: TYPICAL_GAIN,
             weight: 4.0,
         });
@@ -492,19 +555,19 @@ impl<'a> Fit<'a> {
     ) -> Result<Solved, ModelError> {
         let width = regression.z.len();
         let (mut spread, centre) = self.spread(columns, width, tail);
-        if round < PLAIN_ROUNDS {
+        if round < self.let_in() {
             return regression.solve(&spread, &centre);
         }
         let mut groups = self.groups(columns, width, tail);
         let solved = learn(regression, &mut groups, &mut spread, &centre)?;
-        let pairs = self.share.len();
-        for (share, group) in self.share.iter_mut().zip(&groups) {
+        let pairs = self.state.scales.share.len();
+        for (share, group) in self.state.scales.share.iter_mut().zip(&groups) {
             *share = group.scale;
         }
         if let Some([past, conduction, storage, gain]) = groups.get(pairs..) {
-            self.past = past.scale.min(1.0);
-            self.patch = [conduction.scale, storage.scale];
-            self.gain = gain.scale;
+            self.state.scales.past = past.scale.min(1.0);
+            self.state.scales.patch = [conduction.scale, storage.scale];
+            self.state.scales.gain = gain.scale;
         }
         Ok(solved)
     }
@@ -551,8 +614,8 @@ impl<'a> Fit<'a> {
         let part = history.part(&kept, &solved.mean);
         let spread = DVector::from_iterator(kept.len(), kept.iter().map(|&i| spread[i]));
         let path = Path::of(&columns.frame.modal, self.block);
-        let mut best = self.try_noise(columns, &path, &part, &spread, &self.noise)?;
-        let gauges = self.noise.gauge.len();
+        let mut best = self.try_noise(columns, &path, &part, &spread, &self.state.noise)?;
+        let gauges = self.state.noise.gauge.len();
         let mut knobs: Vec<Knob> = vec![
             Knob::Gauges,
             Knob::Wander,
@@ -569,14 +632,14 @@ impl<'a> Fit<'a> {
                 for factor in [stride, 1.0 / stride] {
                     let mut improved = false;
                     for _ in 0..3 {
-                        let mut next = self.noise.clone();
+                        let mut next = self.state.noise.clone();
                         knob.turn(&mut next, factor);
                         let value = self.try_noise(columns, &path, &part, &spread, &next)?;
                         if value <= best + 0.5 {
                             break;
                         }
                         best = value;
-                        self.noise = next;
+                        self.state.noise = next;
                         improved = true;
                     }
                     if improved {
@@ -590,12 +653,12 @@ impl<'a> Fit<'a> {
 
     fn finish(&mut self, blocks: &[Block], span: (i64, i64)) -> Result<Calibration, ModelError> {
         let mut columns = self.columns()?;
-        let images = self.suspect.map(|_| self.images(&columns));
+        let images = self.suspect().map(|_| self.images(&columns));
         let mut history = History::run(&mut columns, self.history, images.as_ref())?;
-        if self.suspect.is_some() {
+        if self.suspect().is_some() {
             history.take(0, STRENGTH_SD);
         }
-        if let Some(rest) = &self.rest {
+        if let Some(rest) = &self.state.rest {
             history.fill(rest);
         }
         let mut whitener = self.whitener(&columns)?;
@@ -661,13 +724,14 @@ impl<'a> Fit<'a> {
         let inverse: DMatrix<f64> = solved.factor.inverse();
         let sd = |index: usize| inverse[(index, index)].max(0.0).sqrt();
         let layers: Factors = self
+            .state
             .factors
             .iter()
             .filter(|(p, _)| layer_of(*p) == *p)
             .copied()
             .collect();
         let mut factor_sd = vec![0.0; layers.len()];
-        let mut skin_sd = vec![self.settings.skin_sd; self.skins.len()];
+        let mut skin_sd = vec![self.settings.skin_sd; self.state.skins.len()];
         for (index, kind) in columns.kinds.iter().enumerate() {
             match *kind {
                 Kind::Parameter(i) => {
@@ -687,15 +751,15 @@ impl<'a> Fit<'a> {
         }
         let innovation = whitener.innovation();
         let mut priors = self.priors.clone();
-        priors.gain = self.gain;
-        priors.past = self.past;
-        priors.patch = self.patch;
+        priors.gain = self.state.scales.gain;
+        priors.past = self.state.scales.past;
+        priors.patch = self.state.scales.patch;
         priors.long = LONG * self.usual_share();
         priors.far = FAR * self.usual_share();
-        priors.mismatch = self.usual_share() + UNSEEN * self.patch[0];
-        priors.discrepancy.clone_from(&self.share);
+        priors.mismatch = self.usual_share() + UNSEEN * self.state.scales.patch[0];
+        priors.discrepancy.clone_from(&self.state.scales.share);
         let rates = Rates::of(blocks, columns.frame.wells);
-        let (factors, patches) = std::mem::take(&mut self.factors)
+        let (factors, patches) = std::mem::take(&mut self.state.factors)
             .into_iter()
             .partition(|(p, _)| layer_of(*p) == *p);
         Ok(Calibration {
@@ -703,16 +767,16 @@ impl<'a> Fit<'a> {
             factor_sd,
             patches,
             patched: columns.patched.clone(),
-            suspect: self.suspect,
-            skins: self.skins.clone(),
+            suspect: self.suspect(),
+            skins: self.state.skins.clone(),
             skin_sd,
             noise: (0..gauges).map(|g| innovation[(g, g)].sqrt()).collect(),
-            discrepancy: self.share.clone(),
+            discrepancy: self.state.scales.share.clone(),
             block: self.block,
             blocks: span,
             left: summary(&scaled),
             reference: history.reference,
-            stochastic: self.noise.clone(),
+            stochastic: self.state.noise.clone(),
             priors,
             inflate,
             unsteady,

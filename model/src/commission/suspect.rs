@@ -25,7 +25,7 @@ pub(crate) const OCCAM: f64 = 7.0;
 /// First steps of the search: in azimuth \[rad\], and in the logarithm of the distance behind the array.
 const TURN_AND_MOVE: (f64, f64) = (0.16, 0.35);
 /// Rounds of the search.
-const FINER: usize = 16;
+const FINER: usize = 12;
 /// Least distance of a line behind the array, in half-widths.
 const LEAST_BEHIND: f64 = 0.03;
 
@@ -56,16 +56,16 @@ fn explained(regression: &Regression, solved: &Solved, lines: &DMatrix<f64>) -> 
         .collect()
 }
 
-/// Looks for the line that explains most: over the fan, then finer and finer about the best. The history is left looking
-/// at that line alone.
+/// Looks for the line that explains most: over the fan or from a line known, then finer and finer about the best. The
+/// history is left looking at that line alone.
 pub(crate) fn best_line(
     ground: &Ground,
     columns: &Columns,
     history: &mut History,
     whitener: &Whitener,
-    regression: &Regression,
-    solved: &Solved,
-) -> Option<Line> {
+    (regression, solved): (&Regression, &Solved),
+    from: Option<&Suspect>,
+) -> Option<Suspect> {
     let places = Places::of(ground);
     let mut ask = |lines: &[Line]| -> Vec<f64> {
         history.look_at(columns, &Images::new(&columns.frame.modal, lines));
@@ -75,8 +75,10 @@ pub(crate) fn best_line(
         let all = logs.iter().copied().enumerate();
         all.max_by(|a, b| a.1.total_cmp(&b.1))
     };
-    let (index, mut best) = best_of(&ask(&places.lines))?;
-    let mut line = places.lines.get(index)?.clone();
+    let known = from.and_then(|s| places.line(ground, s.azimuth, s.distance));
+    let fan = known.map_or_else(|| places.lines.clone(), |line| vec![line]);
+    let (index, mut best) = best_of(&ask(&fan))?;
+    let mut line = fan.get(index)?.clone();
     let (mut turn, mut move_) = TURN_AND_MOVE;
     for _ in 0..FINER {
         let outermost = places.outermost(ground, line.azimuth);
@@ -112,5 +114,9 @@ pub(crate) fn best_line(
         }
     }
     ask(std::slice::from_ref(&line));
-    Some(line)
+    Some(Suspect {
+        azimuth: line.azimuth,
+        distance: line.distance,
+        log_evidence: best,
+    })
 }
