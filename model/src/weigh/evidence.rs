@@ -111,10 +111,10 @@ const PER_UNIT: f64 = 32.0;
 
 /// Value and slope of [`log_normal_cdf`].
 static TABLE: LazyLock<Vec<(f64, f64)>> = LazyLock::new(|| {
-    let entries = ((ABOVE - BELOW) * PER_UNIT) as u32 + 1;
-    (0..=entries)
-        .map(|k| {
-            let x = BELOW + f64::from(k) / PER_UNIT;
+    (0..)
+        .map(|k: u32| BELOW + f64::from(k) / PER_UNIT)
+        .take_while(|x| *x <= ABOVE + 1.0 / PER_UNIT)
+        .map(|x| {
             let value = computed_log_normal_cdf(x);
             let density = -0.5 * x * x - 0.5 * std::f64::consts::TAU.ln();
             (value, (density - value).exp())
