@@ -172,7 +172,9 @@ mod tests {
                 transmissivity: 2e-9,
                 storativity: 4e-9,
                 leakance_below: None,
+                anisotropy: None,
             }],
+            zones: Vec::new(),
             edge: Edge {
                 kind: EdgeKind::Open,
                 distance: 20_000.0,
