@@ -168,8 +168,10 @@ impl History {
     /// Fills rows without a reading with what the coefficients say, and with what they leave of the nearest readings
     /// before and after: a jump to the bare prediction and back would pass for an event.
     pub(crate) fn fill(&mut self, coefficients: &DVector<f64>) {
+        // A barrier taken in a round before may not stand here.
+        let held = self.raw.ncols() - 1;
         let said = |raw: &DMatrix<f64>, row: usize| -> f64 {
-            let columns = coefficients.iter().enumerate();
+            let columns = coefficients.iter().enumerate().take(held);
             columns.map(|(c, by)| raw[(row, c + 1)] * by).sum()
         };
         for index in 0..self.missing.len() {

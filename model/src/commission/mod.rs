@@ -7,10 +7,14 @@ use crate::expect::{Noise, Patched, Priors};
 use crate::ground::Ground;
 use crate::reduce::{Factors, Reduced};
 
+mod finish;
 mod fit;
 pub(crate) mod history;
 pub(crate) mod places;
+mod rates;
 mod relevance;
+mod scales;
+mod stochastic;
 mod suspect;
 mod unsteady;
 

@@ -22,6 +22,8 @@ use crate::finding::Cause;
 
 /// Most onsets held.
 const LIMIT: usize = 52;
+/// Share of the leading evidence by which an onset may fall short and still be kept.
+const NEARLY: f64 = 0.03;
 
 /// Causes with an onset, in the order of [`Onset::weight`].
 pub(crate) const CAUSES: [Cause; 6] = [
@@ -304,8 +306,10 @@ impl Ladder {
                         .zip(&this.weight)
                         .map(|(e, w)| e + w)
                         .fold(f64::NEG_INFINITY, f64::max);
-                    // Evidence that falls off steeply tells the onset well: those round the best are kept too.
-                    let dear = 40.0 * (0.2 * (strength - best).max(-300.0)).exp();
+                    // Places and paces are weighed on a coarse grid here: onsets that explain nearly as much as the best
+                    // are kept close together, or the true one might be gone when the finer grid asks for it.
+                    let near = (strength - best) / (5.0 + NEARLY * best.max(0.0));
+                    let dear = 40.0 * near.exp();
                     (
                         index + 1,
                         gap / age * (1.0 + if best > 3.0 { dear } else { 0.0 }),
