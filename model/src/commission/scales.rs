@@ -107,7 +107,7 @@ impl Fit<'_> {
         };
         for (index, kind) in columns.kinds.iter().enumerate() {
             match *kind {
-                // What history is too short to show is tied to how much pairs differ otherwise.
+                // What history is too short to show is tied to the shares learned at shorter lags.
                 Kind::Discrepancy { lag, .. } if lag >= LONG_LAGS => {}
                 Kind::Discrepancy { gauge, well, .. } => {
                     if let Some(group) = groups.get_mut(gauge * wells + well) {

@@ -39,11 +39,11 @@ const MISSING: usize = 24;
 const AGAIN: i64 = 20;
 /// Kinds of cause that share the prior.
 const KINDS: f64 = 7.0;
-/// A ground whose pairs differ by this share looks, as its rates go, like one with images: their evidence counts half.
+/// Where sources' responses are off by this share, they look, as rates go, like images: the images' evidence counts half.
 const IMAGED: f64 = 0.1;
 /// What the threshold is raised by, for a null that is never quite right: chosen by hand, until a simulated null says it.
 const MARGIN: f64 = 3.0;
-/// What it is raised by further in a ground whose pairs differ by all of themselves.
+/// What it is raised by further where sources' responses are off by all of themselves.
 const VARIETY: f64 = 30.0;
 /// Log evidence by which `unexplained` must lead: outright, and as a share of the leading cause's.
 const LEEWAY: (f64, f64) = (5.0, 0.03);

@@ -38,7 +38,7 @@ pub(crate) struct Weights<'a> {
     pub(crate) wells: usize,
     /// Length of a block \[s\].
     pub(crate) block: f64,
-    /// Relative error of a source's signature, from how much pairs differ.
+    /// Relative error of a source's signature in a ground that is known only so well.
     pub(crate) mismatch: f64,
 }
 
