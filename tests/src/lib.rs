@@ -4,8 +4,10 @@
 //! temporary. Waits are for a state to be reached, with a generous limit that only a broken program meets.
 
 pub mod broker;
+pub mod browser;
 pub mod collect;
 pub mod daemon;
+pub mod http;
 pub mod modbus;
 pub mod pty;
 pub mod publisher;
@@ -13,11 +15,13 @@ pub mod readings;
 pub mod sdi12;
 pub mod site;
 pub mod stored;
+pub mod watched;
 
 use std::path::PathBuf;
 use std::time::{Duration, Instant};
 
 pub use broker::Broker;
+pub use browser::Browser;
 pub use collect::{Collector, Message};
 pub use daemon::{Daemon, Output, borewake, borewake_in, program};
 pub use modbus::{ModbusServer, ModbusTcpServer};

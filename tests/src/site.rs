@@ -81,7 +81,11 @@ impl Site {
     #[must_use]
     pub fn new(additions: &[&str]) -> Self {
         let folder = tempfile::tempdir().expect("a temporary folder");
-        let text = format!("{GROUND}{}", additions.concat());
+        let mut text = format!("{GROUND}{}", additions.concat());
+        if !text.contains("[http]") {
+            // A free port: tests run beside each other.
+            text += "\n[http]\nlisten = \"127.0.0.1:0\"\n";
+        }
         let left = undelivered(&text);
         fs::write(folder.path().join("site.toml"), text + &left).expect("a site file");
         Self { folder }

@@ -17,6 +17,7 @@ mod replay;
 mod run;
 mod summary;
 pub mod table;
+mod token;
 mod verify;
 
 use std::ffi::OsString;
@@ -59,6 +60,7 @@ enum Verb {
     Export(export::Export),
     Replay(replay::Replay),
     Run(run::Run),
+    Token(token::TokenVerb),
     Verify(verify::Verify),
 }
 
@@ -72,6 +74,7 @@ impl Verb {
             Self::Export(verb) => verb.run(context),
             Self::Replay(verb) => verb.run(context),
             Self::Run(verb) => verb.run(context),
+            Self::Token(verb) => verb.run(context),
             Self::Verify(verb) => verb.run(context),
         }
     }

@@ -31,8 +31,9 @@ pub use read::read;
 pub use sdi12::{Sdi12Address, Sdi12Channel, Sdi12Command, Sdi12Kind, Sdi12Source};
 pub use secret::{Secret, SecretError, SecretFile};
 pub use site::{
-    GaugeSettings, GaugeString, LimitSettings, Meter, MqttPublish, PastRate, PatternChannel,
-    PublishSettings, Reference, Side, Site, StoreSettings, WatchConfig, WellSettings,
+    GaugeSettings, GaugeString, HttpSettings, LimitSettings, Meter, MqttPublish, PastRate,
+    PatternChannel, PublishSettings, Reference, Side, Site, StoreSettings, WatchConfig,
+    WellSettings,
 };
 pub use source::{
     ByteOrder, ChannelSettings, Checksum, Conversion, LogSource, ModbusChannel, ModbusRtuSource,

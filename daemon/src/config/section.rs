@@ -155,6 +155,26 @@ impl<'s> Section<'s> {
         Some(at)
     }
 
+    /// A list of texts that are not empty.
+    pub(super) fn texts(&mut self, key: &'static str) -> Option<Vec<At<String>>> {
+        let found = self.take(key)?;
+        let Some(items) = found.get_ref().as_array() else {
+            self.due(key, found, "a list of texts", "write it in square brackets");
+            return None;
+        };
+        let mut texts = Vec::new();
+        for item in items.iter() {
+            match item.get_ref().as_str().filter(|t| !t.trim().is_empty()) {
+                Some(text) => texts.push(At {
+                    value: text.to_owned(),
+                    span: item.span(),
+                }),
+                None => self.due(key, item, "text", "write it in double quotes"),
+            }
+        }
+        Some(texts)
+    }
+
     /// One of a list of words.
     pub(super) fn word<T: Copy>(
         &mut self,

@@ -1,6 +1,7 @@
 //! The site as read: what the other rooms are given.
 
 use std::collections::BTreeMap;
+use std::net::{Ipv4Addr, SocketAddr};
 use std::path::PathBuf;
 use std::time::Duration;
 
@@ -47,6 +48,8 @@ pub struct Site {
     pub limits: Vec<LimitSettings>,
     /// Where events go, in file order.
     pub publish: Vec<PublishSettings>,
+    /// Where the page and its data are served.
+    pub http: HttpSettings,
     /// What was accepted but is not acted on, or looks odd.
     pub notes: Vec<Note>,
 }
@@ -273,4 +276,27 @@ pub struct MqttPublish {
     pub endpoint: MqttEndpoint,
     /// Root of all topics, without slash at its end; the site's id follows.
     pub topic_root: String,
+}
+
+/// Where the page and its data are served.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct HttpSettings {
+    /// Address and port; `None` where nothing is to listen.
+    pub listen: Option<SocketAddr>,
+    /// Names under which browsers may ask, besides `localhost` and addresses: those of a proxy in front, say.
+    pub hosts: Vec<String>,
+}
+
+impl HttpSettings {
+    /// Port where the site file names none.
+    pub const PORT: u16 = 8070;
+}
+
+impl Default for HttpSettings {
+    fn default() -> Self {
+        Self {
+            listen: Some(SocketAddr::from((Ipv4Addr::LOCALHOST, Self::PORT))),
+            hosts: Vec::new(),
+        }
+    }
 }

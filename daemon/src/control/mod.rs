@@ -1,4 +1,4 @@
-//! Requests to the running daemon over a Unix socket, and the client that sends them.
+//! Requests to the running daemon over a Unix socket, and the client that sends them; tokens for those who ask over HTTP.
 //!
 //! One line of JSON asks ([`Command`]), one line answers ([`Reply`]); a connection may ask again. The socket is
 //! `control.sock` in the store's folder, for the daemon's own user only: who may write there may ask.
@@ -8,6 +8,7 @@
 
 mod client;
 mod server;
+pub mod tokens;
 
 use std::fs::File;
 use std::io;

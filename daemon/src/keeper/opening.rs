@@ -115,6 +115,7 @@ impl Keeper {
             events,
         };
         keeper.recover().await?;
+        keeper.see_stored().await?;
         let version = env!("CARGO_PKG_VERSION").to_owned();
         keeper
             .happen(
@@ -137,6 +138,23 @@ impl Keeper {
         }
         keeper.show(wall);
         Ok(keeper)
+    }
+
+    /// Shows what is stored, until something new comes: the newest block, and the newest reading of every channel.
+    async fn see_stored(&mut self) -> Result<(), KeeperError> {
+        let reader = self.store.reader();
+        if let Some(last) = reader.last_judged().await?
+            && let Some(judged) = reader.judged(last).await?
+        {
+            let names = &self.settings.alarms.names.gauges;
+            view::see(&mut self.snapshot, &judged.step, names);
+        }
+        for channel in reader.channels().await? {
+            if let Some(reading) = reader.newest(&channel).await? {
+                view::remember(&mut self.snapshot, &reading);
+            }
+        }
+        Ok(())
     }
 
     async fn recover(&mut self) -> Result<(), KeeperError> {

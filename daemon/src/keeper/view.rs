@@ -2,7 +2,7 @@
 
 use super::KeeperSettings;
 use crate::alarm::Desk;
-use crate::record::{GaugeView, Reading, Snapshot, Stamp, Step};
+use crate::record::{ChannelView, GaugeView, Reading, Snapshot, Stamp, Step};
 
 /// Alarms that are normal again are shown for so long \[µs\].
 const LATELY: i64 = 7 * 24 * 3600 * Stamp::SECOND;
@@ -25,15 +25,20 @@ pub(super) fn empty(settings: &KeeperSettings) -> Snapshot {
 
 /// Takes in a committed reading.
 pub(super) fn take(snapshot: &mut Snapshot, reading: &Reading) {
+    remember(snapshot, reading).readings += 1;
+}
+
+/// Shows a reading that was committed before the start.
+pub(super) fn remember<'s>(snapshot: &'s mut Snapshot, reading: &Reading) -> &'s mut ChannelView {
     let view = snapshot
         .channels
         .entry(reading.channel.to_string())
         .or_default();
-    view.readings += 1;
     if view.sampled.is_none_or(|newest| reading.sampled >= newest) {
         view.sampled = Some(reading.sampled);
         view.value = reading.value;
     }
+    view
 }
 
 /// Takes in what the watch said of a block; an older block than the newest changes nothing shown.

@@ -8,8 +8,8 @@ use serde::Serialize;
 
 use crate::alarm::NOTICE;
 use crate::record::{
-    AlarmKind, AlarmState, Blind, Expectation, Finding, Names, Outgoing, OutgoingId, Priority,
-    SizeUnit, Snapshot, SourceView, Stamp, Transition, TransitionKind,
+    Alarm, AlarmKind, AlarmState, Blind, Expectation, Finding, Names, Outgoing, OutgoingId,
+    Priority, SizeUnit, Snapshot, SourceView, Stamp, Transition, TransitionKind,
 };
 
 /// Type of an alarm's event: one for every transition.
@@ -80,11 +80,12 @@ struct Fill {
 
 /// Data of [`ALARM`].
 #[derive(Debug, Serialize)]
-struct AlarmData<'a> {
+pub(super) struct AlarmData<'a> {
     alarm: &'a str,
     kind: AlarmKind,
     state: AlarmState,
-    transition: TransitionKind,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    transition: Option<TransitionKind>,
     occurrence: u32,
     priority: Priority,
     since: Stamp,
@@ -97,6 +98,38 @@ struct AlarmData<'a> {
     finding: Option<FindingData>,
     notice: &'static str,
     advisory: bool,
+}
+
+impl<'a> AlarmData<'a> {
+    /// An alarm as it stands, without a transition.
+    pub(super) fn standing(alarm: &'a Alarm, names: &Names) -> Self {
+        Self {
+            alarm: &alarm.id.0,
+            kind: alarm.kind,
+            state: alarm.state(),
+            transition: None,
+            occurrence: alarm.occurrence,
+            priority: alarm.priority,
+            since: alarm.since,
+            summary: &alarm.summary,
+            response: &alarm.response,
+            by: None,
+            note: "",
+            finding: alarm.finding.as_ref().map(|f| FindingData::new(f, names)),
+            notice: NOTICE,
+            advisory: true,
+        }
+    }
+
+    /// An alarm just after a transition.
+    pub(super) fn moved(transition: &'a Transition, names: &Names) -> Self {
+        Self {
+            transition: Some(transition.kind),
+            by: transition.by.as_deref(),
+            note: &transition.note,
+            ..Self::standing(&transition.alarm, names)
+        }
+    }
 }
 
 #[derive(Debug, Serialize)]
@@ -214,22 +247,7 @@ pub fn alarm_subject(transition: &Transition) -> String {
 #[must_use]
 pub fn alarm(transition: &Transition, names: &Names, replay: bool) -> String {
     let alarm = &transition.alarm;
-    let data = AlarmData {
-        alarm: &alarm.id.0,
-        kind: alarm.kind,
-        state: alarm.state(),
-        transition: transition.kind,
-        occurrence: alarm.occurrence,
-        priority: alarm.priority,
-        since: alarm.since,
-        summary: &alarm.summary,
-        response: &alarm.response,
-        by: transition.by.as_deref(),
-        note: &transition.note,
-        finding: alarm.finding.as_ref().map(|f| FindingData::new(f, names)),
-        notice: NOTICE,
-        advisory: true,
-    };
+    let data = AlarmData::moved(transition, names);
     let fill = Fill {
         id: alarm_id(transition).to_string(),
         subject: alarm_subject(transition),

@@ -3,5 +3,6 @@
 //! Alarms go through the outbox and leave at least once; expectations and the heartbeat are only ever the latest.
 
 pub mod events;
+pub mod http;
 pub mod mqtt;
 pub mod ndjson;

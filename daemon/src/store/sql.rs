@@ -74,6 +74,9 @@ statements! {
     ALARM_TABLE = "select id, kind, state, condition, acknowledgement, latch, suppression, occurrence, sequence, priority, since, body \
         from alarm order by id";
     TRANSITIONS_AFTER = "select id, kind, at, recorded, person, note, body from transition where id > ?1 order by id limit ?2";
+    LAST_TRANSITION = "select coalesce(max(id), 0) from transition";
+    LATEST_TRANSITIONS = "select id, kind, at, recorded, person, note, body from transition order by id desc limit ?1";
+    TRANSITIONS_OF = "select id, kind, at, recorded, person, note, body from transition where alarm = ?1 order by id desc limit ?2";
     // A message sent again under its name takes a new number, so that a confirmation of the old one does not remove it.
     ADD_OUTBOX = "insert or replace into outbox (target, subject, occurrence, sequence, topic, payload, retain) \
         values (?1, ?2, ?3, ?4, ?5, ?6, ?7)";

@@ -4,11 +4,14 @@ mod pictures;
 mod score;
 mod truth;
 
+use std::net::SocketAddr;
 use std::path::{Path, PathBuf};
+use std::sync::Arc;
 
 use anyhow::Context as _;
 use clap::Args;
 use tokio::sync::mpsc;
+use tokio::task::JoinHandle;
 
 use self::score::Score;
 use self::truth::Truth;
@@ -17,10 +20,13 @@ use super::progress;
 use super::replay::{Scratch, open_player, transition_line};
 use super::{Context, Exit, Failure};
 use crate::config::{self, Site};
+use crate::control::Ask;
+use crate::control::tokens::{Scope, Tokens};
 use crate::intake::log::LogReader;
 use crate::keeper::Happening;
 use crate::keeper::play::Player;
 use crate::keeper::settings::block_plan;
+use crate::publish::http;
 use crate::record::{Alarm, AlarmKind, Command, CommandKind, Condition, Reply, Stamp};
 use crate::watch::history::History;
 
@@ -39,7 +45,7 @@ const ADOPT_AFTER: i64 = 7 * 24 * 3600 * Stamp::SECOND;
 #[command(after_help = "\
 Example:
   borewake demo
-  borewake demo --out pictures
+  borewake demo --stay
 
 The site, its log and its troubles are invented. It is calibrated on 40 quiet days, then 60 days are played with a leak
 that grows, a gauge that jumps and a neighbour that starts. Every finding is adopted seven days after it was raised.")]
@@ -47,6 +53,12 @@ pub(super) struct Demo {
     /// Folder for a picture (SVG) of every affected gauge
     #[arg(long, value_name = "FOLDER", default_value = "borewake-demo")]
     out: PathBuf,
+    /// Where the page is served meanwhile
+    #[arg(long, value_name = "ADDRESS", default_value = "127.0.0.1:8070")]
+    listen: SocketAddr,
+    /// Goes on serving the page when all is played, until Ctrl-C
+    #[arg(long)]
+    stay: bool,
 }
 
 impl Demo {
@@ -80,17 +92,19 @@ impl Demo {
         say(json, &summary(&site, &ground));
         say(json, "Playing the log ...");
         let store = scratch.folder.join("played");
-        let (player, told) = open_player(&site, &site.store.folder, &store, &[log_file]).await?;
+        let (mut player, told) =
+            open_player(&site, &site.store.folder, &store, &[log_file]).await?;
+        let (page, asked) = self.serve(&site, &mut player, json).await?;
         let mut stage = Stage {
             player,
             json,
             score: Score::new(truth),
             adopt: None,
+            asked,
         };
         stage.play(told).await?;
-        let Stage { player, score, .. } = stage;
-        player.stop().await?;
-        let written = pictures::draw(&site, &store, &score, &self.out).await?;
+        let written = pictures::draw(&site, &store, &stage.score, &self.out).await?;
+        let score = &stage.score;
         if json {
             println!("{}", score.json());
         } else {
@@ -100,11 +114,58 @@ impl Demo {
             }
             println!("\n{}", crate::alarm::NOTICE);
         }
-        Ok(if score.holds() {
+        let exit = if score.holds() {
             Exit::Done
         } else {
             Exit::DoesNotHold
-        })
+        };
+        if self.stay && page.is_some() {
+            say(json, "\nThe page stays until Ctrl-C.");
+            stage.stay().await?;
+        }
+        if let Some(page) = page {
+            page.abort();
+        }
+        stage.player.stop().await?;
+        Ok(exit)
+    }
+
+    /// Serves the page beside the play, where the address is free, and tells of a token to try it with.
+    async fn serve(
+        &self,
+        site: &Site,
+        player: &mut Player,
+        json: bool,
+    ) -> anyhow::Result<(Option<JoinHandle<()>>, mpsc::Receiver<Ask>)> {
+        let (commands, asked) = mpsc::channel(16);
+        let listening = match http::bind(self.listen).await {
+            Ok(listening) => listening,
+            Err(why) => {
+                eprintln!("note: there is no page: {why}");
+                return Ok((None, asked));
+            }
+        };
+        let keeper = player.keeper();
+        let reader = keeper.store().reader().clone();
+        let mut tokens = Tokens::default();
+        let token = tokens.make("demo visitor", Scope::Operate, Stamp::now(), None)?;
+        tokens.write(reader.folder())?;
+        say(
+            json,
+            &format!(
+                "The page is at http://{}/ ; to acknowledge there, sign with {token}",
+                listening.address
+            ),
+        );
+        let behind = http::Behind {
+            site: Arc::new(site.clone()),
+            reader,
+            commands,
+            snapshots: keeper.snapshots(),
+            replay: true,
+        };
+        let page = tokio::spawn(http::serve(listening, behind, std::future::pending()));
+        Ok((Some(page), asked))
     }
 }
 
@@ -138,6 +199,8 @@ struct Stage {
     score: Score,
     /// The alarm to be adopted next, and when.
     adopt: Option<(Alarm, Stamp)>,
+    /// What people ask on the page.
+    asked: mpsc::Receiver<Ask>,
 }
 
 impl Stage {
@@ -146,6 +209,9 @@ impl Stage {
         while let Some(clock) = self.player.next().await? {
             bar.set_position(self.player.log().read_bytes());
             self.take(&mut told, &bar);
+            while let Ok(ask) = self.asked.try_recv() {
+                self.hear(ask, clock).await?;
+            }
             if let Some((alarm, due)) = self.adopt.clone()
                 && clock >= due
             {
@@ -155,6 +221,22 @@ impl Stage {
             }
         }
         bar.finish_and_clear();
+        Ok(())
+    }
+
+    /// Answers the page until the process is ended.
+    async fn stay(&mut self) -> anyhow::Result<()> {
+        let clock = self.player.clock();
+        while let Some(ask) = self.asked.recv().await {
+            self.hear(ask, clock).await?;
+        }
+        Ok(())
+    }
+
+    async fn hear(&mut self, (command, back): Ask, clock: Stamp) -> anyhow::Result<()> {
+        let reply = self.player.keeper().person(command, clock).await?;
+        // Whoever asked may be gone.
+        let _ = back.send(reply);
         Ok(())
     }
 

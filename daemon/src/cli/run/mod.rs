@@ -16,6 +16,7 @@ use crate::config::{self, Site};
 use crate::control;
 use crate::intake::{self, clock::SystemClock};
 use crate::keeper::{Happening, Keeper, KeeperSettings, Pace, Undelivered};
+use crate::publish::http;
 use crate::publish::ndjson::Ndjson;
 use crate::record::{Delivery, Stamp};
 use crate::store::Store;
@@ -141,6 +142,17 @@ async fn serve(site: Site, events_file: Option<PathBuf>) -> anyhow::Result<Exit>
 
     let (commands_in, mut commands) = mpsc::channel(16);
     let control = control::Server::bind(&site.store.folder)?;
+    if let Some(listen) = site.http.listen {
+        let behind = http::Behind {
+            site: std::sync::Arc::new(site.clone()),
+            reader: store.reader().clone(),
+            commands: commands_in.clone(),
+            snapshots: keeper.snapshots(),
+            replay: false,
+        };
+        let stop = until(rest_stopped.clone());
+        others.push(tokio::spawn(http::serve_when_free(listen, behind, stop)));
+    }
     others.push(tokio::spawn(
         control.serve(commands_in, until(rest_stopped.clone())),
     ));

@@ -1,5 +1,6 @@
 //! `[site]`, `[store]`, `[watch]` and `[http]`.
 
+use std::net::SocketAddr;
 use std::path::Path;
 use std::time::Duration;
 
@@ -7,7 +8,7 @@ use borewake_model::units::{DAY, Dimension, UnitSystem, YEAR};
 
 use super::super::section::{At, Section};
 use super::super::values::Sign;
-use super::super::{StoreSettings, WatchConfig};
+use super::super::{HttpSettings, StoreSettings, WatchConfig};
 
 const MINUTE: Duration = Duration::from_secs(60);
 const HOUR: Duration = Duration::from_secs(3600);
@@ -197,20 +198,37 @@ fn interval(text: &str) -> Option<f64> {
     Some(seconds / count).filter(|i| i.is_finite())
 }
 
-/// Reads `[http]`, which this build does not serve.
-pub(super) fn http(root: &mut Section<'_>) {
+/// Reads `[http]`; without it the page is served where it is by default.
+pub(super) fn http(root: &mut Section<'_>) -> HttpSettings {
+    let mut settings = HttpSettings::default();
     let Some(mut table) = root.table("http") else {
-        return;
+        return settings;
     };
     if let Some(listen) = table.text("listen") {
-        if listen.value.parse::<std::net::SocketAddr>().is_err() {
-            let what = "an address with a port is due";
-            table.wrong("listen", &listen, what, "such as \"127.0.0.1:8070\"");
+        match listen.value.parse::<SocketAddr>() {
+            Ok(address) => settings.listen = Some(address),
+            Err(_) if listen.value == "off" => settings.listen = None,
+            Err(_) => table.wrong(
+                "listen",
+                &listen,
+                "an address with a port is due, or \"off\"",
+                "such as \"127.0.0.1:8070\"",
+            ),
         }
-        let text = "this build has no page: nothing listens there";
-        root.report.note(&listen.span, table.key("listen"), text);
+    }
+    if let Some(hosts) = table.texts("hosts") {
+        for host in hosts {
+            let plain = |c: char| c.is_ascii_alphanumeric() || matches!(c, '.' | '-');
+            if host.value.chars().all(plain) {
+                settings.hosts.push(host.value.to_ascii_lowercase());
+            } else {
+                let what = "a host name is due, without scheme and port";
+                table.wrong("hosts", &host, what, "such as \"watch.example\"");
+            }
+        }
     }
     table.close();
+    settings
 }
 
 #[cfg(test)]

@@ -64,7 +64,7 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
     let sources = sources::sources(&mut root, folder);
     let limits = limits::limits(&mut root, &gauges);
     let publish = limits::publish(&mut root, folder);
-    basics::http(&mut root);
+    let http = basics::http(&mut root);
     root.close();
 
     let points: Vec<Point> = cross::points(&wells, &gauges);
@@ -103,6 +103,7 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
         watch,
         limits,
         publish,
+        http,
         notes: Vec::new(),
     }
 }

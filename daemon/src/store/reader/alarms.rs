@@ -9,7 +9,7 @@ use super::super::outbox::Waiting;
 use super::super::rows::from_spelled;
 use super::super::sql;
 use super::Reader;
-use crate::record::{Alarm, Outgoing, OutgoingId, Stamp, Transition};
+use crate::record::{Alarm, AlarmId, Outgoing, OutgoingId, Stamp, Transition};
 
 /// Id, kind, at, recorded, person, note, body.
 type TransitionRow = (i64, String, i64, i64, Option<String>, String, String);
@@ -52,6 +52,33 @@ impl Reader {
             .bind(limit)
             .fetch_all(&self.pool)
             .await?;
+        rows.into_iter().map(transition).collect()
+    }
+
+    /// Number of the last step in the life of any alarm; 0 for none.
+    ///
+    /// # Errors
+    /// The database cannot be read.
+    pub async fn last_transition(&self) -> Result<i64> {
+        Ok(sqlx::query_scalar(sql::LAST_TRANSITION)
+            .fetch_one(&self.pool)
+            .await?)
+    }
+
+    /// The latest steps in the life of one alarm, or of all, newest first, at most `limit`, with their numbers.
+    ///
+    /// # Errors
+    /// The database cannot be read.
+    pub async fn latest_transitions(
+        &self,
+        alarm: Option<&AlarmId>,
+        limit: i64,
+    ) -> Result<Vec<(i64, Transition)>> {
+        let query = match alarm {
+            Some(alarm) => sqlx::query_as::<_, TransitionRow>(sql::TRANSITIONS_OF).bind(&alarm.0),
+            None => sqlx::query_as::<_, TransitionRow>(sql::LATEST_TRANSITIONS),
+        };
+        let rows = query.bind(limit).fetch_all(&self.pool).await?;
         rows.into_iter().map(transition).collect()
     }
 
