@@ -32,8 +32,19 @@ function card(a, open, act) {
     h("div", { class: "acts" },
       waits ? h("button", { type: "button", class: "main", "data-k": `ack-${key}`, onclick: () => act.acknowledge(a) }, "Acknowledge") : null,
       a.finding ? h("button", { type: "button", "aria-expanded": String(shown), "data-k": `ev-${key}`, onclick: () => act.open(key) }, shown ? "Hide the evidence" : "Show the evidence") : null,
-      a.finding && a.condition === "present" && a.state !== "shelved" ? h("button", { type: "button", "data-k": `adopt-${key}`, onclick: () => act.adopt(a) }, "Take into the model") : null),
+      a.state === "latched-acknowledged" ? h("button", { type: "button", class: "main", "data-k": `reset-${key}`, onclick: () => act.reset(a) }, "Reset") : null,
+      more(a, key, act)),
     shown && a.finding ? evidence(a.finding, act) : null);
+}
+
+/// What is done seldom, and with a reason.
+function more(a, key, act) {
+  const held = a.suppression.by;
+  const button = (name, text) => h("button", { type: "button", "data-k": `${name}-${key}`, onclick: () => act[name](a) }, text);
+  if (held === "shelved") return button("unshelve", "Bring back now");
+  if (held === "out-of-service") return button("putBack", "Put back into service");
+  if (!w.stands(a)) return null;
+  return [button("shelve", "Quiet until …"), button("takeOut", "Out of service"), a.finding && a.condition === "present" ? button("adopt", "Take into the model") : null];
 }
 
 function evidence(f, act) {

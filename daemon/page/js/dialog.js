@@ -41,9 +41,10 @@ export async function askToken() {
 }
 
 /// Asks for a note, does it, and stays open with the reason where it is refused.
-export async function confirm({ title, text, label, say, sign }) {
+export async function confirm({ title, text, label, say, sign, hours, due }) {
   const wrong = h("p", { class: "wrong", role: "alert" });
-  const note = h("textarea", { id: "note", rows: 3, maxlength: 2000 });
+  const note = h("textarea", { id: "note", rows: 3, maxlength: 2000, required: due });
+  const long = hours && h("select", { id: "hours" }, [[1, "1 hour"], [4, "4 hours"], [8, "8 hours"], [24, "1 day"], [72, "3 days"], [167, "1 week"]].map(([n, words]) => h("option", { value: n, selected: n === 8 }, words)));
   const place = $("dialog");
   const swap = h("button", { type: "button", hidden: true, onclick: () => (place.close("swap"), sign()) }, "Another token");
   await dialog(
@@ -52,7 +53,7 @@ export async function confirm({ title, text, label, say, sign }) {
       e.preventDefault();
       e.submitter.disabled = true;
       try {
-        await say(note.value.trim());
+        await say(note.value.trim(), long && Number(long.value));
         place.close("yes");
       } catch (why) {
         wrong.textContent = why.message;
@@ -62,7 +63,8 @@ export async function confirm({ title, text, label, say, sign }) {
     } },
       h("h2", { id: "dialog-h" }, title),
       h("p", {}, text),
-      h("label", { for: "note" }, "What you have to say (may be empty)", note),
+      long && h("label", { for: "hours" }, "For how long", long),
+      h("label", { for: "note" }, due ? "Why" : "What you have to say (may be empty)", note),
       wrong,
       h("div", { class: "acts" }, h("button", { class: "main", value: "yes" }, label), h("button", { value: "no", formnovalidate: true }, "Leave it"), swap)));
 }

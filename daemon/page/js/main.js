@@ -14,7 +14,7 @@ import { askToken, confirm } from "./dialog.js";
 const EVERY = 10000;
 const OLD = 45000;
 
-const state = { site: null, snapshot: null, alarms: [], departures: null, past: [], range: 1, cursor: null, layer: 0, gauge: null, evidence: null, pastOpen: false, heard: 0, needs: null };
+const state = { site: null, snapshot: null, alarms: [], departures: null, past: [], range: null, cursor: null, layer: 0, gauge: null, evidence: null, pastOpen: false, heard: 0, needs: null };
 
 const strip = new Strip($("strip"), $("strip-tools"), {
   range: (i) => ((state.range = i), (state.cursor = null), look(true)),
@@ -44,7 +44,6 @@ async function look(all) {
     const moved = all || snapshot.block !== state.snapshot?.block || !state.departures;
     const rang = alarms.last_event !== state.last;
     Object.assign(state, { snapshot, alarms: alarms.alarms, last: alarms.last_event, heard: Date.now(), needs: null });
-    if (!state.departures) state.range = rangeOf(snapshot);
     if (moved) await lookBack();
     if (rang || all) state.past = (await get("/api/v1/history", { limit: 200 })).history;
     draw();
@@ -59,18 +58,19 @@ async function look(all) {
 }
 
 /// At first, as far back as what stands now began.
-function rangeOf(snapshot) {
+function rangeOf(to) {
   const began = onset()?.from;
   if (!began) return 1;
-  const age = (Date.parse(snapshot.taken) / 1000 - began) * 1.15;
+  const age = (to - began) * 1.15;
   const found = RANGES.findIndex(([, span]) => span && span > age);
   return Math.max(1, found < 0 ? RANGES.length - 1 : found);
 }
 
 async function lookBack() {
-  const span = RANGES[state.range][1];
   const first = await get("/api/v1/departures", { bins: 1 });
   const to = Date.parse(first.until) / 1000;
+  state.range ??= rangeOf(to);
+  const span = RANGES[state.range][1];
   const kept = Date.parse(first.kept_from) / 1000;
   // Not before anything was judged: an empty sheet says nothing.
   const from = Math.min(Math.max(span ? to - span : kept, kept), to - 86400);
@@ -150,9 +150,10 @@ function said() {
     return;
   }
   const rest = standing.length - 1;
+  const others = unseen.filter((a) => a !== lead).length;
   put(place,
     h("p", { class: "line" }, h("span", { class: `p-${lead.priority}` }, mark(lead.priority)), lead.finding ? w.finding(lead.finding) : lead.summary),
-    h("p", { class: "more" }, [lead.finding?.place ? `About ${w.place(lead.finding.place)}. ` : "", `${w.capital(lead.priority)} priority; ${w.state(lead.state)}. `, rest ? `${rest} more ${rest > 1 ? "alarms stand" : "alarm stands"}.` : "It is the only alarm."]),
+    h("p", { class: "more" }, [lead.finding?.place ? `About ${w.place(lead.finding.place)}. ` : "", `${w.capital(lead.priority)} priority; ${w.state(lead.state)}. `, rest ? `${rest} more ${rest > 1 ? "alarms" : "alarm"}${others ? `, ${others} not yet seen by anybody` : ""}.` : "It is the only alarm."]),
     h("div", { class: "row" },
       w.waits(lead) ? h("button", { type: "button", class: "main", "data-k": "said-ack", onclick: () => acts.acknowledge(lead) }, "Acknowledge") : null,
       lead.finding ? h("button", { type: "button", "data-k": "said-why", onclick: () => why(lead) }, "Why?") : null,
@@ -200,14 +201,17 @@ function gaugeNow() {
   if (place) gauge.draw(place, { site: state.site, gauge: state.gauge, window: state.departures.shown, loaded: state.loaded, onset: onset() });
 }
 
-async function change(alarm, act, title, text, label) {
+async function change(alarm, act, title, text, label, more = {}) {
   if (!token.get() && !(await sign())) return;
   await confirm({
     title,
     text,
     label,
-    say: async (note) => {
-      await post(`/api/v1/alarms/${name(alarm.alarm)}/${act}`, { occurrence: alarm.occurrence, note });
+    ...more,
+    say: async (note, hours) => {
+      // The daemon's clock counts, also where that of a replay or of this device is another.
+      const until = hours ? new Date(Date.parse(state.snapshot.taken) + hours * 3600000).toISOString() : undefined;
+      await post(`/api/v1/alarms/${name(alarm.alarm)}/${act}`, { occurrence: alarm.occurrence, note, until });
       await look(true);
     },
     sign,
@@ -217,6 +221,11 @@ async function change(alarm, act, title, text, label) {
 const acts = {
   acknowledge: (a) => change(a, "acknowledge", `Acknowledge ${a.alarm}`, "Says that you have seen it, not that it is mended. Your name goes into the journal.", "Acknowledge"),
   adopt: (a) => change(a, "adopt", `Take ${a.alarm} into the model`, "From its onset on, the model will count this as explained, and the watch goes on past it. Do it when the cause is understood. Your name goes into the journal.", "Take it in"),
+  shelve: (a) => change(a, "shelve", `Quiet ${a.alarm} for a while`, "It goes on being judged and written down, and comes back by itself: as an alarm, if it still stands. Your name goes into the journal.", "Quiet it", { hours: true, due: true }),
+  unshelve: (a) => change(a, "unshelve", `Bring ${a.alarm} back`, "It comes back as an alarm if it still stands. Your name goes into the journal.", "Bring back"),
+  takeOut: (a) => change(a, "take-out", `Take ${a.alarm} out of service`, "For maintenance: it goes on being judged and written down, and stays quiet until somebody puts it back. Your name goes into the journal.", "Take out", { due: true }),
+  putBack: (a) => change(a, "put-back", `Put ${a.alarm} back into service`, "It comes back as an alarm if it still stands. Your name goes into the journal.", "Put back"),
+  reset: (a) => change(a, "reset", `Reset ${a.alarm}`, "Its condition is gone; resetting lets go of the latch. Your name goes into the journal.", "Reset"),
   open: (key) => ((state.evidence = state.evidence === key ? null : key), draw()),
   gauge: (of) => openGauge(of).then(() => $("strip-h").scrollIntoView({ block: "start" })),
   pastOpen: (open) => (open === undefined ? state.pastOpen : (state.pastOpen = open)),

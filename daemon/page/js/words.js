@@ -49,8 +49,8 @@ const STEPS = {
   reset: "reset",
   "taken-out": "taken out of service",
   "put-back": "put back into service",
-  escalated: "escalated",
-  "re-alarmed": "alarmed again",
+  escalated: "escalated: nobody saw it in time",
+  realarmed: "to be seen again",
 };
 export const step = (of) => STEPS[of] ?? of;
 
@@ -67,10 +67,12 @@ export const waits = (alarm) => alarm.state in WAITS;
 export const stands = (alarm) => alarm.state !== "normal";
 const PRIORITIES = ["high", "medium", "low"];
 
-/// Most urgent first: what nobody has seen, then by priority, then the newest.
+/// Most urgent first: what is so now, by priority, unseen before seen; then what is over and unseen, what is held back,
+/// and what is normal. That somebody has seen a leak does not make it less.
 export function order(alarms) {
   const held = ["shelved", "suppressed", "out-of-service"];
-  const rank = (a) => (a.state === "normal" ? 30 : held.includes(a.state) ? 20 : waits(a) ? 0 : 10) + PRIORITIES.indexOf(a.priority);
+  const stage = (a) => (a.state === "normal" ? 30 : held.includes(a.state) ? 20 : a.condition === "present" ? 0 : 10);
+  const rank = (a) => stage(a) + 2 * PRIORITIES.indexOf(a.priority) + (waits(a) ? 0 : 1);
   return [...alarms].sort((a, b) => rank(a) - rank(b) || Date.parse(b.since) - Date.parse(a.since));
 }
 

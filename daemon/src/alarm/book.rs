@@ -5,9 +5,11 @@ use std::collections::BTreeMap;
 use serde::{Deserialize, Serialize};
 
 use super::life::{Event, Life, Refusal, step};
+use super::settings::Care;
+use super::words;
 use crate::record::{
-    Alarm, AlarmId, AlarmKind, AlarmState, AlarmView, Condition, Finding, Priority, Stamp,
-    Transition, TransitionKind,
+    Acknowledgement, Alarm, AlarmId, AlarmKind, AlarmState, AlarmView, Condition, Finding,
+    Priority, Stamp, Suppression, Transition, TransitionKind,
 };
 
 /// When something became so, and when it was written.
@@ -35,6 +37,12 @@ pub(super) struct Matter {
 struct Page {
     alarm: Alarm,
     moved: Stamp,
+    /// Wall-clock instant since which it stands as it does: acknowledged or not, held back or not.
+    #[serde(default)]
+    so_since: Option<Stamp>,
+    /// Whether it was escalated since.
+    #[serde(default)]
+    escalated: bool,
 }
 
 /// All alarms by name.
@@ -79,6 +87,8 @@ impl Book {
         let page = self.0.entry(id.clone()).or_insert_with(|| Page {
             alarm: blank(&matter),
             moved: when.recorded,
+            so_since: None,
+            escalated: false,
         });
         let alarm = &mut page.alarm;
         alarm.priority = matter.priority;
@@ -131,7 +141,22 @@ impl Book {
     ) -> Result<Transition, Refusal> {
         let page = self.0.get_mut(id).ok_or(Refusal::Normal)?;
         if let Some(event) = event {
-            step(&Life::of(&page.alarm), event)?.apply(&mut page.alarm);
+            let before = Life::of(&page.alarm);
+            let after = step(&before, event)?;
+            let stands = |life: &Life| {
+                let Life {
+                    acknowledgement,
+                    suppression,
+                    occurrence,
+                    ..
+                } = life.clone();
+                (acknowledgement, suppression, occurrence)
+            };
+            if stands(&before) != stands(&after) {
+                page.so_since = Some(when.recorded);
+                page.escalated = false;
+            }
+            after.apply(&mut page.alarm);
         }
         page.alarm.sequence = page.alarm.sequence.saturating_add(1);
         page.moved = when.recorded;
@@ -143,6 +168,76 @@ impl Book {
             by: by.map(str::to_owned),
             note: note.to_owned(),
         })
+    }
+}
+
+/// What the wall clock asks of one alarm.
+enum Call {
+    /// Its time on the shelf is over.
+    Unshelve,
+    /// It must be seen again.
+    Realarm,
+    /// Nobody has seen it in time.
+    Escalate,
+}
+
+impl Book {
+    /// The wall clock passed an instant.
+    pub(super) fn tick(&mut self, care: &Care, wall: Stamp) -> Vec<Transition> {
+        let due: Vec<(AlarmId, Call)> = self
+            .0
+            .iter_mut()
+            .filter_map(|(id, page)| Some((id.clone(), page.due(care, wall)?)))
+            .collect();
+        let when = When {
+            at: wall,
+            recorded: wall,
+        };
+        due.into_iter()
+            .flat_map(|(id, call)| match call {
+                Call::Unshelve => {
+                    let kind = TransitionKind::Unshelved;
+                    self.moved(&id, &Event::Release, kind, when, "its time is over")
+                }
+                Call::Realarm => {
+                    let after = words::duration(care.realarm.unwrap_or_default());
+                    let note = format!("it stands {after} after it was acknowledged");
+                    self.moved(&id, &Event::Realarm, TransitionKind::Realarmed, when, &note)
+                }
+                Call::Escalate => {
+                    if let Some(page) = self.0.get_mut(&id) {
+                        page.escalated = true;
+                    }
+                    let after = words::duration(care.escalate.unwrap_or_default());
+                    let note = format!("nobody acknowledged it within {after}");
+                    self.told(&id, TransitionKind::Escalated, when, &note)
+                }
+            })
+            .collect()
+    }
+}
+
+impl Page {
+    fn due(&mut self, care: &Care, wall: Stamp) -> Option<Call> {
+        let alarm = &self.alarm;
+        // One saved by an older program counts from the first tick.
+        let since = *self.so_since.get_or_insert(wall);
+        let stood = wall.seconds() - since.seconds();
+        match alarm.suppression {
+            Suppression::Shelved { until } => return (wall >= until).then_some(Call::Unshelve),
+            Suppression::Design { .. } | Suppression::OutOfService => return None,
+            Suppression::None => {}
+        }
+        if alarm.condition == Condition::Absent {
+            return None;
+        }
+        let over = |limit: Option<f64>| limit.is_some_and(|limit| stood >= limit);
+        match alarm.acknowledgement {
+            Acknowledgement::Acknowledged => over(care.realarm).then_some(Call::Realarm),
+            Acknowledgement::Unacknowledged => {
+                (!self.escalated && over(care.escalate)).then_some(Call::Escalate)
+            }
+        }
     }
 }
 

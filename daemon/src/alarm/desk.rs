@@ -291,10 +291,13 @@ impl Desk {
         blind.watch(book, &self.settings, why, recorded)
     }
 
-    /// The wall clock passed an instant: channels that gave nothing for too long are told.
+    /// The wall clock passed an instant: channels that gave nothing for too long are told, shelved alarms come back, and
+    /// those that nobody has seen for too long are told again.
     pub fn tick(&mut self, wall: Stamp) -> Vec<Transition> {
         let State { book, blind, .. } = &mut self.state;
-        blind.tick(book, &self.settings, wall)
+        let mut transitions = blind.tick(book, &self.settings, wall);
+        transitions.extend(book.tick(&self.settings.care, wall));
+        transitions
     }
 }
 
@@ -365,3 +368,6 @@ impl State {
 
 #[cfg(test)]
 mod tests;
+
+#[cfg(test)]
+mod care_tests;

@@ -19,5 +19,5 @@ pub use desk::{Desk, DeskError, Outcome};
 pub use life::{Event, Life, Refusal, step};
 pub use notice::NOTICE;
 pub use settings::{
-    AlarmSettings, BlindSettings, ChannelWatch, LimitSettings, Priorities, Side, WatchAlarm,
+    AlarmSettings, BlindSettings, Care, ChannelWatch, LimitSettings, Priorities, Side, WatchAlarm,
 };

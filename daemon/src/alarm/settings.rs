@@ -19,6 +19,8 @@ pub struct AlarmSettings {
     pub blind: BlindSettings,
     /// Channels whose silence is told.
     pub channels: Vec<ChannelWatch>,
+    /// What the wall clock brings about.
+    pub care: Care,
 }
 
 impl AlarmSettings {
@@ -33,6 +35,28 @@ impl AlarmSettings {
             watch: WatchAlarm::default(),
             blind: BlindSettings::default(),
             channels: Vec::new(),
+            care: Care::default(),
+        }
+    }
+}
+
+/// What the wall clock brings about, by the journal's ticks.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Care {
+    /// Longest shelving \[s, above 0\].
+    pub shelve_at_most: f64,
+    /// An acknowledged alarm that stands for so long must be seen again \[s, above 0\]; `None` for never.
+    pub realarm: Option<f64>,
+    /// An alarm that nobody has acknowledged for so long is told again as escalated \[s, above 0\]; `None` for never.
+    pub escalate: Option<f64>,
+}
+
+impl Default for Care {
+    fn default() -> Self {
+        Self {
+            shelve_at_most: 7.0 * 86_400.0,
+            realarm: None,
+            escalate: None,
         }
     }
 }

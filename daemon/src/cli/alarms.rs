@@ -1,7 +1,8 @@
-//! `borewake alarms`: lists alarms, acknowledges and adopts them, through the running daemon.
+//! `borewake alarms`: lists alarms, acknowledges, shelves and adopts them, through the running daemon.
 
 use std::path::{Path, PathBuf};
 
+use borewake_model::units::Dimension;
 use clap::{Args, Subcommand};
 use serde_json::json;
 
@@ -13,16 +14,18 @@ use crate::control::{self, ControlError};
 use crate::record::{AlarmId, AlarmState, AlarmView, Command, CommandKind, Priority, Reply, Stamp};
 use crate::store::Reader;
 
-/// Lists alarms, acknowledges and adopts them, through the running daemon
+/// Lists alarms, acknowledges, shelves and adopts them, through the running daemon
 #[derive(Debug, Args)]
 #[command(after_help = "\
 Examples:
   borewake alarms site.toml
   borewake alarms site.toml acknowledge watch --by jm --note 'crew is on its way'
+  borewake alarms site.toml shelve limit-O-2-above --for '8 h' --by jm --note 'gauge is being changed'
   borewake alarms site.toml adopt watch --occurrence 2 --by jm --note 'old well plugged, leak accepted'
 
 To acknowledge says that somebody has seen it, not that it is mended. To adopt takes the finding into the model, so that
-the watch goes on past it. Ends with 2 where the daemon refuses, with 3 where no daemon runs.")]
+the watch goes on past it. To shelve, or to take out of service, holds an alarm back: it goes on being judged and recorded,
+and comes back as unacknowledged if it still stands. Ends with 2 where the daemon refuses, with 3 where no daemon runs.")]
 pub(super) struct Alarms {
     /// The site file
     #[arg(value_name = "SITE")]
@@ -41,6 +44,31 @@ enum Act {
     Acknowledge(Named),
     /// Takes the finding of an alarm of the watch into the model
     Adopt(Named),
+    /// Holds an alarm back for a while; it comes back by itself
+    Shelve {
+        #[command(flatten)]
+        named: Named,
+        /// For how long, such as '8 h' or '2 d'
+        #[arg(long = "for", value_name = "TIME", value_parser = time)]
+        span: f64,
+    },
+    /// Brings a shelved alarm back before its time
+    Unshelve(Named),
+    /// Takes an alarm out of service for maintenance, until it is put back
+    TakeOut(Named),
+    /// Puts an alarm back into service
+    PutBack(Named),
+    /// Resets a latched alarm whose condition is gone
+    Reset(Named),
+}
+
+fn time(text: &str) -> Result<f64, String> {
+    let seconds = Dimension::Time.parse(text).map_err(|e| e.to_string())?;
+    if seconds > 0.0 {
+        Ok(seconds)
+    } else {
+        Err("give a time above zero, such as '8 h'".to_owned())
+    }
 }
 
 /// One alarm, and who asks.
@@ -63,23 +91,50 @@ struct Named {
 impl Alarms {
     pub(super) fn run(self, context: &Context) -> Result<Exit, Failure> {
         let folder = config::load(&self.site)?.store.folder;
-        match self.act.unwrap_or(Act::List) {
-            Act::List => list(&folder, context),
-            Act::Acknowledge(named) => {
-                let (by, note, alarm, occurrence) = named.resolve(&folder)?;
-                let kind = CommandKind::Acknowledge { alarm, occurrence };
-                act(&folder, &Command { by, note, kind }, context)
-            }
-            Act::Adopt(named) => {
-                let (by, note, alarm, occurrence) = named.resolve(&folder)?;
-                let kind = CommandKind::Adopt {
-                    alarm,
-                    occurrence,
-                    adoption: None,
-                };
-                act(&folder, &Command { by, note, kind }, context)
-            }
-        }
+        let (named, kind): (Named, Box<dyn Fn(AlarmId, u32) -> CommandKind>) =
+            match self.act.unwrap_or(Act::List) {
+                Act::List => return list(&folder, context),
+                Act::Acknowledge(named) => (
+                    named,
+                    Box::new(|alarm, occurrence| CommandKind::Acknowledge { alarm, occurrence }),
+                ),
+                Act::Adopt(named) => (
+                    named,
+                    Box::new(|alarm, occurrence| CommandKind::Adopt {
+                        alarm,
+                        occurrence,
+                        adoption: None,
+                    }),
+                ),
+                Act::Shelve { named, span } => {
+                    let until = Stamp::from_seconds(Stamp::now().seconds() + span);
+                    let kind = move |alarm, occurrence| CommandKind::Shelve {
+                        alarm,
+                        occurrence,
+                        until,
+                    };
+                    (named, Box::new(kind))
+                }
+                Act::Unshelve(named) => (
+                    named,
+                    Box::new(|alarm, occurrence| CommandKind::Unshelve { alarm, occurrence }),
+                ),
+                Act::TakeOut(named) => (
+                    named,
+                    Box::new(|alarm, occurrence| CommandKind::TakeOut { alarm, occurrence }),
+                ),
+                Act::PutBack(named) => (
+                    named,
+                    Box::new(|alarm, occurrence| CommandKind::PutBack { alarm, occurrence }),
+                ),
+                Act::Reset(named) => (
+                    named,
+                    Box::new(|alarm, occurrence| CommandKind::Reset { alarm, occurrence }),
+                ),
+            };
+        let (by, note, alarm, occurrence) = named.resolve(&folder)?;
+        let kind = kind(alarm, occurrence);
+        act(&folder, &Command { by, note, kind }, context)
     }
 }
 

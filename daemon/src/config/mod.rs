@@ -31,8 +31,8 @@ pub use read::read;
 pub use sdi12::{Sdi12Address, Sdi12Channel, Sdi12Command, Sdi12Kind, Sdi12Source};
 pub use secret::{Secret, SecretError, SecretFile};
 pub use site::{
-    GaugeSettings, GaugeString, HttpSettings, LimitSettings, Meter, MqttPublish, PastRate,
-    PatternChannel, PublishSettings, Reference, Side, Site, StoreSettings, WatchConfig,
+    AlarmCare, GaugeSettings, GaugeString, HttpSettings, LimitSettings, Meter, MqttPublish,
+    PastRate, PatternChannel, PublishSettings, Reference, Side, Site, StoreSettings, WatchConfig,
     WellSettings,
 };
 pub use source::{

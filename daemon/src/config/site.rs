@@ -48,6 +48,8 @@ pub struct Site {
     pub limits: Vec<LimitSettings>,
     /// Where events go, in file order.
     pub publish: Vec<PublishSettings>,
+    /// What the wall clock brings about for alarms.
+    pub care: AlarmCare,
     /// Where the page and its data are served.
     pub http: HttpSettings,
     /// What was accepted but is not acted on, or looks odd.
@@ -276,6 +278,27 @@ pub struct MqttPublish {
     pub endpoint: MqttEndpoint,
     /// Root of all topics, without slash at its end; the site's id follows.
     pub topic_root: String,
+}
+
+/// What the wall clock brings about for alarms.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub struct AlarmCare {
+    /// Longest shelving.
+    pub shelve_at_most: Duration,
+    /// An acknowledged alarm that stands for so long must be seen again; `None` for never.
+    pub realarm: Option<Duration>,
+    /// An alarm that nobody has acknowledged for so long is told again as escalated; `None` for never.
+    pub escalate: Option<Duration>,
+}
+
+impl Default for AlarmCare {
+    fn default() -> Self {
+        Self {
+            shelve_at_most: Duration::from_secs(7 * 86_400),
+            realarm: None,
+            escalate: None,
+        }
+    }
 }
 
 /// Where the page and its data are served.

@@ -3,7 +3,7 @@
 use std::time::Duration;
 
 use super::{KeeperSettings, Pace};
-use crate::alarm::{AlarmSettings, ChannelWatch, LimitSettings, Side};
+use crate::alarm::{AlarmSettings, Care, ChannelWatch, LimitSettings, Side};
 use crate::config::{self, Site};
 use crate::watch::blocks::{BlockPlan, WellFeed};
 
@@ -56,6 +56,11 @@ fn alarm_settings(site: &Site) -> AlarmSettings {
     AlarmSettings {
         limits,
         channels,
+        care: Care {
+            shelve_at_most: site.care.shelve_at_most.as_secs_f64(),
+            realarm: site.care.realarm.map(|d| d.as_secs_f64()),
+            escalate: site.care.escalate.map(|d| d.as_secs_f64()),
+        },
         ..AlarmSettings::new(site.names(), site.watch.block.as_secs_f64())
     }
 }

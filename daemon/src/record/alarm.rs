@@ -216,6 +216,20 @@ pub enum TransitionKind {
     Revised,
     /// Its finding was taken into the model.
     Adopted,
+    /// A person shelved it.
+    Shelved,
+    /// It came back from the shelf, by itself or by a person.
+    Unshelved,
+    /// A person took it out of service.
+    TakenOut,
+    /// A person put it back into service.
+    PutBack,
+    /// A person reset it.
+    Reset,
+    /// It was acknowledged so long ago that it must be seen again.
+    Realarmed,
+    /// Nobody acknowledged it in time.
+    Escalated,
 }
 
 /// One step in the life of an alarm; history is append-only.

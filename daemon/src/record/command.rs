@@ -2,7 +2,7 @@
 
 use serde::{Deserialize, Serialize};
 
-use super::{Adoption, AlarmId, Snapshot};
+use super::{Adoption, AlarmId, Snapshot, Stamp};
 
 /// A request from a person, by message.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
@@ -25,6 +25,43 @@ pub enum CommandKind {
     Show,
     /// Acknowledge one occurrence of one alarm.
     Acknowledge {
+        /// Which alarm.
+        alarm: AlarmId,
+        /// Which occurrence was seen.
+        occurrence: u32,
+    },
+    /// Hold back one alarm until an instant; it comes back by itself.
+    Shelve {
+        /// Which alarm.
+        alarm: AlarmId,
+        /// Which occurrence was seen.
+        occurrence: u32,
+        /// When it comes back.
+        until: Stamp,
+    },
+    /// Bring a shelved alarm back before its time.
+    Unshelve {
+        /// Which alarm.
+        alarm: AlarmId,
+        /// Which occurrence was seen.
+        occurrence: u32,
+    },
+    /// Take an alarm out of service for maintenance; it stays out until a person puts it back.
+    TakeOut {
+        /// Which alarm.
+        alarm: AlarmId,
+        /// Which occurrence was seen.
+        occurrence: u32,
+    },
+    /// Put an alarm back into service.
+    PutBack {
+        /// Which alarm.
+        alarm: AlarmId,
+        /// Which occurrence was seen.
+        occurrence: u32,
+    },
+    /// Reset a latched alarm whose condition is gone.
+    Reset {
         /// Which alarm.
         alarm: AlarmId,
         /// Which occurrence was seen.

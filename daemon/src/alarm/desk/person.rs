@@ -3,9 +3,10 @@
 use super::super::book::When;
 use super::super::life::{Event, Refusal};
 use super::super::watch::watch_id;
+use super::super::words;
 use super::Desk;
 use crate::record::{
-    Adoption, AlarmId, Command, CommandKind, Reply, Stamp, Transition, TransitionKind,
+    Adoption, AlarmId, Command, CommandKind, Reply, Stamp, Suppression, Transition, TransitionKind,
 };
 
 impl Desk {
@@ -35,6 +36,11 @@ impl Desk {
             CommandKind::Acknowledge { alarm, occurrence } => {
                 self.acknowledge(alarm, *occurrence, command, wall)
             }
+            CommandKind::Shelve { .. }
+            | CommandKind::Unshelve { .. }
+            | CommandKind::TakeOut { .. }
+            | CommandKind::PutBack { .. }
+            | CommandKind::Reset { .. } => self.hold(command, wall),
             CommandKind::Adopt {
                 alarm,
                 occurrence,
@@ -77,6 +83,95 @@ impl Desk {
             )),
             Err(why) => Err(format!("{id} cannot be acknowledged: {why}")),
         }
+    }
+
+    /// Holds an alarm back, brings it back, or resets it.
+    fn hold(
+        &mut self,
+        command: &Command,
+        wall: Stamp,
+    ) -> Result<(Option<Transition>, String), String> {
+        let (id, occurrence) = match &command.kind {
+            CommandKind::Shelve {
+                alarm, occurrence, ..
+            }
+            | CommandKind::Unshelve { alarm, occurrence }
+            | CommandKind::TakeOut { alarm, occurrence }
+            | CommandKind::PutBack { alarm, occurrence }
+            | CommandKind::Reset { alarm, occurrence } => (alarm, *occurrence),
+            _ => return Err("this holds nothing back".to_owned()),
+        };
+        self.occurrence(id, occurrence)?;
+        let held = self.state.book.get(id).map(|a| a.suppression.clone());
+        let held = held.unwrap_or(Suppression::None);
+        let why = !command.note.trim().is_empty();
+        let (event, kind) = match &command.kind {
+            CommandKind::Shelve { until, .. } => {
+                let longest = self.settings.care.shelve_at_most;
+                let span = until.seconds() - wall.seconds();
+                if !why {
+                    return Err("say why it is shelved: a note is due".to_owned());
+                }
+                if span <= 0.0 {
+                    return Err(format!("{until} is over; give an instant to come"));
+                }
+                if span > longest {
+                    return Err(format!(
+                        "an alarm is shelved for at most {}; to hold it back for longer take it out of service",
+                        words::duration(longest)
+                    ));
+                }
+                if !matches!(held, Suppression::None | Suppression::Shelved { .. }) {
+                    return Err(format!("{id} is held back already; bring it back first"));
+                }
+                (Event::Shelve { until: *until }, TransitionKind::Shelved)
+            }
+            CommandKind::TakeOut { .. } => {
+                if !why {
+                    return Err("say why it is taken out of service: a note is due".to_owned());
+                }
+                if held == Suppression::OutOfService {
+                    return Err(format!("{id} is out of service already"));
+                }
+                (Event::TakeOut, TransitionKind::TakenOut)
+            }
+            CommandKind::Unshelve { .. } => {
+                if !matches!(held, Suppression::Shelved { .. }) {
+                    return Err(format!("{id} is not shelved"));
+                }
+                (Event::Release, TransitionKind::Unshelved)
+            }
+            CommandKind::PutBack { .. } => {
+                if held != Suppression::OutOfService {
+                    return Err(format!("{id} is not out of service"));
+                }
+                (Event::Release, TransitionKind::PutBack)
+            }
+            _ => (Event::Reset, TransitionKind::Reset),
+        };
+        let when = When {
+            at: wall,
+            recorded: wall,
+        };
+        let transition = self
+            .state
+            .book
+            .act(
+                id,
+                Some(&event),
+                kind,
+                when,
+                Some(&command.by),
+                &command.note,
+            )
+            .map_err(|why| format!("{id}: {why}"))?;
+        let text = match &command.kind {
+            CommandKind::Shelve { until, .. } => {
+                format!("{id} is shelved until {}", words::minute(*until))
+            }
+            _ => format!("{id} is {}", transition.alarm.state().name()),
+        };
+        Ok((Some(transition), text))
     }
 
     fn adopt(

@@ -8,7 +8,7 @@ use borewake_model::units::{DAY, Dimension, UnitSystem, YEAR};
 
 use super::super::section::{At, Section};
 use super::super::values::Sign;
-use super::super::{HttpSettings, StoreSettings, WatchConfig};
+use super::super::{AlarmCare, HttpSettings, StoreSettings, WatchConfig};
 
 const MINUTE: Duration = Duration::from_secs(60);
 const HOUR: Duration = Duration::from_secs(3600);
@@ -196,6 +196,26 @@ fn interval(text: &str) -> Option<f64> {
         .or_else(|_| Dimension::Time.parse(&format!("1 {time}")))
         .ok()?;
     Some(seconds / count).filter(|i| i.is_finite())
+}
+
+/// Reads `[alarms]`: what the wall clock brings about.
+pub(super) fn alarms(root: &mut Section<'_>) -> AlarmCare {
+    let mut care = AlarmCare::default();
+    let Some(mut table) = root.table("alarms") else {
+        return care;
+    };
+    let longest = 366 * ONE_DAY;
+    if let Some(span) = table.duration("shelve_at_most", MINUTE, longest) {
+        care.shelve_at_most = span.value;
+    }
+    care.realarm = table
+        .duration("realarm", MINUTE, longest)
+        .map(|span| span.value);
+    care.escalate = table
+        .duration("escalate", MINUTE, longest)
+        .map(|span| span.value);
+    table.close();
+    care
 }
 
 /// Reads `[http]`; without it the page is served where it is by default.

@@ -64,6 +64,7 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
     let sources = sources::sources(&mut root, folder);
     let limits = limits::limits(&mut root, &gauges);
     let publish = limits::publish(&mut root, folder);
+    let care = basics::alarms(&mut root);
     let http = basics::http(&mut root);
     root.close();
 
@@ -103,6 +104,7 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
         watch,
         limits,
         publish,
+        care,
         http,
         notes: Vec::new(),
     }

@@ -146,6 +146,72 @@ struct Said {
     occurrence: u32,
     #[serde(default)]
     note: String,
+    /// When a shelved alarm comes back.
+    until: Option<Stamp>,
+}
+
+/// What can be done to an alarm.
+#[derive(Debug, Clone, Copy)]
+enum Act {
+    Acknowledge,
+    Shelve,
+    Unshelve,
+    Reset,
+    TakeOut,
+    PutBack,
+    Adopt,
+}
+
+impl Act {
+    const ALL: [(&'static str, Self); 7] = [
+        ("acknowledge", Self::Acknowledge),
+        ("shelve", Self::Shelve),
+        ("unshelve", Self::Unshelve),
+        ("reset", Self::Reset),
+        ("take-out", Self::TakeOut),
+        ("put-back", Self::PutBack),
+        ("adopt", Self::Adopt),
+    ];
+
+    fn of(name: &str) -> Result<Self, Problem> {
+        let known = Self::ALL.iter().find(|(n, _)| *n == name);
+        known.map(|(_, act)| *act).ok_or_else(|| {
+            let names = Self::ALL.map(|(name, _)| name).join(", ");
+            Problem::missing(format!("an alarm knows no act {name}; there is {names}"))
+        })
+    }
+
+    fn scope(self) -> Scope {
+        match self {
+            Self::Acknowledge | Self::Shelve | Self::Unshelve | Self::Reset => Scope::Operate,
+            Self::TakeOut | Self::PutBack | Self::Adopt => Scope::Admin,
+        }
+    }
+
+    fn command(self, alarm: AlarmId, said: &Said) -> Result<CommandKind, Problem> {
+        let occurrence = said.occurrence;
+        Ok(match self {
+            Self::Acknowledge => CommandKind::Acknowledge { alarm, occurrence },
+            Self::Shelve => {
+                let due = "until: an instant is due, such as 2031-05-02T18:00:00Z";
+                let until = said.until.ok_or_else(|| Problem::wrong(due))?;
+                CommandKind::Shelve {
+                    alarm,
+                    occurrence,
+                    until,
+                }
+            }
+            Self::Unshelve => CommandKind::Unshelve { alarm, occurrence },
+            Self::Reset => CommandKind::Reset { alarm, occurrence },
+            Self::TakeOut => CommandKind::TakeOut { alarm, occurrence },
+            Self::PutBack => CommandKind::PutBack { alarm, occurrence },
+            Self::Adopt => CommandKind::Adopt {
+                alarm,
+                occurrence,
+                adoption: None,
+            },
+        })
+    }
 }
 
 /// An act on one occurrence of an alarm.
@@ -155,16 +221,8 @@ pub(super) async fn act(
     Path((id, act)): Path<(String, String)>,
     body: Bytes,
 ) -> Result<Json<Value>, Problem> {
-    let scope = match act.as_str() {
-        "acknowledge" => Scope::Operate,
-        "adopt" => Scope::Admin,
-        _ => {
-            return Err(Problem::missing(format!(
-                "an alarm knows no act {act}; there is acknowledge and adopt"
-            )));
-        }
-    };
-    let by = who.may(scope)?.to_owned();
+    let act = Act::of(&act)?;
+    let by = who.may(act.scope())?.to_owned();
     let said: Said = serde_json::from_slice(&body).map_err(|why| {
         Problem::wrong(format!(
             "{why}; such as {{\"occurrence\": 1, \"note\": \"crew is on its way\"}}"
@@ -175,16 +233,7 @@ pub(super) async fn act(
             "note: at most {LONGEST_NOTE} characters"
         )));
     }
-    let (alarm, occurrence) = (AlarmId(id), said.occurrence);
-    let kind = if scope == Scope::Operate {
-        CommandKind::Acknowledge { alarm, occurrence }
-    } else {
-        CommandKind::Adopt {
-            alarm,
-            occurrence,
-            adoption: None,
-        }
-    };
+    let kind = act.command(AlarmId(id), &said)?;
     let note = said.note;
     let text = asking.change(Command { by, note, kind }).await?;
     Ok(Json(json!({ "done": text })))
