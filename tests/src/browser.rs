@@ -116,7 +116,7 @@ impl Browser {
             .to_owned();
         browser.call(
             "Emulation.setDeviceMetricsOverride",
-            json!({ "width": screen.width, "height": screen.height, "deviceScaleFactor": 1, "mobile": screen.touch }),
+            json!({ "width": screen.width, "height": screen.height, "screenWidth": screen.width, "screenHeight": screen.height, "deviceScaleFactor": 1, "mobile": screen.touch }),
         );
         if screen.touch {
             browser.call(
@@ -128,6 +128,10 @@ impl Browser {
         browser.call(
             "Emulation.setEmulatedMedia",
             json!({ "features": [{ "name": "prefers-color-scheme", "value": scheme }] }),
+        );
+        browser.call(
+            "Emulation.setFocusEmulationEnabled",
+            json!({ "enabled": true }),
         );
         browser.call("Page.enable", json!({}));
         browser
@@ -199,9 +203,27 @@ impl Browser {
         }
     }
 
-    /// Types text where the focus is.
-    pub fn write(&mut self, text: &str) {
+    /// Clicks into a field, empties it, and types.
+    pub fn fill(&mut self, selector: &str, text: &str) {
+        let element = format!("document.querySelector({})", json!(selector));
+        let start = Instant::now();
+        loop {
+            self.click(selector);
+            let focused = self.eval(&format!("document.activeElement === {element}"));
+            if focused == Value::Bool(true) {
+                break;
+            }
+            // A click that comes before the first picture of a dialog goes past it.
+            assert!(
+                start.elapsed() < PATIENCE,
+                "{selector} takes no focus: {}",
+                self.eval("document.activeElement.outerHTML.slice(0, 200)")
+            );
+            std::thread::sleep(Duration::from_millis(100));
+        }
+        self.eval(&format!("{element}.value = ''"));
         self.call("Input.insertText", json!({ "text": text }));
+        self.until(&format!("{element}.value === {}", json!(text)));
     }
 
     /// Presses a key, such as `Tab` or `Enter`.

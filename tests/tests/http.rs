@@ -224,10 +224,8 @@ async fn strangers_hosts_and_tokens_are_refused_clearly() {
     assert_eq!(one["alarm"]["state"], "acknowledged", "{one:#}");
     assert_eq!(one["history"][0]["by"], "jm");
     // Guessing is slowed down.
-    let last = (0..40)
-        .map(|_| Ask::get(port, "/metrics").token("guess").send().status)
-        .last();
-    assert_eq!(last, Some(429));
+    let guess = || Ask::get(port, "/metrics").token("guess").send().status;
+    assert!((0..40).any(|_| guess() == 429));
     assert_eq!(Ask::get(port, "/alive").send().status, 200);
 }
 

@@ -1,6 +1,6 @@
 // The alarms that stand, what each asks for, and the evidence of a finding.
 
-import { h, mark, put } from "./dom.js";
+import { h, mark, renew } from "./dom.js";
 import * as u from "./units.js";
 import * as w from "./words.js";
 
@@ -10,7 +10,7 @@ export function drawAlarms(place, { alarms, open, act }) {
   const ordered = w.order(alarms);
   const standing = ordered.filter(w.stands);
   const past = ordered.filter((a) => !w.stands(a));
-  put(place,
+  renew(place,
     standing.length ? standing.map((a) => card(a, open, act)) : h("p", { class: "none" }, "No alarm stands."),
     past.length ? h("details", { "data-k": "past-alarms", open: act.pastOpen(), ontoggle: (e) => act.pastOpen(e.target.open) }, h("summary", { "data-k": "past-sum" }, `${past.length} back to normal lately`), past.slice(0, MANY).map((a) => card(a, open, act))) : null);
 }
@@ -59,7 +59,7 @@ function evidence(f, act) {
       h("h3", {}, "When, how large, where"),
       h("dl", {},
         h("dt", {}, "Onset"), h("dd", {}, `${u.instant(f.onset)} ± ${u.span(f.onset_sd_s)}`),
-        f.size ? [h("dt", {}, "Size"), h("dd", {}, u.size(f.size))] : null,
+        f.size ? [h("dt", {}, "Size"), h("dd", {}, u.size(f.size, f.cause))] : null,
         f.place ? [h("dt", {}, "Place"), h("dd", {}, w.place(f.place))] : null,
         h("dt", {}, "Evidence"), h("dd", {}, `e^${u.number(f.log_mixture, 0)} to 1 against nothing; an alarm is due at e^${u.number(f.log_threshold, 0)}`))),
     h("div", {},
@@ -71,11 +71,11 @@ function evidence(f, act) {
 /// What happened, newest first.
 export function drawPast(place, steps) {
   if (!steps.length) {
-    put(place, h("p", { class: "none" }, "Nothing has happened yet."));
+    renew(place, h("p", { class: "none" }, "Nothing has happened yet."));
     return;
   }
   const told = gathered(steps);
-  put(place, h("div", { class: "wide", tabindex: 0, role: "region", "aria-label": "What happened" }, h("table", {},
+  renew(place, h("div", { class: "wide", tabindex: 0, role: "region", "aria-label": "What happened" }, h("table", {},
     h("thead", {}, h("tr", {}, ["when", "alarm", "what", "who", "says"].map((t) => h("th", { scope: "col" }, t)))),
     h("tbody", {}, told.slice(0, 40).map((t) => h("tr", {},
       h("td", { class: "l" }, u.instant(t.at)),

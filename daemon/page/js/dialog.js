@@ -46,7 +46,9 @@ export async function confirm({ title, text, label, say, sign, hours, due }) {
   const note = h("textarea", { id: "note", rows: 3, maxlength: 2000, required: due });
   const long = hours && h("select", { id: "hours" }, [[1, "1 hour"], [4, "4 hours"], [8, "8 hours"], [24, "1 day"], [72, "3 days"], [167, "1 week"]].map(([n, words]) => h("option", { value: n, selected: n === 8 }, words)));
   const place = $("dialog");
-  const swap = h("button", { type: "button", hidden: true, onclick: () => (place.close("swap"), sign()) }, "Another token");
+  // Asked anew only once this dialog is closed: its closing must not be taken for that of the next.
+  const swapToken = () => (place.addEventListener("close", () => sign(), { once: true }), place.close("swap"));
+  const swap = h("button", { type: "button", hidden: true, onclick: swapToken }, "Another token");
   await dialog(
     h("form", { method: "dialog", onsubmit: async (e) => {
       if (e.submitter?.value === "no") return;

@@ -24,6 +24,17 @@ export function put(place, ...children) {
   if (held) place.querySelector(`[data-k="${CSS.escape(held)}"]`)?.focus({ preventScroll: true });
 }
 
+const shown = new WeakMap();
+
+/// As `put`, but leaves the place alone where nothing would look otherwise: a click that is under way is not lost.
+export function renew(place, ...children) {
+  const next = document.createElement("div");
+  next.append(...children.flat(3).filter((c) => c !== null && c !== undefined && c !== false));
+  if (shown.get(place) === next.innerHTML) return;
+  shown.set(place, next.innerHTML);
+  put(place, [...next.childNodes]);
+}
+
 /// The mark of a priority: its shape says what its colour says.
 export function mark(priority) {
   const shapes = {

@@ -1,6 +1,6 @@
 // Whether the daemon itself can be relied on now: sources, gauges, store, model.
 
-import { h, put } from "./dom.js";
+import { h, renew } from "./dom.js";
 import * as u from "./units.js";
 import * as w from "./words.js";
 
@@ -11,7 +11,7 @@ export function drawKeeping(place, { site, snapshot, departures }) {
   const now = Date.parse(snapshot.taken) / 1000;
   const blind = Object.entries(snapshot.blind);
   const names = [...new Set([...Object.keys(snapshot.sources), ...site.channels.map((c) => c.source)])].sort();
-  put(place, h("div", { class: "keep" },
+  renew(place, h("div", { class: "keep" },
     h("div", {},
       h("h3", {}, "Model"),
       h("dl", {},

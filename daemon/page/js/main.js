@@ -1,6 +1,6 @@
 // Asks, holds what was answered, and draws what changed.
 
-import { $, h, mark, put } from "./dom.js";
+import { $, h, mark, renew } from "./dom.js";
 import { Refused, get, listen, name, post, token } from "./api.js";
 import * as u from "./units.js";
 import * as w from "./words.js";
@@ -117,14 +117,14 @@ const keep = (key, value) => {
 function draw() {
   contact();
   if (state.needs && !state.site) {
-    put($("said"), h("p", { class: "line" }, "This daemon asks for a token before it shows anything."), h("p", { class: "more" }, state.needs), h("div", { class: "row" }, h("button", { type: "button", class: "main", "data-k": "need", onclick: sign }, "Give a token")));
+    renew($("said"), h("p", { class: "line" }, "This daemon asks for a token before it shows anything."), h("p", { class: "more" }, state.needs), h("div", { class: "row" }, h("button", { type: "button", class: "main", "data-k": "need", onclick: sign }, "Give a token")));
     return;
   }
   if (!state.site) return;
   const { site, snapshot, departures } = state;
   $("site-name").textContent = site.name;
   $("asof").textContent = departures.at.length ? `judged up to ${u.instant(departures.until)}${site.replay ? ", a played log" : ""}` : "nothing judged yet";
-  put($("notice"), h("strong", {}, "It advises; it is no safety function. "), site.notice);
+  renew($("notice"), h("strong", {}, "It advises; it is no safety function. "), site.notice);
   said();
   planNow();
   strip.draw({ data: departures, blind: snapshot.blind, range: state.range, open: state.gauge, onset: onset(), cursor: state.cursor });
@@ -146,14 +146,17 @@ function said() {
   place.classList.toggle("calm", !standing.length);
   if (!lead) {
     const line = snapshot.health.watch ? "No limit is passed, and the watch is blind." : `Nothing stands out: ${site.gauges.length - blind} of ${site.gauges.length} gauges show what the wells and the ground explain.`;
-    put(place, h("p", { class: "line" }, line), h("p", { class: "more" }, snapshot.health.watch ?? "Silence is not safety: keep a dead-man’s switch on the heartbeat, outside this machine."));
+    renew(place, h("p", { class: "line" }, line), h("p", { class: "more" }, snapshot.health.watch ?? "Silence is not safety: keep a dead-man’s switch on the heartbeat, outside this machine."));
     return;
   }
   const rest = standing.length - 1;
+  // The gist in large, the particulars below it.
+  const [, head, tail] = /^(.*?)(?:[:;] (.*))?$/s.exec(lead.summary);
+  const quiet = standing.filter((a) => a !== lead && w.held(a)).length;
   const others = unseen.filter((a) => a !== lead).length;
-  put(place,
-    h("p", { class: "line" }, h("span", { class: `p-${lead.priority}` }, mark(lead.priority)), lead.finding ? w.finding(lead.finding) : lead.summary),
-    h("p", { class: "more" }, [lead.finding?.place ? `About ${w.place(lead.finding.place)}. ` : "", `${w.capital(lead.priority)} priority; ${w.state(lead.state)}. `, rest ? `${rest} more ${rest > 1 ? "alarms" : "alarm"}${others ? `, ${others} not yet seen by anybody` : ""}.` : "It is the only alarm."]),
+  renew(place,
+    h("p", { class: "line" }, h("span", { class: `p-${lead.priority}` }, mark(lead.priority)), lead.finding ? w.finding(lead.finding) : w.capital(head)),
+    h("p", { class: "more" }, [lead.finding || !tail ? "" : `${w.capital(tail)}. `, lead.finding?.place ? `About ${w.place(lead.finding.place)}. ` : "", `${w.capital(lead.priority)} priority; ${w.state(lead.state)}. `, rest ? `${rest} more ${rest > 1 ? "alarms" : "alarm"}${others ? `, ${others} not yet seen by anybody` : ""}${quiet ? `, ${quiet} held back` : ""}.` : "It is the only alarm."]),
     h("div", { class: "row" },
       w.waits(lead) ? h("button", { type: "button", class: "main", "data-k": "said-ack", onclick: () => acts.acknowledge(lead) }, "Acknowledge") : null,
       lead.finding ? h("button", { type: "button", "data-k": "said-why", onclick: () => why(lead) }, "Why?") : null,

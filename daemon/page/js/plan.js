@@ -9,7 +9,7 @@ let WIDTH = 520;
 
 function bounds(site, found) {
   const points = [...site.wells, ...site.gauges, ...site.neighbours].map((p) => p.at).filter(Boolean);
-  if (found) points.push([found.x, found.y]);
+  if (found) points.push([found.x - found.r, found.y - found.r], [found.x + found.r, found.y + found.r]);
   let [x0, x1, y0, y1] = [Infinity, -Infinity, Infinity, -Infinity];
   for (const [x, y] of points) {
     x0 = Math.min(x0, x); x1 = Math.max(x1, x); y0 = Math.min(y0, y); y1 = Math.max(y1, y);
@@ -42,7 +42,7 @@ function places(site, layer) {
 
 export function drawPlan(place, { site, layer, setLayer, found, ratios, blind, open, at }) {
   WIDTH = Math.min(620, Math.max(300, place.clientWidth || 520));
-  const [x0, x1, y0, y1] = bounds(site, found && { x: found.x, y: found.y });
+  const [x0, x1, y0, y1] = bounds(site, found && { x: found.x, y: found.y, r: found.radius_90_m });
   const scale = WIDTH / (x1 - x0);
   const height = Math.min(640, Math.max(260, (y1 - y0) * scale));
   const X = (x) => (x - x0) * scale;
@@ -89,9 +89,9 @@ export function drawPlan(place, { site, layer, setLayer, found, ratios, blind, o
     ...drawn,
     s("g", { "aria-hidden": "true", stroke: "var(--soft)", fill: "none" },
       s("path", { d: `M12 ${height - 12}v-5m0 5h${bar * scale}v-5` }),
-      s("path", { d: `M${WIDTH - 18} 34v-24m-5 8l5-8 5 8` })),
+      s("path", { d: `M${WIDTH - 18} ${height - 26}v-24m-5 8l5-8 5 8` })),
     label(16, height - 18, u.quantity("length", bar), "var(--soft)"),
-    label(WIDTH - 23, 48, "N", "var(--soft)"));
+    label(WIDTH - 23.5, height - 10, "N", "var(--soft)"));
   const pick = site.layers.length > 1 &&
     h("div", { class: "pick", role: "group", "aria-label": "Layer" }, site.layers.map((l, i) => h("button", { type: "button", "aria-pressed": String(i === layer), "data-k": `layer-${i}`, onclick: () => setLayer(i) }, l.name)));
   const key = h("p", { class: "key" },

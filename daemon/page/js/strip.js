@@ -97,7 +97,7 @@ export class Strip {
     const rows = data.gauges.map((row) => this.row(row, open === row.name, onset));
     const { from, to } = data.shown;
     const ticks = u.timeTicks(from, to, this.place.clientWidth < 560 ? 4 : 8);
-    const axis = h("div", { class: "axis" }, h("span", {}, `rows ±${top} sd`), h("div", { class: "ticks", "aria-hidden": "true" }, ticks.filter(([t]) => t > from + (this.place.clientWidth < 560 ? 0.12 : 0.05) * (to - from) && t < to - 0.04 * (to - from)).map(([t, text]) => h("span", { style: { left: `${((t - from) / (to - from)) * 100}%` } }, text))), h("span", {}), slider);
+    const axis = h("div", { class: "axis" }, h("span", {}, `±${top} sd`), h("div", { class: "ticks", "aria-hidden": "true" }, ticks.filter(([t]) => t > from + (this.place.clientWidth < 560 ? 0.12 : 0.05) * (to - from) && t < to - 0.04 * (to - from)).map(([t, text]) => h("span", { style: { left: `${((t - from) / (to - from)) * 100}%` } }, text))), h("span", {}), slider);
     put(this.place, rows, axis);
     this.move(cursor);
   }

@@ -16,7 +16,7 @@ export const chosenZone = () => zone;
 function pressureUnit(size) {
   if (system === "field") return [PSI, "psi"];
   if (system === "head") return [WATER, "m H₂O"];
-  return Math.abs(size) >= 2e6 ? [1e6, "MPa"] : [1e3, "kPa"];
+  return Math.abs(size) >= 2e6 ? [1e6, "MPa"] : Math.abs(size) >= 100 || size === 0 ? [1e3, "kPa"] : [1, "Pa"];
 }
 
 const units = {
@@ -46,18 +46,21 @@ export function quantity(kind, si, sign) {
 }
 
 export function spread(kind, si, sd, sign) {
-  const [factor, label] = unit(kind, Math.max(Math.abs(si), Math.abs(sd)));
+  // Millions of Pascal known to a few are read as thousands.
+  const size = Math.max(Math.abs(si), Math.abs(sd));
+  const [factor, label] = unit(kind, kind === "pressure" && sd < 1000 ? Math.min(size, 1.9e6) : size);
   const p = places(Math.abs(sd / factor));
   return `${sign && si > 0 ? "+" : ""}${number(si / factor, p)} ± ${number(sd / factor, p)} ${label}`;
 }
 
-export function size(of) {
+export function size(of, cause) {
   if (of.unit === "m3/s") return spread("rate", of.value, of.sd);
   if (of.unit === "Pa") return spread("pressure", of.value, of.sd, true);
   if (of.unit === "Pa/s") {
     const year = 365.25 * DAY;
     return `${spread("pressure", of.value * year, of.sd * year, true)} a year`;
   }
+  if (cause === "well-skin") return `${number(of.value, places(of.sd))} ± ${number(of.sd, places(of.sd))}`;
   const p = places(Math.abs(of.sd * 100));
   return `${number(of.value * 100, p)} ± ${number(of.sd * 100, p)} %`;
 }

@@ -65,13 +65,13 @@ export const blind = (why) => BLIND[typeof why === "string" ? why.replace(/([a-z
 const WAITS = { unacknowledged: 0, "returned-unacknowledged": 1, "latched-unacknowledged": 1 };
 export const waits = (alarm) => alarm.state in WAITS;
 export const stands = (alarm) => alarm.state !== "normal";
+export const held = (alarm) => ["shelved", "suppressed", "out-of-service"].includes(alarm.state);
 const PRIORITIES = ["high", "medium", "low"];
 
 /// Most urgent first: what is so now, by priority, unseen before seen; then what is over and unseen, what is held back,
 /// and what is normal. That somebody has seen a leak does not make it less.
 export function order(alarms) {
-  const held = ["shelved", "suppressed", "out-of-service"];
-  const stage = (a) => (a.state === "normal" ? 30 : held.includes(a.state) ? 20 : a.condition === "present" ? 0 : 10);
+  const stage = (a) => (a.state === "normal" ? 30 : held(a) ? 20 : a.condition === "present" ? 0 : 10);
   const rank = (a) => stage(a) + 2 * PRIORITIES.indexOf(a.priority) + (waits(a) ? 0 : 1);
   return [...alarms].sort((a, b) => rank(a) - rank(b) || Date.parse(b.since) - Date.parse(a.since));
 }
@@ -96,6 +96,6 @@ export function finding(of) {
       : of.cause === "unexplained"
         ? "Something is off that no cause on the list explains"
         : `Something is off; perhaps ${cause(lead)}`;
-  const size = of.size && of.cause !== "unexplained" ? `: ${u.size(of.size)}` : "";
+  const size = of.size && of.cause !== "unexplained" ? `: ${u.size(of.size, of.cause)}` : "";
   return `${head}${size}, since ${u.instant(of.onset)}.`;
 }

@@ -21,3 +21,4 @@ pub use notice::NOTICE;
 pub use settings::{
     AlarmSettings, BlindSettings, Care, ChannelWatch, LimitSettings, Priorities, Side, WatchAlarm,
 };
+pub(crate) use words::{duration, minute, plain, size};

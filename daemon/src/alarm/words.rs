@@ -80,7 +80,7 @@ pub(super) fn value(kind: ChannelKind, si: f64, units: UnitSystem) -> String {
 }
 
 /// A length of time in the unit that reads best.
-pub(super) fn duration(seconds: f64) -> String {
+pub(crate) fn duration(seconds: f64) -> String {
     let (value, unit) = if seconds >= 2.0 * DAY {
         (seconds / DAY, "d")
     } else if seconds >= 5400.0 {
@@ -95,7 +95,7 @@ pub(super) fn duration(seconds: f64) -> String {
 }
 
 /// An instant to the minute, in UTC.
-pub(super) fn minute(at: Stamp) -> String {
+pub(crate) fn minute(at: Stamp) -> String {
     let text = at.to_string();
     match (text.get(..10), text.get(11..16)) {
         (Some(day), Some(time)) => format!("{day} {time} UTC"),
@@ -103,7 +103,8 @@ pub(super) fn minute(at: Stamp) -> String {
     }
 }
 
-fn size(size: &Size, cause: Cause, units: UnitSystem) -> String {
+/// A size with its standard deviation.
+pub(crate) fn size(size: &Size, cause: Cause, units: UnitSystem) -> String {
     let unit = match size.unit {
         SizeUnit::CubicMetrePerSecond => rate_unit(units),
         SizeUnit::Pascal => pressure_unit(units, size.value),
@@ -118,7 +119,8 @@ fn size(size: &Size, cause: Cause, units: UnitSystem) -> String {
     spread(size.value, size.sd, unit)
 }
 
-fn plain(cause: Cause) -> &'static str {
+/// A cause in plain words.
+pub(crate) fn plain(cause: Cause) -> &'static str {
     match cause {
         Cause::Leak => "leak",
         Cause::CrossLayer => "flow between layers",

@@ -14,6 +14,7 @@ mod interrupt;
 mod logs;
 mod progress;
 mod replay;
+mod report;
 mod run;
 mod summary;
 pub mod table;
@@ -59,6 +60,7 @@ enum Verb {
     Demo(demo::Demo),
     Export(export::Export),
     Replay(replay::Replay),
+    Report(report::Report),
     Run(run::Run),
     Token(token::TokenVerb),
     Verify(verify::Verify),
@@ -73,6 +75,7 @@ impl Verb {
             Self::Demo(verb) => verb.run(context),
             Self::Export(verb) => verb.run(context),
             Self::Replay(verb) => verb.run(context),
+            Self::Report(verb) => verb.run(context),
             Self::Run(verb) => verb.run(context),
             Self::Token(verb) => verb.run(context),
             Self::Verify(verb) => verb.run(context),

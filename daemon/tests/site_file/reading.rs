@@ -105,6 +105,14 @@ fn the_whole_file_is_read_to_si() {
     );
     let PublishSettings::Mqtt(publish) = &site.publish[0];
     assert_eq!(publish.topic_root, "borewake");
+    assert_eq!(site.http.listen, Some("127.0.0.1:8070".parse().unwrap()));
+    assert_eq!(site.http.hosts, ["watch.example"]);
+    let hours = |h: u64| Duration::from_secs(3600 * h);
+    assert_eq!(site.care.shelve_at_most, hours(24));
+    assert_eq!(
+        (site.care.realarm, site.care.escalate),
+        (Some(hours(12)), None)
+    );
 }
 
 #[test]
@@ -127,7 +135,6 @@ fn what_is_accepted_and_not_acted_on_is_noted() {
         [
             "neighbour \"old quarry well\": meter",
             "source \"field broker\": url",
-            "http: listen",
         ]
     );
 }

@@ -252,3 +252,75 @@ fn host_name(host: &str) -> &str {
     }
     host.rsplit_once(':').map_or(host, |(name, _)| name)
 }
+
+#[cfg(test)]
+mod tests {
+    use axum::http::Request;
+
+    use super::*;
+
+    fn admit(guard: &Guard, peer: &str, headers: &[(&str, &str)]) -> Result<Who, Problem> {
+        let mut request = Request::get("/api/v1/site");
+        for (name, value) in headers {
+            request = request.header(*name, *value);
+        }
+        let (parts, ()) = request.body(()).unwrap().into_parts();
+        guard.admit(&parts, peer.parse().unwrap())
+    }
+
+    #[test]
+    fn whoever_is_not_of_this_machine_is_a_stranger() {
+        let folder = tempfile::tempdir().unwrap();
+        let guard = Guard::new(vec!["watch.example".into()], folder.path().to_owned());
+        let host = ("host", "watch.example:443");
+        assert_eq!(admit(&guard, "127.0.0.1:9", &[host]).unwrap(), Who::Local);
+        assert_eq!(admit(&guard, "[::1]:9", &[host]).unwrap(), Who::Local);
+        assert_eq!(
+            admit(&guard, "[::ffff:127.0.0.1]:9", &[host]).unwrap(),
+            Who::Local
+        );
+        assert_eq!(
+            admit(&guard, "192.0.2.7:9", &[host]).unwrap(),
+            Who::Stranger
+        );
+        let proxied = [host, ("forwarded", "for=192.0.2.7")];
+        assert_eq!(
+            admit(&guard, "127.0.0.1:9", &proxied).unwrap(),
+            Who::Stranger
+        );
+        assert!(Who::Stranger.reads().is_err() && Who::Local.reads().is_ok());
+        assert!(
+            Who::Local.may(Scope::Operate).is_err(),
+            "no change without a token"
+        );
+    }
+
+    #[test]
+    fn hosts_are_names_we_go_by() {
+        for (host, name) in [
+            ("127.0.0.1:8070", "127.0.0.1"),
+            ("[::1]:8070", "::1"),
+            ("[::1]", "::1"),
+            ("localhost", "localhost"),
+            ("a.b:1", "a.b"),
+        ] {
+            assert_eq!(host_name(host), name);
+        }
+        let folder = tempfile::tempdir().unwrap();
+        let guard = Guard::new(Vec::new(), folder.path().to_owned());
+        assert!(admit(&guard, "127.0.0.1:9", &[("host", "evil.example")]).is_err());
+        assert!(admit(&guard, "127.0.0.1:9", &[]).is_err());
+        let sly = [("host", "localhost"), ("origin", "http://localhost.evil")];
+        assert!(admit(&guard, "127.0.0.1:9", &sly).is_err());
+    }
+
+    #[test]
+    fn one_address_asking_too_much_leaves_room_for_others() {
+        let folder = tempfile::tempdir().unwrap();
+        let guard = Guard::new(Vec::new(), folder.path().to_owned());
+        let host = [("host", "localhost")];
+        let refused = (0..2000).any(|_| admit(&guard, "192.0.2.7:9", &host).is_err());
+        assert!(refused);
+        assert!(admit(&guard, "192.0.2.8:9", &host).is_ok());
+    }
+}

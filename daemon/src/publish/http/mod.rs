@@ -31,6 +31,3 @@ mod stream;
 
 pub use asking::Behind;
 pub use server::{HttpError, Listening, bind, serve, serve_when_free};
-
-#[cfg(test)]
-mod tests;
