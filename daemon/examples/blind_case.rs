@@ -201,11 +201,7 @@ fn days(at: Stamp, since: Stamp) -> f64 {
 }
 
 fn read(site: &Site, logs: &[PathBuf]) -> Result<History> {
-    let channels = site
-        .channels
-        .iter()
-        .map(|(id, channel)| (id.clone(), channel.conversion));
-    let mut log = LogReader::open(logs, channels)?;
+    let mut log = LogReader::of_site(logs, site)?;
     let mut history = History::default();
     while let Some(delivery) = log.next_delivery()? {
         history.add(delivery.readings);

@@ -24,11 +24,8 @@ use crate::reduce::{Factors, layer_of};
 const UNSEEN: f64 = 0.15;
 
 impl Fit<'_> {
-    pub(super) fn finish(
-        &mut self,
-        blocks: &[Block],
-        span: (i64, i64),
-    ) -> Result<Calibration, ModelError> {
+    pub(super) fn finish(&mut self, span: (i64, i64)) -> Result<Calibration, ModelError> {
+        let blocks = self.history;
         let mut columns = self.columns()?;
         let images = self.suspect().map(|_| self.images(&columns));
         let mut history = History::run(&mut columns, self.history, images.as_ref())?;
@@ -49,6 +46,8 @@ impl Fit<'_> {
             .map(|b| Sampled::of(b, wells, gauges))
             .collect::<Result<_, _>>()?;
         let left = regression.left(&solved.mean);
+        // What was filled in has no innovation of its own.
+        let read = |row: usize| history.missing.binary_search(&row).is_err();
         let unsteady: Vec<Unsteady> = columns
             .frame
             .in_wells
@@ -57,6 +56,7 @@ impl Fit<'_> {
                 let squares: Vec<(f64, f64)> = sampled
                     .iter()
                     .enumerate()
+                    .filter(|(block, _)| read(block * gauges + gauge))
                     .map(|(block, s)| {
                         (
                             relative_square(s, well, &self.priors.rate),
@@ -84,8 +84,9 @@ impl Fit<'_> {
         let summary = |left: &DVector<f64>| -> Vec<(f64, f64)> {
             (0..gauges)
                 .map(|gauge| {
+                    let rows = (gauge..left.len()).step_by(gauges.max(1));
                     let series: Vec<f64> =
-                        left.iter().skip(gauge).step_by(gauges).copied().collect();
+                        rows.filter(|&row| read(row)).map(|row| left[row]).collect();
                     spread_and_correlation(&series)
                 })
                 .collect()

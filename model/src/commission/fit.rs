@@ -34,7 +34,8 @@ const FILLS: usize = 2;
 /// Rounds in which all pairs are taken to see one ground; what makes them differ is learned about the best such ground,
 /// or parameters and differences would run off against each other.
 const PLAIN_ROUNDS: usize = 4;
-/// Rounds in which a barrier is looked for, where one is: in the first the whole fan, then about the last one found.
+/// Rounds by which scales are learned later where a barrier is looked for: first it is to be found. In the first of them
+/// the whole fan is searched, then to the end about the last one found.
 const SEARCH_ROUNDS: usize = 3;
 /// The first of them: parameters have come near their best without a barrier.
 const SEARCH_FROM: usize = 3;
@@ -79,8 +80,12 @@ pub fn commission(
         let mut other = Fit::start(ground, reduced, history, settings, block)?;
         other.state.barrier = Some(None);
         other.state.scales.patch = [EVEN; 2];
-        other.settle(&mut |share| progress(0.5 + 0.3 * share))?;
-        let log_evidence = other.log_evidence - fit.log_evidence - OCCAM;
+        let settled = other.settle(&mut |share| progress(0.5 + 0.3 * share));
+        // A trial that fails is no reason to lose the fit that stands.
+        let log_evidence = match settled {
+            Ok(()) => other.log_evidence - fit.log_evidence - OCCAM,
+            Err(_) => f64::NEG_INFINITY,
+        };
         if let Some(Some(suspect)) = &mut other.state.barrier {
             suspect.log_evidence = log_evidence;
             if log_evidence > BELIEVED {
@@ -89,7 +94,7 @@ pub fn commission(
         }
     }
     progress(0.8);
-    let calibration = fit.finish(history, (first.index, last.index))?;
+    let calibration = fit.finish((first.index, last.index))?;
     progress(1.0);
     Ok(calibration)
 }
@@ -298,15 +303,12 @@ impl<'a> Fit<'a> {
         let mut columns = self.columns()?;
         let let_in = self.let_in();
         let searched = self.state.barrier.is_some() && round >= SEARCH_FROM;
-        let images = (searched || self.suspect().is_some()).then(|| self.images(&columns));
+        let images = searched.then(|| self.images(&columns));
         let mut history = History::run(&mut columns, self.history, images.as_ref())?;
         self.priors.pair_spread.clone_from(&history.pair_spread);
         if round == 0 {
             columns = self.columns()?;
             history = History::run(&mut columns, self.history, None)?;
-        }
-        if self.suspect().is_some() && !searched {
-            history.take(0, STRENGTH_SD);
         }
         match &self.state.rest {
             Some(rest) => history.fill(rest),
@@ -324,6 +326,9 @@ impl<'a> Fit<'a> {
         }
         if searched {
             self.search(&columns, &mut history, &regression, &whitener)?;
+            if let Some(rest) = &self.state.rest {
+                history.fill(rest);
+            }
             regression = history.whiten(&whitener);
         }
         let solved = self.learn_scales(&columns, &regression, history.tail(), round)?;

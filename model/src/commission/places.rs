@@ -138,10 +138,12 @@ impl Places {
     fn mix(&self, at: Point, layer: usize) -> Option<Vec<(usize, f64)>> {
         let (x, y) = (at[0] - self.centre[0], at[1] - self.centre[1]);
         let radius = x.hypot(y);
-        if radius > self.reach || self.rings < 4 {
+        let nearest = NEAREST * self.half_width;
+        let outermost = nearest * (RING_STEP * (self.rings.max(1) - 1) as f64).exp();
+        if !(nearest..=outermost.min(self.reach)).contains(&radius) || self.rings < 4 {
             return None;
         }
-        let ring = (radius / (NEAREST * self.half_width)).max(1.0).ln() / RING_STEP;
+        let ring = (radius / nearest).ln() / RING_STEP;
         let turn = y.atan2(x).rem_euclid(TAU) / TAU * f64::from(AROUND);
         let first_ring = whole(ring - 1.0).min(self.rings - 4);
         let rings = cubic(ring - first_ring as f64);
@@ -262,7 +264,7 @@ fn polar(
 ) -> usize {
     let mut radii = Vec::new();
     let mut radius = NEAREST * half_width;
-    while radius < reach * RING_STEP.exp() && radius < 0.98 * ground.edge.distance {
+    while radius < reach * RING_STEP.exp() && radius < WITHIN_EDGE * ground.edge.distance {
         radii.push(radius);
         radius *= RING_STEP.exp();
     }

@@ -145,13 +145,8 @@ impl Adopted {
                 let foot = adoption.place.map_or(places.centre, |p| [p.x, p.y]);
                 let mut order: Vec<usize> = (0..places.lines.len()).collect();
                 let away = |i: &usize| {
-                    places.lines.get(*i).map_or(f64::MAX, |l| {
-                        let at = [
-                            places.centre[0] + l.distance * l.azimuth.cos(),
-                            places.centre[1] + l.distance * l.azimuth.sin(),
-                        ];
-                        distance(at, foot)
-                    })
+                    let line = places.lines.get(*i);
+                    line.map_or(f64::MAX, |l| distance(l.foot(places.centre), foot))
                 };
                 order.sort_by(|a, b| away(a).total_cmp(&away(b)));
                 order.truncate(8);
@@ -394,7 +389,7 @@ fn source(
     if ports.ncols() == 0 {
         return What::Nothing;
     }
-    let spread = adoption.onset_sd.max(3_600.0);
+    let spread = adoption.spread();
     let mut parts = Vec::new();
     for growth in GROWTHS.into_iter().step_by(2) {
         for shift in [-1.5, -0.75, 0.0, 0.75, 1.5] {

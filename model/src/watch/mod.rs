@@ -43,10 +43,20 @@ pub struct Adoption {
 }
 
 impl Adoption {
+    /// How far before the stated onset the finding may have begun \[s\].
+    pub(crate) fn doubt(&self) -> f64 {
+        1.5 * self.spread()
+    }
+
+    /// Spread of the onset, never less than an hour \[s\].
+    pub(crate) fn spread(&self) -> f64 {
+        self.onset_sd.max(3_600.0)
+    }
+
     /// First block that must be stepped with this adoption: a checkpoint due at it or before it serves.
     #[must_use]
     pub fn first_block(&self, block_length: f64) -> i64 {
-        let early = self.onset - (1.5 * self.onset_sd).max(5.0 * block_length);
+        let early = self.onset - self.doubt().max(5.0 * block_length);
         #[expect(
             clippy::cast_possible_truncation,
             reason = "a block number far below 2^53"

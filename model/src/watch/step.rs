@@ -627,6 +627,7 @@ impl Watch {
             block: self.block,
             mismatch: self.mismatch,
         };
+        let barrier = self.barrier_evidence();
         let state = &mut self.state;
         if state.ladder.onsets.is_empty() {
             return;
@@ -640,10 +641,7 @@ impl Watch {
         }
         state.ladder.thin(now, self.bank.horizon);
         let mut sums = Weights::sums(&state.ladder);
-        sums.push((
-            Cause::Barrier,
-            state.barriers.evidence(self.scales.barrier).0 / (1.0 + self.mismatch / IMAGED),
-        ));
+        sums.push((Cause::Barrier, barrier));
         let prior = -KINDS.ln();
         let stuck: Vec<(usize, i64, u32)> = (0..self.columns.frame.gauges)
             .filter_map(|g| {
@@ -814,11 +812,14 @@ impl Watch {
     #[must_use]
     pub fn evidence(&self) -> Vec<(Cause, f64)> {
         let mut sums = Weights::sums(&self.state.ladder);
-        sums.push((
-            Cause::Barrier,
-            self.state.barriers.evidence(self.scales.barrier).0,
-        ));
+        sums.push((Cause::Barrier, self.barrier_evidence()));
         sums
+    }
+
+    /// Log evidence of a barrier, as it enters the mixture.
+    fn barrier_evidence(&self) -> f64 {
+        let (log, _) = self.state.barriers.evidence(self.scales.barrier);
+        log / (1.0 + self.mismatch / IMAGED)
     }
 
     /// Bytes of the running sums (for capacity planning).

@@ -235,7 +235,12 @@ impl Weights<'_> {
                 Some(Hypothesis {
                     log: log + prior,
                     onset,
-                    part: 1.0 - (mean[1] / mean[0]).clamp(0.0, 1.0),
+                    // Without any effect yet nothing tells when in the block it began.
+                    part: if mean[0] == 0.0 {
+                        0.5
+                    } else {
+                        1.0 - (mean[1] / mean[0]).clamp(0.0, 1.0)
+                    },
                     index,
                     mean: mean[0],
                     sd: covariance[(0, 0)].max(0.0).sqrt(),
@@ -475,19 +480,13 @@ impl Weights<'_> {
         );
         let mean = SEALING + off;
         let at = self.places.lines.get(line)?;
-        let foot = [
-            self.places.centre[0] + at.distance * at.azimuth.cos(),
-            self.places.centre[1] + at.distance * at.azimuth.sin(),
-        ];
+        let foot = at.foot(self.places.centre);
         let total = log_sum(each.as_slice());
         let mut spread: Vec<(f64, f64)> = each
             .iter()
             .zip(&self.places.lines)
             .map(|(log, l)| {
-                let other = [
-                    self.places.centre[0] + l.distance * l.azimuth.cos(),
-                    self.places.centre[1] + l.distance * l.azimuth.sin(),
-                ];
+                let other = l.foot(self.places.centre);
                 (distance(other, foot), (log - total).exp())
             })
             .collect();
