@@ -14,7 +14,7 @@ use crate::expect::columns::Columns;
 use crate::expect::whitener::Whitener;
 use crate::ground::Ground;
 use crate::weigh::barrier::{Images, SEALING};
-use crate::weigh::evidence::log_bayes_about;
+use crate::weigh::evidence::log_bayes_positive_about;
 
 /// Standard deviation of an image's strength about [`SEALING`].
 pub(crate) const STRENGTH_SD: f64 = 0.3;
@@ -51,7 +51,7 @@ fn explained(regression: &Regression, solved: &Solved, lines: &DMatrix<f64>) -> 
             let signature = lines.column(line);
             let n = signature.norm_squared() - shares.column(line).dot(&known.column(line));
             let c = signature.dot(&left);
-            log_bayes_about(c, n.max(0.0), SEALING, STRENGTH_SD * STRENGTH_SD)
+            log_bayes_positive_about(c, n.max(0.0), SEALING, STRENGTH_SD * STRENGTH_SD)
         })
         .collect()
 }

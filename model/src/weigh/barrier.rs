@@ -11,7 +11,7 @@
 use nalgebra::{DMatrix, DVector};
 use serde::{Deserialize, Serialize};
 
-use super::evidence::{log_bayes_about, log_sum};
+use super::evidence::{log_bayes_positive_about, log_sum};
 use crate::commission::Line;
 use crate::expect::posterior::{Cleared, Lesson};
 use crate::expect::whitener::Whitener;
@@ -111,7 +111,7 @@ impl Barriers {
     /// Log evidence of a barrier anywhere in the fan, with the log evidence of each line.
     pub(crate) fn evidence(&self, variance: f64) -> (f64, DVector<f64>) {
         let each = DVector::from_fn(self.cleared.sums.c.len(), |line, _| {
-            log_bayes_about(
+            log_bayes_positive_about(
                 self.cleared.sums.c[line],
                 self.cleared.sums.n[(line, line)],
                 SEALING,

@@ -30,6 +30,14 @@ pub fn log_bayes_about(c: f64, n: f64, expected: f64, variance: f64) -> f64 {
     log_bayes(c - n * expected, n, variance) + c * expected - 0.5 * n * expected * expected
 }
 
+/// The same where the amplitude is known to be positive as well: what lies below zero is cut off.
+#[must_use]
+pub fn log_bayes_positive_about(c: f64, n: f64, expected: f64, variance: f64) -> f64 {
+    let (off, sd) = amplitude(c - n * expected, n, variance);
+    log_bayes_about(c, n, expected, variance) + log_normal_cdf((expected + off) / sd)
+        - log_normal_cdf(expected / variance.sqrt())
+}
+
 /// Mean and standard deviation of the amplitude's posterior.
 #[must_use]
 pub fn amplitude(c: f64, n: f64, variance: f64) -> (f64, f64) {
@@ -175,6 +183,21 @@ mod tests {
                 "{x}: {got}"
             );
         }
+    }
+
+    #[test]
+    fn an_amplitude_about_a_value_integrates_the_half_line() {
+        let (c, n, expected, g) = (-0.9_f64, 6.0_f64, 0.9_f64, 0.09_f64);
+        let (step, mut a) = (1e-4, 5e-5);
+        let (mut with, mut without) = (0.0, 0.0);
+        while a < 6.0 {
+            let prior = (-0.5 * (a - expected).powi(2) / g).exp() * step;
+            with += (c * a - 0.5 * n * a * a).exp() * prior;
+            without += prior;
+            a += step;
+        }
+        let direct = (with / without).ln();
+        assert!((log_bayes_positive_about(c, n, expected, g) - direct).abs() < 1e-6);
     }
 
     #[test]
