@@ -64,9 +64,12 @@ pub async fn compare(
     let mut compare_from = first;
     for taken in 0..=adoptions.len() {
         let until = adoptions.get(taken).map_or(last + 1, |a| a.block);
-        let keep_at = adoptions
-            .get(taken)
-            .map(|a| a.first_block(length).max(first));
+        // The state before the first of all that are still to come: a later one may reach further back.
+        let to_come = adoptions.get(taken..).unwrap_or_default();
+        let keep_at = to_come
+            .iter()
+            .map(|a| a.first_block(length).max(first))
+            .min();
         let known = adoptions.get(..taken).unwrap_or_default();
         let mut watch =
             Watch::restore(&ground.commissioned, &ground.settings, known, state.clone())?;
