@@ -121,18 +121,31 @@ pub async fn probe(site: &Site, wait: Duration) -> Vec<SourceProbe> {
 /// Gives the readings of instruments their values, those of all sources together: one may need another's.
 fn appraise(site: &Site, probes: &mut [SourceProbe]) {
     let slots = || probes.iter().flat_map(|p| &p.channels);
-    let readings = slots().filter_map(|c| c.reading.clone()).collect();
-    let mut delivery = [Delivery {
-        source: "probe".into(),
-        readings,
-        rejected: Vec::new(),
-        ack: None,
-    }];
-    Appraiser::new(site).appraise(&mut delivery);
-    let [delivery] = delivery;
+    let came: Vec<Reading> = slots().filter_map(|c| c.reading.clone()).collect();
+    let mut appraiser = Appraiser::new(site);
+    let mut valued = |readings: Vec<Reading>| {
+        let mut delivery = [Delivery {
+            source: "probe".into(),
+            readings,
+            rejected: Vec::new(),
+            ack: None,
+        }];
+        appraiser.appraise(&mut delivery);
+        let [delivery] = delivery;
+        delivery.readings
+    };
+    let mut readings = valued(came.clone());
+    // What another needs may have been heard after it: once all have been heard, those without a value are asked again.
+    for (reading, came) in readings.iter_mut().zip(came) {
+        if reading.value.is_none()
+            && let Some(again) = valued(vec![came]).pop()
+        {
+            *reading = again;
+        }
+    }
     let all = probes.iter_mut().flat_map(|p| &mut p.channels);
     let with = all.filter(|c| c.reading.is_some());
-    for (channel, reading) in with.zip(delivery.readings) {
+    for (channel, reading) in with.zip(readings) {
         if reading.value.is_none() && channel.why.is_none() {
             let flag = reading.quality.flag();
             channel.why = Some(format!(
