@@ -378,3 +378,21 @@ fn a_leak_is_found_and_silent_once_adopted() {
         "an adopted leak is no news: {after:?}"
     );
 }
+
+#[test]
+fn a_site_without_neighbours_tells_a_leak_in_finite_numbers() {
+    let mut alone = commissioned().clone();
+    alone.ground.neighbours.clear();
+    alone.reduced.neighbours = DMatrix::zeros(alone.reduced.neighbours.nrows(), 0);
+    let mut watch = Watch::new(&alone, &settings(), &[]).unwrap();
+    let mut found = None;
+    for block in &record(4e-4, 0.0, 7) {
+        found = watch.step(block).unwrap().finding.or(found);
+    }
+    let found = found.expect("a leak of a twentieth of the flow is found");
+    assert_eq!(found.causes[0].cause, Cause::Leak);
+    for weighed in &found.causes {
+        assert_ne!(weighed.cause, Cause::Interference);
+        assert!(weighed.log_evidence.is_finite(), "{weighed:?}");
+    }
+}

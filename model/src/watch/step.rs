@@ -642,6 +642,8 @@ impl Watch {
         state.ladder.thin(now, self.bank.horizon);
         let mut sums = Weights::sums(&state.ladder);
         sums.push((Cause::Barrier, barrier));
+        // A cause that this site cannot have, such as a neighbour's where none is declared, has no evidence to tell.
+        sums.retain(|(_, log)| log.is_finite());
         let prior = -KINDS.ln();
         let stuck: Vec<(usize, i64, u32)> = (0..self.columns.frame.gauges)
             .filter_map(|g| {
