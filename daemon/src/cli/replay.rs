@@ -124,6 +124,13 @@ pub(super) async fn open_player(
     logs: &[PathBuf],
 ) -> anyhow::Result<(Player, mpsc::UnboundedReceiver<Happening>)> {
     let log = LogReader::of_site(logs, site)?;
+    let Some(start) = log.next_instant() else {
+        let names: Vec<String> = logs.iter().map(|l| l.display().to_string()).collect();
+        anyhow::bail!(
+            "{}: no row has a time that can be read; write it with its zone, as 2031-03-01T00:00:00Z",
+            names.join(", ")
+        );
+    };
     let ground = GroundFile::read(ground_folder, &site.ground_digest());
     if let Err(why) = &ground {
         eprintln!(
@@ -136,7 +143,6 @@ pub(super) async fn open_player(
         .context("the store of the replay")?
         .store;
     let settings = KeeperSettings::of(site, Pace::Lockstep, true);
-    let start = log.next_instant().unwrap_or_default();
     let (events, told) = mpsc::unbounded_channel();
     let keeper = Keeper::open(settings, store, ground, start, Some(events)).await?;
     Ok((Player::new(keeper, log), told))
