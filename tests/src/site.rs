@@ -5,6 +5,34 @@ use std::path::{Path, PathBuf};
 
 use tempfile::TempDir;
 
+/// Ground, one well and one gauge of a dewatered pit, without sources. Channels: `w1.flow`, `p1.pressure`.
+pub const PIT: &str = r#"[site]
+id = "pit"
+name = "Pit"
+[store]
+folder = "pit"
+[[layer]]
+name = "gravel"
+transmissivity = "35 m2/d"
+storativity = 2e-4
+[edge]
+kind = "open"
+distance = "2 km"
+[[well]]
+name = "W-1"
+at = ["0 m", "0 m"]
+layer = "gravel"
+radius = "0.2 m"
+rate = "w1.flow"
+[[gauge]]
+name = "P-1"
+at = ["20 m", "0 m"]
+layer = "gravel"
+channel = "p1.pressure"
+noise = "50 Pa"
+drift = "1 kPa/yr"
+"#;
+
 /// Ground, one well and two gauges. Channels: `w.rate`, `w.pressure`, `o.pressure`.
 const GROUND: &str = r#"
 [site]

@@ -2,38 +2,14 @@
 
 use std::time::Duration;
 
+use borewake_tests::site::PIT;
 use borewake_tests::{Broker, ModbusTcpServer, Publisher, Sdi12Line, borewake};
 
 /// A site with a source of each kind that answers or speaks.
 fn site(modbus: u16, sdi12: &str, broker: &str) -> String {
     format!(
         r#"
-[site]
-id = "pit"
-name = "Pit"
-[store]
-folder = "pit"
-[[layer]]
-name = "gravel"
-transmissivity = "35 m2/d"
-storativity = 2e-4
-[edge]
-kind = "open"
-distance = "2 km"
-[[well]]
-name = "W-1"
-at = ["0 m", "0 m"]
-layer = "gravel"
-radius = "0.2 m"
-rate = "w1.flow"
-[[gauge]]
-name = "P-1"
-at = ["20 m", "0 m"]
-layer = "gravel"
-channel = "p1.pressure"
-noise = "50 Pa"
-drift = "1 kPa/yr"
-[[source]]
+{PIT}[[source]]
 name = "gateway"
 kind = "modbus-tcp"
 host = "127.0.0.1"

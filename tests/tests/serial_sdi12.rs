@@ -7,6 +7,7 @@ use borewake::config;
 use borewake::intake::clock::SystemClock;
 use borewake::intake::{Conversions, Surroundings, start};
 use borewake::record::{ClockEpoch, Quality};
+use borewake_tests::site::PIT;
 use borewake_tests::{PATIENCE, Sdi12Line};
 use tokio::sync::watch;
 
@@ -14,32 +15,7 @@ use tokio::sync::watch;
 fn site(port: &str) -> config::Site {
     let text = format!(
         r#"
-[site]
-id = "pit"
-name = "Pit"
-[store]
-folder = "pit"
-[[layer]]
-name = "gravel"
-transmissivity = "35 m2/d"
-storativity = 2e-4
-[edge]
-kind = "open"
-distance = "2 km"
-[[well]]
-name = "W-1"
-at = ["0 m", "0 m"]
-layer = "gravel"
-radius = "0.2 m"
-rate = "w1.flow"
-[[gauge]]
-name = "P-1"
-at = ["20 m", "0 m"]
-layer = "gravel"
-channel = "p1.pressure"
-noise = "50 Pa"
-drift = "1 kPa/yr"
-[[source]]
+{PIT}[[source]]
 name = "flow"
 kind = "log"
 [[source.channel]]

@@ -1,7 +1,7 @@
 //! Makes a ground file: mesh, weak form, reduction, calibration, and the watch brought to the end of history.
 
 use borewake_model::ModelError;
-use borewake_model::commission::{CommissionSettings, Commissioned, Places, commission, places};
+use borewake_model::commission::{CommissionSettings, Commissioned, Places, commission};
 use borewake_model::ground::mesh::MeshOptions;
 use borewake_model::ground::{Ground, Patches};
 use borewake_model::reduce::{ReduceOptions, Reduced, reduce_patched};
@@ -49,11 +49,11 @@ pub fn reduce_ground(
     progress(Stage::Discretise, 0.0);
     let discrete = discretise(ground, Scheme::Quadratic, &MeshOptions::default())?;
     progress(Stage::Reduce, 0.0);
-    let mut at = Vec::new();
-    for (point, layer) in places(ground) {
+    let array = Places::of(ground);
+    let mut at = Vec::with_capacity(array.all.len());
+    for &(point, layer) in &array.all {
         at.push((point, layer, discrete.locate(point, layer)?));
     }
-    let array = Places::of(ground);
     let patches = discrete.patches(
         ground,
         &Patches {

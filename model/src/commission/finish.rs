@@ -8,7 +8,8 @@
 use nalgebra::{DMatrix, DVector};
 
 use super::fit::Fit;
-use super::history::{History, Regression};
+use super::history::{History, Keep, Regression};
+use super::places::Places;
 use super::rates::{Rates, spread_and_correlation};
 use super::scales::{FAR, LONG};
 use super::suspect::STRENGTH_SD;
@@ -19,6 +20,7 @@ use crate::block::Block;
 use crate::expect::columns::Kind;
 use crate::expect::drive::Sampled;
 use crate::reduce::{Factors, layer_of};
+use crate::weigh::barrier::Images;
 
 /// Error of a source's response by what is not known of the ground next to it, as a share of the spread between patches.
 const UNSEEN: f64 = 0.15;
@@ -27,9 +29,17 @@ impl Fit<'_> {
     pub(super) fn finish(&mut self, span: (i64, i64)) -> Result<Calibration, ModelError> {
         let blocks = self.history;
         let mut columns = self.columns()?;
-        let images = self.suspect().map(|_| self.images(&columns));
-        let mut history = History::run(&mut columns, self.history, images.as_ref())?;
-        if self.suspect().is_some() {
+        let places = Places::of(self.ground);
+        let suspect = self.state.suspect;
+        let line = suspect.and_then(|s| places.line(self.ground, s.azimuth, s.distance));
+        let keep = if line.is_some() {
+            Keep::Means
+        } else {
+            Keep::Columns
+        };
+        let mut history = History::run(&mut columns, self.history, keep)?;
+        if let Some(line) = line {
+            history.look_at(&columns, &Images::new(&columns.frame.modal, &[line]));
             history.take(0, STRENGTH_SD);
         }
         if let Some(rest) = &self.state.rest {
@@ -145,7 +155,7 @@ impl Fit<'_> {
             factor_sd,
             patches,
             patched: columns.patched.clone(),
-            suspect: self.suspect(),
+            suspect,
             skins: self.state.skins.clone(),
             skin_sd,
             noise: (0..gauges).map(|g| innovation[(g, g)].sqrt()).collect(),

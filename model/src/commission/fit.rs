@@ -7,8 +7,7 @@
 
 use nalgebra::DVector;
 
-use super::history::{History, Regression};
-use super::places::Places;
+use super::history::{History, Keep, Regression};
 use super::rates::{Rates, typical_count};
 use super::suspect::{BELIEVED, OCCAM, STRENGTH_SD, Suspect, best_line};
 use super::{Calibration, CommissionSettings};
@@ -21,7 +20,6 @@ use crate::expect::patched::Patched;
 use crate::expect::whitener::Whitener;
 use crate::ground::Ground;
 use crate::reduce::{Factors, Reduced};
-use crate::weigh::barrier::Images;
 
 /// The same of a meter's gain in one rate epoch.
 pub(super) const TYPICAL_GAIN: f64 = 0.005;
@@ -78,7 +76,7 @@ pub fn commission(
     if fit.state.scales.patch.iter().copied().fold(0.0, f64::max) > UNEVEN {
         // So uneven a ground may be an even one with a barrier.
         let mut other = Fit::start(ground, reduced, history, settings, block)?;
-        other.state.barrier = Some(None);
+        other.sought = true;
         other.state.scales.patch = [EVEN; 2];
         let settled = other.settle(&mut |share| progress(0.5 + 0.3 * share));
         // A trial that fails is no reason to lose the fit that stands.
@@ -86,7 +84,7 @@ pub fn commission(
             Ok(()) => other.log_evidence - fit.log_evidence - OCCAM,
             Err(_) => f64::NEG_INFINITY,
         };
-        if let Some(Some(suspect)) = &mut other.state.barrier {
+        if let Some(suspect) = &mut other.state.suspect {
             suspect.log_evidence = log_evidence;
             if log_evidence > BELIEVED {
                 fit = other;
@@ -122,6 +120,8 @@ pub(super) struct Fit<'a> {
     pub(super) settings: &'a CommissionSettings,
     pub(super) block: f64,
     pub(super) priors: Priors,
+    /// Whether an undeclared barrier is sought.
+    sought: bool,
     pub(super) state: State,
     /// Log marginal likelihood of the history in the last round.
     pub(super) log_evidence: f64,
@@ -134,8 +134,8 @@ pub(super) struct State {
     pub(super) skins: Vec<f64>,
     pub(super) noise: Noise,
     pub(super) scales: Scales,
-    /// Whether a barrier is looked for, and the one found.
-    pub(super) barrier: Option<Option<Suspect>>,
+    /// The barrier that history asks for, where one was sought and found.
+    pub(super) suspect: Option<Suspect>,
     /// Coefficients of the last round less what it moved into parameters and skins.
     pub(super) rest: Option<DVector<f64>>,
 }
@@ -218,6 +218,7 @@ impl<'a> Fit<'a> {
             settings,
             block,
             priors,
+            sought: false,
             state: State {
                 factors,
                 skins,
@@ -228,25 +229,20 @@ impl<'a> Fit<'a> {
                     past: 0.01,
                     patch: [TYPICAL_PATCH; 2],
                 },
-                barrier: None,
+                suspect: None,
                 rest: None,
             },
             log_evidence: f64::NEG_INFINITY,
         })
     }
 
-    pub(super) fn suspect(&self) -> Option<Suspect> {
-        self.state.barrier.flatten()
-    }
-
     /// First round in which scales are learned.
     pub(super) fn let_in(&self) -> usize {
-        PLAIN_ROUNDS
-            + if self.state.barrier.is_some() {
-                SEARCH_ROUNDS
-            } else {
-                0
-            }
+        if self.sought {
+            PLAIN_ROUNDS + SEARCH_ROUNDS
+        } else {
+            PLAIN_ROUNDS
+        }
     }
 
     /// All rounds.
@@ -263,10 +259,9 @@ impl<'a> Fit<'a> {
             let moved = self.round(round)?;
             if round > let_in && self.log_evidence > best.0 {
                 // The evidence is that of the parameters before this round's step, under the scales learned in it.
-                let (scales, barrier) = (self.state.scales.clone(), self.state.barrier);
                 let state = State {
-                    scales,
-                    barrier,
+                    scales: self.state.scales.clone(),
+                    suspect: self.state.suspect,
                     ..before
                 };
                 best = (self.log_evidence, Some(state));
@@ -302,13 +297,13 @@ impl<'a> Fit<'a> {
     fn round(&mut self, round: usize) -> Result<f64, ModelError> {
         let mut columns = self.columns()?;
         let let_in = self.let_in();
-        let searched = self.state.barrier.is_some() && round >= SEARCH_FROM;
-        let images = searched.then(|| self.images(&columns));
-        let mut history = History::run(&mut columns, self.history, images.as_ref())?;
+        let searched = self.sought && round >= SEARCH_FROM;
+        let keep = if searched { Keep::Means } else { Keep::Columns };
+        let mut history = History::run(&mut columns, self.history, keep)?;
         self.priors.pair_spread.clone_from(&history.pair_spread);
         if round == 0 {
             columns = self.columns()?;
-            history = History::run(&mut columns, self.history, None)?;
+            history = History::run(&mut columns, self.history, keep)?;
         }
         match &self.state.rest {
             Some(rest) => history.fill(rest),
@@ -389,15 +384,6 @@ impl<'a> Fit<'a> {
         Ok(moved)
     }
 
-    /// The images behind the barrier that history asks for.
-    pub(super) fn images(&self, columns: &Columns) -> Images {
-        let places = Places::of(self.ground);
-        let line = self
-            .suspect()
-            .and_then(|s| places.line(self.ground, s.azimuth, s.distance));
-        Images::new(&columns.frame.modal, line.as_slice())
-    }
-
     /// Looks for the barrier that explains most of what is left without one, and takes it in.
     fn search(
         &mut self,
@@ -407,19 +393,18 @@ impl<'a> Fit<'a> {
         whitener: &Whitener,
     ) -> Result<(), ModelError> {
         let tail = history.tail();
-        let known = self.state.barrier.take();
+        let known = self.state.suspect.take();
         let (spread, centre) = self.spread(columns, regression.z.len(), tail);
         let solved = regression.solve(&spread, &centre)?;
-        let from = known.flatten();
         let found = best_line(
             self.ground,
             columns,
             history,
             whitener,
             (regression, &solved),
-            from.as_ref(),
+            known.as_ref(),
         );
-        self.state.barrier = Some(found);
+        self.state.suspect = found;
         if found.is_some() {
             history.take(0, STRENGTH_SD);
         }

@@ -14,6 +14,15 @@ use crate::expect::drive::Sampled;
 use crate::expect::whitener::Whitener;
 use crate::weigh::barrier::Images;
 
+/// What a history keeps beside its columns.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub(crate) enum Keep {
+    /// Nothing.
+    Columns,
+    /// What undeclared barriers are made of, so that they can be looked at.
+    Means,
+}
+
 /// Raw columns of the whole history.
 #[derive(Debug, Clone)]
 pub(crate) struct History {
@@ -45,7 +54,7 @@ impl History {
     pub(crate) fn run(
         columns: &mut Columns,
         history: &[Block],
-        images: Option<&Images>,
+        keep: Keep,
     ) -> Result<Self, ModelError> {
         let (gauges, wells) = (columns.frame.gauges, columns.frame.wells);
         let mut memory = columns.start();
@@ -54,7 +63,6 @@ impl History {
         let mut raw = DMatrix::zeros(rows, 1 + fixed);
         let mut missing = Vec::new();
         let mut renewals = Vec::new();
-        let mut lines = DMatrix::zeros(rows, images.map_or(0, Images::lines));
         let mut seen = Vec::new();
         let mut pairs = DMatrix::zeros(gauges * wells, history.len());
         for (index, block) in history.iter().enumerate() {
@@ -70,9 +78,7 @@ impl History {
                     .map(|&(well, size)| (index, well, size)),
             );
             let at = index * gauges;
-            if let Some(images) = images {
-                let raw = images.raw(&columns.frame.modal, &step.means, &sampled.class);
-                lines.rows_mut(at, gauges).copy_from(&raw);
+            if keep == Keep::Means {
                 seen.push((step.means.clone(), sampled.class.clone()));
             }
             raw.view_mut((at, 1), (gauges, fixed))
@@ -119,13 +125,13 @@ impl History {
             missing,
             reference,
             pair_spread,
-            lines,
+            lines: DMatrix::zeros(rows, 0),
             seen,
             taken: 0,
         })
     }
 
-    /// Replaces the barriers looked at.
+    /// Replaces the barriers looked at; the history must have kept its means.
     pub(crate) fn look_at(&mut self, columns: &Columns, images: &Images) {
         self.lines = DMatrix::zeros(self.raw.nrows(), images.lines());
         for (index, (means, class)) in self.seen.iter().enumerate() {
@@ -155,10 +161,21 @@ impl History {
 
     /// Whitened signatures of undeclared barriers (rows by lines).
     pub(crate) fn whiten_lines(&self, whitener: &Whitener) -> DMatrix<f64> {
-        let mut state = DMatrix::zeros(whitener.states(), self.lines.ncols());
-        let mut rows = DMatrix::zeros(self.lines.nrows(), self.lines.ncols());
-        for at in (0..self.lines.nrows()).step_by(self.gauges) {
-            let block = self.lines.rows(at, self.gauges).into_owned();
+        self.whitened(whitener, &self.lines, |_, _| {})
+    }
+
+    /// Whitens rows block by block; `before` may touch the filter's states ahead of each block, by order.
+    fn whitened(
+        &self,
+        whitener: &Whitener,
+        raw: &DMatrix<f64>,
+        mut before: impl FnMut(usize, &mut DMatrix<f64>),
+    ) -> DMatrix<f64> {
+        let mut state = DMatrix::zeros(whitener.states(), raw.ncols());
+        let mut rows = DMatrix::zeros(raw.nrows(), raw.ncols());
+        for at in (0..raw.nrows()).step_by(self.gauges) {
+            before(at / self.gauges, &mut state);
+            let block = raw.rows(at, self.gauges).into_owned();
             rows.rows_mut(at, self.gauges)
                 .copy_from(&whitener.step(&mut state, &block));
         }
@@ -208,29 +225,30 @@ impl History {
         }
         Self {
             raw,
-            ..self.clone()
+            gauges: self.gauges,
+            renewals: self.renewals.clone(),
+            missing: self.missing.clone(),
+            reference: self.reference.clone(),
+            pair_spread: self.pair_spread.clone(),
+            lines: DMatrix::zeros(self.raw.nrows(), 0),
+            seen: Vec::new(),
+            taken: self.taken,
         }
     }
 
     /// Whitens everything.
     pub(crate) fn whiten(&self, whitener: &Whitener) -> Regression {
-        let mut state = DMatrix::zeros(whitener.states(), self.raw.ncols());
-        let mut rows = DMatrix::zeros(self.raw.nrows(), self.raw.ncols());
-        for at in (0..self.raw.nrows()).step_by(self.gauges) {
-            let index = at / self.gauges;
+        let rows = self.whitened(whitener, &self.raw, |index, state| {
             for (column, &(block, well, size)) in self.renewals.iter().enumerate() {
                 let first = self.raw.ncols() - self.tail() + 2 * column;
                 if block == index {
-                    whitener.renew(&mut state, first, well, size, true);
+                    whitener.renew(state, first, well, size, true);
                 }
                 if block + 1 == index {
-                    whitener.renew(&mut state, first + 1, well, size, false);
+                    whitener.renew(state, first + 1, well, size, false);
                 }
             }
-            let block = self.raw.rows(at, self.gauges).into_owned();
-            rows.rows_mut(at, self.gauges)
-                .copy_from(&whitener.step(&mut state, &block));
-        }
+        });
         Regression::of(rows)
     }
 }

@@ -76,7 +76,7 @@ impl Fit<'_> {
         for index in columns.len()..width - tail {
             spread[index] = self.state.scales.gain;
         }
-        if self.suspect().is_some() {
+        if self.state.suspect.is_some() {
             centre[width - 1] = SEALING / STRENGTH_SD;
         }
         (spread, centre)

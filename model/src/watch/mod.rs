@@ -9,6 +9,9 @@ use crate::weigh::barrier::Barriers;
 use crate::weigh::ladder::Ladder;
 
 mod band;
+mod come_and_go;
+mod conclude;
+mod expected;
 mod step;
 mod stuck;
 

@@ -7,72 +7,59 @@
 
 use nalgebra::{DMatrix, DVector};
 
+use super::expected::affected;
 use super::stuck::Stuck;
 use super::{Adoption, Blind, Live, Step, WatchSettings, WatchState, band::Band};
 use crate::ModelError;
 use crate::block::{Block, RateKnown};
 use crate::commission::{Commissioned, Places, Unsteady, calm};
 use crate::expect::adopted::{Adopted, AdoptedBlock};
-use crate::expect::columns::{Columns, Raw};
+use crate::expect::columns::Columns;
 use crate::expect::drive::{Sampled, size};
 use crate::expect::frame::Frame;
 use crate::expect::noise::Path;
-use crate::expect::posterior::{Cleared, Posterior};
+use crate::expect::posterior::Posterior;
 use crate::expect::whitener::Whitener;
-use crate::finding::{Cause, Expectation, Finding, Size, Subject, Weighed};
+use crate::finding::{Cause, Subject};
 use crate::weigh::bank::Bank;
 use crate::weigh::barrier::{Barriers, Images};
-use crate::weigh::evidence::log_sum;
 use crate::weigh::ladder::{Ladder, Meters};
 use crate::weigh::scales::Scales;
-use crate::weigh::verdict::{Detail, Weights};
 
 /// Blocks learned and weighed at a time.
-const BATCH: i64 = 3;
+pub(super) const BATCH: i64 = 3;
 /// Longest age of an onset that is still weighed \[s\].
 const HORIZON: f64 = 100.0 * 86_400.0;
-/// Prior standard deviation of a missing reading about its expectation \[Pa\].
-const UNKNOWN: f64 = 1e5;
 /// Missing readings of one gauge that keep a column.
 const MISSING: usize = 24;
-/// An onset of age a is weighed again after a share of its age.
-const AGAIN: i64 = 20;
-/// Kinds of cause that share the prior.
-const KINDS: f64 = 7.0;
-/// Where sources' responses are off by this share, they look, as rates go, like images: the images' evidence counts half.
-const IMAGED: f64 = 0.1;
 /// What the threshold is raised by, for a null that is never quite right: chosen by hand, until a simulated null says it.
 const MARGIN: f64 = 3.0;
 /// What it is raised by further where sources' responses are off by all of themselves.
 const VARIETY: f64 = 30.0;
-/// Log evidence by which `unexplained` must lead: outright, and as a share of the leading cause's.
-const LEEWAY: (f64, f64) = (5.0, 0.03);
-/// Probability from which a cause may be named.
-const NAMED: f64 = 0.9;
 
 /// The watch over one site's one tier.
 #[derive(Debug, Clone)]
 pub struct Watch {
-    columns: Columns,
-    whitener: Whitener,
-    images: Images,
-    bank: Bank,
-    scales: Scales,
-    places: Places,
-    adopted: Vec<Adopted>,
+    pub(super) columns: Columns,
+    pub(super) whitener: Whitener,
+    pub(super) images: Images,
+    pub(super) bank: Bank,
+    pub(super) scales: Scales,
+    pub(super) places: Places,
+    pub(super) adopted: Vec<Adopted>,
     /// Gauges whose repeating of one value is accepted, with the block from which it is.
-    quiet_stuck: Vec<(usize, i64)>,
-    skins: Vec<(usize, usize, f64)>,
-    reference: Vec<f64>,
-    inflate: Vec<f64>,
-    unsteady: Vec<Unsteady>,
-    forgetting: Vec<f64>,
-    longest_unchanged: Vec<u32>,
-    block: f64,
+    pub(super) quiet_stuck: Vec<(usize, i64)>,
+    pub(super) skins: Vec<(usize, usize, f64)>,
+    pub(super) reference: Vec<f64>,
+    pub(super) inflate: Vec<f64>,
+    pub(super) unsteady: Vec<Unsteady>,
+    pub(super) forgetting: Vec<f64>,
+    pub(super) longest_unchanged: Vec<u32>,
+    pub(super) block: f64,
     /// Relative error of a signature.
-    mismatch: f64,
-    log_threshold: f64,
-    state: WatchState,
+    pub(super) mismatch: f64,
+    pub(super) log_threshold: f64,
+    pub(super) state: WatchState,
 }
 
 impl Watch {
@@ -368,139 +355,6 @@ impl Watch {
         })
     }
 
-    /// Appends columns for new epochs and missing readings.
-    fn add_columns(
-        &mut self,
-        epochs: &[u32],
-        missing: &[usize],
-        renewals: &[(usize, f64)],
-        block: i64,
-    ) {
-        let before = self.state.live.len();
-        for &id in epochs {
-            if !self.state.live.contains(&Live::Epoch(id)) {
-                self.state.live.push(Live::Epoch(id));
-            }
-        }
-        for &(well, size) in renewals {
-            for within in [true, false] {
-                self.state.live.push(Live::Renewal {
-                    well,
-                    block,
-                    size,
-                    within,
-                });
-            }
-        }
-        let mut taken = Vec::new();
-        for (index, one) in self.adopted.iter().enumerate() {
-            let known = self
-                .state
-                .live
-                .iter()
-                .any(|l| matches!(l, Live::Adopted { adoption, .. } if *adoption == index));
-            if block >= one.from && !known {
-                let columns = one.columns(self.columns.frame.gauges);
-                if let Some((lines, scale)) = one.lines() {
-                    taken.push((self.state.live.len(), lines.to_vec(), scale));
-                }
-                self.state
-                    .live
-                    .extend((0..columns).map(|column| Live::Adopted {
-                        adoption: index,
-                        column,
-                    }));
-            }
-            if block == one.judged {
-                // What began before it is no news any more.
-                self.state.ladder = Ladder::new();
-                self.state.first_onset = self.state.first_onset.max(block);
-                self.state.finding = None;
-                self.state.log_mixture = 0.0;
-                if one.anew {
-                    self.state.barriers.cleared =
-                        Cleared::new(self.state.posterior.len(), self.images.lines());
-                }
-            }
-        }
-        for &gauge in missing {
-            self.state.live.push(Live::Missing { gauge, block });
-        }
-        let added = self.state.live.len() - before;
-        if added > 0 {
-            let state = &mut self.state;
-            let width = state.filter.ncols() + added;
-            state.filter.resize_horizontally_mut(width, 0.0);
-            state.pending.resize_horizontally_mut(width, 0.0);
-            state.posterior.append(added);
-            state.ladder.append(added);
-            state.barriers.cleared.append(added);
-        }
-        for (at, lines, scale) in taken {
-            for (column, line) in lines.into_iter().enumerate() {
-                let filter = self.state.barriers.filter_of(line) * scale;
-                let to = 1 + self.columns.len() + at + column;
-                self.state.filter.column_mut(to).copy_from(&filter);
-            }
-        }
-    }
-
-    /// Readings less prediction, then all columns, of one block (gauges by 1 + columns).
-    fn raw_row(
-        &self,
-        block: &Block,
-        raw: &Raw,
-        epochs: &[u32],
-        missing: &[usize],
-        adopted: &[DMatrix<f64>],
-    ) -> DMatrix<f64> {
-        let gauges = self.columns.frame.gauges;
-        let fixed = self.columns.len();
-        let mut row = DMatrix::zeros(gauges, 1 + fixed + self.state.live.len());
-        for (gauge, read) in block.gauges.iter().enumerate() {
-            if let Some(read) = read {
-                row[(gauge, 0)] =
-                    read.mean - raw.base[gauge] - self.reference.get(gauge).copied().unwrap_or(0.0);
-            }
-        }
-        row.columns_mut(1, fixed).copy_from(&raw.fixed);
-        for (index, live) in self.state.live.iter().enumerate() {
-            match *live {
-                Live::Epoch(id) => {
-                    if let Some(at) = epochs.iter().position(|&e| e == id) {
-                        row.column_mut(1 + fixed + index)
-                            .copy_from(&raw.epochs.column(at));
-                    }
-                }
-                Live::Adopted { adoption, column } => {
-                    if let Some(rows) = adopted.get(adoption)
-                        && column < rows.ncols()
-                    {
-                        row.column_mut(1 + fixed + index)
-                            .copy_from(&rows.column(column));
-                    }
-                }
-                Live::Renewal { .. } => {}
-                Live::Missing { gauge, block: of } => {
-                    if of == block.index {
-                        row[(gauge, 1 + fixed + index)] = UNKNOWN;
-                    }
-                }
-            }
-        }
-        for &gauge in missing {
-            for column in 0..=fixed {
-                row[(gauge, column)] = 0.0;
-            }
-            for (index, live) in self.state.live.iter().enumerate() {
-                if !matches!(live, Live::Missing { .. }) {
-                    row[(gauge, 1 + fixed + index)] = 0.0;
-                }
-            }
-        }
-        row
-    }
-
     fn stuck_since(&self, gauge: usize) -> Option<i64> {
         let longest = self.longest_unchanged.get(gauge).copied().unwrap_or(0);
         self.state.stuck.since(gauge, longest)
@@ -616,214 +470,6 @@ impl Watch {
         Ok(())
     }
 
-    /// Weighs all causes after a batch and settles the finding.
-    fn weigh(&mut self, now: i64) {
-        let weights = Weights {
-            bank: &self.bank,
-            scales: &self.scales,
-            places: &self.places,
-            gauges: self.columns.frame.gauges,
-            wells: self.columns.frame.wells,
-            block: self.block,
-            mismatch: self.mismatch,
-        };
-        let barrier = self.barrier_evidence();
-        let state = &mut self.state;
-        if state.ladder.onsets.is_empty() {
-            return;
-        }
-        for onset in &mut state.ladder.onsets {
-            if onset.asked == i64::MIN
-                || now - onset.asked >= BATCH.max((now - onset.block) / AGAIN)
-            {
-                weights.weigh(onset, now);
-            }
-        }
-        state.ladder.thin(now, self.bank.horizon);
-        let mut sums = Weights::sums(&state.ladder);
-        sums.push((Cause::Barrier, barrier));
-        // A cause that this site cannot have, such as a neighbour's where none is declared, has no evidence to tell.
-        sums.retain(|(_, log)| log.is_finite());
-        let prior = -KINDS.ln();
-        let stuck: Vec<(usize, i64, u32)> = (0..self.columns.frame.gauges)
-            .filter_map(|g| {
-                let longest = self.longest_unchanged.get(g).copied().unwrap_or(0);
-                let since = state.stuck.since(g, longest)?;
-                let accepted = self
-                    .quiet_stuck
-                    .iter()
-                    .any(|(gauge, from)| *gauge == g && (since - from).abs() <= 1);
-                (!accepted).then(|| (g, since, state.stuck.run(g)))
-            })
-            .collect();
-        let logs: Vec<f64> = sums.iter().map(|(_, log)| log + prior).collect();
-        let mut log_mixture = log_sum(&logs);
-        if let Some(&(gauge, since, run)) = stuck.first() {
-            let log = self.log_threshold + 5.0 * f64::from(run);
-            log_mixture = log_sum(&[log_mixture, log]);
-            let total = log_sum(&[log_mixture, self.log_threshold]);
-            let mut causes = vec![Weighed {
-                cause: Cause::GaugeStuck,
-                probability: (log - total).exp(),
-                subject: Some(Subject::Gauge(gauge)),
-                log_evidence: log,
-            }];
-            causes.extend(sums.iter().zip(&logs).map(|((cause, sum), log)| Weighed {
-                cause: *cause,
-                probability: (log - total).exp(),
-                subject: None,
-                log_evidence: *sum,
-            }));
-            causes.sort_by(|a, b| b.probability.total_cmp(&a.probability));
-            if causes.first().is_some_and(|c| c.cause == Cause::GaugeStuck) {
-                state.log_mixture = log_mixture;
-                state.finding = Some(Finding {
-                    block: now,
-                    causes,
-                    named: true,
-                    onset: since as f64 * self.block,
-                    onset_sd: self.block / 12.0_f64.sqrt(),
-                    size: None::<Size>,
-                    place: None,
-                    gauges: Vec::new(),
-                    log_mixture,
-                    log_threshold: self.log_threshold,
-                });
-                return;
-            }
-        }
-        state.log_mixture = log_mixture.max(-30.0);
-        if log_mixture < self.log_threshold {
-            state.finding = None;
-            return;
-        }
-        // Every signature is a little wrong, so free steps and ramps always fit a strong cause a little better than its own
-        // signature does; they count only where they fit much better.
-        let told = sums
-            .iter()
-            .filter(|(cause, _)| *cause != Cause::Unexplained)
-            .map(|(_, log)| *log)
-            .fold(0.0, f64::max);
-        let logs: Vec<f64> = sums
-            .iter()
-            .zip(&logs)
-            .map(|((cause, _), log)| {
-                if *cause == Cause::Unexplained {
-                    log - LEEWAY.0 - LEEWAY.1 * told
-                } else {
-                    *log
-                }
-            })
-            .collect();
-        let total = log_sum(&[log_sum(&logs), self.log_threshold]);
-        let mut order: Vec<usize> = (0..sums.len()).collect();
-        order.sort_by(|&a, &b| {
-            let of = |i: usize| logs.get(i).copied().unwrap_or(f64::NEG_INFINITY);
-            of(b).total_cmp(&of(a))
-        });
-        let mut causes = Vec::new();
-        let mut lead: Option<Detail> = None;
-        for &index in &order {
-            let (Some((cause, _)), Some(log)) = (sums.get(index), logs.get(index)) else {
-                continue;
-            };
-            let detail = if causes.is_empty() {
-                weights.detail(*cause, &state.ladder, &state.barriers, now)
-            } else {
-                None
-            };
-            causes.push(Weighed {
-                cause: *cause,
-                probability: (log - total).exp(),
-                subject: detail.as_ref().and_then(|d| d.subject),
-                log_evidence: detail.as_ref().map_or(*log, |d| d.log_evidence),
-            });
-            if lead.is_none() {
-                lead = detail;
-            }
-        }
-        let Some(lead) = lead else { return };
-        let named = causes.first().is_some_and(|c| c.probability >= NAMED)
-            && lead.cause != Cause::Unexplained;
-        state.finding = Some(Finding {
-            block: now,
-            causes,
-            named,
-            // A barrier has always been there: it is dated to where the watch began to look.
-            onset: if lead.onset.is_finite() {
-                lead.onset
-            } else {
-                state.first_onset as f64 * self.block
-            },
-            onset_sd: lead.onset_sd,
-            size: lead.size,
-            place: lead.place,
-            gauges: Vec::new(),
-            log_mixture,
-            log_threshold: self.log_threshold,
-        });
-    }
-
-    /// Expectation and departure of every gauge.
-    fn expectation(
-        &self,
-        block: &Block,
-        raw: &Raw,
-        row: &DMatrix<f64>,
-        blind: &[Option<Blind>],
-    ) -> (Vec<Option<Expectation>>, Vec<Option<f64>>) {
-        let gauges = self.columns.frame.gauges;
-        let fixed = self.columns.len();
-        let mut full = row.columns(1, row.ncols() - 1).into_owned();
-        full.columns_mut(0, fixed).copy_from(&raw.fixed);
-        let before = self
-            .state
-            .finding
-            .as_ref()
-            .filter(|f| f.onset.is_finite())
-            .and_then(|f| floor(f.onset / self.block));
-        let known = self.state.band.expect(
-            block.index,
-            self.block,
-            before,
-            fixed,
-            &self.state.live,
-            &full,
-        );
-        let Some(known) = known else {
-            return (vec![None; gauges], vec![None; gauges]);
-        };
-        let mut expectations = Vec::with_capacity(gauges);
-        let mut departures = Vec::with_capacity(gauges);
-        for (gauge, (mean, variance)) in known.iter().enumerate() {
-            let stale = matches!(blind.get(gauge), Some(Some(Blind::StaleRate)));
-            let open =
-                self.whitener.open_variance(gauge) * self.inflate.get(gauge).map_or(1.0, |i| i * i);
-            let expectation = Expectation {
-                mean: raw.base[gauge] + self.reference.get(gauge).copied().unwrap_or(0.0) + mean,
-                sd: (variance + open).sqrt(),
-            };
-            let read = block.gauges.get(gauge).and_then(Option::as_ref);
-            departures.push(read.filter(|_| !stale).map(|r| r.mean - expectation.mean));
-            expectations.push((!stale).then_some(expectation));
-        }
-        (expectations, departures)
-    }
-
-    /// Log evidence of each cause, summed over onsets.
-    #[must_use]
-    pub fn evidence(&self) -> Vec<(Cause, f64)> {
-        let mut sums = Weights::sums(&self.state.ladder);
-        sums.push((Cause::Barrier, self.barrier_evidence()));
-        sums
-    }
-
-    /// Log evidence of a barrier, as it enters the mixture.
-    fn barrier_evidence(&self) -> f64 {
-        let (log, _) = self.state.barriers.evidence(self.scales.barrier);
-        log / (1.0 + self.mismatch / IMAGED)
-    }
-
     /// Bytes of the running sums (for capacity planning).
     #[must_use]
     pub fn running_bytes(&self) -> usize {
@@ -831,29 +477,6 @@ impl Watch {
             + self.state.barriers.cleared.bytes()
             + 8 * self.state.posterior.covariance.len()
     }
-}
-
-/// Gauges by how far they depart, in units of their standard deviation; at most four, and only beyond two.
-fn affected(
-    departures: &[Option<f64>],
-    expectations: &[Option<Expectation>],
-) -> Vec<(usize, f64, f64)> {
-    let mut list: Vec<(usize, f64, f64)> = departures
-        .iter()
-        .zip(expectations)
-        .enumerate()
-        .filter_map(|(gauge, (departure, expectation))| {
-            Some((gauge, (*departure)?, (*expectation)?.sd))
-        })
-        .collect();
-    list.sort_by(|a, b| (b.1.abs() / b.2).total_cmp(&(a.1.abs() / a.2)));
-    let first = list.first().copied();
-    list.retain(|(_, departure, sd)| departure.abs() > 2.0 * sd);
-    list.truncate(4);
-    if list.is_empty() {
-        list.extend(first);
-    }
-    list
 }
 
 #[expect(
@@ -874,6 +497,6 @@ fn days(days: f64, block: f64) -> i64 {
     clippy::cast_possible_truncation,
     reason = "a block number far below 2^53"
 )]
-fn floor(value: f64) -> Option<i64> {
+pub(super) fn floor(value: f64) -> Option<i64> {
     value.is_finite().then(|| value.floor() as i64)
 }
