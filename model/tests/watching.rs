@@ -54,6 +54,7 @@ fn ground() -> Ground {
         name: name.to_owned(),
         at,
         layer: 0,
+        also: Vec::new(),
         radius: 0.1,
         skin: 0.0,
         storage: 0.0,

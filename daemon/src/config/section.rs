@@ -251,6 +251,11 @@ impl<'s> Section<'s> {
         self.table.get(key).is_some_and(|v| v.get_ref().is_table())
     }
 
+    /// Whether the key holds a list.
+    pub(super) fn is_list(&self, key: &str) -> bool {
+        self.table.get(key).is_some_and(|v| v.get_ref().is_array())
+    }
+
     /// The tables of a list, named after their `name` or `id`, else numbered.
     pub(super) fn list(&mut self, key: &'static str) -> Vec<Section<'s>> {
         let Some(found) = self.take(key) else {

@@ -347,6 +347,24 @@ mod tests {
     }
 
     #[test]
+    fn wells_on_one_meter_share_its_values_and_its_silence() {
+        let mut plan = plan(Holds::After);
+        let mut other = plan.wells[0].clone();
+        other.share = 0.2;
+        plan.wells.push(other);
+        let before = BTreeMap::from([("q".into(), reading("q", 3000, 10.0))]);
+        let block = plan.build(1, &BTreeMap::new(), &before);
+        assert_eq!(block.rates[0].pieces, vec![(3600.0, 5.0)]);
+        assert_eq!(block.rates[1].pieces, vec![(3600.0, 2.0)]);
+        let known = |index| {
+            let block = plan.build(index, &BTreeMap::new(), &before);
+            block.rates.iter().map(|r| r.known).collect::<Vec<_>>()
+        };
+        assert_eq!(known(1), [RateKnown::Read; 2]);
+        assert_eq!(known(3), [RateKnown::Stale; 2]);
+    }
+
+    #[test]
     fn gauges_keep_their_own_instants_and_bad_values_do_not_count() {
         let mut bad = reading("p", 1200, 99.0);
         bad.quality = Quality::Bad;

@@ -338,3 +338,19 @@ fn a_key_that_stands_twice_is_told_at_the_second() {
         "file\n    this is not TOML: duplicate key\n    mend: keep one of the two; what comes several times has a heading like [[gauge]]",
     );
 }
+
+#[test]
+fn layers_that_a_well_cannot_be_open_to_are_told() {
+    one(
+        "layer = \"lower sand\"\nradius = \"0.11 m\"",
+        "radius = \"0.11 m\"\nlayer = [\"lower sand\", \"lower sand\"]",
+        "\"lower sand\"]",
+        "well \"I-1\": layer = \"lower sand\"\n    the layer is named twice\n    mend: name each layer once",
+    );
+    one(
+        "layer = \"lower sand\"\nradius = \"0.11 m\"",
+        "radius = \"0.11 m\"\nlayer = []",
+        "[]",
+        "well \"I-1\": layer = []\n    no layer is named\n    mend: name the layers it is open to",
+    );
+}

@@ -461,3 +461,18 @@ fn the_best_direction_is_an_azimuth() {
     let [[east, _], [_, north]] = anisotropy.tensor();
     assert!(north > east);
 }
+
+#[test]
+fn a_well_may_be_open_to_several_layers() {
+    let text = LINE.replace(
+        "at = [\"0 ft\", \"100 ft\"]\nlayer = \"gravel\"",
+        "at = [\"0 ft\", \"100 ft\"]\nlayer = [\"sand\", \"gravel\"]",
+    );
+    let site = site(&text);
+    let open: Vec<usize> = site.ground.wells[0].layers().collect();
+    assert_eq!(open, [1, 0]);
+    assert!(site.notes.iter().any(|n| n.key == "well \"P\": skin"));
+    // A gauge in it is in every one of them.
+    let seated = text.replace("well = \"Q\"", "well = \"P\"\nlayer = \"gravel\"");
+    assert_eq!(super::site(&seated).ground.gauges[1].seat, Seat::InWell(0));
+}

@@ -28,6 +28,7 @@ pub(crate) fn ground() -> Ground {
         name: name.into(),
         at,
         layer: 0,
+        also: Vec::new(),
         radius: WELL_RADIUS,
         skin: 0.0,
         storage: 0.0,

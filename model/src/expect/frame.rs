@@ -93,7 +93,7 @@ pub(crate) struct Frame {
     pub(crate) base: Stepped,
     /// One ground a free parameter.
     pub(crate) tilted: Vec<Tilted>,
-    /// Gauges in wells without storage: gauge, well, pressure per rate and unit of skin \[Pa s/m3\].
+    /// Gauges in wells whose skin acts outside the matrices: gauge, well, pressure per rate and unit of skin \[Pa s/m3\].
     pub(crate) in_wells: Vec<(usize, usize, f64)>,
     /// One, east and north of each gauge, in half-widths of the array from its centre.
     pub(crate) moments: Vec<[f64; 3]>,
@@ -129,7 +129,7 @@ impl Frame {
         for (gauge, seat) in ground.gauges.iter().enumerate() {
             if let Seat::InWell(well) = seat.seat
                 && let Some(w) = ground.wells.get(well)
-                && w.storage <= 0.0
+                && w.skin_outside()
             {
                 let (parameter, described) = Rock::at(ground, w.at, w.layer).transmissivity;
                 let transmissivity = described * factor(factors, parameter);

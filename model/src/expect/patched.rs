@@ -156,6 +156,7 @@ mod tests {
             name: name.into(),
             at,
             layer: 0,
+            also: Vec::new(),
             radius: 0.1,
             skin: 0.0,
             storage: 0.0,

@@ -157,12 +157,34 @@ pub struct Well {
     pub at: Point,
     /// Layer, by order.
     pub layer: usize,
+    /// Further layers it is open to, each once. One bore of one pressure joins them all.
+    pub also: Vec<usize>,
     /// Radius \[m\].
     pub radius: f64,
-    /// Skin, -6 to 50.
+    /// Skin, -6 to 50, the same in every layer.
     pub skin: f64,
     /// Wellbore storage \[m3/Pa\]; zero where it does not matter.
     pub storage: f64,
+}
+
+impl Well {
+    /// All layers it is open to.
+    pub fn layers(&self) -> impl Iterator<Item = usize> + '_ {
+        std::iter::once(self.layer).chain(self.also.iter().copied())
+    }
+
+    /// Whether it is open to a layer.
+    #[must_use]
+    pub fn meets(&self, layer: usize) -> bool {
+        self.layer == layer || self.also.contains(&layer)
+    }
+
+    /// Whether its skin acts outside the matrices: what passes the skin is then the rate at the well, at any time. It
+    /// is not so where the bore stores some of the rate, or where the rate divides among layers.
+    #[must_use]
+    pub fn skin_outside(&self) -> bool {
+        self.storage <= 0.0 && self.also.is_empty()
+    }
 }
 
 /// A pressure gauge.

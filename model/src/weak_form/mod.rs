@@ -38,7 +38,7 @@ pub enum Parameter {
     Leakance(usize),
     /// Conductance of a barrier, by order.
     Barrier(usize),
-    /// Conductance of the skin of a well with storage, by order.
+    /// Conductance of the skin of a well with storage or open to several layers, by order.
     Skin(usize),
     /// Wellbore storage of a well, by order.
     Storage(usize),
@@ -172,8 +172,8 @@ pub struct Discrete {
 /// Wells without storage: the port is the ring's pressure, and the skin acts outside the system. A positive
 /// skin adds `skin q / 2 pi T` to the well's pressure at once; a negative one is in the cut-out's radius, so
 /// a skin fitted beside a described skin below zero is `min(described, 0)` plus what is fitted. Wells with
-/// storage have an unknown of their own, joined to the ring by `2 pi T / skin`, or are one with the ring at
-/// skin zero or less.
+/// storage and wells open to several layers have an unknown of their own, joined to the ring of each layer by
+/// `2 pi T / skin`, or are one with the rings at skin zero or less.
 ///
 /// # Errors
 /// [`ModelError::Mesh`] where the ground cannot be meshed, [`ModelError::Parameter`] where a number of it

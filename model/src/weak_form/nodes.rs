@@ -27,9 +27,9 @@ pub(super) struct Nodes {
     slots: Vec<Vec<Slot>>,
     /// Whether a triangle is cut out, one list per layer, by the well.
     cut: Vec<Vec<Option<usize>>>,
-    /// The unknown of each well's ring.
-    pub(super) rings: Vec<usize>,
-    /// The unknown of each well's bore: the ring's, or its own.
+    /// The unknown of each well's ring in each of its layers, in the order of [`crate::ground::Well::layers`].
+    pub(super) rings: Vec<Vec<(usize, usize)>>,
+    /// The unknown of each well's bore: the rings', or its own.
     pub(super) bores: Vec<usize>,
     /// Place and layer of each unknown.
     pub(super) places: Vec<(Point, usize)>,
@@ -68,15 +68,16 @@ impl Nodes {
             vertices: mesh.points.len(),
             slots: Vec::new(),
             cut: Vec::new(),
-            rings: vec![0; ground.wells.len()],
+            rings: vec![Vec::new(); ground.wells.len()],
             bores: Vec::new(),
             places: Vec::new(),
         };
         for layer in 0..ground.layers.len() {
             nodes.number_layer(ground, mesh, layer);
         }
-        for (well, &ring) in ground.wells.iter().zip(&nodes.rings) {
-            let own = well.storage > 0.0 && well.skin > 0.0;
+        for (well, rings) in ground.wells.iter().zip(&nodes.rings) {
+            let own = !well.skin_outside() && well.skin > 0.0;
+            let ring = rings.first().map_or(0, |r| r.1);
             nodes
                 .bores
                 .push(if own { nodes.places.len() } else { ring });
@@ -91,7 +92,7 @@ impl Nodes {
         let mut cut = vec![None; mesh.triangles.len()];
         let mut tied: Vec<Option<usize>> = vec![None; self.vertices + self.sides.len()];
         for (w, (well, cut_out)) in ground.wells.iter().zip(&mesh.wells).enumerate() {
-            if well.layer != layer {
+            if !well.meets(layer) {
                 continue;
             }
             for &t in &cut_out.inside {
@@ -132,7 +133,13 @@ impl Nodes {
                 }
             }
         }
-        let mut ring: Vec<Option<usize>> = vec![None; ground.wells.len()];
+        // Without skin the rings of all layers are one with the bore.
+        let mut ring: Vec<Option<usize>> = ground
+            .wells
+            .iter()
+            .zip(&self.rings)
+            .map(|(well, rings)| rings.first().filter(|_| well.skin <= 0.0).map(|r| r.1))
+            .collect();
         let mut slots = Vec::with_capacity(tied.len());
         for (node, ((used, held), well)) in used.iter().zip(&held).zip(&tied).enumerate() {
             slots.push(if !used {
@@ -152,9 +159,9 @@ impl Nodes {
                 Slot::Unknown(self.places.len() - 1)
             });
         }
-        for (to, from) in self.rings.iter_mut().zip(ring) {
-            if let Some(unknown) = from {
-                *to = unknown;
+        for ((to, from), well) in self.rings.iter_mut().zip(ring).zip(&ground.wells) {
+            if let Some(unknown) = from.filter(|_| well.meets(layer)) {
+                to.push((layer, unknown));
             }
         }
         self.slots.push(slots);
@@ -273,8 +280,9 @@ impl Nodes {
             ));
         };
         if let Some(well) = self.cut_by(triangle, layer) {
-            let ring = self.rings.get(well).copied().unwrap_or_default();
-            return Ok(Functional(vec![(ring, 1.0)]));
+            let rings = self.rings.get(well).into_iter().flatten();
+            let ring = rings.filter(|(l, _)| *l == layer).map(|r| (r.1, 1.0));
+            return Ok(Functional(ring.collect()));
         }
         let (nodes, count) = self.numbers(mesh, triangle);
         let values = space.values(&mesh.corners(triangle), shares);

@@ -127,23 +127,31 @@ pub(super) fn patches(
     sum.finish()
 }
 
-/// Storage in the bore of a well, and the skin between bore and ring where they are apart.
+/// Storage in the bore of a well, and the skin between bore and rings where they are apart.
 fn bore(ground: &Ground, w: usize, well: &Well, nodes: &Nodes, sum: &mut Assembly) {
-    let (Some(&ring), Some(&bore)) = (nodes.rings.get(w), nodes.bores.get(w)) else {
+    let (Some(rings), Some(&bore)) = (nodes.rings.get(w), nodes.bores.get(w)) else {
         return;
     };
-    if well.storage <= 0.0 {
-        return;
-    }
     let one = Local::scaled(1.0, &[[1.0]]);
     let alone = |i: usize| {
         let mut slots = [Slot::Absent; MOST];
         slots[0] = Slot::Unknown(i);
         slots
     };
-    sum.store(Parameter::Storage(w), well.storage, &alone(bore), &one);
-    if bore != ring {
-        let (_, transmissivity) = Rock::at(ground, well.at, well.layer).transmissivity;
+    if well.storage > 0.0 {
+        sum.store(Parameter::Storage(w), well.storage, &alone(bore), &one);
+    }
+    if well.storage <= 0.0 && rings.iter().any(|r| r.1 != bore) {
+        // What the layers would store in the bore's own place: too little to be seen, but no unknown may store nothing.
+        let storativity: f64 = well
+            .layers()
+            .map(|l| Rock::at(ground, well.at, l).storativity.1)
+            .sum();
+        let storage = PI * well.radius * well.radius * storativity;
+        sum.store(Parameter::Fixed, storage, &alone(bore), &one);
+    }
+    for &(layer, ring) in rings.iter().filter(|r| r.1 != bore) {
+        let (_, transmissivity) = Rock::at(ground, well.at, layer).transmissivity;
         let conductance = 2.0 * PI * transmissivity / well.skin;
         sum.exchange(
             Parameter::Skin(w),
@@ -287,10 +295,10 @@ pub(super) fn check(ground: &Ground, space: &dyn Space) -> Result<(), ModelError
             ground.gauge_at(g).map(|(_, l)| l),
         )
     });
-    let wells = ground
-        .wells
-        .iter()
-        .map(|w| (format!("layer of well {}", w.name), Some(w.layer)));
+    let wells = ground.wells.iter().flat_map(|w| {
+        w.layers()
+            .map(|l| (format!("layer of well {}", w.name), Some(l)))
+    });
     let others = ground
         .neighbours
         .iter()
@@ -305,6 +313,13 @@ pub(super) fn check(ground: &Ground, space: &dyn Space) -> Result<(), ModelError
         )?;
     }
     for well in &ground.wells {
+        let mut layers: Vec<usize> = well.layers().collect();
+        layers.sort_unstable();
+        if let Some(pair) = layers.windows(2).find(|p| p.first() == p.last()) {
+            let layer = pair.first().map_or(f64::NAN, |l| *l as f64);
+            let what = format!("layer of well {}", well.name);
+            return demand(false, what, layer, "each layer may be named once");
+        }
         let what = format!("storage of well {}", well.name);
         demand(
             not_negative(well.storage),

@@ -13,11 +13,17 @@ const COARSE: MeshOptions = MeshOptions {
     refine: 1.0,
 };
 
-/// Up to three wells of any skin and storage, two layers or one, a barrier, a zone, anisotropy, any edge.
+/// Up to three wells of any skin and storage, open to two layers or one, a barrier, a zone, anisotropy, any edge.
 fn any_ground() -> impl Strategy<Value = Ground> {
     let skin = prop_oneof![Just(-6.0), Just(0.0), Just(50.0), -6.0..50.0f64];
     let storage = prop_oneof![Just(0.0), 1e-9..1e-6f64];
-    let a_well = (skin, storage, -150.0..150.0f64, -150.0..150.0f64);
+    let a_well = (
+        skin,
+        storage,
+        -150.0..150.0f64,
+        -150.0..150.0f64,
+        any::<bool>(),
+    );
     let edge = prop_oneof![
         Just(EdgeKind::Open),
         Just(EdgeKind::Closed),
@@ -33,10 +39,13 @@ fn any_ground() -> impl Strategy<Value = Ground> {
     )
         .prop_map(|(wells, kind, leakance, barrier, zone, anisotropy)| {
             let mut g = ground(kind, 6000.0);
-            for (i, (skin, storage, dx, dy)) in wells.into_iter().enumerate() {
+            for (i, (skin, storage, dx, dy, both)) in wells.into_iter().enumerate() {
                 let x = 1200.0 * (i as f64 - 1.0);
                 let mut w = well(&format!("W-{i}"), [x + dx, dy]);
                 (w.skin, w.storage) = (skin, storage);
+                if leakance.is_some() && both {
+                    w.also = vec![1];
+                }
                 g.wells.push(w);
             }
             let turned = anisotropy.map(|(ratio, direction)| Anisotropy { ratio, direction });

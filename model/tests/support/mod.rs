@@ -22,6 +22,7 @@ pub fn well(name: &str, at: Point) -> Well {
         name: name.into(),
         at,
         layer: 0,
+        also: Vec::new(),
         radius: 0.11,
         skin: 0.0,
         storage: 0.0,

@@ -2,7 +2,9 @@
 
 use serde_json::{Value, json};
 
-use super::words::{broker_words, layer_name, reference_word, side_word, source_words};
+use super::words::{
+    broker_words, layer_name, layer_names, reference_word, side_word, source_words,
+};
 use crate::config::{PublishSettings, Site};
 
 /// The site as JSON, in SI.
@@ -25,7 +27,7 @@ pub(in crate::cli) fn summary_json(site: &Site) -> Value {
         "edge": site.ground.edge,
         "barriers": site.ground.barriers,
         "wells": site.ground.wells.iter().zip(&site.wells).map(|(w, s)| json!({
-            "name": w.name, "at_m": w.at, "layer": layer_name(site, w.layer), "radius_m": w.radius,
+            "name": w.name, "at_m": w.at, "layer": layer_names(site, w), "radius_m": w.radius,
             "skin": w.skin, "rate": s.rate, "share": s.share,
         })).collect::<Vec<_>>(),
         "neighbours": site.ground.neighbours.iter().map(|n| json!({

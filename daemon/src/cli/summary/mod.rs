@@ -13,8 +13,8 @@ use super::table::{Align, Table};
 use crate::config::{PublishSettings, Site};
 pub(super) use json::summary_json;
 use words::{
-    azimuth_words, broker_words, edge_word, layer_name, priority_word, reference_word, side_word,
-    source_words, string_word,
+    azimuth_words, broker_words, edge_word, layer_name, layer_names, priority_word, reference_word,
+    side_word, source_words, string_word,
 };
 
 /// The model as commissioned, for people and for programs.
@@ -206,7 +206,7 @@ fn wells(site: &Site) -> String {
             well.name.clone(),
             coordinate(site, well.at[0]),
             coordinate(site, well.at[1]),
-            layer_name(site, well.layer),
+            layer_names(site, well),
             number(site, Dimension::Length, well.radius),
             significant(well.skin, 3),
             settings.rate.to_string(),

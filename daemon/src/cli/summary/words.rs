@@ -2,7 +2,7 @@
 
 use std::time::Duration;
 
-use borewake_model::ground::{Anisotropy, EdgeKind};
+use borewake_model::ground::{Anisotropy, EdgeKind, Well};
 use borewake_model::units::significant;
 
 use crate::config::{
@@ -119,4 +119,10 @@ pub(super) fn priority_word(priority: Priority) -> &'static str {
 pub(super) fn layer_name(site: &Site, layer: usize) -> String {
     let layer = site.ground.layers.get(layer);
     layer.map(|l| l.name.clone()).unwrap_or_default()
+}
+
+/// Names of the layers that a well is open to.
+pub(super) fn layer_names(site: &Site, well: &Well) -> String {
+    let names: Vec<String> = well.layers().map(|l| layer_name(site, l)).collect();
+    names.join(", ")
 }

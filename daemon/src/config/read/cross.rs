@@ -217,7 +217,7 @@ pub(super) fn places(
     let wells: Vec<&WellRead> = wells.iter().filter(|w| w.placed).collect();
     for (index, well) in wells.iter().enumerate() {
         for other in wells.iter().take(index) {
-            if well.well.layer == other.well.layer
+            if well.well.layers().any(|l| other.well.meets(l))
                 && apart(well.well.at, other.well.at) <= well.well.radius + other.well.radius
             {
                 let what = format!("{} stands at the same place", other.path);
@@ -237,7 +237,7 @@ pub(super) fn places(
         let (Seat::InGround { .. }, Some((at, layer))) = (described.seat, gauge.place) else {
             continue;
         };
-        let near = |w: &&&WellRead| w.well.layer == layer && apart(at, w.well.at) <= w.well.radius;
+        let near = |w: &&&WellRead| w.well.meets(layer) && apart(at, w.well.at) <= w.well.radius;
         if let Some(well) = wells.iter().find(near) {
             let what = format!("it sits inside {}", well.path);
             let mend = format!("write well = \"{}\" in place of `at`", well.well.name);
@@ -247,7 +247,7 @@ pub(super) fn places(
     for neighbour in neighbours {
         let at = neighbour.value.at;
         let near = |w: &&&WellRead| {
-            w.well.layer == neighbour.value.layer && apart(at, w.well.at) <= 2.0 * w.well.radius
+            w.well.meets(neighbour.value.layer) && apart(at, w.well.at) <= 2.0 * w.well.radius
         };
         if let Some(well) = wells.iter().find(near) {
             let what = format!("{} stands at the same place", well.path);

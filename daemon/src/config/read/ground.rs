@@ -181,6 +181,33 @@ pub(super) fn layer(section: &mut Section<'_>, layers: &[LayerRead]) -> usize {
     found.unwrap_or(0)
 }
 
+/// Reads `layer` of a well: a name, or a list of the layers it is open to.
+pub(super) fn open_layers(section: &mut Section<'_>, layers: &[LayerRead]) -> Vec<usize> {
+    if !section.is_list("layer") {
+        return vec![layer(section, layers)];
+    }
+    let names: Vec<&str> = layers.iter().map(|l| l.layer.name.as_str()).collect();
+    let mut open = Vec::new();
+    for named in section.texts("layer").unwrap_or_default() {
+        match names.iter().position(|n| *n == named.value) {
+            None => section.unknown_name("layer", &named, "is no [[layer]]", &names),
+            Some(found) if open.contains(&found) => {
+                let what = "the layer is named twice";
+                section.wrong("layer", &named, what, "name each layer once");
+            }
+            Some(found) => open.push(found),
+        }
+    }
+    if open.is_empty() {
+        let span = section.value_span("layer");
+        let mend = "name the layers it is open to";
+        let key = section.key("layer");
+        section.report.value(&span, key, "no layer is named", mend);
+        open.push(0);
+    }
+    open
+}
+
 /// Parts of the ground that this build does not read.
 pub(super) fn not_yet(root: &mut Section<'_>) {
     root.noted(

@@ -9,7 +9,7 @@ use borewake_model::units::{Dimension, YEAR};
 use super::super::section::{At, Section};
 use super::super::values::Sign;
 use super::super::{GaugeSettings, GaugeString, Meter, PastRate, Reference, WellSettings};
-use super::ground::layer;
+use super::ground::{layer, open_layers};
 use super::layer::LayerRead;
 use crate::record::{ChannelId, Holds};
 
@@ -87,7 +87,7 @@ pub(super) fn wells(root: &mut Section<'_>, layers: &[LayerRead]) -> Vec<WellRea
             unique(&section, "well", &mut names, name);
         }
         let at = section.must("at", "at = [\"310 m\", \"-480 m\"]", |s, k| s.point(k));
-        let layer = layer(&mut section, layers);
+        let open = open_layers(&mut section, layers);
         let radius = section.must(
             "radius",
             "radius = \"0.11 m\", of the bore at the layer",
@@ -105,6 +105,12 @@ pub(super) fn wells(root: &mut Section<'_>, layers: &[LayerRead]) -> Vec<WellRea
                 "leave it out where it is not known: it is fitted",
             );
         }
+        if open.len() > 1 && skin.is_none() {
+            let text = "a well open to several layers has its skin in the model: where it may have one, state a guess above zero, and history corrects it";
+            section
+                .report
+                .note(&section.value_span("layer"), section.key("skin"), text);
+        }
         let storage = section.quantity("storage", Dimension::Storage, Sign::NotNegative);
         let (rate, share) = rate(&mut section);
         let meter = meter(&mut section);
@@ -114,7 +120,8 @@ pub(super) fn wells(root: &mut Section<'_>, layers: &[LayerRead]) -> Vec<WellRea
             well: Well {
                 name: name.clone(),
                 at: at.as_ref().map_or([0.0; 2], |a| a.value),
-                layer,
+                layer: open.first().copied().unwrap_or(0),
+                also: open.into_iter().skip(1).collect(),
                 radius: radius.map_or(0.1, |r| r.value),
                 skin: skin.map_or(0.0, |s| s.value),
                 storage: storage.map_or(0.0, |s| s.value),
@@ -336,7 +343,7 @@ fn seat(
                 section.unknown_name("well", &well, "is no [[well]]", &names);
                 return (nowhere, None, well.span);
             };
-            if stated.is_some_and(|l| l != found.well.layer) {
+            if stated.is_some_and(|l| !found.well.meets(l)) {
                 section.report.place(
                     &section.key_span("layer"),
                     section.key("layer"),

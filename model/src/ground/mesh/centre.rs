@@ -125,11 +125,9 @@ impl Plan {
         let factor = 1.0 / capacity(self.ring.1);
         for (w, well) in ground.wells.iter().enumerate() {
             let radius = factor * well.radius * (-well.skin.min(0.0)).exp();
-            let twin = ground
-                .wells
-                .iter()
-                .take(w)
-                .find(|o| o.layer == well.layer && distance(o.at, well.at) <= self.apart);
+            let twin = ground.wells.iter().take(w).find(|o| {
+                o.layers().any(|l| well.meets(l)) && distance(o.at, well.at) <= self.apart
+            });
             if let Some(twin) = twin {
                 let why = format!(
                     "wells {} and {} stand at one place in one layer; make them one well",
@@ -213,7 +211,7 @@ impl Plan {
             if d > 3.0 * radius {
                 continue;
             }
-            if well.layer == layer {
+            if well.meets(layer) {
                 let why = format!(
                     "{name} stands in well {} (within {:.2} m of it, skin included); seat it in the well, or move it",
                     well.name,
