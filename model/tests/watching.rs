@@ -58,6 +58,7 @@ fn ground() -> Ground {
         radius: 0.1,
         skin: 0.0,
         storage: 0.0,
+        trace: Vec::new(),
     };
     let gauge = |name: &str, seat: Seat| Gauge {
         name: name.to_owned(),
@@ -83,6 +84,7 @@ fn ground() -> Ground {
             distance: HALF,
         },
         barriers: Vec::new(),
+        stages: Vec::new(),
         wells: vec![well("W1", [-400.0, 100.0]), well("W2", [500.0, 200.0])],
         gauges: vec![
             gauge("W1", Seat::InWell(0)),
@@ -128,6 +130,7 @@ fn reduced(ground: &Ground) -> Reduced {
     let places = places(ground);
     let spots: Vec<Point> = places.iter().map(|p| p.0).collect();
     Reduced {
+        drives: Vec::new(),
         mass: vec![ReducedBlock {
             parameter: Parameter::Storativity(0),
             matrix: DMatrix::identity(modes, modes),

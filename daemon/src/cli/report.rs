@@ -151,8 +151,12 @@ impl Report {
             .wells
             .iter()
             .map(|w| (&w.rate, format!("well {}", w.name)));
+        let waters = site
+            .waters
+            .iter()
+            .map(|w| (&w.channel, format!("water {}", w.name)));
         let mut channels = Vec::new();
-        for (channel, feeds) in gauges.chain(wells) {
+        for (channel, feeds) in gauges.chain(wells).chain(waters) {
             channels.push(quality(reader, channel, feeds, (from, to)).await?);
         }
         Ok((plots, channels))

@@ -50,10 +50,10 @@ impl Fit<'_> {
         let width = regression.z.len();
         let (spread, centre) = self.spread(&columns, width, history.tail());
         let solved = regression.solve(&spread, &centre)?;
-        let (gauges, wells) = (columns.frame.gauges, columns.frame.wells);
+        let gauges = columns.frame.gauges;
         let sampled: Vec<Sampled> = blocks
             .iter()
-            .map(|b| Sampled::of(b, wells, gauges))
+            .map(|b| columns.sample(b))
             .collect::<Result<_, _>>()?;
         let left = regression.left(&solved.mean);
         // What was filled in has no innovation of its own.
@@ -146,7 +146,7 @@ impl Fit<'_> {
         priors.far = FAR * self.usual_share();
         priors.mismatch = self.usual_share() + UNSEEN * self.state.scales.patch[0];
         priors.discrepancy.clone_from(&self.state.scales.share);
-        let rates = Rates::of(blocks, columns.frame.wells);
+        let rates = Rates::of(blocks, self.ground);
         let (factors, patches) = std::mem::take(&mut self.state.factors)
             .into_iter()
             .partition(|(p, _)| layer_of(*p) == *p);

@@ -161,8 +161,8 @@ impl<'a> Fit<'a> {
         settings: &'a CommissionSettings,
         block: f64,
     ) -> Result<Self, ModelError> {
-        let (gauges, wells) = (ground.gauges.len(), ground.wells.len());
-        let rates = Rates::of(history, wells);
+        let (gauges, wells) = (ground.gauges.len(), ground.inputs());
+        let rates = Rates::of(history, ground);
         let count = typical_count(history, gauges);
         let noise = Noise {
             gauge: ground
@@ -195,6 +195,7 @@ impl<'a> Fit<'a> {
             bias: settings.meter_bias,
             gain: 1.0,
             past: 1.0,
+            rest: rates.rest.clone(),
             declared: declared(&settings.past, history.first().map_or(0.0, Block::start)),
             patch: [1.0; 2],
             mismatch: 0.0,

@@ -10,7 +10,6 @@ use nalgebra::{Cholesky, DMatrix, DVector, Dyn};
 use crate::ModelError;
 use crate::block::Block;
 use crate::expect::columns::Columns;
-use crate::expect::drive::Sampled;
 use crate::expect::whitener::Whitener;
 use crate::weigh::barrier::Images;
 
@@ -66,7 +65,7 @@ impl History {
         let mut seen = Vec::new();
         let mut pairs = DMatrix::zeros(gauges * wells, history.len());
         for (index, block) in history.iter().enumerate() {
-            let sampled = Sampled::of(block, wells, gauges)?;
+            let sampled = columns.sample(block)?;
             let step = columns.step(&mut memory, &sampled)?;
             let width = 1 + fixed + step.epochs.ncols();
             if raw.ncols() < width {
