@@ -93,12 +93,11 @@ impl Epochs {
                         if let Some(old) = now.and_then(|i| self.list.get_mut(i)) {
                             old.current = false;
                         }
-                        if let Some((level, _)) = level.filter(|_| well < frame.meters) {
+                        if let Some((level, _)) = level {
                             self.changes.push((well, rate - level));
                         }
                         now = None;
-                        // The level of open water is no rate that a meter errs in proportion to.
-                        if rate.abs() > SHUT * scale && well < frame.meters {
+                        if rate.abs() > SHUT * scale {
                             now = Some(self.list.len());
                             self.opened += 1;
                             self.list.push(Epoch {

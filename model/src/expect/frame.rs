@@ -99,10 +99,8 @@ pub(crate) struct Frame {
     pub(crate) moments: Vec<[f64; 3]>,
     /// Number of gauges.
     pub(crate) gauges: usize,
-    /// Number of inputs: wells, then stages and a driven edge.
+    /// Number of wells.
     pub(crate) wells: usize,
-    /// How many of them are wells, whose rates a meter reads.
-    pub(crate) meters: usize,
 }
 
 impl Frame {
@@ -145,8 +143,7 @@ impl Frame {
             in_wells,
             moments: moments(ground),
             gauges: ground.gauges.len(),
-            wells: ground.inputs(),
-            meters: ground.wells.len(),
+            wells: ground.wells.len(),
         })
     }
 

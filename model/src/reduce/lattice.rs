@@ -105,7 +105,6 @@ impl Lattice {
         };
         Self {
             system: System {
-                drives: Vec::new(),
                 size,
                 mass: vec![
                     block(Parameter::Storativity(0), storage),

@@ -43,13 +43,9 @@ impl Reduced {
                 })
             }
         };
-        let mut wells = rotate(&self.wells)?;
-        for (mut port, drive) in wells.column_iter_mut().zip(&self.drives) {
-            port *= factor_on(*drive, factors)?;
-        }
         Ok(Modal {
             lambda,
-            wells,
+            wells: rotate(&self.wells)?,
             gauges: rotate(&self.gauges)?,
             neighbours: rotate(&self.neighbours)?,
             places: rotate(&self.place_ports)?,

@@ -15,7 +15,6 @@ pub(super) fn edge_word(kind: EdgeKind) -> &'static str {
         EdgeKind::Open => "open",
         EdgeKind::Closed => "closed",
         EdgeKind::Fixed => "fixed",
-        EdgeKind::Driven => "at the pressure of open water",
     }
 }
 
