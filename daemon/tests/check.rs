@@ -135,3 +135,24 @@ fn what_cannot_be_meshed_is_named_with_its_mend() {
         assert!(found.contains(told), "{told}\n--\n{found}");
     }
 }
+
+#[test]
+fn a_river_and_a_fracture_are_meshed_and_told() {
+    let folder = tempfile::tempdir().unwrap();
+    let path = folder.path().join("site.toml");
+    let river = "[[stage]]\nname = \"river\"\nline = [[\"0.9 km\", \"-30 km\"], [\"1.1 km\", \"0 km\"], [\"0.9 km\", \"30 km\"]]\nconductance = \"1e-10 m3/(Pa s m)\"\nchannel = \"o2.pressure\"\n\n[[barrier]]";
+    let site = include_str!("sites/full.toml")
+        .replacen("[[barrier]]", river, 1)
+        .replacen(
+            "at = [\"0 m\", \"0 m\"]",
+            "trace = [[\"-120 m\", \"0 m\"], [\"80 m\", \"40 m\"]]",
+            1,
+        );
+    std::fs::write(&path, site).unwrap();
+    let output = check(&["check", path.to_str().unwrap()]);
+    let told = text(&output.stdout);
+    assert_eq!(output.status.code(), Some(0), "{told}");
+    for piece in ["Stages\n", "river", "o2.pressure", "least angle "] {
+        assert!(told.contains(piece), "{piece}\n--\n{told}");
+    }
+}

@@ -14,7 +14,8 @@ pub struct Block {
     pub length: f64,
     /// Instants at which predictions are evaluated \[s from the block's start\], ascending, at least one.
     pub instants: Vec<f64>,
-    /// One path per well, in the ground's order of wells.
+    /// One path per input, in the order of [`crate::ground::Ground::inputs`]: rates of wells \[m3/s\], then pressures of
+    /// stages and of a driven edge \[Pa\].
     pub rates: Vec<RatePath>,
     /// One entry per gauge, in the ground's order of gauges; `None` where nothing usable was read.
     pub gauges: Vec<Option<GaugeBlock>>,

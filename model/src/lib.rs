@@ -11,7 +11,6 @@
 pub mod block;
 pub mod closed_form;
 pub mod commission;
-pub mod derivative;
 pub mod error;
 pub mod expect;
 pub mod finding;

@@ -50,8 +50,17 @@ export function drawPlan(place, { site, layer, setLayer, found, ratios, blind, o
   const words = [];
   const drawn = [];
 
+  const along = (line) => line.map(([x, y], i) => `${i ? "L" : "M"}${X(x).toFixed(1)} ${Y(y).toFixed(1)}`).join("");
+  for (const stage of site.stages) {
+    drawn.push(s("path", { d: along(stage.line), fill: "none", stroke: "var(--rule)", "stroke-width": 9, "stroke-linejoin": "round" }, s("title", {}, `${stage.name}: open water`)));
+    words.push(`open water ${stage.name}`);
+  }
+  for (const well of site.wells.filter((w) => w.trace.length)) {
+    drawn.push(s("path", { d: along(well.trace), fill: "none", stroke: "var(--ink)", "stroke-width": 1.6 }, s("title", {}, `${well.name}: one pressure along its trace`)));
+  }
+
   for (const barrier of site.barriers) {
-    const d = barrier.line.map(([x, y], i) => `${i ? "L" : "M"}${X(x).toFixed(1)} ${Y(y).toFixed(1)}`).join("");
+    const d = along(barrier.line);
     drawn.push(s("path", { d, fill: "none", stroke: "var(--ink)", "stroke-width": barrier.sealed ? 4 : 2.5, "stroke-dasharray": barrier.sealed ? null : "10 4" }, s("title", {}, `${barrier.name}: ${barrier.sealed ? "sealed" : "resists flow"}`)));
     const [bx, by] = barrier.line[Math.floor(barrier.line.length / 2)];
     drawn.push(label(X(bx) + 6, Y(by), barrier.name, "var(--soft)"));

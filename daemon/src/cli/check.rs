@@ -11,7 +11,6 @@ use borewake_model::units::Dimension;
 use clap::Args;
 use serde_json::{Value, json};
 
-use super::commission::diffusivities;
 use super::summary::{summary_json, summary_text};
 use super::{Context, Exit, Failure, GroundSummary, print};
 use crate::config::{self, ConfigError, Mistake, Note, Site};
@@ -179,9 +178,6 @@ fn notes(site: &Site) -> Vec<Note> {
         key: key.to_owned(),
         text,
     };
-    for doubt in diffusivities(site, &Vec::new()) {
-        notes.push(here("layer", doubt));
-    }
     for secret in site.secrets() {
         if let Err(wrong) = secret.read() {
             notes.push(here(

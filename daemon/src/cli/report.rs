@@ -10,7 +10,7 @@ use super::commission::summary;
 use super::{Context, Exit, Failure, print};
 use crate::config::{self, Site};
 use crate::keeper::settings::block_plan;
-use crate::record::{Alarm, AlarmId, ChannelId, Place, Stamp, Transition};
+use crate::record::{Alarm, AlarmId, ChannelId, Stamp, Transition};
 use crate::report::document::{AlarmReport, ChannelQuality, html};
 use crate::report::plan::{Mark, Plan, draw};
 use crate::report::svg::{GaugePlot, PlotPoint, gauge_plot};
@@ -109,10 +109,7 @@ impl Report {
             names: site.names(),
             made: Stamp::now(),
             window,
-            plan: draw(&site_plan(
-                &site.ground,
-                alarm.finding.as_ref().and_then(|f| f.place),
-            )),
+            plan: draw(&plan(&site.ground, &alarm)),
             plots,
             history,
             channels,
@@ -154,8 +151,12 @@ impl Report {
             .wells
             .iter()
             .map(|w| (&w.rate, format!("well {}", w.name)));
+        let waters = site
+            .waters
+            .iter()
+            .map(|w| (&w.channel, format!("water {}", w.name)));
         let mut channels = Vec::new();
-        for (channel, feeds) in gauges.chain(wells) {
+        for (channel, feeds) in gauges.chain(wells).chain(waters) {
             channels.push(quality(reader, channel, feeds, (from, to)).await?);
         }
         Ok((plots, channels))
@@ -202,8 +203,7 @@ fn window(alarm: &Alarm, history: &[Transition]) -> (Stamp, Stamp) {
     (from.max(to.plus(-LONGEST)), to)
 }
 
-/// The site from above, with the place of a finding.
-pub(super) fn site_plan(ground: &Ground, found: Option<Place>) -> Plan {
+fn plan(ground: &Ground, alarm: &Alarm) -> Plan {
     let mut marks = Vec::new();
     for well in &ground.wells {
         marks.push((Mark::Well, well.name.clone(), well.at));
@@ -226,6 +226,7 @@ pub(super) fn site_plan(ground: &Ground, found: Option<Place>) -> Plan {
     for neighbour in &ground.neighbours {
         marks.push((Mark::Neighbour, neighbour.name.clone(), neighbour.at));
     }
+    let place = alarm.finding.as_ref().and_then(|f| f.place);
     Plan {
         barriers: ground
             .barriers
@@ -233,7 +234,7 @@ pub(super) fn site_plan(ground: &Ground, found: Option<Place>) -> Plan {
             .map(|b| (b.name.clone(), b.line.clone()))
             .collect(),
         marks,
-        found: found.map(|p| ([p.x, p.y], p.radius_90)),
+        found: place.map(|p| ([p.x, p.y], p.radius_90)),
     }
 }
 

@@ -6,7 +6,7 @@ use sha2::{Digest as _, Sha256};
 use super::Site;
 
 /// Changes when what is digested, or how, changes.
-const FORM: &str = "borewake ground 3\n";
+const FORM: &str = "borewake ground 4\n";
 
 impl Site {
     /// SHA-256, in hexadecimal, over what is under the site and nothing else: layers, zones, edge, barriers, wells, gauges and

@@ -33,7 +33,7 @@ pub use secret::{Secret, SecretError, SecretFile};
 pub use site::{
     AlarmCare, GaugeSettings, GaugeString, HttpSettings, LimitSettings, Meter, MqttPublish,
     PastRate, PatternChannel, PublishSettings, Reference, Side, Site, StoreSettings, WatchConfig,
-    WellSettings,
+    WaterSettings, WellSettings,
 };
 pub use source::{
     ByteOrder, ChannelSettings, Checksum, Conversion, LogSource, ModbusChannel, ModbusRtuSource,

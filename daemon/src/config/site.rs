@@ -34,6 +34,8 @@ pub struct Site {
     pub ground: Ground,
     /// Wells, in the order of [`Ground::wells`].
     pub wells: Vec<WellSettings>,
+    /// Open water that drives the ground: stages, in the order of [`Ground::stages`], then the edge where it is driven.
+    pub waters: Vec<WaterSettings>,
     /// Gauges, in the order of [`Ground::gauges`].
     pub gauges: Vec<GaugeSettings>,
     /// Channels known by name, those that wells and gauges take from a pattern included.
@@ -148,6 +150,19 @@ pub struct WellSettings {
     pub meter: Option<Meter>,
     /// Rates before the record, in order of time.
     pub past: Vec<PastRate>,
+}
+
+/// The channel of open water that drives the ground.
+#[derive(Debug, Clone, PartialEq)]
+pub struct WaterSettings {
+    /// Name in the site file; `edge` for the edge.
+    pub name: String,
+    /// Channel of its level or pressure.
+    pub channel: ChannelId,
+    /// How values stand to their instants.
+    pub holds: Holds,
+    /// Pressure per unit of the channel: one, or that under a metre of water \[Pa/m\].
+    pub weight: f64,
 }
 
 /// What is stated of a meter. Ratios are standard deviations as a share of the rate.

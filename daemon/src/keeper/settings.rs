@@ -18,6 +18,11 @@ pub fn block_plan(site: &Site) -> BlockPlan {
             share: w.share,
             holds: w.holds,
         })
+        .chain(site.waters.iter().map(|w| WellFeed {
+            channel: w.channel.clone(),
+            share: w.weight,
+            holds: w.holds,
+        }))
         .collect();
     BlockPlan {
         length: micros(site.watch.block).max(1),
@@ -98,7 +103,9 @@ fn channel_watch(site: &Site, channel: &config::ChannelSettings) -> Option<Chann
         return None;
     }
     let gauge = site.gauges.iter().position(|g| g.channel == channel.id);
-    let fed = gauge.is_some() || site.wells.iter().any(|w| w.rate == channel.id);
+    let fed = gauge.is_some()
+        || site.wells.iter().any(|w| w.rate == channel.id)
+        || site.waters.iter().any(|w| w.channel == channel.id);
     let silence = site.watch.hold_rate.as_secs_f64().max(1.0);
     fed.then(|| ChannelWatch {
         channel: channel.id.clone(),

@@ -1,6 +1,5 @@
 //! Evidence with plots, as documents that stand alone.
 
-pub mod calibration;
 pub mod document;
 pub mod plan;
 pub mod svg;

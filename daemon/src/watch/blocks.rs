@@ -10,12 +10,12 @@ use crate::record::{Block, ChannelId, GaugeBlock, Holds, RateKnown, RatePath, Re
 /// Sample instants closer than this share one evaluation of the model \[µs\].
 const CELL: i64 = 60 * Stamp::SECOND;
 
-/// Which channel feeds a well, and how.
+/// Which channel feeds an input of the ground, a well or open water, and how.
 #[derive(Debug, Clone, PartialEq)]
 pub struct WellFeed {
-    /// Its rate channel.
+    /// Its rate channel, or that of its level or pressure.
     pub channel: ChannelId,
-    /// Share of a meter that several wells have in common.
+    /// Share of a meter that several wells have in common; of open water the pressure per unit of its channel.
     pub share: f64,
     /// How values stand to their instants.
     pub holds: Holds,
@@ -28,7 +28,7 @@ pub struct BlockPlan {
     pub length: i64,
     /// How long a rate holds without being read again \[µs\].
     pub hold_rate: i64,
-    /// One per well.
+    /// One per input of the ground, in its order: wells, then open water.
     pub wells: Vec<WellFeed>,
     /// Pressure channel of each gauge.
     pub gauges: Vec<ChannelId>,

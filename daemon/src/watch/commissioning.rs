@@ -1,16 +1,13 @@
 //! Makes a ground file: mesh, weak form, reduction, calibration, and the watch brought to the end of history.
 
 use borewake_model::ModelError;
-use borewake_model::commission::{
-    Account, CommissionSettings, Commissioned, Places, check_history, commission,
-};
+use borewake_model::commission::{CommissionSettings, Commissioned, Places, commission};
 use borewake_model::ground::mesh::MeshOptions;
 use borewake_model::ground::{Ground, Patches};
 use borewake_model::reduce::{ReduceOptions, Reduced, reduce_patched};
 use borewake_model::watch::{Watch, WatchSettings};
 use borewake_model::weak_form::{Scheme, discretise};
 
-use super::compare::{Compare, compare};
 use super::ground_file::GroundFile;
 use crate::config::{Site, WellSettings};
 use crate::record::{Block, Stamp};
@@ -24,8 +21,6 @@ pub enum Stage {
     Reduce,
     /// Calibration.
     Calibrate,
-    /// Fitting other grounds.
-    Compare,
     /// Bringing the watch to the end of history.
     Settle,
 }
@@ -38,7 +33,6 @@ impl Stage {
             Self::Discretise => "meshing the ground",
             Self::Reduce => "reducing it to modes",
             Self::Calibrate => "fitting parameters",
-            Self::Compare => "fitting other grounds",
             Self::Settle => "settling the watch",
         }
     }
@@ -70,37 +64,28 @@ pub fn reduce_ground(
     reduce_patched(&discrete.system, &patches, &at, &ReduceOptions::default())
 }
 
-/// Makes a ground file from quiet history, and what people should know of the fit; `others` are the grounds it is to be
-/// held against.
+/// Makes a ground file from quiet history.
 ///
 /// # Errors
 /// The ground cannot be meshed, or history cannot be used.
 pub fn make(
     site: &Site,
     history: &[Block],
-    others: &[Compare],
     made: Stamp,
     progress: &mut dyn FnMut(Stage, f64),
-) -> Result<(GroundFile, Account), ModelError> {
+) -> Result<GroundFile, ModelError> {
     let last_block = history.last().map(|b| b.index).ok_or_else(|| {
         ModelError::History("no whole block of readings lies in the span given".into())
     })?;
-    check_history(&site.ground, history)?;
     let reduced = reduce_ground(&site.ground, progress)?;
     let past = |w: &WellSettings| w.past.iter().map(|p| (p.from.seconds(), p.rate)).collect();
     let settings = CommissionSettings {
         past: site.wells.iter().map(past).collect(),
         ..CommissionSettings::default()
     };
-    let (calibration, mut account) =
-        commission(&site.ground, &reduced, history, &settings, &mut |share| {
-            progress(Stage::Calibrate, share)
-        })?;
-    if !others.is_empty() {
-        let known = (&settings, &account);
-        let tried = compare(&site.ground, &reduced, history, known, others, progress)?;
-        account.tried.extend(tried);
-    }
+    let calibration = commission(&site.ground, &reduced, history, &settings, &mut |share| {
+        progress(Stage::Calibrate, share)
+    })?;
     let commissioned = Commissioned::new(site.ground.clone(), &reduced, calibration)?;
     let settings = WatchSettings {
         false_alarm_interval: site.watch.false_alarm_interval,
@@ -114,13 +99,12 @@ pub fn make(
         progress(Stage::Settle, done as f64 / total as f64);
     }
     let start = watch.save();
-    let file = GroundFile {
+    Ok(GroundFile {
         site_digest: site.ground_digest(),
         made,
         commissioned,
         settings,
         start,
         last_block,
-    };
-    Ok((file, account))
+    })
 }

@@ -6,6 +6,7 @@
     reason = "a test says what it expects"
 )]
 
+mod grounds;
 mod instruments;
 mod messages;
 mod reading;

@@ -21,7 +21,7 @@ fn position(text: &str, needle: &str) -> String {
 
 /// Replaces one piece of the whole file and expects exactly one mistake, at `place`.
 #[track_caller]
-fn one(from: &str, to: &str, place: &str, expected: &str) {
+pub(super) fn one(from: &str, to: &str, place: &str, expected: &str) {
     assert_eq!(FULL.matches(from).count(), 1, "{from} must stand once");
     let text = FULL.replace(from, to);
     let told: Vec<String> = mistakes(&text).iter().map(ToString::to_string).collect();
@@ -53,7 +53,7 @@ fn unknown_keys_name_the_nearest() {
         "skin = 1.5",
         "colour = \"red\"",
         "colour",
-        "well \"I-1\": colour\n    unknown key\n    mend: leave it out; known here: at, layer, meter, name, past, radius, rate, skin, storage",
+        "well \"I-1\": colour\n    unknown key\n    mend: leave it out; known here: at, layer, meter, name, past, radius, rate, skin, storage, trace",
     );
     one(
         "type = \"f32\"",
@@ -272,7 +272,7 @@ fn things_that_must_be_apart_are() {
         "distance = \"12 km\"",
         "distance = \"200 m\"",
         "\"200 m\"",
-        "edge: distance = \"200 m\"\n    wells and gauges lie up to 286 m from their centre\n    mend: put the edge outside them",
+        "edge: distance = \"200 m\"\n    well \"I-1\" lies 286 m from the centre of wells and gauges\n    mend: put the edge outside it, or move it",
     );
     one(
         "line = [[\"1.4 km\", \"-2 km\"], [\"1.6 km\", \"2.5 km\"]]",

@@ -32,6 +32,7 @@ pub(crate) fn ground() -> Ground {
         radius: WELL_RADIUS,
         skin: 0.0,
         storage: 0.0,
+        trace: Vec::new(),
     };
     let gauge = |name: String, seat| Gauge {
         name,
@@ -66,6 +67,7 @@ pub(crate) fn ground() -> Ground {
             distance: 3.5 * (TRANSMISSIVITY / STORATIVITY * year).sqrt(),
         },
         barriers: Vec::new(),
+        stages: Vec::new(),
         wells: vec![
             well("I-1", [0.0, 0.0]),
             well("I-2", [1210.0, 340.0]),

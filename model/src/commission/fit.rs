@@ -7,12 +7,10 @@
 
 use nalgebra::DVector;
 
-use super::aside::gross;
 use super::history::{History, Keep, Regression};
 use super::rates::{Rates, typical_count};
-use super::refuse;
 use super::suspect::{BELIEVED, OCCAM, STRENGTH_SD, Suspect, best_line};
-use super::{Account, Calibration, CommissionSettings, GroundKind, Tried};
+use super::{Calibration, CommissionSettings};
 use crate::ModelError;
 use crate::block::Block;
 use crate::expect::columns::{Columns, Kind, Priors};
@@ -21,7 +19,7 @@ use crate::expect::noise::{Noise, Path};
 use crate::expect::patched::Patched;
 use crate::expect::whitener::Whitener;
 use crate::ground::Ground;
-use crate::reduce::{Factors, Reduced, layer_of};
+use crate::reduce::{Factors, Reduced};
 
 /// The same of a meter's gain in one rate epoch.
 pub(super) const TYPICAL_GAIN: f64 = 0.005;
@@ -48,7 +46,7 @@ const SHORT_STEP: f64 = 0.05;
 /// Least history \[s\].
 const LEAST_HISTORY: f64 = 5.0 * 86_400.0;
 
-/// Calibrates a ground on quiet history, and tells what people should know of the fit.
+/// Calibrates a ground on quiet history.
 ///
 /// `progress` is told the share done, 0 to 1.
 ///
@@ -60,7 +58,7 @@ pub fn commission(
     history: &[Block],
     settings: &CommissionSettings,
     progress: &mut dyn FnMut(f64),
-) -> Result<(Calibration, Account), ModelError> {
+) -> Result<Calibration, ModelError> {
     let (Some(first), Some(last)) = (history.first(), history.last()) else {
         return Err(ModelError::History("there is none".to_owned()));
     };
@@ -73,16 +71,12 @@ pub fn commission(
             LEAST_HISTORY / 86_400.0
         )));
     }
-    refuse::check_history(ground, history)?;
     let mut fit = Fit::start(ground, reduced, history, settings, block)?;
     fit.settle(&mut |share| progress(0.05 + 0.45 * share))?;
-    let mut tried = vec![fit.tried(GroundKind::AsDescribed, fit.log_evidence)];
-    if settings.barrier && fit.state.scales.patch.iter().copied().fold(0.0, f64::max) > UNEVEN {
+    if fit.state.scales.patch.iter().copied().fold(0.0, f64::max) > UNEVEN {
         // So uneven a ground may be an even one with a barrier.
         let mut other = Fit::start(ground, reduced, history, settings, block)?;
         other.sought = true;
-        other.known_aside = true;
-        other.state.aside.clone_from(&fit.state.aside);
         other.state.scales.patch = [EVEN; 2];
         let settled = other.settle(&mut |share| progress(0.5 + 0.3 * share));
         // A trial that fails is no reason to lose the fit that stands.
@@ -90,9 +84,6 @@ pub fn commission(
             Ok(()) => other.log_evidence - fit.log_evidence - OCCAM,
             Err(_) => f64::NEG_INFINITY,
         };
-        if log_evidence.is_finite() {
-            tried.push(other.tried(GroundKind::Barrier, other.log_evidence - OCCAM));
-        }
         if let Some(suspect) = &mut other.state.suspect {
             suspect.log_evidence = log_evidence;
             if log_evidence > BELIEVED {
@@ -101,9 +92,9 @@ pub fn commission(
         }
     }
     progress(0.8);
-    let (calibration, account) = fit.finish((first.index, last.index))?;
+    let calibration = fit.finish((first.index, last.index))?;
     progress(1.0);
-    Ok((calibration, Account { tried, ..account }))
+    Ok(calibration)
 }
 
 /// Declared rates as stretches before the record: when each began and ended before it, and its rate.
@@ -121,20 +112,6 @@ fn declared(past: &[Vec<(f64, f64)>], record: f64) -> Vec<Vec<(f64, f64, f64)>> 
         .collect()
 }
 
-/// Rows of blocks and gauges, ascending.
-fn rows_of(aside: &[(i64, usize)], history: &[Block], gauges: usize) -> Vec<usize> {
-    let mut rows: Vec<usize> = aside
-        .iter()
-        .filter_map(|&(index, gauge)| {
-            let block = history.binary_search_by_key(&index, |b| b.index).ok()?;
-            (gauge < gauges).then_some(block * gauges + gauge)
-        })
-        .collect();
-    rows.sort_unstable();
-    rows.dedup();
-    rows
-}
-
 /// The state of the fit.
 pub(super) struct Fit<'a> {
     pub(super) ground: &'a Ground,
@@ -145,8 +122,6 @@ pub(super) struct Fit<'a> {
     pub(super) priors: Priors,
     /// Whether an undeclared barrier is sought.
     sought: bool,
-    /// Whether it is known which readings to set aside.
-    known_aside: bool,
     pub(super) state: State,
     /// Log marginal likelihood of the history in the last round.
     pub(super) log_evidence: f64,
@@ -163,8 +138,6 @@ pub(super) struct State {
     pub(super) suspect: Option<Suspect>,
     /// Coefficients of the last round less what it moved into parameters and skins.
     pub(super) rest: Option<DVector<f64>>,
-    /// Rows set aside, ascending.
-    pub(super) aside: Vec<usize>,
 }
 
 /// Scales of groups of nuisances.
@@ -188,8 +161,8 @@ impl<'a> Fit<'a> {
         settings: &'a CommissionSettings,
         block: f64,
     ) -> Result<Self, ModelError> {
-        let (gauges, wells) = (ground.gauges.len(), ground.wells.len());
-        let rates = Rates::of(history, wells);
+        let (gauges, wells) = (ground.gauges.len(), ground.inputs());
+        let rates = Rates::of(history, ground);
         let count = typical_count(history, gauges);
         let noise = Noise {
             gauge: ground
@@ -222,6 +195,7 @@ impl<'a> Fit<'a> {
             bias: settings.meter_bias,
             gain: 1.0,
             past: 1.0,
+            rest: rates.rest.clone(),
             declared: declared(&settings.past, history.first().map_or(0.0, Block::start)),
             patch: [1.0; 2],
             mismatch: 0.0,
@@ -246,7 +220,6 @@ impl<'a> Fit<'a> {
             block,
             priors,
             sought: false,
-            known_aside: settings.aside.is_some(),
             state: State {
                 factors,
                 skins,
@@ -259,25 +232,9 @@ impl<'a> Fit<'a> {
                 },
                 suspect: None,
                 rest: None,
-                aside: rows_of(
-                    settings.aside.as_deref().unwrap_or_default(),
-                    history,
-                    gauges,
-                ),
             },
             log_evidence: f64::NEG_INFINITY,
         })
-    }
-
-    /// What stands now, as a ground tried.
-    fn tried(&self, kind: GroundKind, log_evidence: f64) -> Tried {
-        let factors = self.state.factors.iter().copied();
-        Tried {
-            kind,
-            log_evidence,
-            factors: factors.filter(|(p, _)| layer_of(*p) == *p).collect(),
-            leakance: None,
-        }
     }
 
     /// First round in which scales are learned.
@@ -301,16 +258,11 @@ impl<'a> Fit<'a> {
             }
             let before = self.state.clone();
             let moved = self.round(round)?;
-            if before.aside != self.state.aside {
-                // Evidence of other readings is no measure.
-                best = (f64::NEG_INFINITY, None);
-            }
             if round > let_in && self.log_evidence > best.0 {
                 // The evidence is that of the parameters before this round's step, under the scales learned in it.
                 let state = State {
                     scales: self.state.scales.clone(),
                     suspect: self.state.suspect,
-                    aside: self.state.aside.clone(),
                     ..before
                 };
                 best = (self.log_evidence, Some(state));
@@ -353,13 +305,7 @@ impl<'a> Fit<'a> {
         if round == 0 {
             columns = self.columns()?;
             history = History::run(&mut columns, self.history, keep)?;
-            if !self.known_aside {
-                self.state.aside = gross(&history);
-            }
-            history.set_aside(&self.state.aside);
-            refuse::signs(self.ground, &history)?;
         }
-        history.set_aside(&self.state.aside);
         match &self.state.rest {
             Some(rest) => history.fill(rest),
             None => history.fill(&DVector::zeros(0)),
@@ -381,19 +327,7 @@ impl<'a> Fit<'a> {
             }
             regression = history.whiten(&whitener);
         }
-        let mut solved = self.learn_scales(&columns, &regression, history.tail(), round)?;
-        if !self.known_aside && [1, 2, let_in, let_in + 1].contains(&round) {
-            let left = regression.left(&solved.mean);
-            let settled = round >= let_in;
-            let found = self.standing_out(&columns, &history, &whitener, &left, settled)?;
-            if found != self.state.aside {
-                self.state.aside = found;
-                history.set_aside(&self.state.aside);
-                history.fill(&solved.mean);
-                regression = history.whiten(&whitener);
-                solved = self.learn_scales(&columns, &regression, history.tail(), round)?;
-            }
-        }
+        let solved = self.learn_scales(&columns, &regression, history.tail(), round)?;
         self.log_evidence =
             solved.log_likelihood - whitener.log_scale() * self.history.len() as f64;
         let mut rest = solved.mean.clone();

@@ -10,7 +10,6 @@ use nalgebra::{Cholesky, DMatrix, DVector, Dyn};
 use crate::ModelError;
 use crate::block::Block;
 use crate::expect::columns::Columns;
-use crate::expect::drive::Sampled;
 use crate::expect::whitener::Whitener;
 use crate::weigh::barrier::Images;
 
@@ -32,12 +31,8 @@ pub(crate) struct History {
     pub(crate) gauges: usize,
     /// Block, well and size of each jump of a meter's error; two columns each, at the end.
     pub(crate) renewals: Vec<(usize, usize, f64)>,
-    /// Rows without a reading, and those set aside; ascending.
+    /// Rows without a reading.
     pub(crate) missing: Vec<usize>,
-    /// Rows set aside, with what stood there.
-    pub(crate) aside: Vec<(usize, f64)>,
-    /// Response of each pair in each block \[Pa\] (gauge by well, row-major by gauge; by blocks).
-    pub(crate) pairs: DMatrix<f64>,
     /// Reference subtracted from each gauge \[Pa\].
     pub(crate) reference: Vec<f64>,
     /// Spread of each pair's response \[Pa\] (gauge by well, row-major by gauge).
@@ -70,7 +65,7 @@ impl History {
         let mut seen = Vec::new();
         let mut pairs = DMatrix::zeros(gauges * wells, history.len());
         for (index, block) in history.iter().enumerate() {
-            let sampled = Sampled::of(block, wells, gauges)?;
+            let sampled = columns.sample(block)?;
             let step = columns.step(&mut memory, &sampled)?;
             let width = 1 + fixed + step.epochs.ncols();
             if raw.ncols() < width {
@@ -110,7 +105,7 @@ impl History {
                 .collect();
             if seen.is_empty() {
                 return Err(ModelError::History(format!(
-                    "gauge {gauge} has no reading in the whole history"
+                    "gauge {gauge} has no reading in the whole history; take it out of the site file or give a longer history"
                 )));
             }
             let middle = median(seen);
@@ -127,47 +122,12 @@ impl History {
             gauges,
             renewals,
             missing,
-            aside: Vec::new(),
-            pairs,
             reference,
             pair_spread,
             lines: DMatrix::zeros(rows, 0),
             seen,
             taken: 0,
         })
-    }
-
-    /// Sets rows aside as if they had not been read, in place of those set aside before; they must be filled then.
-    pub(crate) fn set_aside(&mut self, rows: &[usize]) {
-        for (row, was) in std::mem::take(&mut self.aside) {
-            self.raw[(row, 0)] = was;
-            self.missing.retain(|&m| m != row);
-        }
-        for &row in rows {
-            if let Err(at) = self.missing.binary_search(&row) {
-                self.aside.push((row, self.raw[(row, 0)]));
-                self.missing.insert(at, row);
-            }
-        }
-    }
-
-    /// Whether a row holds a reading that was not set aside.
-    pub(crate) fn was_read(&self, row: usize) -> bool {
-        self.missing.binary_search(&row).is_err()
-    }
-
-    /// Whether nothing was read at a row.
-    pub(crate) fn absent(&self, row: usize) -> bool {
-        !self.was_read(row) && self.aside.binary_search_by_key(&row, |a| a.0).is_err()
-    }
-
-    /// What the described ground makes felt at a row \[Pa\].
-    pub(crate) fn felt(&self, row: usize) -> f64 {
-        let wells = self.pairs.nrows() / self.gauges.max(1);
-        let (block, gauge) = (row / self.gauges, row % self.gauges);
-        (0..wells)
-            .map(|well| self.pairs[(gauge * wells + well, block)])
-            .sum()
     }
 
     /// Replaces the barriers looked at; the history must have kept its means.
@@ -267,8 +227,6 @@ impl History {
             gauges: self.gauges,
             renewals: self.renewals.clone(),
             missing: self.missing.clone(),
-            aside: self.aside.clone(),
-            pairs: DMatrix::zeros(0, 0),
             reference: self.reference.clone(),
             pair_spread: self.pair_spread.clone(),
             lines: DMatrix::zeros(self.raw.nrows(), 0),
@@ -413,8 +371,6 @@ mod tests {
             gauges: 2,
             renewals: Vec::new(),
             missing: vec![3, 5, 6],
-            aside: Vec::new(),
-            pairs: DMatrix::zeros(0, 0),
             reference: vec![0.0; 2],
             pair_spread: Vec::new(),
             lines: DMatrix::zeros(8, 0),

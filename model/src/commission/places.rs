@@ -9,6 +9,7 @@
 use std::f64::consts::TAU;
 
 use crate::ground::{Ground, Point};
+use crate::weak_form::Rock;
 
 /// Spacing of the lattice of candidates, as a share of the array's half-width.
 const SPACING: f64 = 0.12;
@@ -124,7 +125,19 @@ impl Places {
                     well.at[0] + shift * normal[0],
                     well.at[1] + shift * normal[1],
                 ];
-                self.mix(at, well.layer)
+                // A rate divides among the layers as they conduct.
+                let conducts = |l: usize| Rock::at(ground, well.at, l).transmissivity.1;
+                let all: f64 = well.layers().map(conducts).sum();
+                let mut image = Vec::new();
+                for layer in well.layers() {
+                    let share = conducts(layer) / all;
+                    let mix = self.mix(at, layer)?;
+                    image.extend(
+                        mix.into_iter()
+                            .map(|(place, weight)| (place, share * weight)),
+                    );
+                }
+                Some(image)
             })
             .collect::<Option<_>>()?;
         Some(Line {

@@ -5,8 +5,9 @@
     reason = "indices run over columns, gauges and wells laid out by the same code"
 )]
 
-use crate::block::Block;
+use crate::block::{Block, RateKnown};
 use crate::expect::columns::LAGS;
+use crate::ground::Ground;
 
 /// What the rates of the history are like.
 pub(super) struct Rates {
@@ -18,10 +19,22 @@ pub(super) struct Rates {
     pub(super) lag_spread: Vec<f64>,
     /// Mean total injection \[m3/s\].
     pub(super) flow: f64,
+    /// What each input is counted from: zero for a rate, the mean for the pressure of open water \[Pa\].
+    pub(super) rest: Vec<f64>,
 }
 
 impl Rates {
-    pub(super) fn of(history: &[Block], wells: usize) -> Self {
+    pub(super) fn of(history: &[Block], ground: &Ground) -> Self {
+        let (wells, metered) = (ground.inputs(), ground.wells.len());
+        let rest: Vec<f64> = (0..wells)
+            .map(|well| {
+                if well < metered {
+                    0.0
+                } else {
+                    mean(history, well)
+                }
+            })
+            .collect();
         let mut largest = vec![0.0_f64; wells];
         let mut lag_spread = vec![0.0; LAGS.len() * wells];
         let mut flow = 0.0;
@@ -32,6 +45,7 @@ impl Rates {
                 let mut from = 0.0;
                 let mut sum = 0.0;
                 for &(until, rate) in block.rates.get(well).map_or(&[][..], |p| &p.pieces) {
+                    let rate = rate - rest.get(well).copied().unwrap_or(0.0);
                     sum += rate * (until - from);
                     from = until;
                     largest[well] = largest[well].max(rate.abs());
@@ -54,15 +68,35 @@ impl Rates {
             rms.push(
                 (series.iter().map(|q| q * q).sum::<f64>() / series.len().max(1) as f64).sqrt(),
             );
-            flow += series.iter().map(|q| q.abs()).sum::<f64>() / series.len().max(1) as f64;
+            if well < metered {
+                flow += series.iter().map(|q| q.abs()).sum::<f64>() / series.len().max(1) as f64;
+            }
         }
         Self {
             rms,
             largest,
             lag_spread,
             flow,
+            rest,
         }
     }
+}
+
+/// Mean of an input over the blocks in which it was read.
+fn mean(history: &[Block], input: usize) -> f64 {
+    let (mut sum, mut time) = (0.0, 0.0);
+    for path in history.iter().filter_map(|b| b.rates.get(input)) {
+        if path.known == RateKnown::Stale {
+            continue;
+        }
+        let mut from = 0.0;
+        for &(until, value) in &path.pieces {
+            sum += value * (until - from);
+            time += until - from;
+            from = until;
+        }
+    }
+    if time > 0.0 { sum / time } else { 0.0 }
 }
 
 /// Readings in a block of each gauge, as a rule.

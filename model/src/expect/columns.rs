@@ -20,6 +20,7 @@ use super::epochs::Epochs;
 use super::frame::{Frame, held, means, seen};
 use super::patched::{self, Patched};
 use crate::ModelError;
+use crate::block::Block;
 use crate::weak_form::Parameter;
 
 /// What is known before the record of the size of each nuisance; learned at commissioning where marked.
@@ -39,6 +40,8 @@ pub struct Priors {
     pub bias: f64,
     /// Gain of a meter in one rate epoch, as a share (learned).
     pub gain: f64,
+    /// What each input is counted from: zero for a rate, its mean in the history for the pressure of open water \[Pa\].
+    pub rest: Vec<f64>,
     /// Rates before the record, as a share of each well's largest rate (learned).
     pub past: f64,
     /// Declared rates of each well before the record: how long before it each stretch began and ended \[s\], and its
@@ -224,6 +227,16 @@ impl Columns {
             patch_lags,
             skins: skins.to_vec(),
         }
+    }
+
+    /// Takes a block apart, its inputs counted from where they rest.
+    ///
+    /// # Errors
+    /// As [`Sampled::of`].
+    pub(crate) fn sample(&self, block: &Block) -> Result<Sampled, ModelError> {
+        let mut sampled = Sampled::of(block, self.frame.wells, self.frame.gauges)?;
+        sampled.count_from(&self.priors.rest);
+        Ok(sampled)
     }
 
     /// Number of fixed columns.

@@ -107,6 +107,13 @@ impl Sampled {
         })
     }
 
+    /// Counts each input from a value of its own.
+    pub(crate) fn count_from(&mut self, rest: &[f64]) {
+        for (rates, rest) in self.rates.iter_mut().zip(rest).filter(|(_, r)| **r != 0.0) {
+            rates.iter_mut().for_each(|rate| *rate -= rest);
+        }
+    }
+
     /// Weighted mean of the rate in force just before each instant, by class: what acts at once through skin.
     /// `entering` is the rate of the well at the end of the block before; `keep` says which pieces count.
     pub(crate) fn held(

@@ -93,11 +93,12 @@ impl Epochs {
                         if let Some(old) = now.and_then(|i| self.list.get_mut(i)) {
                             old.current = false;
                         }
-                        if let Some((level, _)) = level {
+                        if let Some((level, _)) = level.filter(|_| well < frame.meters) {
                             self.changes.push((well, rate - level));
                         }
                         now = None;
-                        if rate.abs() > SHUT * scale {
+                        // The level of open water is no rate that a meter errs in proportion to.
+                        if rate.abs() > SHUT * scale && well < frame.meters {
                             now = Some(self.list.len());
                             self.opened += 1;
                             self.list.push(Epoch {

@@ -99,8 +99,10 @@ pub(crate) struct Frame {
     pub(crate) moments: Vec<[f64; 3]>,
     /// Number of gauges.
     pub(crate) gauges: usize,
-    /// Number of wells.
+    /// Number of inputs: wells, then stages and a driven edge.
     pub(crate) wells: usize,
+    /// How many of them are wells, whose rates a meter reads.
+    pub(crate) meters: usize,
 }
 
 impl Frame {
@@ -143,7 +145,8 @@ impl Frame {
             in_wells,
             moments: moments(ground),
             gauges: ground.gauges.len(),
-            wells: ground.wells.len(),
+            wells: ground.inputs(),
+            meters: ground.wells.len(),
         })
     }
 

@@ -160,6 +160,7 @@ mod tests {
             radius: 0.1,
             skin: 0.0,
             storage: 0.0,
+            trace: Vec::new(),
         };
         let gauge = |name: &str, seat| Gauge {
             name: name.into(),
@@ -181,6 +182,7 @@ mod tests {
                 distance: 20_000.0,
             },
             barriers: Vec::new(),
+            stages: Vec::new(),
             wells: vec![well("A", [0.0, 0.0]), well("B", [600.0, 200.0])],
             gauges: vec![
                 gauge("a", Seat::InWell(0)),

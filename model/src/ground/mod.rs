@@ -21,6 +21,8 @@ pub struct Ground {
     pub edge: Edge,
     /// Lines that resist flow.
     pub barriers: Vec<Barrier>,
+    /// Lines along which the ground meets open water of a known level.
+    pub stages: Vec<Stage>,
     /// Wells whose rates are known.
     pub wells: Vec<Well>,
     /// Pressure gauges.
@@ -133,8 +135,23 @@ pub enum EdgeKind {
     Open,
     /// Nothing passes.
     Closed,
-    /// The pressure is held.
+    /// The pressure is held at rest.
     Fixed,
+    /// The pressure is that of open water of a known level.
+    Driven,
+}
+
+/// A line along which the ground meets open water: a river, a canal, a pool.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Stage {
+    /// Name in the site file.
+    pub name: String,
+    /// Its corners, at least two.
+    pub line: Vec<Point>,
+    /// Layer, by order.
+    pub layer: usize,
+    /// Flow through its bed per metre of line and Pascal of difference \[m3/(Pa s m)\], positive.
+    pub conductance: f64,
 }
 
 /// A line that resists flow.
@@ -165,6 +182,9 @@ pub struct Well {
     pub skin: f64,
     /// Wellbore storage \[m3/Pa\]; zero where it does not matter.
     pub storage: f64,
+    /// Corners of the line along which a horizontal well or a fracture meets the ground, one pressure all along;
+    /// empty for a well that meets it at a point.
+    pub trace: Vec<Point>,
 }
 
 impl Well {
@@ -227,6 +247,13 @@ pub struct Neighbour {
 }
 
 impl Ground {
+    /// Number of known inputs: the rate of every well, then the pressure of every stage, then that of the edge where it
+    /// is [`EdgeKind::Driven`]. A block holds one path for each, in this order.
+    #[must_use]
+    pub fn inputs(&self) -> usize {
+        self.wells.len() + self.stages.len() + usize::from(self.edge.kind == EdgeKind::Driven)
+    }
+
     /// The zone that holds a point of a layer, by order: the last of those whose outline holds it.
     #[must_use]
     pub fn zone_at(&self, point: Point, layer: usize) -> Option<usize> {

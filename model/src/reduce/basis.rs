@@ -102,6 +102,7 @@ impl<'a> Basis<'a> {
             mass: blocks(&system.mass, self.span.mass(), 0),
             stiffness: blocks(&system.stiffness, self.span.stiffness(), self.closed),
             patches: Vec::new(),
+            drives: system.drives.clone(),
             wells: ports(&system.wells.iter().collect::<Vec<_>>())?,
             gauges: ports(&system.gauges.iter().collect::<Vec<_>>())?,
             neighbours: ports(&system.neighbours.iter().collect::<Vec<_>>())?,

@@ -105,6 +105,7 @@ impl Lattice {
         };
         Self {
             system: System {
+                drives: Vec::new(),
                 size,
                 mass: vec![
                     block(Parameter::Storativity(0), storage),

@@ -95,8 +95,10 @@ pub struct Reduced {
     pub stiffness: Vec<ReducedBlock>,
     /// What each patch contributes to the shares of its layer: with a factor f on the patch, f - 1 times its matrix is added.
     pub patches: Vec<ReducedBlock>,
-    /// Port vectors of the wells (r by number of wells).
+    /// Port vectors of the wells and of what else drives the ground (r by number of inputs).
     pub wells: DMatrix<f64>,
+    /// What scales each of them, at its described value; those beyond the list never change.
+    pub drives: Vec<Parameter>,
     /// Observation vectors of the gauges (r by number of gauges).
     pub gauges: DMatrix<f64>,
     /// Port vectors of the neighbours (r by number of neighbours).
@@ -139,7 +141,7 @@ pub type Factors = Vec<(Parameter, f64)>;
 pub struct Modal {
     /// Decay rates \[1/s\], ascending, exactly zero for closed components.
     pub lambda: DVector<f64>,
-    /// Ports of the wells (r by number of wells).
+    /// Ports of the wells and of what else drives the ground (r by number of inputs).
     pub wells: DMatrix<f64>,
     /// Functionals of the gauges (r by number of gauges).
     pub gauges: DMatrix<f64>,

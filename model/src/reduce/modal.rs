@@ -43,9 +43,13 @@ impl Reduced {
                 })
             }
         };
+        let mut wells = rotate(&self.wells)?;
+        for (mut port, drive) in wells.column_iter_mut().zip(&self.drives) {
+            port *= factor_on(*drive, factors)?;
+        }
         Ok(Modal {
             lambda,
-            wells: rotate(&self.wells)?,
+            wells,
             gauges: rotate(&self.gauges)?,
             neighbours: rotate(&self.neighbours)?,
             places: rotate(&self.place_ports)?,

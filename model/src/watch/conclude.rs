@@ -39,6 +39,7 @@ impl Watch {
             places: &self.places,
             gauges: self.columns.frame.gauges,
             wells: self.columns.frame.wells,
+            meters: self.columns.frame.meters,
             block: self.block,
             mismatch: self.mismatch,
         };

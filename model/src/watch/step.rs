@@ -15,7 +15,7 @@ use crate::block::{Block, RateKnown};
 use crate::commission::{Commissioned, Places, Unsteady, calm};
 use crate::expect::adopted::{Adopted, AdoptedBlock};
 use crate::expect::columns::Columns;
-use crate::expect::drive::{Sampled, size};
+use crate::expect::drive::size;
 use crate::expect::frame::Frame;
 use crate::expect::noise::Path;
 use crate::expect::posterior::Posterior;
@@ -234,8 +234,8 @@ impl Watch {
                 must: "must be that of commissioning",
             });
         }
-        let (gauges, wells) = (self.columns.frame.gauges, self.columns.frame.wells);
-        let sampled = Sampled::of(block, wells, gauges)?;
+        let gauges = self.columns.frame.gauges;
+        let sampled = self.columns.sample(block)?;
         self.state.stuck.step(block);
         let mut memory = match self.state.memory.take() {
             Some(memory) => memory,

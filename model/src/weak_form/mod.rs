@@ -52,6 +52,8 @@ pub enum Parameter {
     ZoneTransmissivity(usize),
     /// Storativity of a zone, by order.
     ZoneStorativity(usize),
+    /// Conductance of the bed of a stage, by order (scales its input too).
+    Stage(usize),
 }
 
 /// What a point of the ground conducts and stores, and by which parameters.
@@ -107,8 +109,11 @@ pub struct System {
     pub mass: Vec<SparseBlock>,
     /// Shares of the conduction matrix K \[m3/(Pa s)\].
     pub stiffness: Vec<SparseBlock>,
-    /// One port per well of the ground, in order: where its rate enters (the wellbore node with storage, else the ring).
+    /// One port per input of the ground, in order: where a well's rate enters (the wellbore node where there is one, else
+    /// the ring or the trace), then what one Pascal of each stage and of a driven edge lets in.
     pub wells: Vec<Functional>,
+    /// What scales each of these ports.
+    pub drives: Vec<Parameter>,
     /// One functional per gauge of the ground, in order.
     pub gauges: Vec<Functional>,
     /// One functional per neighbour of the ground, in order.

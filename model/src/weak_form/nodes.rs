@@ -3,7 +3,7 @@
 use super::Functional;
 use super::space::{MOST, Space};
 use crate::ModelError;
-use crate::ground::mesh::{Mesh, ordered};
+use crate::ground::mesh::{Driver, Mesh, ordered};
 use crate::ground::{EdgeKind, Ground, Point};
 
 /// What became of a node.
@@ -27,7 +27,7 @@ pub(super) struct Nodes {
     slots: Vec<Vec<Slot>>,
     /// Whether a triangle is cut out, one list per layer, by the well.
     cut: Vec<Vec<Option<usize>>>,
-    /// The unknown of each well's ring in each of its layers, in the order of [`crate::ground::Well::layers`].
+    /// The unknown of each well's ring or trace in each of its layers, in the order of [`crate::ground::Well::layers`].
     pub(super) rings: Vec<Vec<(usize, usize)>>,
     /// The unknown of each well's bore: the rings', or its own.
     pub(super) bores: Vec<usize>,
@@ -109,6 +109,18 @@ impl Nodes {
                     if let Some(slot) = tied.get_mut(node) {
                         *slot = Some(w);
                     }
+                }
+            }
+        }
+        for piece in &mesh.lines {
+            let Driver::Well(w) = piece.of else { continue };
+            if !ground.wells.get(w).is_some_and(|well| well.meets(layer)) {
+                continue;
+            }
+            let [a, b] = piece.ends;
+            for node in [Some(a), Some(b), self.side(a, b)].into_iter().flatten() {
+                if let Some(slot) = tied.get_mut(node) {
+                    *slot = Some(w);
                 }
             }
         }

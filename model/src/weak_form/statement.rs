@@ -5,14 +5,19 @@
 //! ```text
 //! int w S dp/dt + int T grad w . A grad p + int (w - w') L (p - p')    (p' in the layer below)
 //!   + int_barrier c [w][p] + int_edge w (T/(R n.A^-1 n)) p           ([.] the jump across a barrier)
+//!   + int_stage w c (p - p_s) + int_edge w b (p - p_e)   (an edge driven by open water)
 //!   = sum over wells q w(x)
 //! ```
+//!
+//! Stages and a driven edge let pressure out like an open edge, and let in what their own pressure drives: `int w c p_s`
+//! is an input like a well's rate.
 //!
 //! `T` and `S` are the zone's inside a zone, else the layer's. `A`, of determinant one, is the layer's anisotropy.
 //! In a cut-out nothing is stored or conducted, and its ring has one pressure. The edge at distance `R` lets
 //! pressure out where it is open, holds it where it is fixed, and keeps it where it is closed. Barriers and
 //! the edge pass through all layers.
 
+use std::collections::BTreeMap;
 use std::f64::consts::PI;
 
 use super::assembly::Assembly;
@@ -20,8 +25,12 @@ use super::nodes::{Nodes, Slot};
 use super::space::{Local, MOST, Space};
 use super::{Functional, Parameter, Rock, SparseBlock, System};
 use crate::ModelError;
-use crate::ground::mesh::{Mesh, distance};
+use crate::ground::mesh::{Driver, Mesh, distance};
 use crate::ground::{EdgeKind, Ground, ISOTROPIC, Patches, Point, Tensor, Well};
+
+/// Thickness of ground, as a share of the edge's distance, that stands between a driven edge and the water beyond: so
+/// thin that the edge has the water's pressure.
+const THIN: f64 = 1e-4;
 
 /// Puts the statement into a space. Gauges and neighbours are left to the caller.
 pub(super) fn assemble(
@@ -31,6 +40,7 @@ pub(super) fn assemble(
     nodes: &Nodes,
 ) -> Result<System, ModelError> {
     let mut sum = Assembly::new(nodes.places.len());
+    let mut edge = BTreeMap::new();
     for (l, layer) in ground.layers.iter().enumerate() {
         let tensor = layer.tensor();
         for t in 0..mesh.triangles.len() {
@@ -55,6 +65,16 @@ pub(super) fn assemble(
                 sum.exchange(Parameter::Leakance(l), leakance, (&here, &below), &storage);
             }
         }
+        if ground.edge.kind == EdgeKind::Driven {
+            for &segment in &mesh.edge {
+                let line = space.line(length(mesh, segment));
+                let (_, transmissivity) = outlet(ground, mesh, segment, (l, &tensor));
+                let beta = transmissivity / THIN;
+                let slots = nodes.segment(segment, l);
+                sum.let_out(Parameter::Fixed, beta, &slots, &line);
+                let_in(&mut edge, beta, &slots, &line);
+            }
+        }
         for joint in &mesh.joints {
             let sides = (&nodes.segment(joint.one, l), &nodes.segment(joint.other, l));
             let conductance = ground
@@ -75,22 +95,49 @@ pub(super) fn assemble(
     for (w, well) in ground.wells.iter().enumerate() {
         bore(ground, w, well, nodes, &mut sum);
     }
+    let mut wells: Vec<Functional> = nodes
+        .bores
+        .iter()
+        .map(|&i| Functional(vec![(i, 1.0)]))
+        .collect();
+    let mut drives = vec![Parameter::Fixed; wells.len()];
+    for (s, stage) in ground.stages.iter().enumerate() {
+        let mut port = BTreeMap::new();
+        for piece in mesh.lines.iter().filter(|p| p.of == Driver::Stage(s)) {
+            let line = space.line(length(mesh, piece.ends));
+            let slots = nodes.segment(piece.ends, stage.layer);
+            sum.let_out(Parameter::Stage(s), stage.conductance, &slots, &line);
+            let_in(&mut port, stage.conductance, &slots, &line);
+        }
+        wells.push(Functional(port.into_iter().collect()));
+        drives.push(Parameter::Stage(s));
+    }
+    if ground.edge.kind == EdgeKind::Driven {
+        wells.push(Functional(edge.into_iter().collect()));
+        drives.push(Parameter::Fixed);
+    }
     let closed_components = sum.closed();
     let (mass, stiffness) = sum.finish()?;
     Ok(System {
         size: nodes.places.len(),
         mass,
         stiffness,
-        wells: nodes
-            .bores
-            .iter()
-            .map(|&i| Functional(vec![(i, 1.0)]))
-            .collect(),
+        wells,
+        drives,
         gauges: Vec::new(),
         neighbours: Vec::new(),
         closed_components,
         nodes: nodes.places.clone(),
     })
+}
+
+/// Adds what a pressure beyond drives in: row sums of `factor` times a local matrix through which pressure leaves.
+fn let_in(port: &mut BTreeMap<usize, f64>, factor: f64, slots: &[Slot; MOST], local: &Local) {
+    for (slot, row) in slots.iter().zip(&local.entries).take(local.size) {
+        if let Slot::Unknown(i) = *slot {
+            *port.entry(i).or_insert(0.0) += factor * row.iter().take(local.size).sum::<f64>();
+        }
+    }
 }
 
 /// The patches' shares of storage and conduction: a triangle belongs to the patch of its centroid. A zone is no part of
@@ -289,6 +336,21 @@ pub(super) fn check(ground: &Ground, space: &dyn Space) -> Result<(), ModelError
             "it must be zero or more",
         )?;
     }
+    for stage in &ground.stages {
+        let what = format!("conductance of stage {}", stage.name);
+        demand(
+            positive(stage.conductance),
+            what,
+            stage.conductance,
+            "it must be positive",
+        )?;
+        demand(
+            stage.layer < layers,
+            format!("layer of stage {}", stage.name),
+            stage.layer as f64,
+            "the ground has no such layer",
+        )?;
+    }
     let seats = (0..ground.gauges.len()).map(|g| {
         (
             format!("layer of gauge {g}"),
@@ -320,6 +382,12 @@ pub(super) fn check(ground: &Ground, space: &dyn Space) -> Result<(), ModelError
             let what = format!("layer of well {}", well.name);
             return demand(false, what, layer, "each layer may be named once");
         }
+        demand(
+            well.trace.is_empty() || well.skin >= 0.0,
+            format!("skin of well {}", well.name),
+            well.skin,
+            "a well with a trace takes none below zero: its length says how well it is joined to the ground",
+        )?;
         let what = format!("storage of well {}", well.name);
         demand(
             not_negative(well.storage),

@@ -35,7 +35,9 @@ pub(crate) struct Weights<'a> {
     pub(crate) scales: &'a Scales,
     pub(crate) places: &'a Places,
     pub(crate) gauges: usize,
+    /// Inputs, and how many of them are wells with a meter.
     pub(crate) wells: usize,
+    pub(crate) meters: usize,
     /// Length of a block \[s\].
     pub(crate) block: f64,
     /// Relative error of a source's signature in a ground that is known only so well.
@@ -200,7 +202,7 @@ impl Weights<'_> {
 
     /// A change of each meter's scale.
     fn meters(&self, onset: &Onset) -> Vec<Hypothesis> {
-        (0..self.wells)
+        (0..self.meters)
             .flat_map(|well| {
                 self.abrupt(
                     &onset.meters,

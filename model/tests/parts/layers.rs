@@ -107,7 +107,7 @@ fn the_split_tends_to_the_shares_of_transmissivity() {
 
 #[test]
 fn skin_and_storage_of_unlike_layers_follow_the_commingled_solution() {
-    for (skin, storage) in [(3.0, 0.0), (3.0, 2e-7), (0.0, 2e-7), (-2.0, 0.0)] {
+    for (skin, storage) in [(3.0, 0.0), (3.0, 2e-7), (-2.0, 0.0)] {
         let g = two_layers((1.0, 1.0), (0.3, 3.0), skin, storage);
         let system = discretise(&g, Scheme::Quadratic, &MeshOptions::default())
             .unwrap()

@@ -1,7 +1,7 @@
 //! What must hold in any ground: symmetry, positivity, the balance of volume, reciprocity, passivity.
 
 use borewake_model::ground::mesh::MeshOptions;
-use borewake_model::ground::{Anisotropy, Barrier, EdgeKind, Ground, Layer, Seat, Zone};
+use borewake_model::ground::{Anisotropy, Barrier, EdgeKind, Ground, Layer, Seat, Stage, Zone};
 use borewake_model::reduce::{ReduceOptions, reduce};
 use borewake_model::weak_form::{Discrete, Functional, Scheme, System, discretise};
 use proptest::prelude::*;
@@ -13,7 +13,8 @@ const COARSE: MeshOptions = MeshOptions {
     refine: 1.0,
 };
 
-/// Up to three wells of any skin and storage, open to two layers or one, a barrier, a zone, anisotropy, any edge.
+/// Up to three wells of any skin and storage, open to two layers or one, one along a line, a barrier, a zone, a river,
+/// anisotropy, any edge.
 fn any_ground() -> impl Strategy<Value = Ground> {
     let skin = prop_oneof![Just(-6.0), Just(0.0), Just(50.0), -6.0..50.0f64];
     let storage = prop_oneof![Just(0.0), 1e-9..1e-6f64];
@@ -27,7 +28,8 @@ fn any_ground() -> impl Strategy<Value = Ground> {
     let edge = prop_oneof![
         Just(EdgeKind::Open),
         Just(EdgeKind::Closed),
-        Just(EdgeKind::Fixed)
+        Just(EdgeKind::Fixed),
+        Just(EdgeKind::Driven)
     ];
     (
         proptest::collection::vec(a_well, 1..4),
@@ -36,58 +38,75 @@ fn any_ground() -> impl Strategy<Value = Ground> {
         proptest::option::of(prop_oneof![Just(0.0), 1e-15..1e-10f64]),
         proptest::option::of((0.05..20.0f64, 0.3..3.0f64)),
         proptest::option::of((1.0..8.0f64, 0.0..3.0f64)),
+        proptest::option::of(1e-12..1e-8f64),
+        any::<bool>(),
     )
-        .prop_map(|(wells, kind, leakance, barrier, zone, anisotropy)| {
-            let mut g = ground(kind, 6000.0);
-            for (i, (skin, storage, dx, dy, both)) in wells.into_iter().enumerate() {
-                let x = 1200.0 * (i as f64 - 1.0);
-                let mut w = well(&format!("W-{i}"), [x + dx, dy]);
-                (w.skin, w.storage) = (skin, storage);
-                if leakance.is_some() && both {
-                    w.also = vec![1];
+        .prop_map(
+            |(wells, kind, leakance, barrier, zone, anisotropy, stage, trace)| {
+                let mut g = ground(kind, 6000.0);
+                for (i, (skin, storage, dx, dy, both)) in wells.into_iter().enumerate() {
+                    let x = 1200.0 * (i as f64 - 1.0);
+                    let mut w = well(&format!("W-{i}"), [x + dx, dy]);
+                    (w.skin, w.storage) = (skin, storage);
+                    if leakance.is_some() && both {
+                        w.also = vec![1];
+                    }
+                    g.wells.push(w);
                 }
-                g.wells.push(w);
-            }
-            let turned = anisotropy.map(|(ratio, direction)| Anisotropy { ratio, direction });
-            g.layers[0].anisotropy = turned;
-            if let Some(leakance) = leakance {
-                g.layers[0].leakance_below = Some(leakance);
-                g.layers.push(Layer {
-                    name: "lower".into(),
-                    transmissivity: 0.3 * T,
-                    ..layer()
-                });
-            }
-            let last = g.layers.len() - 1;
-            g.gauges = vec![
-                gauge("well", Seat::InWell(0)),
-                gauge(
-                    "ground",
-                    Seat::InGround {
-                        at: [350.0, 720.0],
-                        layer: last,
-                    },
-                ),
-            ];
-            g.barriers.extend(barrier.map(|conductance| Barrier {
-                name: "fault".into(),
-                line: vec![[-2500.0, 500.0], [2500.0, 600.0]],
-                conductance,
-            }));
-            g.zones.extend(zone.map(|(t, s)| Zone {
-                name: "channel".into(),
-                layer: 0,
-                outline: vec![
-                    [-600.0, -700.0],
-                    [3000.0, -700.0],
-                    [3000.0, 1200.0],
-                    [-600.0, 800.0],
-                ],
-                transmissivity: t * T,
-                storativity: s * S,
-            }));
-            g
-        })
+                let turned = anisotropy.map(|(ratio, direction)| Anisotropy { ratio, direction });
+                g.layers[0].anisotropy = turned;
+                if let Some(leakance) = leakance {
+                    g.layers[0].leakance_below = Some(leakance);
+                    g.layers.push(Layer {
+                        name: "lower".into(),
+                        transmissivity: 0.3 * T,
+                        ..layer()
+                    });
+                }
+                let last = g.layers.len() - 1;
+                if trace {
+                    let mut w = well("H", [-50.0, -1350.0]);
+                    w.trace = vec![[-300.0, -1200.0], [-50.0, -1350.0], [200.0, -1500.0]];
+                    w.also = (1..g.layers.len()).collect();
+                    g.wells.push(w);
+                }
+                // It crosses the barrier and the zone.
+                g.stages.extend(stage.map(|conductance| Stage {
+                    name: "river".into(),
+                    line: vec![[2000.0, -7000.0], [2100.0, 7000.0]],
+                    layer: last,
+                    conductance,
+                }));
+                g.gauges = vec![
+                    gauge("well", Seat::InWell(0)),
+                    gauge(
+                        "ground",
+                        Seat::InGround {
+                            at: [350.0, 720.0],
+                            layer: last,
+                        },
+                    ),
+                ];
+                g.barriers.extend(barrier.map(|conductance| Barrier {
+                    name: "fault".into(),
+                    line: vec![[-2500.0, 500.0], [2500.0, 600.0]],
+                    conductance,
+                }));
+                g.zones.extend(zone.map(|(t, s)| Zone {
+                    name: "channel".into(),
+                    layer: 0,
+                    outline: vec![
+                        [-600.0, -700.0],
+                        [3000.0, -700.0],
+                        [3000.0, 1200.0],
+                        [-600.0, 800.0],
+                    ],
+                    transmissivity: t * T,
+                    storativity: s * S,
+                }));
+                g
+            },
+        )
 }
 
 fn scheme(g: &Ground, pick: usize) -> Scheme {
@@ -154,7 +173,7 @@ fn check(g: &Ground, d: &Discrete) -> Result<(), TestCaseError> {
                 (kept + gone - entered).abs() < 1e-10,
                 "s {s:e} port {j}: kept {kept} gone {gone} entered {entered}"
             );
-            if g.edge.kind == EdgeKind::Closed {
+            if g.edge.kind == EdgeKind::Closed && g.stages.is_empty() {
                 prop_assert!(gone.abs() < 1e-10, "{gone:e} left a closed ground");
             }
             for (i, other) in ports.iter().enumerate() {

@@ -21,6 +21,7 @@ fn mesh(
         }],
         edge,
         joints: Vec::new(),
+        lines: Vec::new(),
         gauges: Vec::new(),
         neighbours: Vec::new(),
         centre: [0.0, 0.0],

@@ -26,6 +26,7 @@ pub fn well(name: &str, at: Point) -> Well {
         radius: 0.11,
         skin: 0.0,
         storage: 0.0,
+        trace: Vec::new(),
     }
 }
 
@@ -58,6 +59,7 @@ pub fn ground(kind: EdgeKind, distance: f64) -> Ground {
         zones: Vec::new(),
         edge: Edge { kind, distance },
         barriers: Vec::new(),
+        stages: Vec::new(),
         wells: Vec::new(),
         gauges: Vec::new(),
         neighbours: Vec::new(),

@@ -26,8 +26,10 @@ pub(in crate::cli) fn summary_json(site: &Site) -> Value {
         "zones": site.ground.zones,
         "edge": site.ground.edge,
         "barriers": site.ground.barriers,
+        "stages": site.ground.stages,
+        "waters": site.waters.iter().map(|w| json!({ "name": w.name, "channel": w.channel })).collect::<Vec<_>>(),
         "wells": site.ground.wells.iter().zip(&site.wells).map(|(w, s)| json!({
-            "name": w.name, "at_m": w.at, "layer": layer_names(site, w), "radius_m": w.radius,
+            "name": w.name, "at_m": w.at, "layer": layer_names(site, w), "radius_m": w.radius, "trace_m": w.trace,
             "skin": w.skin, "rate": s.rate, "share": s.share,
         })).collect::<Vec<_>>(),
         "neighbours": site.ground.neighbours.iter().map(|n| json!({

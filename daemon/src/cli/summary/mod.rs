@@ -46,6 +46,7 @@ pub(super) fn summary_text(site: &Site) -> String {
         ("Zones", zones(site)),
         ("Edge", edge(site)),
         ("Barriers", barriers(site)),
+        ("Stages", stages(site)),
         ("Wells", wells(site)),
         ("Neighbours", neighbours(site)),
         ("Gauges", gauges(site)),
@@ -155,7 +156,35 @@ fn zones(site: &Site) -> String {
 fn edge(site: &Site) -> String {
     let edge = &site.ground.edge;
     let distance = site.units.show(Dimension::Length, edge.distance);
-    format!("  {}, {distance} from the centre\n", edge_word(edge.kind))
+    let driven = site.waters.get(site.ground.stages.len());
+    let by = driven.map_or_else(String::new, |w| format!(" ({})", w.channel));
+    format!(
+        "  {}{by}, {distance} from the centre\n",
+        edge_word(edge.kind)
+    )
+}
+
+fn stages(site: &Site) -> String {
+    let mut table = Table::new(&[
+        ("name", Align::Left),
+        ("corners", Align::Right),
+        ("layer", Align::Left),
+        (
+            &head(site, "conductance", Dimension::Conductance),
+            Align::Right,
+        ),
+        ("channel", Align::Left),
+    ]);
+    for (stage, water) in site.ground.stages.iter().zip(&site.waters) {
+        table.row([
+            stage.name.clone(),
+            stage.line.len().to_string(),
+            layer_name(site, stage.layer),
+            number(site, Dimension::Conductance, stage.conductance),
+            water.channel.to_string(),
+        ]);
+    }
+    text_of(&table)
 }
 
 fn barriers(site: &Site) -> String {

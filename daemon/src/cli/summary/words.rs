@@ -15,6 +15,7 @@ pub(super) fn edge_word(kind: EdgeKind) -> &'static str {
         EdgeKind::Open => "open",
         EdgeKind::Closed => "closed",
         EdgeKind::Fixed => "fixed",
+        EdgeKind::Driven => "at the pressure of open water",
     }
 }
 

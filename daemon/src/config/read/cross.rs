@@ -18,10 +18,24 @@ pub(super) struct Channels {
     pub(super) patterns: Vec<PatternChannel>,
 }
 
-/// Places of wells and gauges that could be read.
-pub(super) fn points(wells: &[WellRead], gauges: &[GaugeRead]) -> Vec<Point> {
-    let wells = wells.iter().filter(|w| w.placed).map(|w| w.well.at);
-    let gauges = gauges.iter().filter_map(|g| Some(g.place?.0));
+/// Open water as written: a stage, or what drives the edge.
+pub(super) struct WaterRead {
+    pub(super) name: String,
+    /// The key of its channel, for messages.
+    pub(super) key: String,
+    pub(super) channel: At<String>,
+}
+
+/// Places of wells and gauges that could be read, and whose they are.
+pub(super) fn points(wells: &[WellRead], gauges: &[GaugeRead]) -> Vec<(String, Point)> {
+    let placed = wells.iter().filter(|w| w.placed);
+    let wells = placed.flat_map(|w| {
+        let all = w.well.trace.iter().copied().chain([w.well.at]);
+        all.map(|at| (w.path.clone(), at))
+    });
+    let gauges = gauges
+        .iter()
+        .filter_map(|g| Some((g.path.clone(), g.place?.0)));
     wells.chain(gauges).collect()
 }
 
@@ -31,6 +45,7 @@ pub(super) fn channels(
     sources: &[SourceRead],
     wells: &[WellRead],
     gauges: &[GaugeRead],
+    waters: &[WaterRead],
 ) -> Channels {
     let all: Vec<&ChannelRead> = sources.iter().flat_map(|s| &s.channels).collect();
     let (plain, patterns): (Vec<&ChannelRead>, Vec<&ChannelRead>) =
@@ -75,28 +90,38 @@ pub(super) fn channels(
     }
     for well in wells {
         let key = format!("{}: rate", well.path);
-        channels.resolve(report, key, &well.rate, ChannelKind::Rate);
+        channels.resolve(report, key, &well.rate, &[ChannelKind::Rate]);
     }
     for gauge in gauges {
         let key = format!("{}: channel", gauge.path);
-        channels.resolve(report, key, &gauge.channel, ChannelKind::Pressure);
+        channels.resolve(report, key, &gauge.channel, &[ChannelKind::Pressure]);
+    }
+    for water in waters {
+        let kinds = [ChannelKind::Stage, ChannelKind::Pressure];
+        channels.resolve(report, water.key.clone(), &water.channel, &kinds);
     }
     for read in sources.iter().flat_map(|s| &s.channels) {
         for companion in &read.companions {
             let key = companion.key.clone();
-            channels.resolve(report, key, &companion.channel, companion.kind);
+            channels.resolve(report, key, &companion.channel, &[companion.kind]);
         }
     }
     shares(report, wells);
     one_gauge_each(report, gauges);
     one_source_a_port(report, sources);
-    unused(report, &plain, wells, gauges);
+    unused(report, &plain, wells, gauges, waters);
     channels
 }
 
 impl Channels {
     /// Finds a channel that is referred to, and gives one that a pattern makes its own entry.
-    fn resolve(&mut self, report: &Report<'_>, key: String, at: &At<String>, kind: ChannelKind) {
+    fn resolve(
+        &mut self,
+        report: &Report<'_>,
+        key: String,
+        at: &At<String>,
+        kinds: &[ChannelKind],
+    ) {
         // What is missing or empty has been said.
         if at.value.is_empty() {
             return;
@@ -128,16 +153,17 @@ impl Channels {
         let Some(found) = self.named.get(&id) else {
             return;
         };
-        if found.kind != kind {
+        if !kinds.contains(&found.kind) {
+            let due: Vec<&str> = kinds.iter().map(|k| k.name()).collect();
             let what = format!(
                 "a channel of kind {} is due, and this one of source \"{}\" is of kind {}",
-                kind.name(),
+                due.join(" or "),
                 found.source,
                 found.kind.name()
             );
             let mend = format!(
                 "name another channel, or give it kind = \"{}\"",
-                kind.name()
+                due.first().copied().unwrap_or_default()
             );
             report.value(&at.span, key, what, mend);
         }
@@ -190,11 +216,15 @@ fn unused(
     channels: &[&ChannelRead],
     wells: &[WellRead],
     gauges: &[GaugeRead],
+    waters: &[WaterRead],
 ) {
     for read in channels {
         let id = &read.id.value;
         let used = match read.settings.kind {
-            ChannelKind::Pressure => gauges.iter().any(|g| g.channel.value == *id),
+            ChannelKind::Pressure => {
+                gauges.iter().any(|g| g.channel.value == *id)
+                    || waters.iter().any(|w| w.channel.value == *id)
+            }
             ChannelKind::Rate => wells.iter().any(|w| w.rate.value == *id),
             _ => true,
         };
@@ -214,7 +244,8 @@ pub(super) fn places(
     neighbours: &[At<Neighbour>],
     barriers: &[At<Barrier>],
 ) {
-    let wells: Vec<&WellRead> = wells.iter().filter(|w| w.placed).collect();
+    let placed = wells.iter().filter(|w| w.placed);
+    let wells: Vec<&WellRead> = placed.filter(|w| w.well.trace.is_empty()).collect();
     for (index, well) in wells.iter().enumerate() {
         for other in wells.iter().take(index) {
             if well.well.layers().any(|l| other.well.meets(l))

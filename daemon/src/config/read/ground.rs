@@ -13,6 +13,8 @@ use super::points::{sound_name, unique};
 pub(super) struct EdgeRead {
     kind: EdgeKind,
     distance: Option<At<f64>>,
+    /// Channel of the open water that drives it.
+    pub(super) stage: Option<At<String>>,
 }
 
 /// Reads `[edge]`; without it the ground goes on.
@@ -21,6 +23,7 @@ pub(super) fn edge(root: &mut Section<'_>) -> EdgeRead {
         return EdgeRead {
             kind: EdgeKind::Open,
             distance: None,
+            stage: None,
         };
     };
     let kinds = [
@@ -35,13 +38,27 @@ pub(super) fn edge(root: &mut Section<'_>) -> EdgeRead {
         EdgeKind::Open => length(&mut section, "distance"),
         _ => section.must("distance", "distance = \"12 km\"", length),
     };
-    section.refused(
-        "stage",
-        "an edge driven by a level is not in this build",
-        "leave it out; kind = \"fixed\" holds the edge at rest",
-    );
+    let stage = section.text("stage");
+    let kind = match (&stage, kind) {
+        (None, _) => kind,
+        (Some(_), EdgeKind::Fixed) => EdgeKind::Driven,
+        (Some(at), _) => {
+            let what = "only an edge of kind \"fixed\" follows a stage";
+            section.wrong(
+                "stage",
+                at,
+                what,
+                "write kind = \"fixed\", or leave `stage` out",
+            );
+            kind
+        }
+    };
     section.close();
-    EdgeRead { kind, distance }
+    EdgeRead {
+        kind,
+        distance,
+        stage,
+    }
 }
 
 /// The edge, with a distance that holds all wells and gauges; an open edge without one is put where the station's life
@@ -51,14 +68,14 @@ pub(super) fn edge_of(
     edge: EdgeRead,
     layers: &[LayerRead],
     zones: &[At<Zone>],
-    points: &[Point],
+    points: &[(String, Point)],
 ) -> Edge {
-    let reach = reach(points);
+    let (reach, farthest) = reach(points);
     if let Some(distance) = &edge.distance
         && distance.value <= reach
     {
-        let what = format!("wells and gauges lie up to {reach:.0} m from their centre");
-        let mend = "put the edge outside them";
+        let what = format!("{farthest} lies {reach:.0} m from the centre of wells and gauges");
+        let mend = "put the edge outside it, or move it";
         report.value(&distance.span, "edge: distance".to_owned(), what, mend);
     }
     // Along its best direction a layer conducts by the root of the ratio better than in the mean.
@@ -78,18 +95,23 @@ pub(super) fn edge_of(
     }
 }
 
-/// Largest distance of a point from the centre of all \[m\].
-fn reach(points: &[Point]) -> f64 {
+/// Largest distance of a point from the centre of all \[m\], and whose it is.
+fn reach(points: &[(String, Point)]) -> (f64, &str) {
     let centre = |axis: fn(&Point) -> f64| {
-        let low = points.iter().map(axis).fold(f64::INFINITY, f64::min);
-        let high = points.iter().map(axis).fold(f64::NEG_INFINITY, f64::max);
+        let along = || points.iter().map(|(_, p)| axis(p));
+        let low = along().fold(f64::INFINITY, f64::min);
+        let high = along().fold(f64::NEG_INFINITY, f64::max);
         f64::midpoint(low, high)
     };
     let (x, y) = (centre(|p| p[0]), centre(|p| p[1]));
-    points
-        .iter()
-        .map(|p| (p[0] - x).hypot(p[1] - y))
-        .fold(0.0, f64::max)
+    let mut farthest = (0.0, "");
+    for (name, p) in points {
+        let distance = (p[0] - x).hypot(p[1] - y);
+        if distance > farthest.0 {
+            farthest = (distance, name);
+        }
+    }
+    farthest
 }
 
 /// Reads every `[[barrier]]`.

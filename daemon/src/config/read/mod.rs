@@ -13,6 +13,7 @@ mod quality;
 mod sdi12;
 mod serial;
 mod sources;
+mod stage;
 mod zone;
 
 use std::path::Path;
@@ -22,7 +23,12 @@ use toml::de::DeTable;
 
 use super::report::Report;
 use super::section::Section;
-use super::{ConfigError, Site};
+use super::{ConfigError, Site, WaterSettings};
+use crate::record::{ChannelId, ChannelKind, Holds};
+use cross::WaterRead;
+
+/// Pressure under a metre of water \[Pa/m\].
+const METRE_OF_WATER: f64 = 9_806.65;
 
 /// Reads the text of a site file. Nothing but the text is looked at; `path` is where relative paths start.
 ///
@@ -57,6 +63,7 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
     let edge = ground::edge(&mut root);
     let barriers = ground::barriers(&mut root);
     let neighbours = ground::neighbours(&mut root, &layers);
+    let stages = stage::stages(&mut root, &layers);
     ground::not_yet(&mut root);
     let wells = points::wells(&mut root, &layers);
     let gauges = points::gauges(&mut root, &layers, &wells);
@@ -68,18 +75,32 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
     let http = basics::http(&mut root);
     root.close();
 
-    let points: Vec<Point> = cross::points(&wells, &gauges);
+    let points: Vec<(String, Point)> = cross::points(&wells, &gauges);
+    let mut waters: Vec<WaterRead> = stages
+        .iter()
+        .map(|s| WaterRead {
+            name: s.stage.name.clone(),
+            key: format!("{}: channel", s.path),
+            channel: s.channel.clone(),
+        })
+        .collect();
+    waters.extend(edge.stage.clone().map(|channel| WaterRead {
+        name: "edge".to_owned(),
+        key: "edge: stage".to_owned(),
+        channel,
+    }));
     let ground = Ground {
         edge: ground::edge_of(report, edge, &layers, &zones, &points),
         layers: layers.iter().map(|l| l.layer.clone()).collect(),
         zones: zones.into_iter().map(|z| z.value).collect(),
         barriers: barriers.iter().map(|b| b.value.clone()).collect(),
+        stages: stages.into_iter().map(|s| s.stage).collect(),
         wells: wells.iter().map(|w| w.well.clone()).collect(),
         gauges: gauges.iter().map(|g| g.gauge.clone()).collect(),
         neighbours: neighbours.iter().map(|n| n.value.clone()).collect(),
     };
     cross::places(report, &ground, &wells, &gauges, &neighbours, &barriers);
-    let channels = cross::channels(report, &sources, &wells, &gauges);
+    let channels = cross::channels(report, &sources, &wells, &gauges, &waters);
     let mut well_settings: Vec<_> = wells.into_iter().map(|w| w.settings).collect();
     for well in &mut well_settings {
         well.holds = channels
@@ -87,6 +108,20 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
             .get(&well.rate)
             .map_or(well.holds, |c| c.holds);
     }
+    let waters = waters
+        .into_iter()
+        .map(|water| {
+            let id = ChannelId::from(water.channel.value.as_str());
+            let found = channels.named.get(&id);
+            let level = found.is_some_and(|c| c.kind == ChannelKind::Stage);
+            WaterSettings {
+                name: water.name,
+                holds: found.map_or(Holds::default(), |c| c.holds),
+                weight: if level { METRE_OF_WATER } else { 1.0 },
+                channel: id,
+            }
+        })
+        .collect();
     Site {
         path: path.to_owned(),
         text: text.to_owned(),
@@ -97,6 +132,7 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
         store,
         ground,
         wells: well_settings,
+        waters,
         gauges: gauges.into_iter().map(|g| g.settings).collect(),
         channels: channels.named,
         patterns: channels.patterns,

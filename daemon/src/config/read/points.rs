@@ -86,7 +86,28 @@ pub(super) fn wells(root: &mut Section<'_>, layers: &[LayerRead]) -> Vec<WellRea
         if let Some(name) = name.clone() {
             unique(&section, "well", &mut names, name);
         }
-        let at = section.must("at", "at = [\"310 m\", \"-480 m\"]", |s, k| s.point(k));
+        let trace = section.line("trace");
+        let at = match &trace {
+            None => section.must(
+                "at",
+                "at = [\"310 m\", \"-480 m\"], or trace = [[…], […]] for a line",
+                |s, k| s.point(k),
+            ),
+            Some(trace) => {
+                if section.take("at").is_some() {
+                    section.report.place(
+                        &section.key_span("at"),
+                        section.key("at"),
+                        "a well with a trace is where its trace is",
+                        "keep `at` or `trace`, not both",
+                    );
+                }
+                Some(At {
+                    value: halfway(&trace.value),
+                    span: trace.span.clone(),
+                })
+            }
+        };
         let open = open_layers(&mut section, layers);
         let radius = section.must(
             "radius",
@@ -104,6 +125,11 @@ pub(super) fn wells(root: &mut Section<'_>, layers: &[LayerRead]) -> Vec<WellRea
                 what,
                 "leave it out where it is not known: it is fitted",
             );
+        }
+        if let (Some(_), Some(skin)) = (&trace, skin.as_ref().filter(|s| s.value < 0.0)) {
+            let what = "a well with a trace takes no skin below zero";
+            let mend = "its length says how well it is joined to the ground: state zero or more";
+            section.wrong("skin", skin, what, mend);
         }
         if open.len() > 1 && skin.is_none() {
             let text = "a well open to several layers has its skin in the model: where it may have one, state a guess above zero, and history corrects it";
@@ -125,6 +151,7 @@ pub(super) fn wells(root: &mut Section<'_>, layers: &[LayerRead]) -> Vec<WellRea
                 radius: radius.map_or(0.1, |r| r.value),
                 skin: skin.map_or(0.0, |s| s.value),
                 storage: storage.map_or(0.0, |s| s.value),
+                trace: trace.map(|t| t.value).unwrap_or_default(),
             },
             settings: WellSettings {
                 name,
@@ -142,6 +169,25 @@ pub(super) fn wells(root: &mut Section<'_>, layers: &[LayerRead]) -> Vec<WellRea
         section.close();
     }
     wells
+}
+
+/// The place halfway along a line.
+fn halfway(line: &[Point]) -> Point {
+    let pieces = || {
+        line.windows(2).filter_map(|w| match w {
+            &[a, b] => Some((a, b, (a[0] - b[0]).hypot(a[1] - b[1]))),
+            _ => None,
+        })
+    };
+    let mut left = 0.5 * pieces().map(|p| p.2).sum::<f64>();
+    for (a, b, length) in pieces() {
+        if left <= length && length > 0.0 {
+            let share = left / length;
+            return [a[0] + share * (b[0] - a[0]), a[1] + share * (b[1] - a[1])];
+        }
+        left -= length;
+    }
+    line.first().copied().unwrap_or([0.0; 2])
 }
 
 /// Reads `rate`: a channel, or a share of one.

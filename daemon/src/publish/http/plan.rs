@@ -26,11 +26,16 @@ pub(super) async fn site(State(asking): State<Arc<Asking>>) -> Json<Value> {
         .iter()
         .map(|b| json!({ "name": b.name, "line": b.line, "sealed": b.conductance <= 0.0 }))
         .collect();
+    let stages: Vec<_> = ground
+        .stages
+        .iter()
+        .map(|b| json!({ "name": b.name, "line": b.line, "layer": b.layer }))
+        .collect();
     let wells: Vec<_> = ground
         .wells
         .iter()
         .zip(&site.wells)
-        .map(|(w, s)| json!({ "name": w.name, "at": w.at, "layer": w.layer, "rate": s.rate, "share": s.share }))
+        .map(|(w, s)| json!({ "name": w.name, "at": w.at, "layer": w.layer, "trace": w.trace, "rate": s.rate, "share": s.share }))
         .collect();
     let neighbours: Vec<_> = ground
         .neighbours
@@ -53,6 +58,7 @@ pub(super) async fn site(State(asking): State<Arc<Asking>>) -> Json<Value> {
         "edge": { "kind": ground.edge.kind, "distance": ground.edge.distance },
         "layers": layers,
         "barriers": barriers,
+        "stages": stages,
         "wells": wells,
         "neighbours": neighbours,
         "gauges": gauges(&asking),

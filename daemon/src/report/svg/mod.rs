@@ -5,7 +5,6 @@
 
 mod axis;
 mod frame;
-mod loglog;
 mod path;
 
 use std::fmt::Write as _;
@@ -14,7 +13,6 @@ use borewake_model::units::UnitSystem;
 
 use crate::record::{Expectation, Stamp};
 use frame::{Frame, Scale, badge, draw, escaped, extent, text};
-pub use loglog::{LogLog, log_log_plot};
 use path::{Dot, area, line, runs, thin};
 
 /// Standard deviations either side that hold 95 % of a normal distribution.
@@ -68,31 +66,6 @@ impl PlotPoint {
 /// Not finite numbers are left out. A picture without points says so.
 #[must_use]
 pub fn gauge_plot(plot: &GaugePlot) -> String {
-    picture(plot, &WATCHED)
-}
-
-/// Draws a gauge through the history of a fit: above, its reading over the fitted model; below, what is left.
-#[must_use]
-pub fn fit_plot(plot: &GaugePlot) -> String {
-    picture(plot, &FITTED)
-}
-
-/// What the parts of a picture are called.
-struct Words {
-    expectation: &'static str,
-    departure: &'static str,
-}
-
-const WATCHED: Words = Words {
-    expectation: "expectation",
-    departure: "departure",
-};
-const FITTED: Words = Words {
-    expectation: "model",
-    departure: "what is left",
-};
-
-fn picture(plot: &GaugePlot, words: &Words) -> String {
     let points = finite(&plot.points);
     let height = if plot.marks.is_empty() {
         HEIGHT
@@ -100,7 +73,7 @@ fn picture(plot: &GaugePlot, words: &Words) -> String {
         let lines = u32::try_from(plot.marks.len()).unwrap_or(u32::MAX);
         LIST.0 + LIST.1 * f64::from(lines)
     };
-    let mut svg = head(&plot.title, height, words);
+    let mut svg = head(&plot.title, height);
     match (points.first(), points.last()) {
         (Some(first), Some(last)) => {
             let frame = Frame {
@@ -110,7 +83,7 @@ fn picture(plot: &GaugePlot, words: &Words) -> String {
             };
             time_axis(&mut svg, &frame);
             upper(&mut svg, &frame, &points);
-            lower(&mut svg, &frame, &points, words);
+            lower(&mut svg, &frame, &points);
             marks(&mut svg, &frame, &plot.marks);
         }
         _ => text(
@@ -138,7 +111,7 @@ fn finite(points: &[PlotPoint]) -> Vec<PlotPoint> {
 }
 
 /// Heading, style, legend and the clips of the two panels.
-fn head(title: &str, height: f64, words: &Words) -> String {
+fn head(title: &str, height: f64) -> String {
     let title = escaped(title);
     let clip = |name: &str, panel: (f64, f64)| {
         format!(
@@ -156,11 +129,10 @@ fn head(title: &str, height: f64, words: &Words) -> String {
 <rect class=\"paper\" width=\"{WIDTH}\" height=\"{height}\"/>\n\
 <text class=\"title\" x=\"16\" y=\"32\">{title}</text>\n\
 <g class=\"legend\"><path class=\"reading\" d=\"M16 62h34\"/><text x=\"58\" y=\"68\">reading</text>\
-<path class=\"expectation\" d=\"M210 62h34\"/><text x=\"252\" y=\"68\">{}</text>\
+<path class=\"expectation\" d=\"M210 62h34\"/><text x=\"252\" y=\"68\">expectation</text>\
 <rect class=\"band\" x=\"450\" y=\"52\" width=\"34\" height=\"20\"/><text x=\"492\" y=\"68\">95 % band</text></g>\n",
         clip("upper", UPPER),
         clip("lower", LOWER),
-        words.expectation,
     )
 }
 
@@ -224,7 +196,7 @@ fn upper(svg: &mut String, frame: &Frame, points: &[PlotPoint]) {
 }
 
 /// The departure over the band about zero; what lies outside the band stands out.
-fn lower(svg: &mut String, frame: &Frame, points: &[PlotPoint], words: &Words) {
+fn lower(svg: &mut String, frame: &Frame, points: &[PlotPoint]) {
     let departures = points.iter().filter_map(PlotPoint::departure);
     let (low, high) = extent(departures.chain([0.0])).unwrap_or((0.0, 0.0));
     let mut halves: Vec<f64> = points
@@ -235,8 +207,7 @@ fn lower(svg: &mut String, frame: &Frame, points: &[PlotPoint], words: &Words) {
     let usual = halves.get(halves.len() / 2).copied().unwrap_or(0.0);
     let (low, high) = (low.min(-1.4 * usual), high.max(1.4 * usual));
     let scale = Scale::over(frame.shown(low), frame.shown(high), LOWER);
-    let label = format!("{}, {}", words.departure, frame.unit());
-    panel(svg, scale, &label, 5.0);
+    panel(svg, scale, &format!("departure, {}", frame.unit()), 3.0);
     let dot = |at: Stamp, pascal: f64| (frame.x(at), scale.y(frame.shown(pascal)));
     *svg += "<g clip-path=\"url(#lower)\">";
     let gap = gap_of(points);

@@ -15,6 +15,8 @@ use crate::ModelError;
 pub(super) enum Trace {
     Barrier(usize),
     Zone(usize),
+    Well(usize),
+    Stage(usize),
 }
 
 impl Trace {
@@ -28,6 +30,14 @@ impl Trace {
             Self::Zone(z) => {
                 let name = ground.zones.get(z).map_or("", |z| z.name.as_str());
                 format!("the outline of zone {name}")
+            }
+            Self::Well(w) => {
+                let name = ground.wells.get(w).map_or("", |w| w.name.as_str());
+                format!("the trace of well {name}")
+            }
+            Self::Stage(s) => {
+                let name = ground.stages.get(s).map_or("", |s| s.name.as_str());
+                format!("stage {name}")
             }
         }
     }
@@ -66,7 +76,7 @@ impl Plan {
                 return Err(fail(first, &why));
             }
             for part in parts {
-                self.place_ends(&barrier.name, &part);
+                self.place_ends(&format!("barrier {}", barrier.name), &part);
                 self.lines.push(Part {
                     of: Trace::Barrier(b),
                     line: part,
@@ -76,8 +86,8 @@ impl Plan {
         Ok(())
     }
 
-    /// Flow crowds at the ends of a barrier and at its sharp corners: they are centres too.
-    fn place_ends(&mut self, name: &str, part: &[Point]) {
+    /// Flow crowds at the ends of a barrier or trace and at its sharp corners: they are centres too.
+    pub(super) fn place_ends(&mut self, name: &str, part: &[Point]) {
         let closed = matches!((part.first(), part.last()), (Some(a), Some(b)) if distance(*a, *b) <= self.apart);
         let last = part.len().saturating_sub(1);
         for (i, &p) in part.iter().enumerate() {
@@ -95,7 +105,7 @@ impl Plan {
                 .get(if i == 0 { 1 } else { i - 1 })
                 .copied()
                 .unwrap_or(p);
-            let index = self.add(p, &format!("barrier {name}"));
+            let index = self.add(p, name);
             if let Some(centre) = self.centres.get_mut(index) {
                 centre.on_barrier = true;
                 centre.turn = (toward[1] - p[1]).atan2(toward[0] - p[0]);

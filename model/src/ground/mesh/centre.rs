@@ -40,8 +40,8 @@ pub(super) struct Plan {
     /// Points on a ring, and on one round a well.
     ring: (usize, usize),
     pub(super) centres: Vec<Centre>,
-    /// Centre of each well, and which of its anchors is the well's.
-    pub(super) wells: Vec<(usize, f64)>,
+    /// Centre of each well, and which of its anchors is the well's; none of a well with a trace.
+    pub(super) wells: Vec<Option<(usize, f64)>>,
     /// Centre of each gauge in the ground that has one.
     pub(super) gauges: Vec<Option<usize>>,
     /// Centre of each neighbour that has one.
@@ -86,6 +86,8 @@ impl Plan {
             outline_points,
             size: Size {
                 centres: Vec::new(),
+                lines: Vec::new(),
+                line_share: 2.0 * (PI / ring as f64).sin(),
                 edge: (
                     middle(ground),
                     radius,
@@ -111,8 +113,17 @@ impl Plan {
         }
         plan.place_barriers(ground)?;
         plan.place_zones(ground)?;
+        plan.place_drivers(ground)?;
+        if plan
+            .lines
+            .iter()
+            .any(|part| !matches!(part.of, Trace::Barrier(_)))
+        {
+            plan.add_corners();
+        }
         plan.check_lines(ground)?;
         plan.settle(ground)?;
+        plan.size.lines = plan.fine_lines();
         plan.size.centres = plan
             .centres
             .iter()
@@ -124,8 +135,13 @@ impl Plan {
     fn place_wells(&mut self, ground: &Ground) -> Result<(), ModelError> {
         let factor = 1.0 / capacity(self.ring.1);
         for (w, well) in ground.wells.iter().enumerate() {
+            if !well.trace.is_empty() {
+                self.wells.push(None);
+                continue;
+            }
             let radius = factor * well.radius * (-well.skin.min(0.0)).exp();
-            let twin = ground.wells.iter().take(w).find(|o| {
+            let others = ground.wells.iter().take(w);
+            let twin = others.filter(|o| o.trace.is_empty()).find(|o| {
                 o.layers().any(|l| well.meets(l)) && distance(o.at, well.at) <= self.apart
             });
             if let Some(twin) = twin {
@@ -160,7 +176,7 @@ impl Plan {
                     centre.anchors.push(radius);
                     centre.anchors.sort_by(f64::total_cmp);
                 }
-                self.wells.push((index, radius));
+                self.wells.push(Some((index, radius)));
             }
         }
         Ok(())
@@ -206,7 +222,8 @@ impl Plan {
         name: &str,
     ) -> Result<Spot, ModelError> {
         let mut within = false;
-        for (well, &(_, radius)) in ground.wells.iter().zip(&self.wells) {
+        for (well, place) in ground.wells.iter().zip(&self.wells) {
+            let Some((_, radius)) = *place else { continue };
             let d = distance(well.at, at);
             if d > 3.0 * radius {
                 continue;
@@ -276,6 +293,7 @@ impl Plan {
             if barrier < (3.0 * reach).max(100.0 * self.apart) {
                 let passes = match nearest_line {
                     Some(Trace::Zone(_)) => "the outline or the point",
+                    Some(Trace::Well(_) | Trace::Stage(_)) => "the line or the point",
                     _ => "the barrier or the point",
                 };
                 let why = format!(
@@ -319,6 +337,8 @@ fn check_numbers(ground: &Ground) -> Result<(), ModelError> {
     let finite = |p: Point| p[0].is_finite() && p[1].is_finite();
     let corners = ground.barriers.iter().map(|b| &b.line);
     let corners = corners.chain(ground.zones.iter().map(|z| &z.outline));
+    let corners = corners.chain(ground.wells.iter().map(|w| &w.trace));
+    let corners = corners.chain(ground.stages.iter().map(|s| &s.line));
     let corners = corners.flatten().copied();
     let mut places = ground
         .wells

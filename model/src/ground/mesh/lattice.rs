@@ -24,6 +24,12 @@ impl Mesh {
                 "a lattice cannot follow a barrier; use a triangle mesh",
             ));
         }
+        let traces = ground.wells.iter().map(|w| &w.trace);
+        let lines = traces.chain(ground.stages.iter().map(|s| &s.line));
+        if let Some(&at) = lines.flatten().next() {
+            let why = "a lattice cannot follow a stage or the trace of a well; use a triangle mesh";
+            return Err(fail(at, why));
+        }
         let plan = Plan::of(ground, options)?;
         let radius = ground.edge.distance;
         let along = |axis: usize| {
@@ -110,6 +116,7 @@ fn rectangles(xs: &[f64], ys: &[f64], centre: Point, radius: f64) -> Mesh {
         wells: Vec::new(),
         edge,
         joints: Vec::new(),
+        lines: Vec::new(),
         gauges: Vec::new(),
         neighbours: Vec::new(),
         centre,

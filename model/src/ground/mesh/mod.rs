@@ -10,6 +10,7 @@ mod barrier;
 mod centre;
 mod lattice;
 mod line;
+mod lines;
 mod near;
 mod points;
 mod polygon;
@@ -70,6 +71,8 @@ pub struct Mesh {
     pub edge: Vec<[usize; 2]>,
     /// Pieces of barriers.
     pub joints: Vec<Joint>,
+    /// Pieces of stages and of traces of wells.
+    pub lines: Vec<Piece>,
     /// Vertex of each gauge of the ground that has one of its own; others are interpolated or sit in a well.
     pub gauges: Vec<Option<usize>>,
     /// Vertex of each neighbour of the ground that has one of its own; others are interpolated.
@@ -80,7 +83,7 @@ pub struct Mesh {
     pub radius: f64,
 }
 
-/// The circle cut out for a well in its own layer.
+/// The circle cut out for a well in its own layers; a well with a trace has none.
 ///
 /// A polygon stands for the circle of radius `r_w exp(-min(skin, 0))`, drawn so that it has the same
 /// logarithmic capacity: the same pressure far away at the same rate and ring pressure.
@@ -92,6 +95,24 @@ pub struct CutOut {
     pub inside: Vec<usize>,
     /// The centre.
     pub middle: usize,
+}
+
+/// A piece of a line that drives the ground.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Piece {
+    /// What it is a piece of.
+    pub of: Driver,
+    /// Its ends.
+    pub ends: [usize; 2],
+}
+
+/// What drives the ground along a line, by its order in the ground.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+pub enum Driver {
+    /// A well with a trace.
+    Well(usize),
+    /// A stage.
+    Stage(usize),
 }
 
 /// A piece of a barrier: the same two places, seen from either side.
@@ -160,6 +181,7 @@ impl Mesh {
                 .joints
                 .iter()
                 .all(|j| j.one.iter().chain(&j.other).all(known))
+            && self.lines.iter().all(|p| p.ends.iter().all(known))
             && self.wells.iter().all(|w| {
                 known(&w.middle)
                     && w.ring.iter().all(known)
@@ -235,6 +257,6 @@ pub(crate) fn distance(a: Point, b: Point) -> f64 {
 fn outline_factor(kind: EdgeKind, sides: usize) -> f64 {
     match kind {
         EdgeKind::Closed => polygon::equal_area(sides),
-        EdgeKind::Open | EdgeKind::Fixed => 1.0,
+        EdgeKind::Open | EdgeKind::Fixed | EdgeKind::Driven => 1.0,
     }
 }

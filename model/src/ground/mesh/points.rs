@@ -7,7 +7,7 @@ use super::barrier::{Segment, Trace};
 use super::centre::{Centre, Plan};
 use super::near::Near;
 use super::triangulate::{fail, triangulate};
-use super::{cross, distance, line};
+use super::{Driver, cross, distance, line};
 use crate::ModelError;
 
 /// Two points may not lie closer than this share of the size asked for there.
@@ -30,6 +30,8 @@ pub(super) struct Laid {
     pub(super) rings: Vec<Vec<usize>>,
     /// Pieces of barriers.
     pub(super) pieces: Vec<(usize, [usize; 2])>,
+    /// Pieces of stages and traces of wells.
+    pub(super) drivers: Vec<(Driver, [usize; 2])>,
 }
 
 /// Lays points and triangulates them.
@@ -37,8 +39,10 @@ pub(super) fn lay(plan: &Plan) -> Result<Laid, ModelError> {
     let mut points: Vec<Point> = plan.centres.iter().map(|c| c.at).collect();
     let mut constraints = Vec::new();
     let mut rings = Vec::new();
-    for &(centre, radius) in &plan.wells {
-        let Some(centre) = plan.centres.get(centre) else {
+    for place in &plan.wells {
+        let Some((centre, radius)) = place.and_then(|(c, r)| Some((plan.centres.get(c)?, r)))
+        else {
+            rings.push(Vec::new());
             continue;
         };
         let ring = anchored_ring(plan, centre, radius, &mut points);
@@ -51,9 +55,14 @@ pub(super) fn lay(plan: &Plan) -> Result<Laid, ModelError> {
     }
     constraints.sort_unstable();
     constraints.dedup();
-    let (barriers, outlines) = lay_lines(plan, &mut points)?;
+    let Pieces {
+        barriers,
+        outlines,
+        drivers,
+    } = lay_lines(plan, &mut points)?;
     constraints.extend(barriers.iter().map(|(_, piece)| *piece));
     constraints.extend(outlines);
+    constraints.extend(drivers.iter().map(|(_, piece)| *piece));
     constraints.sort_unstable();
     constraints.dedup();
     lay_outline(plan, &mut points);
@@ -77,6 +86,7 @@ pub(super) fn lay(plan: &Plan) -> Result<Laid, ModelError> {
         triangles,
         rings,
         pieces: barriers,
+        drivers,
     })
 }
 
@@ -102,12 +112,17 @@ fn on_ring(centre: &Centre, radius: f64, k: usize, offset: f64) -> Point {
     ]
 }
 
-/// Pieces of barriers, with their barrier, and pieces of outlines of zones.
-type Pieces = (Vec<(usize, [usize; 2])>, Vec<[usize; 2]>);
+/// Pieces of lines, with what they are pieces of.
+#[derive(Debug, Default)]
+struct Pieces {
+    barriers: Vec<(usize, [usize; 2])>,
+    outlines: Vec<[usize; 2]>,
+    drivers: Vec<(Driver, [usize; 2])>,
+}
 
-/// Points along barriers and outlines of zones, spaced as the size asks, and the pieces between them.
+/// Points along lines of all kinds, spaced as the size asks, and the pieces between them.
 fn lay_lines(plan: &Plan, points: &mut Vec<Point>) -> Result<Pieces, ModelError> {
-    let (mut barriers, mut outlines): Pieces = Default::default();
+    let mut pieces = Pieces::default();
     let all = plan.segments();
     for &(of, segment) in &all {
         // Lines that run together must lay the same points, whichever way they run.
@@ -127,13 +142,15 @@ fn lay_lines(plan: &Plan, points: &mut Vec<Point>) -> Result<Pieces, ModelError>
             let here = add([a[0] + share * (b[0] - a[0]), a[1] + share * (b[1] - a[1])]);
             let piece = super::ordered(before, here);
             match of {
-                Trace::Barrier(barrier) => barriers.push((barrier, piece)),
-                Trace::Zone(_) => outlines.push(piece),
+                Trace::Barrier(barrier) => pieces.barriers.push((barrier, piece)),
+                Trace::Zone(_) => pieces.outlines.push(piece),
+                Trace::Well(w) => pieces.drivers.push((Driver::Well(w), piece)),
+                Trace::Stage(s) => pieces.drivers.push((Driver::Stage(s), piece)),
             }
             before = here;
         }
     }
-    let mut seen: Vec<[usize; 2]> = barriers.iter().map(|p| p.1).collect();
+    let mut seen: Vec<[usize; 2]> = pieces.barriers.iter().map(|p| p.1).collect();
     seen.sort_unstable();
     for pair in seen.windows(2) {
         if let [a, b] = pair
@@ -146,7 +163,7 @@ fn lay_lines(plan: &Plan, points: &mut Vec<Point>) -> Result<Pieces, ModelError>
             ));
         }
     }
-    Ok((barriers, outlines))
+    Ok(pieces)
 }
 
 /// Size asked for at a point of a line: no larger than the gap to a line beside it, down to a twentieth.

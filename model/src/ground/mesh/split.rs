@@ -6,7 +6,7 @@ use super::super::{Ground, Point, Seat};
 use super::centre::Plan;
 use super::points::Laid;
 use super::triangulate::fail;
-use super::{CutOut, Joint, Mesh, distance, ordered};
+use super::{CutOut, Joint, Mesh, Piece, distance, ordered};
 use crate::ModelError;
 
 /// The mesh from what was laid.
@@ -16,6 +16,7 @@ pub(super) fn assemble(ground: &Ground, plan: &Plan, laid: Laid) -> Result<Mesh,
         mut triangles,
         rings,
         pieces,
+        drivers,
     } = laid;
     let original = triangles.clone();
     let sides = sides_of(&original);
@@ -52,11 +53,29 @@ pub(super) fn assemble(ground: &Ground, plan: &Plan, laid: Laid) -> Result<Mesh,
             "a barrier is too short to have two sides; leave it out",
         ));
     }
+    // Both sides of a piece that no barrier follows see the same vertices.
+    let lines = drivers
+        .iter()
+        .filter_map(|&(of, side)| {
+            let owner = sides.get(&side)?.first()?;
+            let ends = view(&original, &triangles, *owner, side)?;
+            Some(Piece { of, ends })
+        })
+        .collect();
     let wells = plan
         .wells
         .iter()
+        .zip(&ground.wells)
         .zip(rings)
-        .map(|(&(middle, radius), ring)| {
+        .map(|((place, well), ring)| {
+            let Some((middle, radius)) = *place else {
+                let start = well.trace.first().and_then(|p| plan.find(*p));
+                return CutOut {
+                    ring,
+                    inside: Vec::new(),
+                    middle: start.unwrap_or_default(),
+                };
+            };
             let at = points.get(middle).copied().unwrap_or(plan.middle);
             let inside = (0..triangles.len())
                 .filter(|&t| distance(middle_of(&points, triangles.get(t)), at) < 0.99 * radius)
@@ -83,6 +102,7 @@ pub(super) fn assemble(ground: &Ground, plan: &Plan, laid: Laid) -> Result<Mesh,
         wells,
         edge,
         joints,
+        lines,
         gauges,
         neighbours: plan.neighbours.clone(),
         centre: plan.middle,

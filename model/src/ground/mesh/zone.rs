@@ -8,7 +8,7 @@ use super::{distance, line};
 use crate::ModelError;
 
 impl Plan {
-    /// Lays the parts of all outlines that lie inside the edge, and gives lines that meet a corner where they do.
+    /// Lays the parts of all outlines that lie inside the edge.
     pub(super) fn place_zones(&mut self, ground: &Ground) -> Result<(), ModelError> {
         for (z, zone) in ground.zones.iter().enumerate() {
             let outline = self.outline_of(&zone.name, &zone.outline)?;
@@ -25,9 +25,6 @@ impl Plan {
                 let of = Trace::Zone(z);
                 self.lines.push(Part { of, line });
             }
-        }
-        if !ground.zones.is_empty() {
-            self.add_corners();
         }
         Ok(())
     }
@@ -70,8 +67,8 @@ impl Plan {
         Ok(outline)
     }
 
-    /// Puts a corner into every line where an outline meets it.
-    fn add_corners(&mut self) {
+    /// Puts a corner into every line where an outline, a stage or a trace meets it.
+    pub(super) fn add_corners(&mut self) {
         let all = self.segments();
         let near = 1e3 * self.apart;
         for part in &mut self.lines {
@@ -80,9 +77,8 @@ impl Plan {
                 let &[a, b] = pair else { continue };
                 let mut places = vec![a];
                 for &(of, (c, d)) in &all {
-                    let outlines =
-                        matches!(of, Trace::Zone(_)) || matches!(part.of, Trace::Zone(_));
-                    if !outlines || of == part.of || line::between((a, b), (c, d)) > near {
+                    let barriers = matches!((of, part.of), (Trace::Barrier(_), Trace::Barrier(_)));
+                    if barriers || of == part.of || line::between((a, b), (c, d)) > near {
                         continue;
                     }
                     let ends = [c, d]
