@@ -80,7 +80,11 @@ fn look(folder: &Path, every: usize) -> Result<()> {
             ground
         }
     };
-    let calibration = &ground.commissioned.calibration;
+    let calibration = &ground
+        .commissioned
+        .ground()
+        .ok_or_else(|| anyhow::anyhow!("{} is no field of wells", folder.display()))?
+        .calibration;
     println!(
         "{}: commissioned in {:.1} s; patches {:.3} {:.3}, meter gain {:.4}, barrier {:?}",
         folder.display(),

@@ -15,7 +15,7 @@ pub struct Block {
     /// Instants at which predictions are evaluated \[s from the block's start\], ascending, at least one.
     pub instants: Vec<f64>,
     /// One path per input, in the order of [`crate::ground::Ground::inputs`]: rates of wells \[m3/s\], then pressures of
-    /// stages and of a driven edge \[Pa\].
+    /// stages and of a driven edge \[Pa\]. Of an embankment one per drive, each in its own unit.
     pub rates: Vec<RatePath>,
     /// One entry per gauge, in the ground's order of gauges; `None` where nothing usable was read.
     pub gauges: Vec<Option<GaugeBlock>>,

@@ -7,6 +7,7 @@ pub mod broker;
 pub mod browser;
 pub mod collect;
 pub mod daemon;
+pub mod embankment;
 pub mod http;
 pub mod modbus;
 pub mod pty;

@@ -58,7 +58,7 @@ const BLIND = {
   "no-data": "gives no usable reading",
   "stale-rate": "a rate it feels is too old",
   "no-ground": "no usable ground file",
-  model: "the model does not describe it",
+  model: "it is beyond what commissioning has seen",
 };
 export const blind = (why) => BLIND[typeof why === "string" ? why.replace(/([a-z])([A-Z])/g, "$1-$2").toLowerCase() : why] ?? String(why);
 

@@ -360,9 +360,9 @@ fn since(newest: Option<&Stamp>) -> String {
 fn reason(blind: Blind) -> &'static str {
     match blind {
         Blind::NoData => "nothing usable was read",
-        Blind::StaleRate => "the rate of a well it feels is too old",
+        Blind::StaleRate => "the rate or the level it answers to is too old",
         Blind::NoGround => "there is no usable ground file; run `borewake commission`",
-        Blind::Model => "the model does not describe it",
+        Blind::Model => "it is beyond what commissioning has seen",
     }
 }
 

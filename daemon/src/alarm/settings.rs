@@ -256,6 +256,23 @@ impl Default for WatchAlarm {
     }
 }
 
+impl WatchAlarm {
+    /// For an embankment: nothing that cannot be told there may wait, and people downstream have a plan of their own.
+    #[must_use]
+    pub fn of_embankment() -> Self {
+        Self {
+            priorities: Priorities {
+                ground: Priority::High,
+                ..Priorities::default()
+            },
+            response: "check the piezometers named by hand; walk crest, slopes, toe and abutments and look at weirs and \
+                       drains for more or cloudy water; where anything is out of the ordinary follow the emergency action plan"
+                .to_owned(),
+            ..Self::default()
+        }
+    }
+}
+
 /// Alarms for what cannot be judged.
 #[derive(Debug, Clone, PartialEq)]
 pub struct BlindSettings {

@@ -3,11 +3,11 @@
 use std::path::PathBuf;
 use std::time::Duration;
 
-use borewake_model::ModelError;
 use borewake_model::ground::Ground;
 use borewake_model::ground::mesh::{Mesh, MeshOptions, Quality};
 use borewake_model::reduce::{Spread, spread};
 use borewake_model::units::Dimension;
+use borewake_model::{ModelError, lagged};
 use clap::Args;
 use serde_json::{Value, json};
 
@@ -15,7 +15,7 @@ use super::summary::{summary_json, summary_text};
 use super::{Context, Exit, Failure, GroundSummary, print};
 use crate::config::{self, ConfigError, Mistake, Note, Site};
 use crate::intake::probe::{SourceProbe, probe};
-use crate::watch::ground_file::GroundFile;
+use crate::watch::ground_file::{GroundFile, Model};
 
 mod mesh;
 mod sources;
@@ -51,10 +51,19 @@ impl Check {
     pub(super) fn run(self, context: &Context) -> Result<Exit, Failure> {
         match config::load(&self.site) {
             Ok(site) if self.sources => talk(&site, self.wait, context),
+            Ok(site) if site.embankment.is_some() => {
+                print(&held(&site, None, &ground_summary(&site), context.json))?;
+                Ok(Exit::Done)
+            }
             Ok(site) => match meshed(&site.ground) {
                 Ok((quality, spread)) => {
                     let mesh = mesh::summary(&site, &quality, &spread);
-                    print(&held(&site, &[mesh, ground_summary(&site)], context.json))?;
+                    print(&held(
+                        &site,
+                        Some(&mesh),
+                        &ground_summary(&site),
+                        context.json,
+                    ))?;
                     Ok(Exit::Done)
                 }
                 Err(why) => {
@@ -119,7 +128,10 @@ fn ground_summary(site: &Site) -> GroundSummary {
             };
         }
     };
-    let certificate = &file.commissioned.reduced.certificate;
+    let certificate = match &file.commissioned {
+        Model::Ground(ground) => &ground.reduced.certificate,
+        Model::Embankment(embankment) => return answers(&file, embankment),
+    };
     let (fastest, slowest) = certificate.times;
     let time = |t| site.units.show(Dimension::Time, t);
     let text = format!(
@@ -138,8 +150,20 @@ fn ground_summary(site: &Site) -> GroundSummary {
     }
 }
 
-/// What is said of a site file that holds, with its mesh, and the model's size and certificate where there is a ground file.
-fn held(site: &Site, [mesh, ground]: &[GroundSummary; 2], json: bool) -> String {
+/// What an embankment's ground file holds.
+fn answers(file: &GroundFile, embankment: &lagged::Commissioned) -> GroundSummary {
+    let count = embankment.calibration.answers.len();
+    GroundSummary {
+        text: format!(
+            "  lagged answers of {count} piezometers, made {}\n",
+            file.made
+        ),
+        json: json!({ "usable": true, "made": file.made, "answers": embankment.calibration.answers }),
+    }
+}
+
+/// What is said of a site file that holds, with its mesh where it has one, and the model's size and certificate where there is a ground file.
+fn held(site: &Site, mesh: Option<&GroundSummary>, ground: &GroundSummary, json: bool) -> String {
     let notes = notes(site);
     if json {
         return document(&json!({
@@ -148,12 +172,15 @@ fn held(site: &Site, [mesh, ground]: &[GroundSummary; 2], json: bool) -> String 
             "mistakes": [],
             "notes": notes,
             "site": summary_json(site),
-            "mesh": mesh.json,
+            "mesh": mesh.map(|m| &m.json),
             "model": ground.json,
         }));
     }
     let mut text = summary_text(site);
-    text += &format!("\nMesh\n{}\nModel\n{}", mesh.text, ground.text);
+    if let Some(mesh) = mesh {
+        text += &format!("\nMesh\n{}", mesh.text);
+    }
+    text += &format!("\nModel\n{}", ground.text);
     if !notes.is_empty() {
         text += "\nTo know\n";
         for note in &notes {

@@ -2,8 +2,11 @@
 
 use std::path::PathBuf;
 
+use borewake_model::commission::Commissioned;
 use borewake_model::weak_form::Parameter;
 use clap::Args;
+
+mod embankment;
 
 use super::progress;
 use super::{Context, Exit, Failure, print};
@@ -13,7 +16,7 @@ use crate::keeper::settings::block_plan;
 use crate::record::Stamp;
 use crate::store::{Reader, StoreError};
 use crate::watch::commissioning::{Stage, make};
-use crate::watch::ground_file::GroundFile;
+use crate::watch::ground_file::{GroundFile, Model};
 use crate::watch::history::History;
 
 /// Fits transmissivity, storativity and skins to quiet history and writes the ground file
@@ -22,6 +25,7 @@ use crate::watch::history::History;
 Example:
   borewake commission site.toml --from 2031-03-01T00:00:00Z --to 2031-04-15T00:00:00Z
   borewake commission site.toml --log march.csv april.csv
+  borewake commission dam.toml --log 2029.csv 2030.csv      (an embankment: two years or more, with the pool's full range)
 
 Choose weeks without leaks, tests or workovers and with the rates that the wells usually see. A running daemon
 takes the new ground file at its next start.")]
@@ -71,8 +75,11 @@ impl Commission {
             .write(&site.store.folder)
             .map_err(Failure::unusable)?;
         if context.json {
-            let text = serde_json::to_string(&ground.commissioned.calibration)
-                .map_err(Failure::unusable)?;
+            let text = match &ground.commissioned {
+                Model::Ground(ground) => serde_json::to_string(&ground.calibration),
+                Model::Embankment(embankment) => serde_json::to_string(&embankment.calibration),
+            };
+            let text = text.map_err(Failure::unusable)?;
             print(&format!("{text}\n"))?;
         } else {
             print(&format!(
@@ -125,7 +132,12 @@ pub(super) fn commission_site(
     blocks: &[crate::record::Block],
     made: Stamp,
 ) -> Result<GroundFile, borewake_model::ModelError> {
-    let bar = progress::share(Stage::Discretise.words());
+    let first = if site.embankment.is_some() {
+        Stage::Calibrate
+    } else {
+        Stage::Discretise
+    };
+    let bar = progress::share(first.words());
     let mut show = |stage: Stage, share: f64| {
         bar.set_message(stage.words());
         #[expect(
@@ -142,9 +154,16 @@ pub(super) fn commission_site(
 
 /// The calibration for people.
 pub(super) fn summary(site: &Site, ground: &GroundFile) -> String {
+    match &ground.commissioned {
+        Model::Ground(ground) => ground_summary(site, ground),
+        Model::Embankment(commissioned) => embankment::summary(site, commissioned),
+    }
+}
+
+fn ground_summary(site: &Site, commissioned: &Commissioned) -> String {
     use std::fmt::Write as _;
-    let calibration = &ground.commissioned.calibration;
-    let certificate = &ground.commissioned.reduced.certificate;
+    let calibration = &commissioned.calibration;
+    let certificate = &commissioned.reduced.certificate;
     let plan = block_plan(site);
     let mut text = String::new();
     let (first, last) = calibration.blocks;

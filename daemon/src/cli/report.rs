@@ -114,6 +114,7 @@ impl Report {
             history,
             channels,
             model,
+            embankment: site.embankment.is_some(),
             alarm,
         })
     }
@@ -156,7 +157,9 @@ impl Report {
             .iter()
             .map(|w| (&w.channel, format!("water {}", w.name)));
         let mut channels = Vec::new();
-        for (channel, feeds) in gauges.chain(wells).chain(waters) {
+        let drives = site.embankment.iter().flat_map(|e| &e.drives);
+        let drives = drives.map(|d| (&d.channel, d.driver.name().to_owned()));
+        for (channel, feeds) in gauges.chain(wells).chain(waters).chain(drives) {
             channels.push(quality(reader, channel, feeds, (from, to)).await?);
         }
         Ok((plots, channels))

@@ -31,9 +31,9 @@ pub use read::read;
 pub use sdi12::{Sdi12Address, Sdi12Channel, Sdi12Command, Sdi12Kind, Sdi12Source};
 pub use secret::{Secret, SecretError, SecretFile};
 pub use site::{
-    AlarmCare, GaugeSettings, GaugeString, HttpSettings, LimitSettings, Meter, MqttPublish,
-    PastRate, PatternChannel, PublishSettings, Reference, Side, Site, StoreSettings, WatchConfig,
-    WaterSettings, WellSettings,
+    AlarmCare, DriveSettings, EmbankmentSettings, GaugeSettings, GaugeString, HttpSettings,
+    LimitSettings, Meter, MqttPublish, PastRate, PatternChannel, PublishSettings, Reference, Side,
+    Site, StoreSettings, WatchConfig, WaterSettings, WellSettings,
 };
 pub use source::{
     ByteOrder, ChannelSettings, Checksum, Conversion, LogSource, ModbusChannel, ModbusRtuSource,

@@ -6,6 +6,7 @@ use std::path::PathBuf;
 use std::time::Duration;
 
 use borewake_model::ground::Ground;
+use borewake_model::lagged::{Driver, Embankment};
 use borewake_model::units::UnitSystem;
 
 use super::{
@@ -38,6 +39,8 @@ pub struct Site {
     pub waters: Vec<WaterSettings>,
     /// Gauges, in the order of [`Ground::gauges`].
     pub gauges: Vec<GaugeSettings>,
+    /// What an embankment answers to; `None` for a field of wells.
+    pub embankment: Option<EmbankmentSettings>,
     /// Channels known by name, those that wells and gauges take from a pattern included.
     pub channels: BTreeMap<ChannelId, ChannelSettings>,
     /// Channels whose names have placeholders, filled in from the topic at run time.
@@ -183,6 +186,42 @@ pub struct PastRate {
     pub from: Stamp,
     /// Rate into the ground \[m3/s\].
     pub rate: f64,
+}
+
+/// An embankment: what it answers to, in place of a ground with wells.
+#[derive(Debug, Clone, PartialEq)]
+pub struct EmbankmentSettings {
+    /// What acts on it, the pool first.
+    pub drives: Vec<DriveSettings>,
+    /// Whether the year shows by itself.
+    pub season: bool,
+    /// Whether it still changes with age.
+    pub ageing: bool,
+}
+
+impl EmbankmentSettings {
+    /// The embankment as the model has it.
+    #[must_use]
+    pub fn model(&self) -> Embankment {
+        Embankment {
+            drives: self.drives.iter().map(|d| d.driver).collect(),
+            season: self.season,
+            ageing: self.ageing,
+        }
+    }
+}
+
+/// A channel that acts on an embankment.
+#[derive(Debug, Clone, PartialEq)]
+pub struct DriveSettings {
+    /// What it is.
+    pub driver: Driver,
+    /// Its channel.
+    pub channel: ChannelId,
+    /// What the channel's values are multiplied by: levels \[m\] become pressures \[Pa\].
+    pub factor: f64,
+    /// How values stand to their instants.
+    pub holds: Holds,
 }
 
 /// A gauge's channel and what its numbers refer to.

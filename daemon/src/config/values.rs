@@ -109,6 +109,18 @@ impl Section<'_> {
     }
 
     /// A bare number.
+    pub(super) fn truth(&mut self, key: &'static str) -> Option<At<bool>> {
+        let found = self.take(key)?;
+        let value = found.get_ref().as_bool();
+        if value.is_none() {
+            self.due(key, found, "true or false", "write it bare, without quotes");
+        }
+        Some(At {
+            value: value?,
+            span: found.span(),
+        })
+    }
+
     pub(super) fn number(&mut self, key: &'static str) -> Option<At<f64>> {
         let found = self.take(key)?;
         let value = plain_number(found.get_ref()).and_then(|n| n.parse().ok());

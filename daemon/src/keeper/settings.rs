@@ -2,9 +2,11 @@
 
 use std::time::Duration;
 
+use borewake_model::lagged::Driver;
+
 use super::{KeeperSettings, Pace};
-use crate::alarm::{AlarmSettings, Care, ChannelWatch, LimitSettings, Side};
-use crate::config::{self, Site};
+use crate::alarm::{AlarmSettings, Care, ChannelWatch, LimitSettings, Side, WatchAlarm};
+use crate::config::{self, DriveSettings, Site};
 use crate::watch::blocks::{BlockPlan, WellFeed};
 
 /// How blocks of a site are built.
@@ -17,11 +19,19 @@ pub fn block_plan(site: &Site) -> BlockPlan {
             channel: w.rate.clone(),
             share: w.share,
             holds: w.holds,
+            needed: true,
         })
         .chain(site.waters.iter().map(|w| WellFeed {
             channel: w.channel.clone(),
             share: w.weight,
             holds: w.holds,
+            needed: true,
+        }))
+        .chain(drives(site).iter().map(|d| WellFeed {
+            channel: d.channel.clone(),
+            share: d.factor,
+            holds: d.holds,
+            needed: matches!(d.driver, Driver::Pool | Driver::Tailwater),
         }))
         .collect();
     BlockPlan {
@@ -30,6 +40,10 @@ pub fn block_plan(site: &Site) -> BlockPlan {
         wells,
         gauges: site.gauges.iter().map(|g| g.channel.clone()).collect(),
     }
+}
+
+fn drives(site: &Site) -> &[DriveSettings] {
+    site.embankment.as_ref().map_or(&[], |e| &e.drives)
 }
 
 impl KeeperSettings {
@@ -58,6 +72,10 @@ fn alarm_settings(site: &Site) -> AlarmSettings {
         .values()
         .filter_map(|channel| channel_watch(site, channel))
         .collect();
+    let mut usual = AlarmSettings::new(site.names(), site.watch.block.as_secs_f64());
+    if site.embankment.is_some() {
+        usual.watch = WatchAlarm::of_embankment();
+    }
     AlarmSettings {
         limits,
         channels,
@@ -66,7 +84,7 @@ fn alarm_settings(site: &Site) -> AlarmSettings {
             realarm: site.care.realarm.map(|d| d.as_secs_f64()),
             escalate: site.care.escalate.map(|d| d.as_secs_f64()),
         },
-        ..AlarmSettings::new(site.names(), site.watch.block.as_secs_f64())
+        ..usual
     }
 }
 
@@ -105,7 +123,8 @@ fn channel_watch(site: &Site, channel: &config::ChannelSettings) -> Option<Chann
     let gauge = site.gauges.iter().position(|g| g.channel == channel.id);
     let fed = gauge.is_some()
         || site.wells.iter().any(|w| w.rate == channel.id)
-        || site.waters.iter().any(|w| w.channel == channel.id);
+        || site.waters.iter().any(|w| w.channel == channel.id)
+        || drives(site).iter().any(|d| d.channel == channel.id);
     let silence = site.watch.hold_rate.as_secs_f64().max(1.0);
     fed.then(|| ChannelWatch {
         channel: channel.id.clone(),

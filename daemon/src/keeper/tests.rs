@@ -194,6 +194,7 @@ fn settings() -> KeeperSettings {
                 channel: "q".into(),
                 share: 1.0,
                 holds: Holds::After,
+                needed: true,
             }],
             gauges: vec!["p".into()],
         },

@@ -45,6 +45,8 @@ pub struct AlarmReport {
     pub channels: Vec<ChannelQuality>,
     /// Calibration and certificate as text, or why there is none.
     pub model: Result<String, String>,
+    /// Whether the site is an embankment, not a field of wells.
+    pub embankment: bool,
 }
 
 /// Text in which nothing is markup.
@@ -127,7 +129,11 @@ pub fn html(report: &AlarmReport) -> String {
         Err(why) => writeln!(out, "<p>{}</p>", escaped(why)),
     };
     history(&mut out, report);
-    out += CAUTIONS;
+    out += if report.embankment {
+        CAUTIONS_EMBANKMENT
+    } else {
+        CAUTIONS
+    };
     out + "</body>\n</html>\n"
 }
 
@@ -137,6 +143,15 @@ const CAUTIONS: &str = "<h2>Cautions</h2>\n<ul>\n\
 <li>From one gauge alone a slow leak and a drifting gauge cannot be told apart.</li>\n\
 <li>Sizes and places lean on the calibration above: outside the rates and times it was made from they say less.</li>\n\
 <li>A leak that was already flowing during commissioning is part of the calibration and cannot be seen.</li>\n\
+<li>Check by independent means before acting on this page; act at once where danger is plain.</li>\n</ul>\n";
+
+/// The same for an embankment.
+const CAUTIONS_EMBANKMENT: &str = "<h2>Cautions</h2>\n<ul>\n\
+<li>The emergency action plan comes first: where seepage is cloudy or grows, or the slope, the crest or the toe moves, act on it at once and do not wait for this page.</li>\n\
+<li>No place is claimed: each piezometer is known by its own answer to pool, season, rain and age, and water finds ways between them.</li>\n\
+<li>What piezometers cannot feel is not seen here: walk the embankment, and look at weirs and drains.</li>\n\
+<li>Beyond the pool levels of commissioning the bands are wide or there are none: a first filling needs people on the spot.</li>\n\
+<li>What was already wrong during commissioning is part of the calibration and cannot be seen.</li>\n\
 <li>Check by independent means before acting on this page; act at once where danger is plain.</li>\n</ul>\n";
 
 fn evidence(out: &mut String, report: &AlarmReport) {

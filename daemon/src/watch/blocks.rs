@@ -10,7 +10,7 @@ use crate::record::{Block, ChannelId, GaugeBlock, Holds, RateKnown, RatePath, Re
 /// Sample instants closer than this share one evaluation of the model \[µs\].
 const CELL: i64 = 60 * Stamp::SECOND;
 
-/// Which channel feeds an input of the ground, a well or open water, and how.
+/// Which channel feeds an input of the ground, a well or open water, or drives an embankment, and how.
 #[derive(Debug, Clone, PartialEq)]
 pub struct WellFeed {
     /// Its rate channel, or that of its level or pressure.
@@ -19,6 +19,8 @@ pub struct WellFeed {
     pub share: f64,
     /// How values stand to their instants.
     pub holds: Holds,
+    /// Whether gauges are blind while it is too old. What only colours an embankment's answer may be held.
+    pub needed: bool,
 }
 
 /// What a block is built for: the channels of wells and gauges in the ground's order, and the tier's times.
@@ -28,7 +30,7 @@ pub struct BlockPlan {
     pub length: i64,
     /// How long a rate holds without being read again \[µs\].
     pub hold_rate: i64,
-    /// One per input of the ground, in its order: wells, then open water.
+    /// One per input of the ground, in its order: wells, then open water; or one per drive of an embankment.
     pub wells: Vec<WellFeed>,
     /// Pressure channel of each gauge.
     pub gauges: Vec<ChannelId>,
@@ -156,8 +158,9 @@ impl BlockPlan {
             known = Some(reading);
         }
         put(end, value * well.share);
-        let fresh = known
-            .is_some_and(|r| end.0 - r.sampled.0 <= self.hold_rate.saturating_add(self.length));
+        let fresh = known.is_some_and(|r| {
+            !well.needed || end.0 - r.sampled.0 <= self.hold_rate.saturating_add(self.length)
+        });
         RatePath {
             pieces,
             known: if fresh {
@@ -283,6 +286,7 @@ mod tests {
                 channel: "q".into(),
                 share: 0.5,
                 holds,
+                needed: true,
             }],
             gauges: vec!["p".into(), "o".into()],
         }

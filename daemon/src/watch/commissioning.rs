@@ -1,14 +1,14 @@
 //! Makes a ground file: mesh, weak form, reduction, calibration, and the watch brought to the end of history.
 
-use borewake_model::ModelError;
 use borewake_model::commission::{CommissionSettings, Commissioned, Places, commission};
 use borewake_model::ground::mesh::MeshOptions;
 use borewake_model::ground::{Ground, Patches};
 use borewake_model::reduce::{ReduceOptions, Reduced, reduce_patched};
 use borewake_model::watch::{Watch, WatchSettings};
 use borewake_model::weak_form::{Scheme, discretise};
+use borewake_model::{ModelError, lagged};
 
-use super::ground_file::GroundFile;
+use super::ground_file::{GroundFile, Model};
 use crate::config::{Site, WellSettings};
 use crate::record::{Block, Stamp};
 
@@ -77,6 +77,41 @@ pub fn make(
     let last_block = history.last().map(|b| b.index).ok_or_else(|| {
         ModelError::History("no whole block of readings lies in the span given".into())
     })?;
+    let commissioned = match &site.embankment {
+        Some(embankment) => Model::Embankment(answers(
+            &site.ground,
+            embankment.model(),
+            history,
+            progress,
+        )?),
+        None => Model::Ground(calibrated(site, history, progress)?),
+    };
+    settled(site, commissioned, history, last_block, made, progress)
+}
+
+/// The answers of an embankment's gauges.
+fn answers(
+    ground: &Ground,
+    embankment: lagged::Embankment,
+    history: &[Block],
+    progress: &mut dyn FnMut(Stage, f64),
+) -> Result<lagged::Commissioned, ModelError> {
+    let calibration = lagged::commission(ground, &embankment, history, &mut |share| {
+        progress(Stage::Calibrate, share);
+    })?;
+    Ok(lagged::Commissioned {
+        ground: ground.clone(),
+        embankment,
+        calibration,
+    })
+}
+
+/// The ground of a field of wells, reduced and calibrated.
+fn calibrated(
+    site: &Site,
+    history: &[Block],
+    progress: &mut dyn FnMut(Stage, f64),
+) -> Result<Commissioned, ModelError> {
     let reduced = reduce_ground(&site.ground, progress)?;
     let past = |w: &WellSettings| w.past.iter().map(|p| (p.from.seconds(), p.rate)).collect();
     let settings = CommissionSettings {
@@ -86,7 +121,18 @@ pub fn make(
     let calibration = commission(&site.ground, &reduced, history, &settings, &mut |share| {
         progress(Stage::Calibrate, share)
     })?;
-    let commissioned = Commissioned::new(site.ground.clone(), &reduced, calibration)?;
+    Commissioned::new(site.ground.clone(), &reduced, calibration)
+}
+
+/// Brings the watch to the end of history.
+fn settled(
+    site: &Site,
+    commissioned: Model,
+    history: &[Block],
+    last_block: i64,
+    made: Stamp,
+    progress: &mut dyn FnMut(Stage, f64),
+) -> Result<GroundFile, ModelError> {
     let settings = WatchSettings {
         false_alarm_interval: site.watch.false_alarm_interval,
         first_onset: last_block + 1,

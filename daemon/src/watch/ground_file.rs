@@ -5,7 +5,8 @@ use std::io::Write as _;
 use std::path::{Path, PathBuf};
 
 use borewake_model::commission::Commissioned;
-use borewake_model::watch::{WatchSettings, WatchState};
+use borewake_model::watch::{Basis, Foundation, WatchSettings, WatchState};
+use borewake_model::{ModelError, lagged};
 use serde::{Deserialize, Serialize};
 use sha2::{Digest as _, Sha256};
 use thiserror::Error;
@@ -25,14 +26,47 @@ pub struct GroundFile {
     pub site_digest: String,
     /// When it was made.
     pub made: Stamp,
-    /// The ground as commissioned.
-    pub commissioned: Commissioned,
+    /// The site as commissioned.
+    pub commissioned: Model,
     /// What the site asked of the watch.
     pub settings: WatchSettings,
     /// The watch at the end of commissioning; the first block it judges is the one after.
     pub start: WatchState,
     /// Last block of the commissioning history.
     pub last_block: i64,
+}
+
+/// A site as commissioned, of either kind.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[expect(
+    clippy::large_enum_variant,
+    reason = "there is one of it, held for as long as the daemon runs"
+)]
+pub enum Model {
+    /// A field of wells: a ground, reduced and calibrated.
+    Ground(Commissioned),
+    /// An embankment: the answers of its gauges.
+    Embankment(lagged::Commissioned),
+}
+
+impl Model {
+    /// The ground, where the site is a field of wells.
+    #[must_use]
+    pub fn ground(&self) -> Option<&Commissioned> {
+        match self {
+            Self::Ground(ground) => Some(ground),
+            Self::Embankment(_) => None,
+        }
+    }
+}
+
+impl Basis for Model {
+    fn foundation(&self) -> Result<Foundation, ModelError> {
+        match self {
+            Self::Ground(ground) => ground.foundation(),
+            Self::Embankment(embankment) => embankment.foundation(),
+        }
+    }
 }
 
 /// Why a ground file cannot be used.

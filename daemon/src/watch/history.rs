@@ -121,6 +121,7 @@ mod tests {
                 channel: "q".into(),
                 share: 1.0,
                 holds: Holds::After,
+                needed: true,
             }],
             gauges: vec!["p".into()],
         };

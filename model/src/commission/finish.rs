@@ -175,7 +175,7 @@ impl Fit<'_> {
 }
 
 /// Longest run of blocks without a change of the raw value, by gauge.
-fn longest_unchanged(history: &[Block], gauges: usize) -> Vec<u32> {
+pub(crate) fn longest_unchanged(history: &[Block], gauges: usize) -> Vec<u32> {
     (0..gauges)
         .map(|gauge| {
             let (mut run, mut longest) = (0, 0);

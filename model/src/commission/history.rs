@@ -330,7 +330,7 @@ impl Regression {
 
 /// Bridges rows without a reading from the last reading before to the first after: what is left of readings less
 /// prediction moves slowly, while a zero would be an outlier as large as the pressure itself.
-fn bridge(raw: &mut DMatrix<f64>, rows: &[usize], missing: &[usize]) {
+pub(crate) fn bridge(raw: &mut DMatrix<f64>, rows: &[usize], missing: &[usize]) {
     let read = |row: &usize| missing.binary_search(row).is_err();
     let known: Vec<usize> = (0..rows.len()).filter(|&b| read(&rows[b])).collect();
     for block in (0..rows.len()).filter(|&b| !read(&rows[b])) {

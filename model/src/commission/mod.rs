@@ -11,13 +11,14 @@ mod finish;
 mod fit;
 pub(crate) mod history;
 pub(crate) mod places;
-mod rates;
-mod relevance;
+pub(crate) mod rates;
+pub(crate) mod relevance;
 mod scales;
 mod stochastic;
 mod suspect;
 mod unsteady;
 
+pub(crate) use finish::longest_unchanged;
 pub use fit::commission;
 pub use places::{Line, Places, places};
 pub use suspect::Suspect;

@@ -102,6 +102,19 @@ impl Places {
         places
     }
 
+    /// No place at all: for sites of which none is known.
+    pub(crate) fn nowhere() -> Self {
+        Self {
+            all: Vec::new(),
+            candidates: 0,
+            lines: Vec::new(),
+            centre: [0.0; 2],
+            half_width: 1.0,
+            rings: 0,
+            reach: 0.0,
+        }
+    }
+
     /// How far the outermost well or gauge lies in a direction \[m from the array's centre\].
     pub(crate) fn outermost(&self, ground: &Ground, azimuth: f64) -> f64 {
         let normal = [azimuth.cos(), azimuth.sin()];

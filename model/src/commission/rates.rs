@@ -100,7 +100,7 @@ fn mean(history: &[Block], input: usize) -> f64 {
 }
 
 /// Readings in a block of each gauge, as a rule.
-pub(super) fn typical_count(history: &[Block], gauges: usize) -> Vec<f64> {
+pub(crate) fn typical_count(history: &[Block], gauges: usize) -> Vec<f64> {
     (0..gauges)
         .map(|gauge| {
             let counts = history
@@ -114,7 +114,7 @@ pub(super) fn typical_count(history: &[Block], gauges: usize) -> Vec<f64> {
 }
 
 /// Standard deviation and lag-1 correlation of a series.
-pub(super) fn spread_and_correlation(series: &[f64]) -> (f64, f64) {
+pub(crate) fn spread_and_correlation(series: &[f64]) -> (f64, f64) {
     let count = series.len().max(2) as f64;
     let mean = series.iter().sum::<f64>() / count;
     let variance = series.iter().map(|v| (v - mean).powi(2)).sum::<f64>() / count;

@@ -21,6 +21,8 @@ use super::frame::{Frame, held, means, seen};
 use super::patched::{self, Patched};
 use crate::ModelError;
 use crate::block::Block;
+use crate::ground::Gauge;
+use crate::lagged::columns::{self as lagged, Beyond, Lagged};
 use crate::weak_form::Parameter;
 
 /// What is known before the record of the size of each nuisance; learned at commissioning where marked.
@@ -128,6 +130,8 @@ pub(crate) enum Kind {
     Past {
         well: usize,
     },
+    /// A column of an embankment, by order.
+    Lagged(usize),
 }
 
 /// The fixed columns of a site.
@@ -140,6 +144,8 @@ pub(crate) struct Columns {
     lags: Drive,
     patch_lags: Drive,
     skins: Vec<f64>,
+    /// Answers to drives, where the site is an embankment.
+    pub(crate) lagged: Option<Lagged>,
 }
 
 /// What the columns remember from block to block.
@@ -161,6 +167,8 @@ pub(crate) struct Memory {
     pub(crate) entering: Vec<f64>,
     /// Rate epochs.
     pub(crate) epochs: Epochs,
+    /// What an embankment's columns remember.
+    lagged: Option<lagged::Memory>,
 }
 
 /// One block of raw columns.
@@ -184,9 +192,59 @@ pub(crate) struct Raw {
     pub(crate) renewals: Vec<(usize, f64)>,
     /// Rate of each well before the block \[m3/s\].
     pub(crate) entering: Vec<f64>,
+    /// How far an embankment's pool lies beyond what history has seen.
+    pub(crate) beyond: Option<Beyond>,
+}
+
+impl Priors {
+    /// Of gauges alone.
+    pub(crate) fn of_gauges(gauges: &[Gauge]) -> Self {
+        Self {
+            offset: 1e5,
+            drift: gauges.iter().map(|g| 0.5 * g.drift).collect(),
+            settling: gauges
+                .iter()
+                .map(|g| 0.5 * g.drift * 0.25 * 365.25 * 86_400.0)
+                .collect(),
+            skin: 0.0,
+            parameter: 0.0,
+            bias: 0.0,
+            gain: 0.0,
+            past: 0.0,
+            declared: Vec::new(),
+            patch: [0.0; 2],
+            mismatch: 0.0,
+            discrepancy: Vec::new(),
+            long: 0.0,
+            far: 0.0,
+            pair_spread: Vec::new(),
+            lag_spread: Vec::new(),
+            rate_rms: Vec::new(),
+            rate: Vec::new(),
+        }
+    }
 }
 
 impl Columns {
+    /// Lays out the columns of an embankment.
+    pub(crate) fn of_embankment(frame: Frame, priors: Priors, lagged: Lagged) -> Self {
+        let mut columns = Self::new(frame, Patched::default(), priors, &[]);
+        columns.kinds.extend((0..lagged.len()).map(Kind::Lagged));
+        columns.lagged = Some(lagged);
+        columns
+    }
+
+    /// The columns that only one gauge shows, in order.
+    pub(crate) fn of_gauge(&self, gauge: usize) -> Vec<usize> {
+        let shows = |kind: &Kind| match (*kind, &self.lagged) {
+            (Kind::Offset(g) | Kind::Drift(g) | Kind::Settling(g), _) => g == gauge,
+            (Kind::Lagged(column), Some(lagged)) => lagged.gauge_of(column) == gauge,
+            _ => false,
+        };
+        let kinds = self.kinds.iter().enumerate();
+        kinds.filter(|(_, k)| shows(k)).map(|(i, _)| i).collect()
+    }
+
     /// Lays out the columns.
     pub(crate) fn new(frame: Frame, patched: Patched, priors: Priors, skins: &[f64]) -> Self {
         let mut kinds = Vec::new();
@@ -226,6 +284,7 @@ impl Columns {
             lags,
             patch_lags,
             skins: skins.to_vec(),
+            lagged: None,
         }
     }
 
@@ -234,9 +293,14 @@ impl Columns {
     /// # Errors
     /// As [`Sampled::of`].
     pub(crate) fn sample(&self, block: &Block) -> Result<Sampled, ModelError> {
-        let mut sampled = Sampled::of(block, self.frame.wells, self.frame.gauges)?;
+        let mut sampled = Sampled::of(block, self.frame.wells, self.drives(), self.frame.gauges)?;
         sampled.count_from(&self.priors.rest);
         Ok(sampled)
+    }
+
+    /// Number of drives.
+    pub(crate) fn drives(&self) -> usize {
+        self.lagged.as_ref().map_or(0, Lagged::drives)
     }
 
     /// Number of fixed columns.
@@ -250,7 +314,9 @@ impl Columns {
         self.kinds
             .iter()
             .map(|kind| match kind {
-                Kind::Patch(_) | Kind::Discrepancy { .. } | Kind::Far { .. } => 1.0 / FORGOTTEN,
+                Kind::Patch(_) | Kind::Discrepancy { .. } | Kind::Far { .. } | Kind::Lagged(_) => {
+                    1.0 / FORGOTTEN
+                }
                 _ => 0.0,
             })
             .collect()
@@ -297,6 +363,7 @@ impl Columns {
             past,
             entering: vec![0.0; wells],
             epochs: Epochs::new(wells),
+            lagged: self.lagged.as_ref().map(Lagged::start),
         }
     }
 
@@ -470,7 +537,18 @@ impl Columns {
                     }
                     past_index += 1;
                 }
+                Kind::Lagged(_) => {}
             }
+        }
+        let mut beyond = None;
+        if let (Some(lagged), Some(memory), Some(drives)) =
+            (&mut self.lagged, &mut memory.lagged, &sampled.drives)
+        {
+            let first = self.kinds.len() - lagged.len();
+            beyond = lagged.beyond(memory, drives);
+            fixed
+                .columns_mut(first, lagged.len())
+                .copy_from(&lagged.step(memory, drives, mid));
         }
         let epochs = memory.epochs.step(
             &self.frame,
@@ -513,6 +591,7 @@ impl Columns {
             driven,
             entering,
             renewals,
+            beyond,
         })
     }
 }

@@ -13,7 +13,7 @@
 use nalgebra::{DMatrix, DVector};
 
 use crate::ModelError;
-use crate::block::Block;
+use crate::block::{Block, RatePath};
 
 /// When things happen inside a block: shared by all blocks that are sampled alike.
 #[derive(Debug, Clone, PartialEq)]
@@ -37,15 +37,33 @@ pub(crate) struct Sampled {
     pub(crate) class: Vec<usize>,
     /// Rates of each well on its pieces \[m3/s\].
     pub(crate) rates: Vec<Vec<f64>>,
+    /// Start of the block \[s since the epoch\].
+    pub(crate) start: f64,
+    /// The same block as drives see it, in place of wells.
+    pub(crate) drives: Option<Box<Sampled>>,
 }
 
 impl Sampled {
-    /// Takes a block apart.
+    /// Takes a block apart whose paths are rates of wells, then values of drives.
     ///
     /// # Errors
     /// [`ModelError::Size`] or [`ModelError::NotFinite`] where the block does not fit the ground.
-    pub(crate) fn of(block: &Block, wells: usize, gauges: usize) -> Result<Self, ModelError> {
-        size("rates in a block", block.rates.len(), wells)?;
+    pub(crate) fn of(
+        block: &Block,
+        wells: usize,
+        drives: usize,
+        gauges: usize,
+    ) -> Result<Self, ModelError> {
+        size("rates in a block", block.rates.len(), wells + drives)?;
+        let (rates, values) = block.rates.split_at(wells);
+        let mut sampled = Self::along(block, rates, gauges)?;
+        if drives > 0 {
+            sampled.drives = Some(Box::new(Self::along(block, values, gauges)?));
+        }
+        Ok(sampled)
+    }
+
+    fn along(block: &Block, paths: &[RatePath], gauges: usize) -> Result<Self, ModelError> {
         size("gauges in a block", block.gauges.len(), gauges)?;
         let count = block.instants.len();
         if count == 0 {
@@ -75,9 +93,9 @@ impl Sampled {
                 classes.push(weights.clone());
             }
         }
-        let mut cuts = Vec::with_capacity(wells);
-        let mut rates = Vec::with_capacity(wells);
-        for path in &block.rates {
+        let mut cuts = Vec::with_capacity(paths.len());
+        let mut rates = Vec::with_capacity(paths.len());
+        for path in paths {
             if path
                 .pieces
                 .iter()
@@ -104,6 +122,8 @@ impl Sampled {
             },
             class,
             rates,
+            start: block.start(),
+            drives: None,
         })
     }
 

@@ -150,6 +150,26 @@ impl Frame {
         })
     }
 
+    /// Gauges without a ground: nothing that flows reaches them.
+    pub(crate) fn without_ground(gauges: usize) -> Self {
+        let modal = Modal {
+            lambda: DVector::zeros(0),
+            wells: DMatrix::zeros(0, 0),
+            gauges: DMatrix::zeros(0, gauges),
+            neighbours: DMatrix::zeros(0, 0),
+            places: DMatrix::zeros(0, 0),
+        };
+        Self {
+            base: Stepped::of(&modal),
+            modal,
+            tilted: Vec::new(),
+            in_wells: Vec::new(),
+            moments: Vec::new(),
+            gauges,
+            wells: 0,
+        }
+    }
+
     /// Well of a gauge whose skin acts at once, with its pressure per rate and unit of skin.
     pub(crate) fn well_of(&self, gauge: usize) -> Option<(usize, f64)> {
         self.in_wells

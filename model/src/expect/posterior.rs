@@ -190,7 +190,13 @@ impl Cleared {
     }
 
     pub(crate) fn strike(&mut self, columns: &[usize]) {
-        self.u = std::mem::replace(&mut self.u, DMatrix::zeros(0, 0)).remove_rows_at(columns);
+        let u = std::mem::replace(&mut self.u, DMatrix::zeros(0, 0));
+        // Rows cannot be taken from a matrix without columns.
+        self.u = if u.ncols() == 0 {
+            DMatrix::zeros(u.nrows().saturating_sub(columns.len()), 0)
+        } else {
+            u.remove_rows_at(columns)
+        };
     }
 
     /// Takes a batch of whitened signatures in (readings by signatures).

@@ -43,6 +43,10 @@ impl Watch {
         let Some(known) = known else {
             return (vec![None; gauges], vec![None; gauges]);
         };
+        let beyond = |gauge: usize| {
+            let variance = raw.beyond.as_ref().and_then(|b| b.variance.get(gauge));
+            variance.copied().unwrap_or(0.0)
+        };
         let mut expectations = Vec::with_capacity(gauges);
         let mut departures = Vec::with_capacity(gauges);
         for (gauge, (mean, variance)) in known.iter().enumerate() {
@@ -51,7 +55,7 @@ impl Watch {
                 self.whitener.open_variance(gauge) * self.inflate.get(gauge).map_or(1.0, |i| i * i);
             let expectation = Expectation {
                 mean: raw.base[gauge] + self.reference.get(gauge).copied().unwrap_or(0.0) + mean,
-                sd: (variance + open).sqrt(),
+                sd: (variance + open + beyond(gauge)).sqrt(),
             };
             let read = block.gauges.get(gauge).and_then(Option::as_ref);
             departures.push(read.filter(|_| !stale).map(|r| r.mean - expectation.mean));

@@ -9,12 +9,14 @@ use crate::weigh::barrier::Barriers;
 use crate::weigh::ladder::Ladder;
 
 mod band;
+mod basis;
 mod come_and_go;
 mod conclude;
 mod expected;
 mod step;
 mod stuck;
 
+pub use basis::{Basis, Foundation};
 pub use step::Watch;
 
 /// What the site asks of the watch.

@@ -9,15 +9,15 @@ use nalgebra::{DMatrix, DVector};
 
 use super::expected::affected;
 use super::stuck::Stuck;
-use super::{Adoption, Blind, Live, Step, WatchSettings, WatchState, band::Band};
+use super::{
+    Adoption, Basis, Blind, Foundation, Live, Step, WatchSettings, WatchState, band::Band,
+};
 use crate::ModelError;
 use crate::block::{Block, RateKnown};
-use crate::commission::{Commissioned, Places, Unsteady, calm};
+use crate::commission::{Places, Unsteady, calm};
 use crate::expect::adopted::{Adopted, AdoptedBlock};
-use crate::expect::columns::Columns;
+use crate::expect::columns::{Columns, Raw};
 use crate::expect::drive::size;
-use crate::expect::frame::Frame;
-use crate::expect::noise::Path;
 use crate::expect::posterior::Posterior;
 use crate::expect::whitener::Whitener;
 use crate::finding::{Cause, Subject};
@@ -28,8 +28,6 @@ use crate::weigh::scales::Scales;
 
 /// Blocks learned and weighed at a time.
 pub(super) const BATCH: i64 = 3;
-/// Longest age of an onset that is still weighed \[s\].
-const HORIZON: f64 = 100.0 * 86_400.0;
 /// Missing readings of one gauge that keep a column.
 const MISSING: usize = 24;
 /// What the threshold is raised by, for a null that is never quite right: chosen by hand, until a simulated null says it.
@@ -68,71 +66,49 @@ impl Watch {
     /// # Errors
     /// [`ModelError`] where the commissioned ground does not fit together.
     pub fn new(
-        commissioned: &Commissioned,
+        basis: &impl Basis,
         settings: &WatchSettings,
         adoptions: &[Adoption],
     ) -> Result<Self, ModelError> {
-        let (ground, calibration) = (&commissioned.ground, &commissioned.calibration);
-        let (gauges, wells) = (ground.gauges.len(), ground.wells.len());
-        size(
-            "gauges of the calibration",
-            calibration.reference.len(),
-            gauges,
-        )?;
-        size("skins of the calibration", calibration.skins.len(), wells)?;
-        let mut places = Places::of(ground);
-        size(
-            "places of the ground file",
-            commissioned.reduced.places.len(),
-            places.all.len(),
-        )?;
-        let frame = Frame::new(ground, &commissioned.reduced, &calibration.factors)?;
-        let path = Path::of(&frame.modal, calibration.block);
-        let columns = Columns::new(
-            frame,
-            calibration.patched.clone(),
-            calibration.priors.clone(),
-            &calibration.skins,
-        );
+        let Foundation {
+            ground,
+            columns,
+            path,
+            places,
+            stochastic,
+            noise,
+            reference,
+            inflate,
+            unsteady,
+            longest_unchanged,
+            flow,
+            block,
+            horizon,
+        } = basis.foundation()?;
+        let gauges = ground.gauges.len();
         let skins = columns.skin_paths();
-        let mut whitener =
-            Whitener::new(&path, &calibration.stochastic, &skins, calibration.block)?;
-        whitener.inflate(&calibration.inflate);
-        let horizon = whole(HORIZON / calibration.block);
+        let mut whitener = Whitener::new(&path, &stochastic, &skins, block)?;
+        whitener.inflate(&inflate);
+        let horizon = whole(horizon / block);
         let bank = Bank::new(
             &columns.frame.modal,
             &whitener,
             places.candidates,
-            calibration.block,
+            block,
             horizon,
         );
-        if let Some(suspect) = &calibration.suspect {
-            places
-                .lines
-                .extend(places.line(ground, suspect.azimuth, suspect.distance));
-        }
         let images = Images::new(&columns.frame.modal, &places.lines);
         let fixed = columns.len();
-        let mismatch = calibration.priors.mismatch;
+        let mismatch = columns.priors.mismatch;
         let adopted: Vec<Adopted> = adoptions
             .iter()
-            .map(|a| {
-                Adopted::new(
-                    a,
-                    ground,
-                    &columns.frame,
-                    &places,
-                    calibration.block,
-                    mismatch,
-                    &calibration.noise,
-                )
-            })
+            .map(|a| Adopted::new(a, &ground, &columns.frame, &places, block, mismatch, &noise))
             .collect();
         let quiet_stuck = adoptions
             .iter()
             .filter_map(|a| match (a.cause, a.subject) {
                 (Cause::GaugeStuck, Some(Subject::Gauge(gauge))) => {
-                    Some((gauge, floor(a.onset / calibration.block)?))
+                    Some((gauge, floor(a.onset / block)?))
                 }
                 _ => None,
             })
@@ -157,17 +133,20 @@ impl Watch {
         Ok(Self {
             adopted,
             quiet_stuck,
-            scales: Scales::of(ground, calibration),
-            reference: calibration.reference.clone(),
-            inflate: calibration.inflate.clone(),
-            unsteady: calibration.unsteady.clone(),
+            scales: Scales::of(
+                &ground.gauges,
+                &stochastic.gauge,
+                flow,
+                &columns.priors.rate,
+            ),
+            reference,
+            inflate,
+            unsteady,
             forgetting: columns.forgetting(),
             mismatch,
-            longest_unchanged: calibration.longest_unchanged.clone(),
-            block: calibration.block,
-            log_threshold: (settings.false_alarm_interval / calibration.block)
-                .max(1.0)
-                .ln()
+            longest_unchanged,
+            block,
+            log_threshold: (settings.false_alarm_interval / block).max(1.0).ln()
                 + MARGIN
                 + VARIETY * mismatch,
             columns,
@@ -191,12 +170,12 @@ impl Watch {
     /// # Errors
     /// As [`Watch::new`], and [`ModelError::Size`] where the state is of another ground.
     pub fn restore(
-        commissioned: &Commissioned,
+        basis: &impl Basis,
         settings: &WatchSettings,
         adoptions: &[Adoption],
         state: WatchState,
     ) -> Result<Self, ModelError> {
-        let mut watch = Self::new(commissioned, settings, adoptions)?;
+        let mut watch = Self::new(basis, settings, adoptions)?;
         size(
             "states of the filter",
             state.filter.nrows(),
@@ -242,10 +221,13 @@ impl Watch {
             None => self.columns.start(),
         };
         let raw = self.columns.step(&mut memory, &sampled)?;
-        let blind = self.blind(block);
+        let blind = self.blind(block, &raw);
         let missing: Vec<usize> = (0..gauges)
             .filter(|&g| {
-                block.gauges.get(g).is_none_or(Option::is_none) || self.stuck_since(g).is_some()
+                // What the model does not reach tells nothing of causes.
+                block.gauges.get(g).is_none_or(Option::is_none)
+                    || self.stuck_since(g).is_some()
+                    || matches!(blind.get(g), Some(Some(Blind::Model)))
             })
             .collect();
         let images = self
@@ -300,7 +282,13 @@ impl Watch {
             }
         }
         let mut white = self.whitener.step(&mut self.state.filter, &row);
-        let calm = calm(&self.unsteady, &sampled, &self.columns.priors.rate, gauges);
+        let mut calm = calm(&self.unsteady, &sampled, &self.columns.priors.rate, gauges);
+        if let Some(beyond) = &raw.beyond {
+            for ((gauge, factor), variance) in calm.iter_mut().enumerate().zip(&beyond.variance) {
+                let known = self.whitener.innovation()[(gauge, gauge)];
+                *factor *= (1.0 + variance / known).sqrt().recip();
+            }
+        }
         for (gauge, factor) in calm.iter().enumerate() {
             white.row_mut(gauge).scale_mut(*factor);
         }
@@ -360,7 +348,8 @@ impl Watch {
         self.state.stuck.since(gauge, longest)
     }
 
-    fn blind(&self, block: &Block) -> Vec<Option<Blind>> {
+    fn blind(&self, block: &Block, raw: &Raw) -> Vec<Option<Blind>> {
+        let beyond = raw.beyond.as_ref().is_some_and(|b| b.blind);
         let stale = block.rates.iter().any(|r| r.known == RateKnown::Stale);
         block
             .gauges
@@ -368,6 +357,7 @@ impl Watch {
             .map(|gauge| match gauge {
                 None => Some(Blind::NoData),
                 Some(_) if stale => Some(Blind::StaleRate),
+                Some(_) if beyond => Some(Blind::Model),
                 Some(_) => None,
             })
             .collect()

@@ -100,6 +100,9 @@ impl Bank {
         let modes = modal.lambda.len();
         let mut sources: Vec<Source> = (0..places).map(Source::Place).collect();
         sources.extend((0..modal.neighbours.ncols()).map(Source::Neighbour));
+        if sources.is_empty() {
+            return Self::of_gauges(whitener, gauges, block, horizon);
+        }
         let mut ports = DMatrix::zeros(modes, sources.len());
         ports
             .columns_mut(0, places)
@@ -195,6 +198,20 @@ impl Bank {
             chosen,
             coefficients,
             sources,
+            horizon,
+        }
+    }
+
+    /// The bank of a site where no source could be placed.
+    fn of_gauges(whitener: &Whitener, gauges: usize, block: f64, horizon: usize) -> Self {
+        Self {
+            gauges,
+            directions: DMatrix::zeros(horizon * gauges, 0),
+            own: Self::own(whitener, gauges, block, horizon),
+            coefficients: vec![DMatrix::zeros(0, 0); GROWTHS.len()],
+            thinned: vec![DMatrix::zeros(0, 0); GROWTHS.len()],
+            chosen: Vec::new(),
+            sources: Vec::new(),
             horizon,
         }
     }

@@ -118,6 +118,7 @@ impl Barriers {
                 variance,
             )
         });
+        // Without a line this is minus infinity: no barrier is thought of.
         (
             log_sum(each.as_slice()) - (each.len().max(1) as f64).ln(),
             each,

@@ -3,8 +3,7 @@
 //! The size of a leak or a step is not known in advance, only its order: each prior is an even mixture of a few
 //! scales, tied to what the site itself is like (its flow, its gauges' noise and drift).
 
-use crate::commission::Calibration;
-use crate::ground::Ground;
+use crate::ground::Gauge;
 
 /// Variances of amplitudes by cause; every list is an even mixture.
 #[derive(Debug, Clone, PartialEq)]
@@ -24,23 +23,23 @@ pub(crate) struct Scales {
 }
 
 impl Scales {
-    pub(crate) fn of(ground: &Ground, calibration: &Calibration) -> Self {
+    /// Of gauges with their noise, a mean total injection and the largest rate of each well.
+    pub(crate) fn of(gauges: &[Gauge], noise: &[f64], flow: f64, rates: &[f64]) -> Self {
         let squares = |unit: f64, factors: [f64; 3]| {
             factors
                 .iter()
                 .map(|f| (f * unit).powi(2))
                 .collect::<Vec<f64>>()
         };
-        let largest = calibration.priors.rate.iter().copied().fold(0.0, f64::max);
-        let noise = |g: usize| calibration.stochastic.gauge.get(g).copied().unwrap_or(1.0);
+        let largest = rates.iter().copied().fold(0.0, f64::max);
+        let noise = |g: usize| noise.get(g).copied().unwrap_or(1.0);
         Self {
-            leak: squares(calibration.flow.max(1e-12), [0.01, 0.05, 0.2]),
+            leak: squares(flow.max(1e-12), [0.01, 0.05, 0.2]),
             interference: squares(largest.max(1e-12), [0.05, 0.25, 1.0]),
-            step: (0..ground.gauges.len())
+            step: (0..gauges.len())
                 .map(|g| squares(noise(g), [5.0, 50.0, 500.0]))
                 .collect(),
-            drift: ground
-                .gauges
+            drift: gauges
                 .iter()
                 .enumerate()
                 .map(|(g, gauge)| {

@@ -22,6 +22,12 @@ pub(in crate::cli) fn summary_json(site: &Site) -> Value {
             "hold_rate_s": site.watch.hold_rate.as_secs_f64(),
             "block_s": site.watch.block.as_secs_f64(),
         },
+        "embankment": site.embankment.as_ref().map(|e| json!({
+            "season": e.season, "ageing": e.ageing,
+            "drives": e.drives.iter().map(|d| json!({
+                "driver": d.driver, "channel": d.channel, "factor": d.factor,
+            })).collect::<Vec<_>>(),
+        })),
         "layers": site.ground.layers,
         "zones": site.ground.zones,
         "edge": site.ground.edge,

@@ -44,6 +44,7 @@ pub(super) fn summary_text(site: &Site) -> String {
     let parts = [
         ("Layers", layers(site)),
         ("Zones", zones(site)),
+        ("Embankment", embankment(site)),
         ("Edge", edge(site)),
         ("Barriers", barriers(site)),
         ("Stages", stages(site)),
@@ -153,7 +154,34 @@ fn zones(site: &Site) -> String {
     text_of(&table)
 }
 
+fn embankment(site: &Site) -> String {
+    let Some(embankment) = &site.embankment else {
+        return String::new();
+    };
+    let mut table = Table::new(&[
+        ("answers to", Align::Left),
+        ("channel", Align::Left),
+        ("as", Align::Left),
+    ]);
+    for drive in &embankment.drives {
+        let level = drive.factor != 1.0;
+        table.row([
+            drive.driver.name().to_owned(),
+            drive.channel.to_string(),
+            if level { "level, as pressure" } else { "read" }.to_owned(),
+        ]);
+    }
+    let own = [("season", embankment.season), ("ageing", embankment.ageing)];
+    for (name, _) in own.into_iter().filter(|(_, on)| *on) {
+        table.row([name, "-", "-"]);
+    }
+    text_of(&table)
+}
+
 fn edge(site: &Site) -> String {
+    if site.embankment.is_some() {
+        return String::new();
+    }
     let edge = &site.ground.edge;
     let distance = site.units.show(Dimension::Length, edge.distance);
     let driven = site.waters.get(site.ground.stages.len());

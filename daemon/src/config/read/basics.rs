@@ -126,13 +126,18 @@ fn bytes(table: &Section<'_>, size: &At<f64>) -> Option<u64> {
     format!("{:.0}", size.value).parse().ok()
 }
 
-/// Reads `[watch]`.
-pub(super) fn watch(root: &mut Section<'_>) -> WatchConfig {
+/// Reads `[watch]`. An embankment is slower than a field of wells, and its pool is often read once a day.
+pub(super) fn watch(root: &mut Section<'_>, embankment: bool) -> WatchConfig {
+    let (hold_rate, block) = if embankment {
+        (2 * ONE_DAY, 6 * HOUR)
+    } else {
+        (HOUR, HOUR)
+    };
     let mut settings = WatchConfig {
         false_alarm_interval: 5.0 * YEAR,
         lateness: 2 * MINUTE,
-        hold_rate: HOUR,
-        block: HOUR,
+        hold_rate,
+        block,
     };
     let Some(mut table) = root.table("watch") else {
         return settings;

@@ -8,6 +8,7 @@ use borewake_model::units::nearest;
 use super::super::report::Report;
 use super::super::section::At;
 use super::super::{ChannelSettings, PatternChannel};
+use super::embankment::{EmbankmentRead, kinds};
 use super::points::{GaugeRead, WellRead};
 use super::sources::{ChannelRead, SourceRead};
 use crate::record::{ChannelId, ChannelKind};
@@ -46,6 +47,7 @@ pub(super) fn channels(
     wells: &[WellRead],
     gauges: &[GaugeRead],
     waters: &[WaterRead],
+    embankment: Option<&EmbankmentRead>,
 ) -> Channels {
     let all: Vec<&ChannelRead> = sources.iter().flat_map(|s| &s.channels).collect();
     let (plain, patterns): (Vec<&ChannelRead>, Vec<&ChannelRead>) =
@@ -100,6 +102,14 @@ pub(super) fn channels(
         let kinds = [ChannelKind::Stage, ChannelKind::Pressure];
         channels.resolve(report, water.key.clone(), &water.channel, &kinds);
     }
+    if let Some(embankment) = embankment {
+        let drives = embankment.settings.drives.iter();
+        for (drive, (key, channel)) in drives.zip(&embankment.channels) {
+            let key = format!("embankment: {key}");
+            channels.resolve(report, key, channel, kinds(drive.driver));
+        }
+        taken_twice(report, embankment, gauges);
+    }
     for read in sources.iter().flat_map(|s| &s.channels) {
         for companion in &read.companions {
             let key = companion.key.clone();
@@ -109,7 +119,7 @@ pub(super) fn channels(
     shares(report, wells);
     one_gauge_each(report, gauges);
     one_source_a_port(report, sources);
-    unused(report, &plain, wells, gauges, waters);
+    unused(report, &plain, wells, gauges, waters, embankment);
     channels
 }
 
@@ -197,6 +207,24 @@ fn one_gauge_each(report: &Report<'_>, gauges: &[GaugeRead]) {
     }
 }
 
+/// What drives an embankment is no gauge of it, and drives it once.
+fn taken_twice(report: &Report<'_>, embankment: &EmbankmentRead, gauges: &[GaugeRead]) {
+    let mut taken: BTreeMap<&str, String> = gauges
+        .iter()
+        .map(|g| (g.channel.value.as_str(), g.path.clone()))
+        .collect();
+    for (key, channel) in &embankment.channels {
+        if channel.value.is_empty() {
+            continue;
+        }
+        if let Some(other) = taken.insert(&channel.value, format!("`{key}`")) {
+            let what = format!("{other} takes this channel");
+            let mend = "name the channel of another instrument";
+            report.value(&channel.span, format!("embankment: {key}"), what, mend);
+        }
+    }
+}
+
 /// Two sources on one port would read each other's answers.
 fn one_source_a_port(report: &Report<'_>, sources: &[SourceRead]) {
     let mut taken: BTreeMap<&str, &str> = BTreeMap::new();
@@ -217,15 +245,22 @@ fn unused(
     wells: &[WellRead],
     gauges: &[GaugeRead],
     waters: &[WaterRead],
+    embankment: Option<&EmbankmentRead>,
 ) {
+    let drives = |id: &str| {
+        let channels = embankment.map_or(&[][..], |e| &e.channels);
+        channels.iter().any(|(_, c)| c.value == id)
+    };
     for read in channels {
         let id = &read.id.value;
         let used = match read.settings.kind {
             ChannelKind::Pressure => {
                 gauges.iter().any(|g| g.channel.value == *id)
                     || waters.iter().any(|w| w.channel.value == *id)
+                    || drives(id)
             }
-            ChannelKind::Rate => wells.iter().any(|w| w.rate.value == *id),
+            // The weirs of an embankment are kept to be looked at.
+            ChannelKind::Rate => embankment.is_some() || wells.iter().any(|w| w.rate.value == *id),
             _ => true,
         };
         if !used && !id.is_empty() {

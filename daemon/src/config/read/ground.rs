@@ -155,6 +155,14 @@ pub(super) fn barriers(root: &mut Section<'_>) -> Vec<At<Barrier>> {
     barriers
 }
 
+/// The edge of what has none.
+pub(super) fn no_edge() -> Edge {
+    Edge {
+        kind: EdgeKind::Open,
+        distance: 0.0,
+    }
+}
+
 /// Reads every `[[neighbour]]`.
 pub(super) fn neighbours(root: &mut Section<'_>, layers: &[LayerRead]) -> Vec<At<Neighbour>> {
     let mut names = Vec::new();

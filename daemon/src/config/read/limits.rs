@@ -25,12 +25,27 @@ struct Practice {
     priority: Priority,
 }
 
-const PRACTICES: &[Practice] = &[Practice {
-    name: "injection-pressure",
-    side: Side::Above,
-    delay: Duration::from_secs(30),
-    priority: Priority::High,
-}];
+const PRACTICES: &[Practice] = &[
+    Practice {
+        name: "injection-pressure",
+        side: Side::Above,
+        delay: Duration::from_secs(30),
+        priority: Priority::High,
+    },
+    // A piezometer is read rarely and by itself: the first reading beyond counts.
+    Practice {
+        name: "piezometer-threshold",
+        side: Side::Above,
+        delay: Duration::ZERO,
+        priority: Priority::Medium,
+    },
+    Practice {
+        name: "piezometer-action",
+        side: Side::Above,
+        delay: Duration::ZERO,
+        priority: Priority::High,
+    },
+];
 
 /// Reads every `[[limit]]`, one setting a side.
 pub(super) fn limits(root: &mut Section<'_>, gauges: &[GaugeRead]) -> Vec<LimitSettings> {

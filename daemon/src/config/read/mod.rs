@@ -2,6 +2,7 @@
 
 mod basics;
 mod cross;
+mod embankment;
 mod ground;
 mod instrument;
 mod layer;
@@ -56,9 +57,14 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
     let mut root = Section::root(report, table);
     let basics = basics::site(&mut root);
     let store = basics::store(&mut root, folder, &basics.id);
-    let watch = basics::watch(&mut root);
+    let embankment = embankment::embankment(&mut root);
+    let watch = basics::watch(&mut root, embankment.is_some());
 
-    let layers = layer::layers(&mut root);
+    let layers = if embankment.is_some() {
+        Vec::new()
+    } else {
+        layer::layers(&mut root)
+    };
     let zones = zone::zones(&mut root, &layers);
     let edge = ground::edge(&mut root);
     let barriers = ground::barriers(&mut root);
@@ -90,7 +96,11 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
         channel,
     }));
     let ground = Ground {
-        edge: ground::edge_of(report, edge, &layers, &zones, &points),
+        edge: if embankment.is_some() {
+            ground::no_edge()
+        } else {
+            ground::edge_of(report, edge, &layers, &zones, &points)
+        },
         layers: layers.iter().map(|l| l.layer.clone()).collect(),
         zones: zones.into_iter().map(|z| z.value).collect(),
         barriers: barriers.iter().map(|b| b.value.clone()).collect(),
@@ -100,7 +110,14 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
         neighbours: neighbours.iter().map(|n| n.value.clone()).collect(),
     };
     cross::places(report, &ground, &wells, &gauges, &neighbours, &barriers);
-    let channels = cross::channels(report, &sources, &wells, &gauges, &waters);
+    let channels = cross::channels(
+        report,
+        &sources,
+        &wells,
+        &gauges,
+        &waters,
+        embankment.as_ref(),
+    );
     let mut well_settings: Vec<_> = wells.into_iter().map(|w| w.settings).collect();
     for well in &mut well_settings {
         well.holds = channels
@@ -122,6 +139,16 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
             }
         })
         .collect();
+    let embankment = embankment.map(|read| {
+        let mut settings = read.settings;
+        for drive in &mut settings.drives {
+            if let Some(channel) = channels.named.get(&drive.channel) {
+                drive.holds = embankment::holds(channel);
+                drive.factor = embankment::factor(channel.kind);
+            }
+        }
+        settings
+    });
     Site {
         path: path.to_owned(),
         text: text.to_owned(),
@@ -134,6 +161,7 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
         wells: well_settings,
         waters,
         gauges: gauges.into_iter().map(|g| g.settings).collect(),
+        embankment,
         channels: channels.named,
         patterns: channels.patterns,
         sources: sources.into_iter().map(|s| s.settings).collect(),

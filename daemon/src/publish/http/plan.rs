@@ -55,6 +55,7 @@ pub(super) async fn site(State(asking): State<Arc<Asking>>) -> Json<Value> {
         "replay": asking.replay,
         "version": env!("CARGO_PKG_VERSION"),
         "block_s": site.watch.block.as_secs_f64(),
+        "embankment": site.embankment.is_some(),
         "edge": { "kind": ground.edge.kind, "distance": ground.edge.distance },
         "layers": layers,
         "barriers": barriers,
