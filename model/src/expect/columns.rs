@@ -95,6 +95,8 @@ const SETTLING: f64 = 15.0 * 86_400.0;
 const RENEWED: f64 = 1.5;
 /// Time in which the discrepancy's prior variance is regained \[s\].
 const FORGOTTEN: f64 = 1e5 * 86_400.0;
+/// The same of an embankment's answers, whose prior is many times what they are.
+const LAGGED_FORGOTTEN: f64 = 1e8 * 86_400.0;
 /// Ends of the windows of past rates \[s before the record\].
 const PAST: [f64; 8] = [
     21_600.0,
@@ -314,9 +316,8 @@ impl Columns {
         self.kinds
             .iter()
             .map(|kind| match kind {
-                Kind::Patch(_) | Kind::Discrepancy { .. } | Kind::Far { .. } | Kind::Lagged(_) => {
-                    1.0 / FORGOTTEN
-                }
+                Kind::Patch(_) | Kind::Discrepancy { .. } | Kind::Far { .. } => 1.0 / FORGOTTEN,
+                Kind::Lagged(_) => 1.0 / LAGGED_FORGOTTEN,
                 _ => 0.0,
             })
             .collect()

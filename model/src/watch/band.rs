@@ -16,8 +16,8 @@ use crate::expect::posterior::Posterior;
 
 /// Least age of the posterior used \[s\].
 const AGE: f64 = 4.0 * 86_400.0;
-/// Ages at which posteriors are kept \[days\].
-const KEPT: [i64; 11] = [0, 1, 2, 3, 4, 5, 7, 11, 18, 30, 50];
+/// Between two of these ages one posterior is kept \[days\].
+const KEPT: [i64; 12] = [0, 1, 2, 3, 4, 5, 7, 11, 18, 30, 50, 100];
 
 /// A posterior as it was.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
@@ -51,18 +51,27 @@ impl Band {
             live: live.to_vec(),
             posterior: posterior.clone(),
         });
-        // The newest that is at least as old as each age wanted, and the youngest one.
-        let wanted: Vec<i64> = KEPT
-            .iter()
-            .filter_map(|age| {
-                self.kept
-                    .iter()
-                    .rev()
-                    .find(|s| block - s.block >= age * day)
-                    .map(|s| s.block)
-            })
-            .collect();
-        self.kept.retain(|s| wanted.contains(&s.block));
+        // Between two ages the oldest stays until it has come to the next; beyond the last age the newest stays. Were the
+        // newest kept everywhere, none would ever grow old.
+        let span = |s: &Snapshot| {
+            let age = block - s.block;
+            KEPT.iter().filter(|from| age >= **from * day).count()
+        };
+        let spans: Vec<usize> = self.kept.iter().map(span).collect();
+        let mut index = 0;
+        self.kept.retain(|_| {
+            let mine = spans.get(index).copied();
+            let (before, after) = (
+                index.checked_sub(1).and_then(|i| spans.get(i)).copied(),
+                spans.get(index + 1).copied(),
+            );
+            index += 1;
+            if mine == Some(KEPT.len()) {
+                after != mine
+            } else {
+                before != mine
+            }
+        });
     }
 
     /// Mean and variance that the nuisances add to the model's prediction, by gauge, from a posterior older than `before`
@@ -116,5 +125,32 @@ impl Band {
                 })
                 .collect(),
         )
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn posteriors_of_every_age_are_kept_and_not_many() {
+        let (mut band, day) = (Band::new(), 24);
+        let posterior = Posterior::prior(1);
+        for block in 0..300 * day {
+            band.keep(block, day, &[], &posterior);
+            assert!(band.kept.len() <= KEPT.len() + 1);
+            // What is asked for is found, once there has been such a one, and not much older.
+            for asked in [4, 6, 10, 20, 40, 90] {
+                if block > 2 * asked * day {
+                    let found = band
+                        .kept
+                        .iter()
+                        .rev()
+                        .find(|s| block - s.block >= asked * day);
+                    let age = found.map(|s| (block - s.block) / day);
+                    assert!(age.is_some_and(|a| a <= 2 * asked + 20), "{asked} {age:?}");
+                }
+            }
+        }
     }
 }
