@@ -43,6 +43,7 @@ fn ground() -> Ground {
             distance: 0.0,
         },
         barriers: Vec::new(),
+        stages: Vec::new(),
         wells: Vec::new(),
         gauges: (0..PIEZOMETERS.len())
             .map(|i| Gauge {

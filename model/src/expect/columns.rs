@@ -223,6 +223,7 @@ impl Priors {
             lag_spread: Vec::new(),
             rate_rms: Vec::new(),
             rate: Vec::new(),
+            rest: Vec::new(),
         }
     }
 }

@@ -167,6 +167,7 @@ impl Frame {
             moments: Vec::new(),
             gauges,
             wells: 0,
+            meters: 0,
         }
     }
 

@@ -11,7 +11,6 @@ use crate::ModelError;
 use crate::block::Block;
 use crate::commission::history::{Regression, bridge, median};
 use crate::expect::columns::Columns;
-use crate::expect::drive::Sampled;
 use crate::expect::whitener::Whitener;
 
 /// The history of one gauge.
@@ -33,7 +32,7 @@ impl Single {
     /// # Errors
     /// [`ModelError::History`] where a gauge is silent, others where a block does not fit.
     pub(super) fn all(columns: &mut Columns, history: &[Block]) -> Result<Vec<Self>, ModelError> {
-        let (gauges, wells) = (columns.frame.gauges, columns.frame.wells);
+        let gauges = columns.frame.gauges;
         let mine: Vec<Vec<usize>> = (0..gauges).map(|g| columns.of_gauge(g)).collect();
         let mut all: Vec<Self> = mine
             .iter()
@@ -46,7 +45,7 @@ impl Single {
             .collect();
         let mut memory = columns.start();
         for (index, block) in history.iter().enumerate() {
-            let sampled = Sampled::of(block, wells, columns.drives(), gauges)?;
+            let sampled = columns.sample(block)?;
             let step = columns.step(&mut memory, &sampled)?;
             for ((gauge, one), own) in all.iter_mut().enumerate().zip(&mine) {
                 match block.gauges.get(gauge).and_then(Option::as_ref) {

@@ -14,11 +14,12 @@ pub(super) struct EmbankmentRead {
 }
 
 /// Parts of a field of wells, which an embankment has not.
-const OF_WELLS: [&str; 7] = [
+const OF_WELLS: [&str; 8] = [
     "layer",
     "zone",
     "edge",
     "barrier",
+    "stage",
     "well",
     "neighbour",
     "penetration",
