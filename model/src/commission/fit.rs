@@ -1,20 +1,16 @@
 //! The fit: damped Gauss-Newton in the logarithms of the parameters, everything else linear.
 
-#![expect(
-    clippy::indexing_slicing,
-    reason = "indices run over columns, gauges and wells laid out by the same code"
-)]
-
 use nalgebra::DVector;
 
 use super::history::{History, Keep, Regression};
+use super::moves::Move;
 use super::rates::{Rates, typical_count};
 use super::suspect::{BELIEVED, OCCAM, STRENGTH_SD, Suspect, best_line};
 use super::{Calibration, CommissionSettings};
 use crate::ModelError;
 use crate::block::Block;
-use crate::expect::columns::{Columns, Kind, Priors};
-use crate::expect::frame::{Frame, factor, free_parameters, with_factor};
+use crate::expect::columns::{Columns, Priors};
+use crate::expect::frame::{Frame, free_parameters};
 use crate::expect::noise::{Noise, Path};
 use crate::expect::patched::Patched;
 use crate::expect::whitener::Whitener;
@@ -25,8 +21,18 @@ use crate::reduce::{Factors, Reduced};
 pub(super) const TYPICAL_GAIN: f64 = 0.005;
 /// Spread between patches before history is asked.
 pub(super) const TYPICAL_PATCH: f64 = 0.1;
-/// Largest step of a logarithm in one round.
-const LONGEST_STEP: f64 = 0.4;
+/// Longest step of a logarithm in one round, at first.
+const FIRST_RADIUS: f64 = 0.4;
+/// What becomes of it after a step that made the evidence worse by more than [`WORSE`], and after any other.
+const SHORTER: f64 = 0.3;
+const LONGER: f64 = 1.5;
+const WORSE: f64 = 2.0;
+/// Rounds since patches were let in after which the noise is learned anew: what parameters could not explain yet had passed for it.
+const RELEARNED: [usize; 4] = [0, 1, 3, 6];
+/// By which factors its figures are then tried larger and smaller.
+const STRIDES: [&[f64]; 4] = [&[2.0], &[1.4, 1.2], &[2.0, 1.4], &[1.4, 1.2]];
+/// A step of a logarithm that is no news.
+const SETTLED: f64 = 2e-3;
 /// Times that readings which are missing are worked out anew before anything is learned.
 const FILLS: usize = 2;
 /// Rounds in which all pairs are taken to see one ground; what makes them differ is learned about the best such ground,
@@ -41,8 +47,8 @@ const SEARCH_FROM: usize = 3;
 const EVEN: f64 = 1e-3;
 /// Spread between patches from which a barrier is looked for.
 const UNEVEN: f64 = 0.15;
-/// Largest step of a logarithm in a later round.
-const SHORT_STEP: f64 = 0.05;
+/// Spread between patches from which a fit is begun on an uneven ground too.
+const VARIED: f64 = 0.03;
 /// Least history \[s\].
 const LEAST_HISTORY: f64 = 5.0 * 86_400.0;
 
@@ -71,14 +77,24 @@ pub fn commission(
             LEAST_HISTORY / 86_400.0
         )));
     }
+    // Begun from an even ground the fit is sure to end well where the ground is even; where it is not, either beginning may
+    // end in a blind alley.
     let mut fit = Fit::start(ground, reduced, history, settings, block)?;
-    fit.settle(&mut |share| progress(0.05 + 0.45 * share))?;
-    if fit.state.scales.patch.iter().copied().fold(0.0, f64::max) > UNEVEN {
+    fit.state.scales.patch = [EVEN; 2];
+    fit.settle(&mut |share| progress(0.05 + 0.25 * share))?;
+    if fit.spread_between_patches() > VARIED {
+        let mut other = Fit::start(ground, reduced, history, settings, block)?;
+        let settled = other.settle(&mut |share| progress(0.3 + 0.25 * share));
+        if settled.is_ok() && other.log_evidence > fit.log_evidence {
+            fit = other;
+        }
+    }
+    if fit.spread_between_patches() > UNEVEN {
         // So uneven a ground may be an even one with a barrier.
         let mut other = Fit::start(ground, reduced, history, settings, block)?;
         other.sought = true;
         other.state.scales.patch = [EVEN; 2];
-        let settled = other.settle(&mut |share| progress(0.5 + 0.3 * share));
+        let settled = other.settle(&mut |share| progress(0.55 + 0.25 * share));
         // A trial that fails is no reason to lose the fit that stands.
         let log_evidence = match settled {
             Ok(()) => other.log_evidence - fit.log_evidence - OCCAM,
@@ -237,6 +253,12 @@ impl<'a> Fit<'a> {
         })
     }
 
+    /// The larger of the spreads between patches.
+    fn spread_between_patches(&self) -> f64 {
+        let [conduction, storage] = self.state.scales.patch;
+        conduction.max(storage)
+    }
+
     /// First round in which scales are learned.
     pub(super) fn let_in(&self) -> usize {
         if self.sought {
@@ -250,28 +272,48 @@ impl<'a> Fit<'a> {
     fn settle(&mut self, progress: &mut dyn FnMut(f64)) -> Result<(), ModelError> {
         let let_in = self.let_in();
         let rounds = self.settings.rounds + let_in - PLAIN_ROUNDS;
-        let mut best = (f64::NEG_INFINITY, None);
+        let mut radius = FIRST_RADIUS;
+        // The best state met, by the evidence at it, with the step that it asks for and the share of it tried.
+        let mut best: Option<(f64, State, Move, f64)> = None;
         for round in 0..rounds {
             progress(round as f64 / rounds as f64);
             if round == let_in {
                 self.state.scales.patch = [TYPICAL_PATCH; 2];
             }
-            let before = self.state.clone();
-            let moved = self.round(round)?;
-            if round > let_in && self.log_evidence > best.0 {
-                // The evidence is that of the parameters before this round's step, under the scales learned in it.
-                let state = State {
-                    scales: self.state.scales.clone(),
-                    suspect: self.state.suspect,
-                    ..before
-                };
-                best = (self.log_evidence, Some(state));
+            let step = self.round(round)?;
+            if let Some((evidence, state, step, share)) = &mut best {
+                if self.log_evidence < *evidence - WORSE {
+                    // The share of the step went too far: from the same state a shorter one.
+                    *share *= SHORTER;
+                    radius *= SHORTER;
+                    if *share * step.length() < SETTLED {
+                        break;
+                    }
+                    self.state = state.clone();
+                    step.take(&mut self.state, *share);
+                    continue;
+                }
+                radius = (radius * LONGER).min(FIRST_RADIUS);
             }
-            if round >= let_in + 2 && moved < 2e-3 {
+            let share = step.share_within(radius);
+            let length = step.length();
+            // Until scales are learned, and across a change of the noise, one round's evidence says nothing of another's.
+            if round
+                .checked_sub(let_in)
+                .is_some_and(|r| RELEARNED.contains(&r))
+            {
+                best = None;
+            }
+            // The evidence is that of the parameters before this round's step, under the scales learned in it.
+            if round > let_in && best.as_ref().is_none_or(|b| self.log_evidence > b.0) {
+                best = Some((self.log_evidence, self.state.clone(), step.clone(), share));
+            }
+            step.take(&mut self.state, share);
+            if round >= let_in + 2 && length < SETTLED {
                 break;
             }
         }
-        if let (log_evidence, Some(state)) = best {
+        if let Some((log_evidence, state, ..)) = best {
             self.log_evidence = log_evidence;
             self.state = state;
         }
@@ -294,8 +336,8 @@ impl<'a> Fit<'a> {
         Whitener::new(&path, &self.state.noise, &columns.skin_paths(), self.block)
     }
 
-    /// One round: columns at the present parameters, scales learned, parameters and skins moved. Returns the longest move.
-    fn round(&mut self, round: usize) -> Result<f64, ModelError> {
+    /// One round: columns at the present parameters, scales learned. Returns what parameters and skins ask to be moved by.
+    fn round(&mut self, round: usize) -> Result<Move, ModelError> {
         let mut columns = self.columns()?;
         let let_in = self.let_in();
         let searched = self.sought && round >= SEARCH_FROM;
@@ -330,59 +372,21 @@ impl<'a> Fit<'a> {
         let solved = self.learn_scales(&columns, &regression, history.tail(), round)?;
         self.log_evidence =
             solved.log_likelihood - whitener.log_scale() * self.history.len() as f64;
-        let mut rest = solved.mean.clone();
-        let longest = if round < let_in {
-            LONGEST_STEP
-        } else {
-            SHORT_STEP
-        };
-        let mut moved = 0.0_f64;
-        for (index, kind) in columns.kinds.iter().enumerate() {
-            match *kind {
-                Kind::Parameter(i) => {
-                    if let Some(tilted) = columns.frame.tilted.get(i) {
-                        let step =
-                            (solved.mean[index] * self.priors.parameter).clamp(-longest, longest);
-                        moved = moved.max(step.abs());
-                        rest[index] -= step / self.priors.parameter;
-                        let value = factor(&self.state.factors, tilted.parameter) * step.exp();
-                        self.state.factors =
-                            with_factor(&self.state.factors, tilted.parameter, value);
-                    }
-                }
-                Kind::Patch(i) => {
-                    if let Some(parameter) = columns.patch(i) {
-                        let step = solved.mean[index].clamp(-longest, longest);
-                        moved = moved.max(0.1 * step.abs());
-                        rest[index] -= step;
-                        let value = factor(&self.state.factors, parameter) * step.exp();
-                        self.state.factors = with_factor(&self.state.factors, parameter, value);
-                    }
-                }
-                Kind::Skin(i) => {
-                    if let Some(&(_, well, _)) = columns.frame.in_wells.get(i)
-                        && let Some(skin) = self.state.skins.get_mut(well)
-                    {
-                        *skin += solved.mean[index] * self.priors.skin;
-                        rest[index] = 0.0;
-                    }
-                }
-                _ => {}
-            }
-        }
-        self.state.factors.sort_by_key(|(p, _)| *p);
-        let strides: &[f64] = match round {
-            1 => &[2.0],
-            2 => &[1.4],
-            _ if round == let_in => &[2.0],
-            _ if round == let_in + 1 => &[1.4, 1.2],
-            _ => &[],
+        let step = Move::of(&columns, &self.priors, solved.mean.clone());
+        let strides: &[f64] = match round.checked_sub(let_in) {
+            Some(since) => RELEARNED
+                .iter()
+                .zip(STRIDES)
+                .find(|(r, _)| **r == since)
+                .map_or(&[], |(_, s)| s),
+            None if round == 1 => &[2.0],
+            None if round == 2 => &[1.4],
+            None => &[],
         };
         if !strides.is_empty() {
             self.learn_noise(&columns, &history, &solved, strides)?;
         }
-        self.state.rest = Some(rest);
-        Ok(moved)
+        Ok(step)
     }
 
     /// Looks for the barrier that explains most of what is left without one, and takes it in.

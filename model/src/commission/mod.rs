@@ -10,6 +10,7 @@ use crate::reduce::{Factors, Reduced};
 mod finish;
 mod fit;
 pub(crate) mod history;
+mod moves;
 pub(crate) mod places;
 pub(crate) mod rates;
 pub(crate) mod relevance;
@@ -76,7 +77,7 @@ impl Default for CommissionSettings {
             parameter_sd: 0.5,
             skin_sd: 5.0,
             meter_bias: 0.01,
-            rounds: 10,
+            rounds: 16,
             past: Vec::new(),
         }
     }

@@ -26,10 +26,9 @@ pub(crate) struct Group {
     pub(crate) typical: f64,
     /// Weight of that prior, in columns.
     pub(crate) weight: f64,
+    /// No scale beyond this.
+    pub(crate) most: f64,
 }
-
-/// No scale beyond this: a nuisance is not larger than what it is a nuisance to.
-const MOST: f64 = 1.0;
 
 /// Rounds of the fixed point.
 const ROUNDS: usize = 12;
@@ -62,7 +61,7 @@ pub(crate) fn learn(
                 sum += (solved.mean[column] - centre[column]).powi(2);
                 determined += (1.0 - variance / group.scale.powi(2)).max(0.0);
             }
-            let next = (sum / determined).sqrt().min(MOST);
+            let next = (sum / determined).sqrt().min(group.most);
             moved = moved.max((next / group.scale).ln().abs());
             group.scale = next;
             for &column in &group.columns {

@@ -7,7 +7,7 @@
 
 use nalgebra::DVector;
 
-use super::fit::{Fit, TYPICAL_GAIN, TYPICAL_PATCH};
+use super::fit::{Fit, TYPICAL_GAIN};
 use super::history::{Regression, Solved};
 use super::relevance::{Group, learn};
 use super::suspect::STRENGTH_SD;
@@ -19,6 +19,10 @@ use crate::weigh::barrier::SEALING;
 
 /// Share of a pair's response that its discrepancy is thought to be before history is asked.
 const TYPICAL_DISCREPANCY: f64 = 0.001;
+/// Spread between patches of a ground that history shows to be even.
+const EVENLY: f64 = 0.02;
+/// A nuisance is not larger than what it is a nuisance to.
+const WHOLE: f64 = 1.0;
 /// Discrepancy at lags of weeks, and of the ground beyond the array, as multiples of the share of a pair as a rule.
 pub(super) const LONG: f64 = 1.0;
 pub(super) const FAR: f64 = 1.0;
@@ -97,6 +101,7 @@ impl Fit<'_> {
                 scale: self.state.scales.share[pair],
                 typical: TYPICAL_DISCREPANCY,
                 weight: 1.0,
+                most: WHOLE,
             })
             .collect();
         let mut past = Group {
@@ -104,6 +109,7 @@ impl Fit<'_> {
             scale: self.state.scales.past,
             typical: 0.003,
             weight: 1.0,
+            most: WHOLE,
         };
         for (index, kind) in columns.kinds.iter().enumerate() {
             match *kind {
@@ -131,8 +137,9 @@ impl Fit<'_> {
             groups.push(Group {
                 columns: members.map(|(index, _)| index).collect(),
                 scale: self.state.scales.patch[side],
-                typical: TYPICAL_PATCH,
+                typical: EVENLY,
                 weight: 1.0,
+                most: WHOLE,
             });
         }
         groups.push(Group {
@@ -140,6 +147,8 @@ impl Fit<'_> {
             scale: self.state.scales.gain,
             typical: TYPICAL_GAIN,
             weight: 4.0,
+            // Without a bound a ground that is badly described would be explained by its meters.
+            most: self.settings.meter_bias,
         });
         groups
     }

@@ -14,6 +14,9 @@ use crate::expect::columns::{Columns, Kind};
 use crate::expect::noise::{Noise, Path};
 use crate::expect::whitener::Whitener;
 
+/// Longest memory of a meter's wandering error \[s\]: what lasts longer is its gain.
+const LONGEST_MEMORY: f64 = 10.0 * 86_400.0;
+
 impl Fit<'_> {
     /// Log marginal likelihood under other noise.
     fn try_noise(
@@ -28,6 +31,16 @@ impl Fit<'_> {
         let regression = part.whiten(&whitener);
         let solved = regression.solve(spread, &DVector::zeros(spread.len()))?;
         Ok(solved.log_likelihood - whitener.log_scale() * self.history.len() as f64)
+    }
+
+    /// Whether the meters' error is one that meters have; what lasts longer is no noise.
+    fn is_noise_of_meters(&self, noise: &Noise) -> bool {
+        let errors = noise.meter.iter().chain(&noise.meter_fresh);
+        let rates = self.priors.rate.iter().chain(&self.priors.rate);
+        noise.meter_memory <= LONGEST_MEMORY
+            && errors.zip(rates).all(|(error, rate)| {
+                *error <= self.settings.meter_bias * rate.max(f64::MIN_POSITIVE)
+            })
     }
 
     /// Moves each figure of the noise while the marginal likelihood grows. What could pass for a meter's or a gauge's slow
@@ -77,6 +90,9 @@ impl Fit<'_> {
                     for _ in 0..3 {
                         let mut next = self.state.noise.clone();
                         knob.turn(&mut next, factor);
+                        if !self.is_noise_of_meters(&next) {
+                            break;
+                        }
                         let value = self.try_noise(columns, &path, &part, &spread, &next)?;
                         if value <= best + 0.5 {
                             break;

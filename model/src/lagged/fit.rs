@@ -179,6 +179,7 @@ impl<'a> Fit<'a> {
                 scale: TYPICAL,
                 typical: TYPICAL,
                 weight: 1.0,
+                most: 1.0,
             })
             .collect();
         Self {
