@@ -115,6 +115,11 @@ impl Places {
         }
     }
 
+    /// Distance of two places of the lattice of candidates \[m\].
+    pub(crate) fn spacing(&self) -> f64 {
+        SPACING * self.half_width
+    }
+
     /// How far the outermost well or gauge lies in a direction \[m from the array's centre\].
     pub(crate) fn outermost(&self, ground: &Ground, azimuth: f64) -> f64 {
         let normal = [azimuth.cos(), azimuth.sin()];

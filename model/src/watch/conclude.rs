@@ -37,6 +37,7 @@ impl Watch {
             bank: &self.bank,
             scales: &self.scales,
             places: &self.places,
+            between: &self.between,
             gauges: self.columns.frame.gauges,
             wells: self.columns.frame.wells,
             meters: self.columns.frame.meters,

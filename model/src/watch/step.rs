@@ -23,6 +23,7 @@ use crate::expect::whitener::Whitener;
 use crate::finding::{Cause, Subject};
 use crate::weigh::bank::Bank;
 use crate::weigh::barrier::{Barriers, Images};
+use crate::weigh::between::Between;
 use crate::weigh::ladder::{Ladder, Meters};
 use crate::weigh::scales::Scales;
 
@@ -44,6 +45,7 @@ pub struct Watch {
     pub(super) bank: Bank,
     pub(super) scales: Scales,
     pub(super) places: Places,
+    pub(super) between: Between,
     pub(super) adopted: Vec<Adopted>,
     /// Gauges whose repeating of one value is accepted, with the block from which it is.
     pub(super) quiet_stuck: Vec<(usize, i64)>,
@@ -153,6 +155,7 @@ impl Watch {
             whitener,
             images,
             bank,
+            between: Between::new(&places),
             places,
             skins,
             state,

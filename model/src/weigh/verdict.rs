@@ -7,8 +7,9 @@
 
 use nalgebra::{DMatrix, DVector};
 
-use super::bank::{Bank, COARSE, GROWTHS, Source};
+use super::bank::{Bank, COARSE, Source};
 use super::barrier::{Barriers, SEALING};
+use super::between::Between;
 use super::evidence::{amplitude, joint, log_bayes, log_bayes_joint, log_bayes_positive, log_sum};
 use super::ladder::{CAUSES, Ladder, Onset};
 use super::scales::Scales;
@@ -16,16 +17,15 @@ use crate::commission::Places;
 use crate::commission::places::distance;
 use crate::expect::posterior::Sums;
 use crate::finding::{Cause, Place, Size, SizeUnit, Subject};
+use crate::ground::Point;
 
 /// Prior covariance, as a share of an abrupt cause's variance, of its full effect and of its effect within the onset's
 /// block: it begins anywhere in that block.
 const ABRUPT: [[f64; 2]; 2] = [[1.0, 0.5], [0.5, 1.0 / 3.0]];
-/// Log evidence by which a place may fall short and still be looked at.
-const HOPELESS: f64 = 1_000.0;
-/// Parts of the way from one pace of growth to the next.
-const BETWEEN: [f64; 4] = [0.0, 0.25, 0.5, 0.75];
-/// Relative error of a leak's signature between lattice places and growths even in the plainest ground.
-const LATTICE: f64 = 0.03;
+/// Relative error of a leak's signature between places and growths even in the plainest ground.
+const LATTICE: f64 = 0.01;
+/// Of a cause that has no place.
+const NOWHERE: Point = [f64::NAN; 2];
 /// Weight of a leak outside the outline, beside one inside.
 const OUTSIDE: f64 = 0.1;
 
@@ -34,6 +34,7 @@ pub(crate) struct Weights<'a> {
     pub(crate) bank: &'a Bank,
     pub(crate) scales: &'a Scales,
     pub(crate) places: &'a Places,
+    pub(crate) between: &'a Between,
     pub(crate) gauges: usize,
     /// Inputs, and how many of them are wells with a meter.
     pub(crate) wells: usize,
@@ -57,13 +58,15 @@ pub(crate) struct Detail {
 }
 
 /// One hypothesis with its posterior.
-struct Hypothesis {
-    log: f64,
-    onset: i64,
-    part: f64,
-    index: usize,
-    mean: f64,
-    sd: f64,
+pub(super) struct Hypothesis {
+    pub(super) log: f64,
+    pub(super) onset: i64,
+    pub(super) part: f64,
+    pub(super) index: usize,
+    /// Where it is, where it has a place.
+    pub(super) at: Point,
+    pub(super) mean: f64,
+    pub(super) sd: f64,
 }
 
 impl Weights<'_> {
@@ -150,7 +153,7 @@ impl Weights<'_> {
             .collect()
     }
 
-    fn inside(&self, place: usize) -> f64 {
+    pub(super) fn inside(&self, place: usize) -> f64 {
         let far = self.places.all.get(place).is_some_and(|(at, _)| {
             distance(*at, self.places.centre) > 1.1 * self.places.half_width
         });
@@ -192,6 +195,7 @@ impl Weights<'_> {
                     onset: onset.block,
                     part: 0.0,
                     index: gauge,
+                    at: NOWHERE,
                     mean,
                     sd,
                 });
@@ -244,6 +248,7 @@ impl Weights<'_> {
                         1.0 - (mean[1] / mean[0]).clamp(0.0, 1.0)
                     },
                     index,
+                    at: NOWHERE,
                     mean: mean[0],
                     sd: covariance[(0, 0)].max(0.0).sqrt(),
                 })
@@ -325,11 +330,13 @@ impl Weights<'_> {
         near.sort_by(|a, b| strength(b).total_cmp(&strength(a)));
         near.truncate(5);
         let mut all = Vec::new();
-        for onset in &near {
+        if cause == Cause::Leak {
+            all = self.all_leaks(&near, index, now);
+        }
+        for onset in near.iter().filter(|_| cause != Cause::Leak) {
             let weight = onset.weight.get(index).copied().unwrap_or(0.0);
             let from = all.len();
             match cause {
-                Cause::Leak => self.leaks(onset, now, &mut all),
                 Cause::Interference => self.neighbours(onset, &mut all),
                 Cause::GaugeStep => all.extend(self.steps(onset)),
                 Cause::GaugeDrift => all.extend(self.drifts(onset)),
@@ -339,6 +346,7 @@ impl Weights<'_> {
                     onset: onset.block,
                     part: 0.0,
                     index: 0,
+                    at: NOWHERE,
                     mean: 0.0,
                     sd: 0.0,
                 }),
@@ -360,93 +368,6 @@ impl Weights<'_> {
         self.summary(cause, ladder, &all)
     }
 
-    /// Leaks at every place, growing at every pace: between two of [`GROWTHS`] a signature is a mix of theirs.
-    fn leaks(&self, onset: &Onset, now: i64, all: &mut Vec<Hypothesis>) {
-        let age = (now + 1 - onset.block) as f64 * self.block / 86_400.0;
-        let grown = |days: f64| {
-            if days > 0.0 {
-                (age / days).min(1.0)
-            } else {
-                1.0
-            }
-        };
-        let paces = (GROWTHS.len() - 1) * BETWEEN.len() + 1;
-        let share = -((self.scales.leak.len() * paces) as f64).ln();
-        let mut best = f64::NEG_INFINITY;
-        for (growth, (coefficients, days)) in self.bank.coefficients.iter().zip(GROWTHS).enumerate()
-        {
-            let next = self
-                .bank
-                .coefficients
-                .get(growth + 1)
-                .zip(GROWTHS.get(growth + 1));
-            let turned = &onset.sources.n * coefficients;
-            let c = coefficients.tr_mul(&onset.sources.c);
-            let c_next = next.map(|(next, _)| next.tr_mul(&onset.sources.c));
-            let turned_next = next.map(|(next, _)| &onset.sources.n * next);
-            for (index, weight) in self.leak_weights() {
-                let Some(&Source::Place(place)) = self.bank.sources.get(index) else {
-                    continue;
-                };
-                let n = coefficients.column(index).dot(&turned.column(index));
-                for &part in BETWEEN
-                    .iter()
-                    .take(if next.is_some() { BETWEEN.len() } else { 1 })
-                {
-                    let (mut c, mut n, mut grown_to) = (c[index], n, grown(days));
-                    if let (Some((_, days)), Some(c_next), Some(turned_next)) =
-                        (next, &c_next, &turned_next)
-                        && let Some((other, _)) = next
-                        && part > 0.0
-                    {
-                        let rest = 1.0 - part;
-                        let across = coefficients.column(index).dot(&turned_next.column(index));
-                        let beyond = other.column(index).dot(&turned_next.column(index));
-                        c = rest * c + part * c_next[index];
-                        n = rest * rest * n + 2.0 * rest * part * across + part * part * beyond;
-                        grown_to = rest * grown_to + part * grown(*days);
-                    }
-                    // The most that any size could explain: hopeless places are passed over.
-                    let most = 0.5 * c * c / n.max(f64::MIN_POSITIVE);
-                    if c > 0.0 || most < best - HOPELESS {
-                        continue;
-                    }
-                    best = best.max(most);
-                    for variance in &self.scales.leak {
-                        let (mean, sd) = amplitude(-c, n.max(0.0), *variance);
-                        all.push(Hypothesis {
-                            log: log_bayes_positive(-c, n.max(0.0), *variance) + weight + share,
-                            onset: onset.block,
-                            part: 0.5,
-                            index: place,
-                            mean: mean * grown_to,
-                            sd: sd * grown_to,
-                        });
-                    }
-                }
-            }
-        }
-    }
-
-    /// Sources that may be a leak, with the log of their prior weight.
-    fn leak_weights(&self) -> Vec<(usize, f64)> {
-        let weights: Vec<(usize, f64)> = self
-            .bank
-            .sources
-            .iter()
-            .enumerate()
-            .filter_map(|(index, source)| match source {
-                Source::Place(place) => Some((index, self.inside(*place))),
-                Source::Neighbour(_) => None,
-            })
-            .collect();
-        let total: f64 = weights.iter().map(|(_, w)| w).sum();
-        weights
-            .into_iter()
-            .map(|(index, weight)| (index, (weight / total).ln()))
-            .collect()
-    }
-
     fn neighbours(&self, onset: &Onset, all: &mut Vec<Hypothesis>) {
         for (source, _, c, n) in self.sources(onset, 0) {
             let Source::Neighbour(neighbour) = source else {
@@ -460,6 +381,7 @@ impl Weights<'_> {
                     onset: onset.block,
                     part: 0.5,
                     index: neighbour,
+                    at: NOWHERE,
                     mean,
                     sd,
                 });
@@ -567,52 +489,6 @@ impl Weights<'_> {
             place,
         })
     }
-
-    /// Posterior of a leak's place, in the layer that leads.
-    fn place(&self, all: &[Hypothesis], total: f64) -> Option<Place> {
-        let mut by_layer: Vec<f64> = Vec::new();
-        for hypothesis in all {
-            let layer = self.places.all.get(hypothesis.index)?.1;
-            if by_layer.len() <= layer {
-                by_layer.resize(layer + 1, 0.0);
-            }
-            if let Some(sum) = by_layer.get_mut(layer) {
-                *sum += (hypothesis.log - total).exp();
-            }
-        }
-        let layer = by_layer
-            .iter()
-            .enumerate()
-            .max_by(|a, b| a.1.total_cmp(b.1))
-            .map(|(i, _)| i)?;
-        let mut weights: Vec<([f64; 2], f64)> = Vec::new();
-        let mut sum = 0.0;
-        let mut centre = [0.0; 2];
-        for hypothesis in all {
-            let (at, of) = *self.places.all.get(hypothesis.index)?;
-            if of != layer {
-                continue;
-            }
-            let share = (hypothesis.log - total).exp();
-            if share > 1e-9 {
-                sum += share;
-                centre = [centre[0] + share * at[0], centre[1] + share * at[1]];
-                weights.push((at, share));
-            }
-        }
-        let centre = [centre[0] / sum, centre[1] / sum];
-        let mut spread: Vec<(f64, f64)> = weights
-            .iter()
-            .map(|(at, share)| (distance(*at, centre), share / sum))
-            .collect();
-        let grid = 0.06 * self.places.half_width;
-        Some(Place {
-            x: centre[0],
-            y: centre[1],
-            layer,
-            radius_90: radius_90(&mut spread).max(grid),
-        })
-    }
 }
 
 /// Blocks between the onsets on either side of one.
@@ -632,7 +508,7 @@ fn gap_round(ladder: &Ladder, onset: i64) -> f64 {
 }
 
 /// Radius that holds 90 % of the weight.
-fn radius_90(spread: &mut [(f64, f64)]) -> f64 {
+pub(super) fn radius_90(spread: &mut [(f64, f64)]) -> f64 {
     spread.sort_by(|a, b| a.0.total_cmp(&b.0));
     let mut sum = 0.0;
     for (radius, share) in spread.iter() {
