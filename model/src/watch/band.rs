@@ -16,8 +16,8 @@ use crate::expect::posterior::Posterior;
 
 /// Least age of the posterior used \[s\].
 const AGE: f64 = 4.0 * 86_400.0;
-/// Between two of these ages one posterior is kept \[days\].
-const KEPT: [i64; 12] = [0, 1, 2, 3, 4, 5, 7, 11, 18, 30, 50, 100];
+/// Age beyond which one posterior is enough \[days\].
+const OLDEST: i64 = 100;
 
 /// A posterior as it was.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
@@ -51,27 +51,27 @@ impl Band {
             live: live.to_vec(),
             posterior: posterior.clone(),
         });
-        // Between two ages the oldest stays until it has come to the next; beyond the last age the newest stays. Were the
-        // newest kept everywhere, none would ever grow old.
-        let span = |s: &Snapshot| {
-            let age = block - s.block;
-            KEPT.iter().filter(|from| age >= **from * day).count()
-        };
-        let spans: Vec<usize> = self.kept.iter().map(span).collect();
-        let mut index = 0;
-        self.kept.retain(|_| {
-            let mine = spans.get(index).copied();
-            let (before, after) = (
-                index.checked_sub(1).and_then(|i| spans.get(i)).copied(),
-                spans.get(index + 1).copied(),
-            );
-            index += 1;
-            if mine == Some(KEPT.len()) {
-                after != mine
+        // One goes where the next older is hardly more than twice as old as the next newer, which stays so as both age; of those
+        // older than any asked for, the newest stays.
+        let age = |s: &Snapshot| block - s.block;
+        let mut index: usize = 1;
+        while let (Some(older), Some(newer)) = (
+            index.checked_sub(1).and_then(|i| self.kept.get(i)),
+            self.kept.get(index + 1),
+        ) {
+            if age(older) <= 2 * age(newer) + day {
+                self.kept.remove(index);
             } else {
-                before != mine
+                index += 1;
             }
-        });
+        }
+        while self
+            .kept
+            .get(1)
+            .is_some_and(|second| age(second) >= OLDEST * day)
+        {
+            self.kept.remove(0);
+        }
     }
 
     /// Mean and variance that the nuisances add to the model's prediction, by gauge, from a posterior older than `before`
@@ -138,17 +138,17 @@ mod tests {
         let posterior = Posterior::prior(1);
         for block in 0..300 * day {
             band.keep(block, day, &[], &posterior);
-            assert!(band.kept.len() <= KEPT.len() + 1);
+            assert!(band.kept.len() <= 15, "{}", band.kept.len());
             // What is asked for is found, once there has been such a one, and not much older.
             for asked in [4, 6, 10, 20, 40, 90] {
-                if block > 2 * asked * day {
+                if block >= 2 * (asked + 1) * day {
                     let found = band
                         .kept
                         .iter()
                         .rev()
                         .find(|s| block - s.block >= asked * day);
                     let age = found.map(|s| (block - s.block) / day);
-                    assert!(age.is_some_and(|a| a <= 2 * asked + 20), "{asked} {age:?}");
+                    assert!(age.is_some_and(|a| a <= 2 * asked + 2), "{asked} {age:?}");
                 }
             }
         }
