@@ -6,7 +6,8 @@
 //! The path of a site through this crate: a [`ground::Ground`] is meshed and put into the weak form
 //! ([`weak_form`]), which gives a sparse [`weak_form::System`]; [`reduce`] projects it on a few hundred
 //! modes; [`commission`] fits its parameters to quiet history; [`expect`] steps it and states what
-//! every gauge should show; [`lagged`] does so for embankments, which have no such ground; [`weigh`] weighs the causes of what they show instead.
+//! every gauge should show; [`lagged`] does so for embankments, which have no such ground; [`weigh`] weighs the causes of what they show instead;
+//! [`forecast`] steps it on under planned rates.
 
 pub mod block;
 pub mod closed_form;
@@ -15,6 +16,7 @@ pub mod error;
 pub mod expect;
 pub mod finding;
 pub mod fluid;
+pub mod forecast;
 pub mod ground;
 pub mod lagged;
 pub mod reduce;

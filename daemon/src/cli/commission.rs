@@ -83,8 +83,9 @@ impl Commission {
             print(&format!("{text}\n"))?;
         } else {
             print(&format!(
-                "{}ground file   {}\n",
+                "{}{}ground file   {}\n",
                 summary(&site, &ground),
+                super::reach::line(&site, &ground, &blocks).unwrap_or_default(),
                 path.display()
             ))?;
         }

@@ -10,12 +10,16 @@ mod commission;
 mod demo;
 mod exit;
 mod export;
+mod forecast;
 mod interrupt;
 mod logs;
+mod new;
 mod progress;
+mod reach;
 mod replay;
 mod report;
 mod run;
+mod standing;
 mod summary;
 pub mod table;
 mod token;
@@ -59,6 +63,9 @@ enum Verb {
     Commission(commission::Commission),
     Demo(demo::Demo),
     Export(export::Export),
+    Forecast(forecast::ForecastVerb),
+    New(new::New),
+    Reach(reach::ReachVerb),
     Replay(replay::Replay),
     Report(report::Report),
     Run(run::Run),
@@ -74,6 +81,9 @@ impl Verb {
             Self::Commission(verb) => verb.run(context),
             Self::Demo(verb) => verb.run(context),
             Self::Export(verb) => verb.run(context),
+            Self::Forecast(verb) => verb.run(context),
+            Self::New(verb) => verb.run(context),
+            Self::Reach(verb) => verb.run(context),
             Self::Replay(verb) => verb.run(context),
             Self::Report(verb) => verb.run(context),
             Self::Run(verb) => verb.run(context),

@@ -6,7 +6,7 @@
 
 pub mod judge;
 mod judging;
-mod opening;
+pub mod opening;
 pub mod play;
 pub mod saved;
 pub mod settings;

@@ -183,7 +183,8 @@ impl Keeper {
 }
 
 /// What a checkpoint belongs to: program, processor and ground file. Under another, sums may round otherwise.
-fn fingerprint(ground: Option<&str>) -> String {
+#[must_use]
+pub fn fingerprint(ground: Option<&str>) -> String {
     format!(
         "{} {} {}",
         env!("CARGO_PKG_VERSION"),

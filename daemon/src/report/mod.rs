@@ -2,4 +2,5 @@
 
 pub mod document;
 pub mod plan;
+pub mod reach_map;
 pub mod svg;

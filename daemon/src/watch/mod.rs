@@ -7,4 +7,5 @@ pub mod ground_file;
 pub mod history;
 pub mod lane;
 pub mod rerun;
+pub mod standing;
 pub mod stored;

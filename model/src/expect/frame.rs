@@ -181,21 +181,28 @@ impl Frame {
 }
 
 fn moments(ground: &Ground) -> Vec<[f64; 3]> {
-    let at: Vec<[f64; 2]> = (0..ground.gauges.len())
-        .map(|g| ground.gauge_at(g).map_or([0.0; 2], |(p, _)| p))
-        .collect();
-    let count = at.len().max(1) as f64;
-    let centre = [
-        at.iter().map(|p| p[0]).sum::<f64>() / count,
-        at.iter().map(|p| p[1]).sum::<f64>() / count,
-    ];
-    let width = at
-        .iter()
-        .map(|p| (p[0] - centre[0]).hypot(p[1] - centre[1]))
-        .fold(1.0, f64::max);
-    at.iter()
+    let (centre, width) = span(ground);
+    seats(ground)
         .map(|p| [1.0, (p[0] - centre[0]) / width, (p[1] - centre[1]) / width])
         .collect()
+}
+
+fn seats(ground: &Ground) -> impl Iterator<Item = [f64; 2]> + '_ {
+    (0..ground.gauges.len()).map(|g| ground.gauge_at(g).map_or([0.0; 2], |(p, _)| p))
+}
+
+/// Centre of the gauges and largest distance of one from it \[m\].
+pub(crate) fn span(ground: &Ground) -> ([f64; 2], f64) {
+    let count = ground.gauges.len().max(1) as f64;
+    let mut centre = [0.0; 2];
+    for p in seats(ground) {
+        centre = [centre[0] + p[0], centre[1] + p[1]];
+    }
+    let centre = [centre[0] / count, centre[1] / count];
+    let width = seats(ground)
+        .map(|p| (p[0] - centre[0]).hypot(p[1] - centre[1]))
+        .fold(1.0, f64::max);
+    (centre, width)
 }
 
 /// Parameters of the reduced ground that history may correct, each once, in order.

@@ -41,6 +41,12 @@ pub(crate) struct Whitener {
     open: DVector<f64>,
     /// Covariance of the innovations \[Pa^2\].
     innovation: DMatrix<f64>,
+    /// Covariance of the states before a reading, in the steady state.
+    pub(crate) before: DMatrix<f64>,
+    /// Covariance of what is new in the states after each block.
+    pub(crate) fresh: DMatrix<f64>,
+    /// Standard deviation of each gauge's own noise \[Pa\].
+    pub(crate) noise: DVector<f64>,
 }
 
 impl Whitener {
@@ -172,6 +178,9 @@ impl Whitener {
             log_scale,
             open,
             innovation,
+            before: p,
+            fresh: q,
+            noise: r.diagonal().map(f64::sqrt),
         })
     }
 
@@ -229,6 +238,14 @@ impl Whitener {
 
     /// Whitens one block of any number of columns (`values`: gauges by columns) and moves their states on.
     pub(crate) fn step(&self, state: &mut DMatrix<f64>, values: &DMatrix<f64>) -> DMatrix<f64> {
+        let surprise = self.coast(state, values);
+        state.gemm(1.0, &self.feedback, &surprise, 1.0);
+        &self.scale * surprise
+    }
+
+    /// What is left of one block of columns (`values`: gauges by columns) beyond what their states foretell \[Pa\]; moves
+    /// the states on as if nothing were read.
+    pub(crate) fn coast(&self, state: &mut DMatrix<f64>, values: &DMatrix<f64>) -> DMatrix<f64> {
         let mut surprise = values.clone();
         surprise.gemm(-1.0, &self.observe, state, 1.0);
         let (modes, meters) = self.drive.shape();
@@ -244,8 +261,12 @@ impl Whitener {
             let mut remembered = state.row_mut(modes + well);
             remembered += fresh;
         }
-        state.gemm(1.0, &self.feedback, &surprise, 1.0);
-        &self.scale * surprise
+        surprise
+    }
+
+    /// What states show at the gauges \[Pa\] (gauges by columns).
+    pub(crate) fn shown(&self, state: &DMatrix<f64>) -> DMatrix<f64> {
+        &self.observe * state
     }
 }
 

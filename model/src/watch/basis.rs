@@ -53,6 +53,13 @@ pub struct Foundation {
 
 impl Basis for Commissioned {
     fn foundation(&self) -> Result<Foundation, ModelError> {
+        self.founded(Places::of(&self.ground))
+    }
+}
+
+impl Commissioned {
+    /// The foundation over these places, which are those of the reduction.
+    pub(super) fn founded(&self, mut places: Places) -> Result<Foundation, ModelError> {
         let (ground, calibration) = (&self.ground, &self.calibration);
         let (gauges, wells) = (ground.gauges.len(), ground.wells.len());
         size(
@@ -61,7 +68,6 @@ impl Basis for Commissioned {
             gauges,
         )?;
         size("skins of the calibration", calibration.skins.len(), wells)?;
-        let mut places = Places::of(ground);
         size(
             "places of the ground file",
             self.reduced.places.len(),

@@ -8,7 +8,7 @@ use crate::weigh::verdict::{Detail, Weights};
 /// An onset of age a is weighed again after a share of its age.
 const AGAIN: i64 = 20;
 /// Kinds of cause that share the prior.
-const KINDS: f64 = 7.0;
+pub(super) const KINDS: f64 = 7.0;
 /// Where sources' responses are off by this share, they look, as rates go, like images: the images' evidence counts half.
 const IMAGED: f64 = 0.1;
 /// Log evidence by which `unexplained` must lead: outright, and as a share of the leading cause's.

@@ -8,15 +8,20 @@ use crate::finding::{Cause, Expectation, Finding, Place, Size, Subject};
 use crate::weigh::barrier::Barriers;
 use crate::weigh::ladder::Ladder;
 
+mod ahead;
 mod band;
 mod basis;
 mod come_and_go;
 mod conclude;
 mod expected;
+mod prepare;
+mod reaching;
 mod step;
 mod stuck;
 
+pub(crate) use ahead::Coasting;
 pub use basis::{Basis, Foundation};
+pub use reaching::{AddedGauge, PlaceReach, Reach, ReachDelay, WithGauge};
 pub use step::Watch;
 
 /// What the site asks of the watch.

@@ -8,6 +8,7 @@
 use nalgebra::{DMatrix, DVector};
 
 use super::expected::affected;
+use super::prepare::Prepared;
 use super::stuck::Stuck;
 use super::{
     Adoption, Basis, Blind, Foundation, Live, Step, WatchSettings, WatchState, band::Band,
@@ -15,7 +16,7 @@ use super::{
 use crate::ModelError;
 use crate::block::{Block, RateKnown};
 use crate::commission::{Places, Unsteady, calm};
-use crate::expect::adopted::{Adopted, AdoptedBlock};
+use crate::expect::adopted::Adopted;
 use crate::expect::columns::{Columns, Raw};
 use crate::expect::drive::size;
 use crate::expect::posterior::Posterior;
@@ -233,57 +234,7 @@ impl Watch {
                     || matches!(blind.get(g), Some(Some(Blind::Model)))
             })
             .collect();
-        let images = self
-            .images
-            .raw(&self.columns.frame.modal, &raw.means, &sampled.class);
-        let adopted: Vec<DMatrix<f64>> = self
-            .adopted
-            .iter()
-            .zip(&mut self.state.adopted)
-            .map(|(one, memory)| {
-                let with = AdoptedBlock {
-                    frame: &self.columns.frame,
-                    tables: &raw.tables,
-                    sampled: &sampled,
-                    entering: &raw.entering,
-                    block: block.index,
-                    skins: &self.skins,
-                };
-                one.rows(memory, &with, &images)
-            })
-            .collect();
-        self.add_columns(
-            &memory.epochs.list.iter().map(|e| e.id).collect::<Vec<_>>(),
-            &missing,
-            &raw.renewals,
-            block.index,
-        );
-        let row = self.raw_row(
-            block,
-            &raw,
-            &memory.epochs.list.iter().map(|e| e.id).collect::<Vec<_>>(),
-            &missing,
-            &adopted,
-        );
-        let fixed = self.columns.len();
-        for (index, live) in self.state.live.iter().enumerate() {
-            if let Live::Renewal {
-                well,
-                block: of,
-                size,
-                within,
-            } = *live
-                && block.index == if within { of } else { of + 1 }
-            {
-                self.whitener.renew(
-                    &mut self.state.filter,
-                    1 + fixed + index,
-                    well,
-                    size,
-                    within,
-                );
-            }
-        }
+        let Prepared { images, row } = self.prepare(block, &sampled, &raw, &memory, &missing);
         let mut white = self.whitener.step(&mut self.state.filter, &row);
         let mut calm = calm(&self.unsteady, &sampled, &self.columns.priors.rate, gauges);
         if let Some(beyond) = &raw.beyond {

@@ -153,6 +153,25 @@ impl Weights<'_> {
             .collect()
     }
 
+    /// Places weighed as leaks for detection: order among the bank's thinned sources, and log prior weight.
+    pub(crate) fn thinned_leak_weights(&self) -> Vec<(usize, f64)> {
+        let weights: Vec<(usize, f64)> = self
+            .bank
+            .chosen
+            .iter()
+            .enumerate()
+            .filter_map(|(at, &i)| match self.bank.sources.get(i) {
+                Some(Source::Place(place)) => Some((at, self.inside(*place))),
+                _ => None,
+            })
+            .collect();
+        let total: f64 = weights.iter().map(|(_, w)| w).sum();
+        weights
+            .into_iter()
+            .map(|(at, weight)| (at, (weight / total).ln()))
+            .collect()
+    }
+
     pub(super) fn inside(&self, place: usize) -> f64 {
         let far = self.places.all.get(place).is_some_and(|(at, _)| {
             distance(*at, self.places.centre) > 1.1 * self.places.half_width

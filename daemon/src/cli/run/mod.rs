@@ -35,6 +35,14 @@ const FULL: Duration = Duration::from_secs(5);
 /// Longest wait for sources and publishers to end.
 const STOP: Duration = Duration::from_secs(5);
 
+/// What is said where no site file is given.
+const BEGIN: &str = "`run` needs a site file, which says what there is to watch. To begin:
+  borewake demo                   plays an invented site through the whole program
+  borewake new site.toml          writes a commented file to fill in (wells, dewatering, embankment)
+  borewake check site.toml        explains every mistake in it; --sources talks to every instrument
+  borewake run site.toml          records from the first second; every gauge is blind as yet
+  borewake commission site.toml   after some quiet weeks: calibrates, so that `run` can watch";
+
 /// Watches a site until it is told to stop
 #[derive(Debug, Args)]
 #[command(after_help = "\
@@ -46,7 +54,7 @@ says that every gauge is blind. It advises; it is no safety function.")]
 pub(super) struct Run {
     /// The site file
     #[arg(value_name = "SITE")]
-    site: PathBuf,
+    site: Option<PathBuf>,
     /// Also writes every event to this file, one JSON document a line
     #[arg(long, value_name = "FILE")]
     events: Option<PathBuf>,
@@ -54,12 +62,15 @@ pub(super) struct Run {
 
 impl Run {
     pub(super) fn run(self, _context: &Context) -> Result<Exit, Failure> {
-        let site = config::load(&self.site)?;
+        let Some(path) = self.site else {
+            return Err(Failure::wrong(anyhow::anyhow!("{BEGIN}")));
+        };
+        let site = config::load(&path)?;
         // Before any device is opened: a source that cannot start must not stop a daemon that runs already.
         if let Some(broker) = site.brokers().find(|b| b.tls) {
             return Err(Failure::wrong(anyhow::anyhow!(
                 "{}: mqtts:// to {} is not in this build; use mqtt:// to a broker on this machine that bridges over TLS",
-                self.site.display(),
+                path.display(),
                 broker.host
             )));
         }

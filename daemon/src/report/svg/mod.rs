@@ -3,6 +3,7 @@
 //! The text grows where the picture is shown narrow (a phone), by a media query on the picture's own width, and every second
 //! time label goes. Colours are told apart by lightness alone too, so that they do for every eye and in grey print.
 
+pub mod ahead;
 mod axis;
 mod frame;
 mod path;
