@@ -2,7 +2,7 @@
 
 use std::fmt::Write as _;
 
-use borewake_model::lagged::Commissioned;
+use borewake_model::lagged::{Commissioned, Driver};
 use borewake_model::units::{Dimension, significant};
 
 use crate::cli::table::{Align, Table};
@@ -35,12 +35,19 @@ pub(super) fn summary(site: &Site, commissioned: &Commissioned) -> String {
     let scaling = &calibration.scaling;
     let drives = commissioned.embankment.drives.iter();
     for (driver, (least, greatest)) in drives.zip(&scaling.range) {
+        let show = |value: f64| match driver {
+            Driver::Pool | Driver::Tailwater | Driver::Barometer => {
+                site.units.show(Dimension::Pressure, value)
+            }
+            Driver::Rain => site.units.show(Dimension::Rain, value),
+            Driver::Temperature => format!("{} degC", significant(value, 3)),
+        };
         let _ = writeln!(
             text,
             "{:<13} {} to {}",
             driver.name(),
-            significant(*least, 6),
-            significant(*greatest, 6)
+            show(*least),
+            show(*greatest)
         );
     }
     let pressure = |(value, sd): (f64, f64)| {
