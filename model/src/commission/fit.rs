@@ -77,32 +77,32 @@ pub fn commission(
             LEAST_HISTORY / 86_400.0
         )));
     }
+    let mut begun = 0.0;
+    let mut settled = |spread: f64, sought: bool| -> Result<Fit<'_>, ModelError> {
+        let mut fit = Fit::start(ground, reduced, history, settings, block)?;
+        fit.state.scales.patch = [spread; 2];
+        fit.sought = sought;
+        fit.settle(&mut |share| progress(0.05 + 0.19 * (begun + share)))?;
+        begun += 1.0;
+        Ok(fit)
+    };
     // Begun from an even ground the fit is sure to end well where the ground is even; where it is not, either beginning may
-    // end in a blind alley.
-    let mut fit = Fit::start(ground, reduced, history, settings, block)?;
-    fit.state.scales.patch = [EVEN; 2];
-    fit.settle(&mut |share| progress(0.05 + 0.25 * share))?;
+    // end in a blind alley. What has once been fitted is not lost by a trial that fails.
+    let mut fit = settled(EVEN, false)?;
     if fit.spread_between_patches() > VARIED {
-        let mut other = Fit::start(ground, reduced, history, settings, block)?;
-        let settled = other.settle(&mut |share| progress(0.3 + 0.25 * share));
-        if settled.is_ok() && other.log_evidence > fit.log_evidence {
-            fit = other;
-        }
+        fit = better(fit, settled(TYPICAL_PATCH, false));
     }
     if fit.spread_between_patches() > UNEVEN {
         // So uneven a ground may be an even one with a barrier.
-        let mut other = Fit::start(ground, reduced, history, settings, block)?;
-        other.sought = true;
-        other.state.scales.patch = [EVEN; 2];
-        let settled = other.settle(&mut |share| progress(0.55 + 0.25 * share));
-        // A trial that fails is no reason to lose the fit that stands.
-        let log_evidence = match settled {
-            Ok(()) => other.log_evidence - fit.log_evidence - OCCAM,
-            Err(_) => f64::NEG_INFINITY,
+        let other = match settled(EVEN, true) {
+            Ok(one) => Ok(better(one, settled(TYPICAL_PATCH, true))),
+            Err(_) => settled(TYPICAL_PATCH, true),
         };
-        if let Some(suspect) = &mut other.state.suspect {
-            suspect.log_evidence = log_evidence;
-            if log_evidence > BELIEVED {
+        if let Ok(mut other) = other
+            && let Some(suspect) = &mut other.state.suspect
+        {
+            suspect.log_evidence = other.log_evidence - fit.log_evidence - OCCAM;
+            if suspect.log_evidence > BELIEVED {
                 fit = other;
             }
         }
@@ -111,6 +111,14 @@ pub fn commission(
     let calibration = fit.finish((first.index, last.index))?;
     progress(1.0);
     Ok(calibration)
+}
+
+/// The fit that history makes more likely.
+fn better<'a>(one: Fit<'a>, other: Result<Fit<'a>, ModelError>) -> Fit<'a> {
+    match other {
+        Ok(other) if other.log_evidence > one.log_evidence => other,
+        _ => one,
+    }
 }
 
 /// Declared rates as stretches before the record: when each began and ended before it, and its rate.
