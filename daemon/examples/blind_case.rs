@@ -75,7 +75,7 @@ fn look(folder: &Path, every: usize) -> Result<()> {
         Ok(ground) => ground,
         Err(_) => {
             let blocks = history.blocks(&plan, first, end);
-            let ground = make(&site, &blocks, Stamp(0), &mut |_, _| {})?;
+            let (ground, _) = make(&site, &blocks, &[], Stamp(0), &mut |_, _| {})?;
             ground.write(&store)?;
             ground
         }

@@ -12,6 +12,7 @@
 pub mod block;
 pub mod closed_form;
 pub mod commission;
+pub mod derivative;
 pub mod error;
 pub mod expect;
 pub mod finding;

@@ -11,6 +11,7 @@ use borewake_model::{ModelError, lagged};
 use clap::Args;
 use serde_json::{Value, json};
 
+use super::commission::diffusivities;
 use super::summary::{summary_json, summary_text};
 use super::{Context, Exit, Failure, GroundSummary, print};
 use crate::config::{self, ConfigError, Mistake, Note, Site};
@@ -205,6 +206,14 @@ fn notes(site: &Site) -> Vec<Note> {
         key: key.to_owned(),
         text,
     };
+    let described = site.embankment.is_none();
+    for doubt in described
+        .then(|| diffusivities(site, &Vec::new()))
+        .into_iter()
+        .flatten()
+    {
+        notes.push(here("layer", doubt));
+    }
     for secret in site.secrets() {
         if let Err(wrong) = secret.read() {
             notes.push(here(

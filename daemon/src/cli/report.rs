@@ -10,7 +10,7 @@ use super::commission::summary;
 use super::{Context, Exit, Failure, print};
 use crate::config::{self, Site};
 use crate::keeper::settings::block_plan;
-use crate::record::{Alarm, AlarmId, ChannelId, Stamp, Transition};
+use crate::record::{Alarm, AlarmId, ChannelId, Place, Stamp, Transition};
 use crate::report::document::{AlarmReport, ChannelQuality, html};
 use crate::report::plan::{Mark, Plan, draw};
 use crate::report::svg::{GaugePlot, PlotPoint, gauge_plot};
@@ -109,7 +109,10 @@ impl Report {
             names: site.names(),
             made: Stamp::now(),
             window,
-            plan: draw(&plan(&site.ground, &alarm)),
+            plan: draw(&site_plan(
+                &site.ground,
+                alarm.finding.as_ref().and_then(|f| f.place),
+            )),
             plots,
             history,
             channels,
@@ -206,7 +209,8 @@ fn window(alarm: &Alarm, history: &[Transition]) -> (Stamp, Stamp) {
     (from.max(to.plus(-LONGEST)), to)
 }
 
-fn plan(ground: &Ground, alarm: &Alarm) -> Plan {
+/// The site from above, with the place of a finding.
+pub(super) fn site_plan(ground: &Ground, found: Option<Place>) -> Plan {
     let mut marks = Vec::new();
     for well in &ground.wells {
         marks.push((Mark::Well, well.name.clone(), well.at));
@@ -229,7 +233,6 @@ fn plan(ground: &Ground, alarm: &Alarm) -> Plan {
     for neighbour in &ground.neighbours {
         marks.push((Mark::Neighbour, neighbour.name.clone(), neighbour.at));
     }
-    let place = alarm.finding.as_ref().and_then(|f| f.place);
     Plan {
         barriers: ground
             .barriers
@@ -237,7 +240,7 @@ fn plan(ground: &Ground, alarm: &Alarm) -> Plan {
             .map(|b| (b.name.clone(), b.line.clone()))
             .collect(),
         marks,
-        found: place.map(|p| ([p.x, p.y], p.radius_90)),
+        found: found.map(|p| ([p.x, p.y], p.radius_90)),
     }
 }
 

@@ -66,7 +66,8 @@ pub fn escaped(text: &str) -> String {
     safe
 }
 
-const STYLE: &str = "\
+/// How a document looks: on a screen of any width, and printed.
+pub(super) const STYLE: &str = "\
 body{font:16px/1.5 'Noto Sans','DejaVu Sans',sans-serif;color:#22302f;background:#fff;max-width:52rem;margin:1.5rem auto;padding:0 1rem}\
 h1{font-size:1.5rem;line-height:1.25;margin:.2rem 0}h2{font-size:1.1rem;border-top:2px solid #22302f;padding-top:.4rem;margin-top:1.6rem}\
 table{border-collapse:collapse;width:100%}th,td{text-align:left;vertical-align:top;padding:.2rem .8rem .2rem 0;border-bottom:1px solid #d2ccbe}\
@@ -122,7 +123,7 @@ pub fn html(report: &AlarmReport) -> String {
     for (_, plot) in &report.plots {
         let _ = writeln!(out, "<figure>{plot}</figure>");
     }
-    quality(&mut out, report);
+    quality(&mut out, &report.channels);
     out += "<h2>Model and calibration</h2>\n";
     let _ = match &report.model {
         Ok(text) => writeln!(out, "<pre>{}</pre>", escaped(text)),
@@ -216,12 +217,13 @@ fn evidence(out: &mut String, report: &AlarmReport) {
     out.push_str("</table>\n");
 }
 
-fn quality(out: &mut String, report: &AlarmReport) {
+/// Table of how channels stood.
+pub(super) fn quality(out: &mut String, channels: &[ChannelQuality]) {
     out.push_str(
         "<h2>Data quality</h2>\n<table>\n<tr><th>channel</th><th>feeds</th><th class=\"n\">readings</th>\
          <th class=\"n\">of no use</th><th class=\"n\">longest gap</th><th>last</th></tr>\n",
     );
-    for channel in &report.channels {
+    for channel in channels {
         let _ = writeln!(
             out,
             "<tr><td>{}</td><td>{}</td><td class=\"n\">{}</td><td class=\"n\">{}</td><td class=\"n\">{}</td><td>{}</td></tr>",

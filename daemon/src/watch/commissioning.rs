@@ -1,6 +1,8 @@
 //! Makes a ground file: mesh, weak form, reduction, calibration, and the watch brought to the end of history.
 
-use borewake_model::commission::{CommissionSettings, Commissioned, Places, commission};
+use borewake_model::commission::{
+    Account, CommissionSettings, Commissioned, Places, check_history, commission,
+};
 use borewake_model::ground::mesh::MeshOptions;
 use borewake_model::ground::{Ground, Patches};
 use borewake_model::reduce::{ReduceOptions, Reduced, reduce_patched};
@@ -8,6 +10,7 @@ use borewake_model::watch::{Watch, WatchSettings};
 use borewake_model::weak_form::{Scheme, discretise};
 use borewake_model::{ModelError, lagged};
 
+use super::compare::{Compare, compare};
 use super::ground_file::{GroundFile, Model};
 use crate::config::{Site, WellSettings};
 use crate::record::{Block, Stamp};
@@ -21,6 +24,8 @@ pub enum Stage {
     Reduce,
     /// Calibration.
     Calibrate,
+    /// Fitting other grounds.
+    Compare,
     /// Bringing the watch to the end of history.
     Settle,
 }
@@ -33,6 +38,7 @@ impl Stage {
             Self::Discretise => "meshing the ground",
             Self::Reduce => "reducing it to modes",
             Self::Calibrate => "fitting parameters",
+            Self::Compare => "fitting other grounds",
             Self::Settle => "settling the watch",
         }
     }
@@ -64,29 +70,33 @@ pub fn reduce_ground(
     reduce_patched(&discrete.system, &patches, &at, &ReduceOptions::default())
 }
 
-/// Makes a ground file from quiet history.
+/// Makes a ground file from quiet history, and for a field of wells what people should know of the fit; `others` are
+/// the grounds it is to be held against.
 ///
 /// # Errors
 /// The ground cannot be meshed, or history cannot be used.
 pub fn make(
     site: &Site,
     history: &[Block],
+    others: &[Compare],
     made: Stamp,
     progress: &mut dyn FnMut(Stage, f64),
-) -> Result<GroundFile, ModelError> {
+) -> Result<(GroundFile, Option<Account>), ModelError> {
     let last_block = history.last().map(|b| b.index).ok_or_else(|| {
         ModelError::History("no whole block of readings lies in the span given".into())
     })?;
-    let commissioned = match &site.embankment {
-        Some(embankment) => Model::Embankment(answers(
-            &site.ground,
-            embankment.model(),
-            history,
-            progress,
-        )?),
-        None => Model::Ground(calibrated(site, history, progress)?),
+    let (commissioned, account) = match &site.embankment {
+        Some(embankment) => {
+            let answers = answers(&site.ground, embankment.model(), history, progress)?;
+            (Model::Embankment(answers), None)
+        }
+        None => {
+            let (ground, account) = calibrated(site, history, others, progress)?;
+            (Model::Ground(ground), Some(account))
+        }
     };
-    settled(site, commissioned, history, last_block, made, progress)
+    let file = settled(site, commissioned, history, last_block, made, progress)?;
+    Ok((file, account))
 }
 
 /// The answers of an embankment's gauges.
@@ -110,18 +120,27 @@ fn answers(
 fn calibrated(
     site: &Site,
     history: &[Block],
+    others: &[Compare],
     progress: &mut dyn FnMut(Stage, f64),
-) -> Result<Commissioned, ModelError> {
+) -> Result<(Commissioned, Account), ModelError> {
+    check_history(&site.ground, history)?;
     let reduced = reduce_ground(&site.ground, progress)?;
     let past = |w: &WellSettings| w.past.iter().map(|p| (p.from.seconds(), p.rate)).collect();
     let settings = CommissionSettings {
         past: site.wells.iter().map(past).collect(),
         ..CommissionSettings::default()
     };
-    let calibration = commission(&site.ground, &reduced, history, &settings, &mut |share| {
-        progress(Stage::Calibrate, share)
-    })?;
-    Commissioned::new(site.ground.clone(), &reduced, calibration)
+    let (calibration, mut account) =
+        commission(&site.ground, &reduced, history, &settings, &mut |share| {
+            progress(Stage::Calibrate, share)
+        })?;
+    if !others.is_empty() {
+        let known = (&settings, &account);
+        let tried = compare(&site.ground, &reduced, history, known, others, progress)?;
+        account.tried.extend(tried);
+    }
+    let commissioned = Commissioned::new(site.ground.clone(), &reduced, calibration)?;
+    Ok((commissioned, account))
 }
 
 /// Brings the watch to the end of history.

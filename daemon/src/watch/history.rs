@@ -29,6 +29,12 @@ impl History {
         }
     }
 
+    /// Readings of a channel, in sample order.
+    #[must_use]
+    pub fn of(&self, channel: &ChannelId) -> &[Reading] {
+        self.series.get(channel).map_or(&[], Vec::as_slice)
+    }
+
     /// First and last sample instant; `None` when nothing was read.
     #[must_use]
     pub fn span(&self) -> Option<(Stamp, Stamp)> {

@@ -3,6 +3,7 @@
 pub mod blocks;
 pub mod closer;
 pub mod commissioning;
+pub mod compare;
 pub mod ground_file;
 pub mod history;
 pub mod lane;

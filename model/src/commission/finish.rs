@@ -7,18 +7,17 @@
 
 use nalgebra::{DMatrix, DVector};
 
+use super::account::{Account, Figure, GaugeFit};
 use super::fit::Fit;
 use super::history::{History, Keep, Regression};
 use super::places::Places;
 use super::rates::{Rates, spread_and_correlation};
 use super::scales::{FAR, LONG};
 use super::suspect::STRENGTH_SD;
-use super::unsteady::relative_square;
-use super::{Calibration, Unsteady, calm};
+use super::{Calibration, calm};
 use crate::ModelError;
 use crate::block::Block;
 use crate::expect::columns::Kind;
-use crate::expect::drive::Sampled;
 use crate::reduce::{Factors, layer_of};
 use crate::weigh::barrier::Images;
 
@@ -26,7 +25,10 @@ use crate::weigh::barrier::Images;
 const UNSEEN: f64 = 0.15;
 
 impl Fit<'_> {
-    pub(super) fn finish(&mut self, span: (i64, i64)) -> Result<Calibration, ModelError> {
+    pub(super) fn finish(
+        &mut self,
+        span: (i64, i64),
+    ) -> Result<(Calibration, Account), ModelError> {
         let blocks = self.history;
         let mut columns = self.columns()?;
         let places = Places::of(self.ground);
@@ -38,6 +40,7 @@ impl Fit<'_> {
             Keep::Columns
         };
         let mut history = History::run(&mut columns, self.history, keep)?;
+        history.set_aside(&self.state.aside);
         if let Some(line) = line {
             history.look_at(&columns, &Images::new(&columns.frame.modal, &[line]));
             history.take(0, STRENGTH_SD);
@@ -51,32 +54,10 @@ impl Fit<'_> {
         let (spread, centre) = self.spread(&columns, width, history.tail());
         let solved = regression.solve(&spread, &centre)?;
         let gauges = columns.frame.gauges;
-        let sampled: Vec<Sampled> = blocks
-            .iter()
-            .map(|b| columns.sample(b))
-            .collect::<Result<_, _>>()?;
+        let sampled = self.sampled(&columns)?;
         let left = regression.left(&solved.mean);
-        // What was filled in has no innovation of its own.
-        let read = |row: usize| history.missing.binary_search(&row).is_err();
-        let unsteady: Vec<Unsteady> = columns
-            .frame
-            .in_wells
-            .iter()
-            .map(|&(gauge, well, _)| {
-                let squares: Vec<(f64, f64)> = sampled
-                    .iter()
-                    .enumerate()
-                    .filter(|(block, _)| read(block * gauges + gauge))
-                    .map(|(block, s)| {
-                        (
-                            relative_square(s, well, &self.priors.rate),
-                            left[block * gauges + gauge].powi(2),
-                        )
-                    })
-                    .collect();
-                Unsteady::fit(gauge, well, &squares)
-            })
-            .collect();
+        let read = |row: usize| history.was_read(row);
+        let unsteady = self.unsteady(&columns, &history, &sampled, &left);
         for (block, s) in sampled.iter().enumerate() {
             for (gauge, factor) in calm(&unsteady, s, &self.priors.rate, gauges)
                 .into_iter()
@@ -120,6 +101,7 @@ impl Fit<'_> {
             .collect();
         let mut factor_sd = vec![0.0; layers.len()];
         let mut skin_sd = vec![self.settings.skin_sd; self.state.skins.len()];
+        let mut figures = Vec::new();
         for (index, kind) in columns.kinds.iter().enumerate() {
             match *kind {
                 Kind::Parameter(i) => {
@@ -127,16 +109,28 @@ impl Fit<'_> {
                         && let Some(at) = layers.iter().position(|(p, _)| *p == tilted.parameter)
                     {
                         factor_sd[at] = sd(index) * self.priors.parameter;
+                        let figure = Figure::Parameter(tilted.parameter);
+                        figures.push((figure, index, self.priors.parameter));
                     }
                 }
                 Kind::Skin(i) => {
                     if let Some(&(_, well, _)) = columns.frame.in_wells.get(i) {
                         skin_sd[well] = sd(index) * self.priors.skin;
+                        figures.push((Figure::Skin(well), index, self.priors.skin));
                     }
                 }
                 _ => {}
             }
         }
+        figures.sort_by_key(|(figure, _, _)| matches!(figure, Figure::Skin(_)));
+        let (known, patched) = Account::of(&columns, &figures, &inverse, &spread);
+        let account = Account {
+            known,
+            patches: patched,
+            gauges: GaugeFit::all(blocks, &history, &solved.mean),
+            log_evidence: self.log_evidence,
+            tried: Vec::new(),
+        };
         let innovation = whitener.innovation();
         let mut priors = self.priors.clone();
         priors.gain = self.state.scales.gain;
@@ -150,7 +144,7 @@ impl Fit<'_> {
         let (factors, patches) = std::mem::take(&mut self.state.factors)
             .into_iter()
             .partition(|(p, _)| layer_of(*p) == *p);
-        Ok(Calibration {
+        let calibration = Calibration {
             factors,
             factor_sd,
             patches,
@@ -170,7 +164,8 @@ impl Fit<'_> {
             unsteady,
             longest_unchanged: longest_unchanged(blocks, gauges),
             flow: rates.flow,
-        })
+        };
+        Ok((calibration, account))
     }
 }
 

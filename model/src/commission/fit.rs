@@ -2,11 +2,13 @@
 
 use nalgebra::DVector;
 
+use super::aside::gross;
 use super::history::{History, Keep, Regression};
 use super::moves::Move;
 use super::rates::{Rates, typical_count};
+use super::refuse;
 use super::suspect::{BELIEVED, OCCAM, STRENGTH_SD, Suspect, best_line};
-use super::{Calibration, CommissionSettings};
+use super::{Account, Calibration, CommissionSettings, GroundKind, Tried};
 use crate::ModelError;
 use crate::block::Block;
 use crate::expect::columns::{Columns, Priors};
@@ -15,7 +17,7 @@ use crate::expect::noise::{Noise, Path};
 use crate::expect::patched::Patched;
 use crate::expect::whitener::Whitener;
 use crate::ground::Ground;
-use crate::reduce::{Factors, Reduced};
+use crate::reduce::{Factors, Reduced, layer_of};
 
 /// The same of a meter's gain in one rate epoch.
 pub(super) const TYPICAL_GAIN: f64 = 0.005;
@@ -52,7 +54,7 @@ const VARIED: f64 = 0.03;
 /// Least history \[s\].
 const LEAST_HISTORY: f64 = 5.0 * 86_400.0;
 
-/// Calibrates a ground on quiet history.
+/// Calibrates a ground on quiet history, and tells what people should know of the fit.
 ///
 /// `progress` is told the share done, 0 to 1.
 ///
@@ -64,7 +66,7 @@ pub fn commission(
     history: &[Block],
     settings: &CommissionSettings,
     progress: &mut dyn FnMut(f64),
-) -> Result<Calibration, ModelError> {
+) -> Result<(Calibration, Account), ModelError> {
     let (Some(first), Some(last)) = (history.first(), history.last()) else {
         return Err(ModelError::History("there is none".to_owned()));
     };
@@ -77,40 +79,53 @@ pub fn commission(
             LEAST_HISTORY / 86_400.0
         )));
     }
+    refuse::check_history(ground, history)?;
     let mut begun = 0.0;
-    let mut settled = |spread: f64, sought: bool| -> Result<Fit<'_>, ModelError> {
+    // Fits are compared by evidence on the same readings, so those set aside by the first are set aside in all.
+    let mut settled = |spread: f64, sought: bool, aside: Option<&[usize]>| {
         let mut fit = Fit::start(ground, reduced, history, settings, block)?;
         fit.state.scales.patch = [spread; 2];
         fit.sought = sought;
+        if let Some(aside) = aside {
+            fit.known_aside = true;
+            fit.state.aside = aside.to_vec();
+        }
         fit.settle(&mut |share| progress(0.05 + 0.19 * (begun + share)))?;
         begun += 1.0;
-        Ok(fit)
+        Ok::<Fit<'_>, ModelError>(fit)
     };
     // Begun from an even ground the fit is sure to end well where the ground is even; where it is not, either beginning may
     // end in a blind alley. What has once been fitted is not lost by a trial that fails.
-    let mut fit = settled(EVEN, false)?;
+    let mut fit = settled(EVEN, false, None)?;
+    let aside = fit.state.aside.clone();
+    let aside = Some(aside.as_slice());
     if fit.spread_between_patches() > VARIED {
-        fit = better(fit, settled(TYPICAL_PATCH, false));
+        fit = better(fit, settled(TYPICAL_PATCH, false, aside));
     }
-    if fit.spread_between_patches() > UNEVEN {
+    let mut tried = vec![fit.tried(GroundKind::AsDescribed, fit.log_evidence)];
+    if settings.barrier && fit.spread_between_patches() > UNEVEN {
         // So uneven a ground may be an even one with a barrier.
-        let other = match settled(EVEN, true) {
-            Ok(one) => Ok(better(one, settled(TYPICAL_PATCH, true))),
-            Err(_) => settled(TYPICAL_PATCH, true),
+        let other = match settled(EVEN, true, aside) {
+            Ok(one) => Ok(better(one, settled(TYPICAL_PATCH, true, aside))),
+            Err(_) => settled(TYPICAL_PATCH, true, aside),
         };
         if let Ok(mut other) = other
-            && let Some(suspect) = &mut other.state.suspect
+            && other.state.suspect.is_some()
         {
-            suspect.log_evidence = other.log_evidence - fit.log_evidence - OCCAM;
-            if suspect.log_evidence > BELIEVED {
+            tried.push(other.tried(GroundKind::Barrier, other.log_evidence - OCCAM));
+            let log_evidence = other.log_evidence - fit.log_evidence - OCCAM;
+            if let Some(suspect) = &mut other.state.suspect {
+                suspect.log_evidence = log_evidence;
+            }
+            if log_evidence > BELIEVED {
                 fit = other;
             }
         }
     }
     progress(0.8);
-    let calibration = fit.finish((first.index, last.index))?;
+    let (calibration, account) = fit.finish((first.index, last.index))?;
     progress(1.0);
-    Ok(calibration)
+    Ok((calibration, Account { tried, ..account }))
 }
 
 /// The fit that history makes more likely.
@@ -136,6 +151,20 @@ fn declared(past: &[Vec<(f64, f64)>], record: f64) -> Vec<Vec<(f64, f64, f64)>> 
         .collect()
 }
 
+/// Rows of blocks and gauges, ascending.
+fn rows_of(aside: &[(i64, usize)], history: &[Block], gauges: usize) -> Vec<usize> {
+    let mut rows: Vec<usize> = aside
+        .iter()
+        .filter_map(|&(index, gauge)| {
+            let block = history.binary_search_by_key(&index, |b| b.index).ok()?;
+            (gauge < gauges).then_some(block * gauges + gauge)
+        })
+        .collect();
+    rows.sort_unstable();
+    rows.dedup();
+    rows
+}
+
 /// The state of the fit.
 pub(super) struct Fit<'a> {
     pub(super) ground: &'a Ground,
@@ -146,6 +175,8 @@ pub(super) struct Fit<'a> {
     pub(super) priors: Priors,
     /// Whether an undeclared barrier is sought.
     sought: bool,
+    /// Whether it is known which readings to set aside.
+    known_aside: bool,
     pub(super) state: State,
     /// Log marginal likelihood of the history in the last round.
     pub(super) log_evidence: f64,
@@ -162,6 +193,8 @@ pub(super) struct State {
     pub(super) suspect: Option<Suspect>,
     /// Coefficients of the last round less what it moved into parameters and skins.
     pub(super) rest: Option<DVector<f64>>,
+    /// Rows set aside, ascending.
+    pub(super) aside: Vec<usize>,
 }
 
 /// Scales of groups of nuisances.
@@ -244,6 +277,7 @@ impl<'a> Fit<'a> {
             block,
             priors,
             sought: false,
+            known_aside: settings.aside.is_some(),
             state: State {
                 factors,
                 skins,
@@ -256,6 +290,11 @@ impl<'a> Fit<'a> {
                 },
                 suspect: None,
                 rest: None,
+                aside: rows_of(
+                    settings.aside.as_deref().unwrap_or_default(),
+                    history,
+                    gauges,
+                ),
             },
             log_evidence: f64::NEG_INFINITY,
         })
@@ -265,6 +304,17 @@ impl<'a> Fit<'a> {
     fn spread_between_patches(&self) -> f64 {
         let [conduction, storage] = self.state.scales.patch;
         conduction.max(storage)
+    }
+
+    /// What stands now, as a ground tried.
+    fn tried(&self, kind: GroundKind, log_evidence: f64) -> Tried {
+        let factors = self.state.factors.iter().copied();
+        Tried {
+            kind,
+            log_evidence,
+            factors: factors.filter(|(p, _)| layer_of(*p) == *p).collect(),
+            leakance: None,
+        }
     }
 
     /// First round in which scales are learned.
@@ -288,7 +338,12 @@ impl<'a> Fit<'a> {
             if round == let_in {
                 self.state.scales.patch = [TYPICAL_PATCH; 2];
             }
+            let aside = self.state.aside.clone();
             let step = self.round(round)?;
+            if aside != self.state.aside {
+                // Evidence of other readings is no measure.
+                best = None;
+            }
             if let Some((evidence, state, step, share)) = &mut best {
                 if self.log_evidence < *evidence - WORSE {
                     // The share of the step went too far: from the same state a shorter one.
@@ -355,7 +410,13 @@ impl<'a> Fit<'a> {
         if round == 0 {
             columns = self.columns()?;
             history = History::run(&mut columns, self.history, keep)?;
+            if !self.known_aside {
+                self.state.aside = gross(&history);
+            }
+            history.set_aside(&self.state.aside);
+            refuse::signs(self.ground, &history)?;
         }
+        history.set_aside(&self.state.aside);
         match &self.state.rest {
             Some(rest) => history.fill(rest),
             None => history.fill(&DVector::zeros(0)),
@@ -377,7 +438,19 @@ impl<'a> Fit<'a> {
             }
             regression = history.whiten(&whitener);
         }
-        let solved = self.learn_scales(&columns, &regression, history.tail(), round)?;
+        let mut solved = self.learn_scales(&columns, &regression, history.tail(), round)?;
+        if !self.known_aside && [1, 2, let_in, let_in + 1].contains(&round) {
+            let left = regression.left(&solved.mean);
+            let settled = round >= let_in;
+            let found = self.standing_out(&columns, &history, &whitener, &left, settled)?;
+            if found != self.state.aside {
+                self.state.aside = found;
+                history.set_aside(&self.state.aside);
+                history.fill(&solved.mean);
+                regression = history.whiten(&whitener);
+                solved = self.learn_scales(&columns, &regression, history.tail(), round)?;
+            }
+        }
         self.log_evidence =
             solved.log_likelihood - whitener.log_scale() * self.history.len() as f64;
         let step = Move::of(&columns, &self.priors, solved.mean.clone());

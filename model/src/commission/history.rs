@@ -31,8 +31,12 @@ pub(crate) struct History {
     pub(crate) gauges: usize,
     /// Block, well and size of each jump of a meter's error; two columns each, at the end.
     pub(crate) renewals: Vec<(usize, usize, f64)>,
-    /// Rows without a reading.
+    /// Rows without a reading, and those set aside; ascending.
     pub(crate) missing: Vec<usize>,
+    /// Rows set aside, with what stood there.
+    pub(crate) aside: Vec<(usize, f64)>,
+    /// Response of each pair in each block \[Pa\] (gauge by well, row-major by gauge; by blocks).
+    pub(crate) pairs: DMatrix<f64>,
     /// Reference subtracted from each gauge \[Pa\].
     pub(crate) reference: Vec<f64>,
     /// Spread of each pair's response \[Pa\] (gauge by well, row-major by gauge).
@@ -105,7 +109,7 @@ impl History {
                 .collect();
             if seen.is_empty() {
                 return Err(ModelError::History(format!(
-                    "gauge {gauge} has no reading in the whole history; take it out of the site file or give a longer history"
+                    "gauge {gauge} has no reading in the whole history"
                 )));
             }
             let middle = median(seen);
@@ -122,12 +126,47 @@ impl History {
             gauges,
             renewals,
             missing,
+            aside: Vec::new(),
+            pairs,
             reference,
             pair_spread,
             lines: DMatrix::zeros(rows, 0),
             seen,
             taken: 0,
         })
+    }
+
+    /// Sets rows aside as if they had not been read, in place of those set aside before; they must be filled then.
+    pub(crate) fn set_aside(&mut self, rows: &[usize]) {
+        for (row, was) in std::mem::take(&mut self.aside) {
+            self.raw[(row, 0)] = was;
+            self.missing.retain(|&m| m != row);
+        }
+        for &row in rows {
+            if let Err(at) = self.missing.binary_search(&row) {
+                self.aside.push((row, self.raw[(row, 0)]));
+                self.missing.insert(at, row);
+            }
+        }
+    }
+
+    /// Whether a row holds a reading that was not set aside.
+    pub(crate) fn was_read(&self, row: usize) -> bool {
+        self.missing.binary_search(&row).is_err()
+    }
+
+    /// Whether nothing was read at a row.
+    pub(crate) fn absent(&self, row: usize) -> bool {
+        !self.was_read(row) && self.aside.binary_search_by_key(&row, |a| a.0).is_err()
+    }
+
+    /// What the described ground makes felt at a row \[Pa\].
+    pub(crate) fn felt(&self, row: usize) -> f64 {
+        let wells = self.pairs.nrows() / self.gauges.max(1);
+        let (block, gauge) = (row / self.gauges, row % self.gauges);
+        (0..wells)
+            .map(|well| self.pairs[(gauge * wells + well, block)])
+            .sum()
     }
 
     /// Replaces the barriers looked at; the history must have kept its means.
@@ -227,6 +266,8 @@ impl History {
             gauges: self.gauges,
             renewals: self.renewals.clone(),
             missing: self.missing.clone(),
+            aside: self.aside.clone(),
+            pairs: DMatrix::zeros(0, 0),
             reference: self.reference.clone(),
             pair_spread: self.pair_spread.clone(),
             lines: DMatrix::zeros(self.raw.nrows(), 0),
@@ -371,6 +412,8 @@ mod tests {
             gauges: 2,
             renewals: Vec::new(),
             missing: vec![3, 5, 6],
+            aside: Vec::new(),
+            pairs: DMatrix::zeros(0, 0),
             reference: vec![0.0; 2],
             pair_spread: Vec::new(),
             lines: DMatrix::zeros(8, 0),

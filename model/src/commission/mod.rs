@@ -7,22 +7,30 @@ use crate::expect::{Noise, Patched, Priors};
 use crate::ground::Ground;
 use crate::reduce::{Factors, Reduced};
 
+mod account;
+mod aside;
 mod finish;
 mod fit;
 pub(crate) mod history;
 mod moves;
 pub(crate) mod places;
 pub(crate) mod rates;
+mod refuse;
 pub(crate) mod relevance;
 mod scales;
 mod stochastic;
 mod suspect;
+mod trace;
+mod tried;
 mod unsteady;
 
+pub use account::{Account, Figure, GaugeFit, Known, Patchwork, Rival};
 pub(crate) use finish::longest_unchanged;
 pub use fit::commission;
 pub use places::{Line, Places, places};
+pub use refuse::check_history;
 pub use suspect::Suspect;
+pub use tried::{GroundKind, Tried, commission_leaky};
 pub use unsteady::Unsteady;
 pub(crate) use unsteady::calm;
 
@@ -69,6 +77,11 @@ pub struct CommissionSettings {
     /// Declared rates before the record, one list a well: when each began \[s since the epoch\] and its rate \[m3/s\]; it
     /// holds until the next one or the record. Empty where nothing is declared.
     pub past: Vec<Vec<(f64, f64)>>,
+    /// Readings to set aside, as block and gauge by order; `None` where those that stand out are to be found. Grounds are
+    /// compared by evidence on the same readings only.
+    pub aside: Option<Vec<(i64, usize)>>,
+    /// Whether a ground that looks uneven is held against an even one with a barrier nobody declared.
+    pub barrier: bool,
 }
 
 impl Default for CommissionSettings {
@@ -79,6 +92,8 @@ impl Default for CommissionSettings {
             meter_bias: 0.01,
             rounds: 16,
             past: Vec::new(),
+            aside: None,
+            barrier: true,
         }
     }
 }

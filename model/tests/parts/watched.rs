@@ -159,7 +159,8 @@ fn a_flood_raises_no_alarm_and_a_leak_beside_the_river_does() {
     let modal = reduced.modal(&truth).unwrap();
     let quiet = record(&modal, 0.0, 0);
     let settings = CommissionSettings::default();
-    let calibration = commission(&g, &reduced, &quiet[..HISTORY], &settings, &mut |_| {}).unwrap();
+    let (calibration, _) =
+        commission(&g, &reduced, &quiet[..HISTORY], &settings, &mut |_| {}).unwrap();
     for (parameter, true_factor) in &truth {
         let (at, (_, found)) = calibration
             .factors

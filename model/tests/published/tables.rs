@@ -6,6 +6,7 @@ use borewake_model::closed_form::{
     Bore, Circle, Rim, bore_slope, bore_step, bore_transfer, circle_step, circle_transfer, e1,
     leaky_well_function, rate_taken, taken,
 };
+use borewake_model::derivative::bourdet;
 
 use crate::{half_unit, rows};
 
@@ -150,4 +151,30 @@ fn a_round_ground_fills_with_its_shape_factor() {
     let rest = 2.0 * (found - 2.0 * PI * td / area);
     let factor = 4.0 * area / (0.577_215_664_901_532_9 + rest).exp();
     assert!((factor - 31.620_592_889_615).abs() < 1e-3, "{factor}");
+}
+
+#[test]
+fn derivative_by_smoothing_against_the_published_slopes() {
+    // The table's grid is coarse (1, 2, 5): differences of its own rows are no derivative. Between its rows the response
+    // is worked out as the table was, and the smoothed derivative must then meet the slopes that stand in it.
+    let table: Vec<[f64; 5]> = rows(include_str!("data/storage_and_skin.csv"));
+    for [cd, skin, td, _, slope] in table.into_iter().step_by(7) {
+        let bore = Bore {
+            radius: 1.0,
+            skin,
+            storage: cd,
+        };
+        let points: Vec<(f64, f64)> = (-12..=12)
+            .map(|k| {
+                let x = td.ln() + 0.05 * f64::from(k);
+                (x, bore_step(&bore, UNIT, UNIT, x.exp()))
+            })
+            .collect();
+        let found = bourdet(&points, 0.1);
+        let (_, here) = found.into_iter().find(|(index, _)| *index == 12).unwrap();
+        assert!(
+            (here - slope).abs() < 0.02 * slope.max(0.1),
+            "CD {cd} S {skin} tD {td}: {here} {slope}"
+        );
+    }
 }

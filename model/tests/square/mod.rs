@@ -160,13 +160,19 @@ pub fn reduced(ground: &Ground) -> Reduced {
 
 /// Blocks of a record; `leak` is a rate drawn from the onset on, `lost` the share of readings that are missing.
 pub fn record(leak: f64, lost: f64, seed: u64) -> Vec<Block> {
+    leaking_record(leak, lost, seed, 0.0)
+}
+
+/// The same where the whole layer leaks to a bed at rest, `seeping` \[1/s\] of what it stores.
+pub fn leaking_record(leak: f64, lost: f64, seed: u64, seeping: f64) -> Vec<Block> {
     let ground = ground();
     let reduced = reduced(&ground);
     let factors = vec![
         (Parameter::Transmissivity(0), 1.15),
         (Parameter::Storativity(0), 0.9),
     ];
-    let modal: Modal = reduced.modal(&factors).unwrap();
+    let mut modal: Modal = reduced.modal(&factors).unwrap();
+    modal.lambda.add_scalar_mut(seeping);
     let sink = {
         // The leak's port in the same modal coordinates: the pencil is diagonal, so modes only scale and reorder.
         let mut with = reduced.clone();
@@ -247,7 +253,7 @@ pub fn commissioned() -> &'static Commissioned {
         let ground = ground();
         let reduced = reduced(&ground);
         let blocks = record(0.0, 0.0, 7);
-        let calibration = commission(
+        let (calibration, _) = commission(
             &ground,
             &reduced,
             &blocks[..HISTORY],

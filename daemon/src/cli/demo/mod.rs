@@ -87,7 +87,7 @@ impl Demo {
         );
         say(json, "Calibrating on the quiet days ...");
         let blocks = quiet_blocks(&site, &log_file, &truth)?;
-        let ground = commission_site(&site, &blocks, truth.commission.to)?;
+        let (ground, _) = commission_site(&site, &blocks, &[], truth.commission.to)?;
         ground.write(&site.store.folder)?;
         say(json, &summary(&site, &ground));
         say(json, "Playing the log ...");

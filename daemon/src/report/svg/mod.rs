@@ -6,6 +6,7 @@
 pub mod ahead;
 mod axis;
 mod frame;
+mod loglog;
 mod path;
 
 use std::fmt::Write as _;
@@ -14,6 +15,7 @@ use borewake_model::units::UnitSystem;
 
 use crate::record::{Expectation, Stamp};
 use frame::{Frame, Scale, badge, draw, escaped, extent, text};
+pub use loglog::{LogLog, log_log_plot};
 use path::{Dot, area, line, runs, thin};
 
 /// Standard deviations either side that hold 95 % of a normal distribution.
@@ -67,6 +69,31 @@ impl PlotPoint {
 /// Not finite numbers are left out. A picture without points says so.
 #[must_use]
 pub fn gauge_plot(plot: &GaugePlot) -> String {
+    picture(plot, &WATCHED)
+}
+
+/// Draws a gauge through the history of a fit: above, its reading over the fitted model; below, what is left.
+#[must_use]
+pub fn fit_plot(plot: &GaugePlot) -> String {
+    picture(plot, &FITTED)
+}
+
+/// What the parts of a picture are called.
+struct Words {
+    expectation: &'static str,
+    departure: &'static str,
+}
+
+const WATCHED: Words = Words {
+    expectation: "expectation",
+    departure: "departure",
+};
+const FITTED: Words = Words {
+    expectation: "model",
+    departure: "what is left",
+};
+
+fn picture(plot: &GaugePlot, words: &Words) -> String {
     let points = finite(&plot.points);
     let height = if plot.marks.is_empty() {
         HEIGHT
@@ -74,7 +101,7 @@ pub fn gauge_plot(plot: &GaugePlot) -> String {
         let lines = u32::try_from(plot.marks.len()).unwrap_or(u32::MAX);
         LIST.0 + LIST.1 * f64::from(lines)
     };
-    let mut svg = head(&plot.title, height);
+    let mut svg = head(&plot.title, height, words);
     match (points.first(), points.last()) {
         (Some(first), Some(last)) => {
             let frame = Frame {
@@ -84,7 +111,7 @@ pub fn gauge_plot(plot: &GaugePlot) -> String {
             };
             time_axis(&mut svg, &frame);
             upper(&mut svg, &frame, &points);
-            lower(&mut svg, &frame, &points);
+            lower(&mut svg, &frame, &points, words);
             marks(&mut svg, &frame, &plot.marks);
         }
         _ => text(
@@ -112,7 +139,7 @@ fn finite(points: &[PlotPoint]) -> Vec<PlotPoint> {
 }
 
 /// Heading, style, legend and the clips of the two panels.
-fn head(title: &str, height: f64) -> String {
+fn head(title: &str, height: f64, words: &Words) -> String {
     let title = escaped(title);
     let clip = |name: &str, panel: (f64, f64)| {
         format!(
@@ -130,10 +157,11 @@ fn head(title: &str, height: f64) -> String {
 <rect class=\"paper\" width=\"{WIDTH}\" height=\"{height}\"/>\n\
 <text class=\"title\" x=\"16\" y=\"32\">{title}</text>\n\
 <g class=\"legend\"><path class=\"reading\" d=\"M16 62h34\"/><text x=\"58\" y=\"68\">reading</text>\
-<path class=\"expectation\" d=\"M210 62h34\"/><text x=\"252\" y=\"68\">expectation</text>\
+<path class=\"expectation\" d=\"M210 62h34\"/><text x=\"252\" y=\"68\">{}</text>\
 <rect class=\"band\" x=\"450\" y=\"52\" width=\"34\" height=\"20\"/><text x=\"492\" y=\"68\">95 % band</text></g>\n",
         clip("upper", UPPER),
         clip("lower", LOWER),
+        words.expectation,
     )
 }
 
@@ -197,7 +225,7 @@ fn upper(svg: &mut String, frame: &Frame, points: &[PlotPoint]) {
 }
 
 /// The departure over the band about zero; what lies outside the band stands out.
-fn lower(svg: &mut String, frame: &Frame, points: &[PlotPoint]) {
+fn lower(svg: &mut String, frame: &Frame, points: &[PlotPoint], words: &Words) {
     let departures = points.iter().filter_map(PlotPoint::departure);
     let (low, high) = extent(departures.chain([0.0])).unwrap_or((0.0, 0.0));
     let mut halves: Vec<f64> = points
@@ -208,7 +236,8 @@ fn lower(svg: &mut String, frame: &Frame, points: &[PlotPoint]) {
     let usual = halves.get(halves.len() / 2).copied().unwrap_or(0.0);
     let (low, high) = (low.min(-1.4 * usual), high.max(1.4 * usual));
     let scale = Scale::over(frame.shown(low), frame.shown(high), LOWER);
-    panel(svg, scale, &format!("departure, {}", frame.unit()), 3.0);
+    let label = format!("{}, {}", words.departure, frame.unit());
+    panel(svg, scale, &label, 5.0);
     let dot = |at: Stamp, pascal: f64| (frame.x(at), scale.y(frame.shown(pascal)));
     *svg += "<g clip-path=\"url(#lower)\">";
     let gap = gap_of(points);
