@@ -64,6 +64,7 @@ fn main() -> Result<(), Box<dyn Error>> {
         c.times.1 / site::DAY
     );
     println!("error at random nodes  {:8.1e}", c.random_nodes);
+    println!("error of a leak there  {:8.1e}", c.leaks);
 
     let watch = Stopwatch::start();
     let modal = reduced.modal(&Vec::new())?;

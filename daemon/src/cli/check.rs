@@ -5,7 +5,7 @@ use std::time::Duration;
 
 use borewake_model::ground::Ground;
 use borewake_model::ground::mesh::{Mesh, MeshOptions, Quality};
-use borewake_model::reduce::{Spread, spread};
+use borewake_model::reduce::{Certificate, Spread, spread};
 use borewake_model::units::Dimension;
 use borewake_model::{ModelError, lagged};
 use clap::Args;
@@ -129,25 +129,47 @@ fn ground_summary(site: &Site) -> GroundSummary {
             };
         }
     };
-    let certificate = match &file.commissioned {
-        Model::Ground(ground) => &ground.reduced.certificate,
+    let ground = match &file.commissioned {
+        Model::Ground(ground) => ground,
         Model::Embankment(embankment) => return answers(&file, embankment),
     };
+    let certificate = &ground.reduced.certificate;
     let (fastest, slowest) = certificate.times;
     let time = |t| site.units.show(Dimension::Time, t);
-    let text = format!(
-        "  {} unknowns reduced to {} modes, made {}\n  worst step response from {} to {}: {:.1e} of its peak at wells and gauges, {:.1e} at nodes drawn at random\n",
+    let errors = |c: &Certificate| {
+        format!(
+            "{:.1e} at wells and gauges, {:.1e} at nodes drawn at random, {:.1e} of a leak there",
+            c.ports, c.random_nodes, c.leaks
+        )
+    };
+    let mut text = format!(
+        "  {} unknowns reduced to {} modes, made {}\n  worst step response from {} to {}, as a share of its peak\n    as described: {}\n",
         certificate.full_size,
         certificate.modes,
         file.made,
         time(fastest),
         time(slowest),
-        certificate.ports,
-        certificate.random_nodes,
+        errors(certificate),
     );
+    if let Some(worst) = certificate.box_corners {
+        text += &format!("    over the prior's range: {worst:.1e}\n");
+    }
+    if let Some(numerics) = &ground.numerics {
+        text += &format!(
+            "    as fitted: {}\n  the watch leaves {:.1e} of every response to the numbers (with the mesh's own {:.1e}), so that no alarm is tighter\n",
+            errors(&numerics.fitted),
+            numerics.pair(),
+            numerics.spread.sizes,
+        );
+    }
     GroundSummary {
         text,
-        json: json!({ "usable": true, "made": file.made, "certificate": certificate }),
+        json: json!({
+            "usable": true,
+            "made": file.made,
+            "certificate": certificate,
+            "numerics": ground.numerics,
+        }),
     }
 }
 

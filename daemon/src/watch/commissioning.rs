@@ -1,13 +1,16 @@
 //! Makes a ground file: mesh, weak form, reduction, calibration, and the watch brought to the end of history.
 
 use borewake_model::commission::{
-    Account, CommissionSettings, Commissioned, Places, check_history, commission,
+    Account, Calibration, CommissionSettings, Commissioned, Numerics, Places, check_history,
+    commission,
 };
 use borewake_model::ground::mesh::MeshOptions;
-use borewake_model::ground::{Ground, Patches};
-use borewake_model::reduce::{ReduceOptions, Reduced, reduce_patched};
+use borewake_model::ground::{Ground, Patches, Point};
+use borewake_model::reduce::{
+    Basis, BoxCorners, Factors, ReduceOptions, Reduced, reduce_patched, spread,
+};
 use borewake_model::watch::{Watch, WatchSettings};
-use borewake_model::weak_form::{Scheme, discretise};
+use borewake_model::weak_form::{Functional, PatchShares, Scheme, System, discretise};
 use borewake_model::{ModelError, lagged};
 
 use super::compare::{Compare, compare};
@@ -26,6 +29,8 @@ pub enum Stage {
     Calibrate,
     /// Fitting other grounds.
     Compare,
+    /// Comparing the fitted ground with the full system and with other meshes.
+    Certify,
     /// Bringing the watch to the end of history.
     Settle,
 }
@@ -39,12 +44,43 @@ impl Stage {
             Self::Reduce => "reducing it to modes",
             Self::Calibrate => "fitting parameters",
             Self::Compare => "fitting other grounds",
+            Self::Certify => "checking the numbers of the fitted ground",
             Self::Settle => "settling the watch",
         }
     }
 }
 
-/// Meshes and reduces a ground as described.
+/// A ground put into the weak form, with what the fit and the watch want of it.
+struct Discrete {
+    system: System,
+    patches: PatchShares,
+    places: Vec<(Point, usize, Functional)>,
+}
+
+impl Discrete {
+    fn of(ground: &Ground) -> Result<Self, ModelError> {
+        let discrete = discretise(ground, Scheme::Quadratic, &MeshOptions::default())?;
+        let array = Places::of(ground);
+        let mut places = Vec::with_capacity(array.all.len());
+        for &(point, layer) in &array.all {
+            places.push((point, layer, discrete.locate(point, layer)?));
+        }
+        let patches = discrete.patches(
+            ground,
+            &Patches {
+                centre: array.centre,
+                half_width: array.half_width,
+            },
+        )?;
+        Ok(Self {
+            system: discrete.system,
+            patches,
+            places,
+        })
+    }
+}
+
+/// Meshes and reduces a ground as described, checked at the described parameters only.
 ///
 /// # Errors
 /// The ground cannot be meshed or reduced; the place is named.
@@ -53,21 +89,20 @@ pub fn reduce_ground(
     progress: &mut dyn FnMut(Stage, f64),
 ) -> Result<Reduced, ModelError> {
     progress(Stage::Discretise, 0.0);
-    let discrete = discretise(ground, Scheme::Quadratic, &MeshOptions::default())?;
+    let discrete = Discrete::of(ground)?;
     progress(Stage::Reduce, 0.0);
-    let array = Places::of(ground);
-    let mut at = Vec::with_capacity(array.all.len());
-    for &(point, layer) in &array.all {
-        at.push((point, layer, discrete.locate(point, layer)?));
-    }
-    let patches = discrete.patches(
-        ground,
-        &Patches {
-            centre: array.centre,
-            half_width: array.half_width,
-        },
-    )?;
-    reduce_patched(&discrete.system, &patches, &at, &ReduceOptions::default())
+    reduce_patched(
+        &discrete.system,
+        &discrete.patches,
+        &discrete.places,
+        &ReduceOptions::default(),
+    )
+}
+
+/// Parameters of the fitted ground: those of layers, zones, barriers and the edge, and those of patches.
+fn fitted(calibration: &Calibration) -> Factors {
+    let all = calibration.factors.iter().chain(&calibration.patches);
+    all.copied().collect()
 }
 
 /// Makes a ground file from quiet history, and for a field of wells what people should know of the fit; `others` are
@@ -124,7 +159,24 @@ fn calibrated(
     progress: &mut dyn FnMut(Stage, f64),
 ) -> Result<(Commissioned, Account), ModelError> {
     check_history(&site.ground, history)?;
-    let reduced = reduce_ground(&site.ground, progress)?;
+    progress(Stage::Discretise, 0.0);
+    let discrete = Discrete::of(&site.ground)?;
+    progress(Stage::Reduce, 0.0);
+    let prior = CommissionSettings::default().parameter_sd;
+    let options = ReduceOptions {
+        corners: Some(BoxCorners {
+            log_transmissivity: prior,
+            log_storativity: prior,
+        }),
+        ..ReduceOptions::default()
+    };
+    let basis = Basis::build(&discrete.system, &options)?;
+    let reduced = basis.reduce(
+        &discrete.system,
+        &discrete.patches,
+        &discrete.places,
+        &options,
+    )?;
     let past = |w: &WellSettings| w.past.iter().map(|p| (p.from.seconds(), p.rate)).collect();
     let settings = CommissionSettings {
         past: site.wells.iter().map(past).collect(),
@@ -139,7 +191,19 @@ fn calibrated(
         let tried = compare(&site.ground, &reduced, history, known, others, progress)?;
         account.tried.extend(tried);
     }
-    let commissioned = Commissioned::new(site.ground.clone(), &reduced, calibration)?;
+    progress(Stage::Certify, 0.0);
+    let numerics = Numerics {
+        fitted: basis.certify_at(
+            &discrete.system,
+            &discrete.patches,
+            &reduced,
+            &options,
+            &fitted(&calibration),
+        )?,
+        spread: spread(&site.ground, &MeshOptions::default())?,
+    };
+    let commissioned =
+        Commissioned::new(site.ground.clone(), &reduced, calibration)?.allowing_for(numerics);
     Ok((commissioned, account))
 }
 

@@ -14,7 +14,7 @@ use thiserror::Error;
 use crate::record::Stamp;
 
 /// First bytes of every ground file; the digit is the layout's version.
-const MAGIC: &[u8] = b"borewake ground 5\n";
+const MAGIC: &[u8] = b"borewake ground 6\n";
 
 /// Name of the ground file in the store folder.
 pub const FILE_NAME: &str = "ground.bin";

@@ -13,6 +13,7 @@ mod finish;
 mod fit;
 pub(crate) mod history;
 mod moves;
+mod numerics;
 pub(crate) mod places;
 pub(crate) mod rates;
 mod refuse;
@@ -27,6 +28,7 @@ mod unsteady;
 pub use account::{Account, Figure, GaugeFit, Known, Patchwork, Rival};
 pub(crate) use finish::longest_unchanged;
 pub use fit::commission;
+pub use numerics::Numerics;
 pub use places::{Line, Places, places};
 pub use refuse::check_history;
 pub use suspect::Suspect;
@@ -43,6 +45,8 @@ pub struct Commissioned {
     pub reduced: Reduced,
     /// What history said.
     pub calibration: Calibration,
+    /// What the numbers behind it may be off, where that was found; the calibration makes room for it.
+    pub numerics: Option<Numerics>,
 }
 
 impl Commissioned {
@@ -59,7 +63,16 @@ impl Commissioned {
             ground,
             reduced: reduced.settled(&calibration.patches)?,
             calibration,
+            numerics: None,
         })
+    }
+
+    /// The same with room for the error of the numbers, which it keeps.
+    #[must_use]
+    pub fn allowing_for(mut self, numerics: Numerics) -> Self {
+        self.calibration.allow_for(&numerics);
+        self.numerics = Some(numerics);
+        self
     }
 }
 

@@ -32,7 +32,7 @@ impl<'a> Basis<'a> {
         let ports = distinct_ports(system)?;
         let closed = system.closed_components.len();
         let found = search(system, &ports, indicators(system)?, options)?;
-        let kept = leading_directions(&found, closed, &ports, options)?;
+        let kept = leading_directions(system, &found, closed, &ports, options)?;
         Ok(Self {
             span: found.span,
             kept,
@@ -111,6 +111,7 @@ impl<'a> Basis<'a> {
             certificate: Certificate {
                 ports: f64::NAN,
                 random_nodes: f64::NAN,
+                leaks: f64::NAN,
                 box_corners: None,
                 full_size: system.size,
                 modes: self.modes(),
@@ -122,6 +123,23 @@ impl<'a> Basis<'a> {
 }
 
 impl Basis<'_> {
+    /// Projects the system, the shares of patches and the places, and certifies the result.
+    ///
+    /// # Errors
+    /// As [`super::reduce`].
+    pub fn reduce(
+        &self,
+        system: &System,
+        patches: &PatchShares,
+        places: &[(Point, usize, Functional)],
+        options: &ReduceOptions,
+    ) -> Result<Reduced, ModelError> {
+        let mut reduced = self.project(system, places)?;
+        reduced.patches = self.project_patches(patches)?;
+        reduced.certificate = self.certify(system, &reduced, options)?;
+        Ok(reduced)
+    }
+
     /// Projects the shares of patches.
     ///
     /// # Errors
@@ -187,6 +205,11 @@ pub(super) fn distinct_ports(system: &System) -> Result<Vec<&Functional>, ModelE
         });
     }
     Ok(distinct)
+}
+
+/// Whether a port is a well's: where rates enter. All are, where the ground has none.
+pub(super) fn is_well(system: &System, port: &Functional) -> bool {
+    system.wells.is_empty() || system.wells.contains(port)
 }
 
 fn within(size: usize, functionals: &[&Functional]) -> Result<(), ModelError> {

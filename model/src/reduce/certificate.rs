@@ -11,7 +11,7 @@
 use faer::complex::Complex;
 use nalgebra::DMatrix;
 
-use super::basis::distinct_ports;
+use super::basis::{distinct_ports, is_well};
 use super::correction::{Complexes, residual, solve};
 use super::factor::ShiftedCholesky;
 use super::pencil::Pencil;
@@ -19,7 +19,7 @@ use super::rows::Rows;
 use super::step::Gains;
 use super::{Basis, Certificate, Factors, ReduceOptions, Reduced};
 use crate::ModelError;
-use crate::weak_form::{Functional, Parameter, System};
+use crate::weak_form::{Functional, Parameter, PatchShares, System};
 
 /// Points of a contour in the upper half plane. The quadrature is right to `exp(-2 pi points / 3)`, here 4e-7, of the
 /// transform it inverts, which leaves room for cancellation at the ports, where the error is far smaller than its transform.
@@ -33,11 +33,16 @@ const WITHIN: f64 = 1.5;
 /// what is a thousand times smaller than anything a gauge shows concerns nobody.
 const FLOOR: f64 = 1e-3;
 
+/// Corners of the box: signs of the logarithms of transmissivity and of storativity.
+const CORNERS: [(f64, f64); 4] = [(1.0, 1.0), (1.0, -1.0), (-1.0, 1.0), (-1.0, -1.0)];
+
 impl Basis<'_> {
-    /// Compares step responses with those of the full system.
+    /// Compares step responses with those of the full system, at the described parameters and, where the options say so, at the corners of
+    /// a box of them.
     ///
     /// A contour of a few complex points a time, one block of right-hand sides for all ports. Costs one sparse factorisation a
-    /// time and some ten block solves a point: several times the reduction itself.
+    /// time and some ten block solves a point: several times the reduction itself. The corners share the times among
+    /// them, so that all four together cost as much again.
     ///
     /// # Errors
     /// Those of [`Reduced::modal`], and [`ModelError::NotSettled`] where the full system could not be solved.
@@ -47,27 +52,54 @@ impl Basis<'_> {
         reduced: &Reduced,
         options: &ReduceOptions,
     ) -> Result<Certificate, ModelError> {
-        let at = |factors: &Factors| errors(self, system, reduced, options, factors);
-        let (ports, random_nodes) = at(&Vec::new())?;
+        let patches = PatchShares::default();
+        let compared = Compared {
+            basis: self,
+            system,
+            patches: &patches,
+            reduced,
+            options,
+        };
+        let found = compared.errors(&Factors::new(), 0, 1)?;
         let mut box_corners = None;
         if let Some(corners) = options.corners {
-            for (t, s) in [(1.0, 1.0), (1.0, -1.0), (-1.0, 1.0), (-1.0, -1.0)] {
+            let mut worst = 0.0_f64;
+            for (first, (t, s)) in CORNERS.into_iter().enumerate() {
                 let factors = corner(
                     system,
                     (t * corners.log_transmissivity).exp(),
                     (s * corners.log_storativity).exp(),
                 );
-                let (ports, nodes) = at(&factors)?;
-                box_corners = Some(ports.max(nodes).max(box_corners.unwrap_or(0.0)));
+                let found = compared.errors(&factors, first, CORNERS.len())?;
+                worst = worst.max(found.ports).max(found.random_nodes);
             }
+            box_corners = Some(worst);
         }
-        Ok(Certificate {
-            ports,
-            random_nodes,
-            box_corners,
-            times: options.checked_span(),
-            ..reduced.certificate.clone()
-        })
+        Ok(found.certificate(reduced, options, box_corners))
+    }
+
+    /// Compares the same at other parameters, those of patches among them, at every other of the times: what the reduction costs for
+    /// a fitted ground. `reduced` still has its patches apart.
+    ///
+    /// # Errors
+    /// As [`Basis::certify`].
+    pub fn certify_at(
+        &self,
+        system: &System,
+        patches: &PatchShares,
+        reduced: &Reduced,
+        options: &ReduceOptions,
+        factors: &Factors,
+    ) -> Result<Certificate, ModelError> {
+        let compared = Compared {
+            basis: self,
+            system,
+            patches,
+            reduced,
+            options,
+        };
+        let found = compared.errors(factors, 1, 2)?;
+        Ok(found.certificate(reduced, options, None))
     }
 }
 
@@ -87,84 +119,122 @@ fn corner(system: &System, transmissivity: f64, storativity: f64) -> Factors {
     factors
 }
 
-/// Largest error at ports and at random nodes.
-fn errors(
-    basis: &Basis<'_>,
-    system: &System,
-    reduced: &Reduced,
-    options: &ReduceOptions,
-    factors: &Factors,
-) -> Result<(f64, f64), ModelError> {
-    let ports = distinct_ports(system)?;
-    let probes: Vec<Functional> = random_nodes(system, &ports, options.checked_nodes)
-        .into_iter()
-        .map(|node| Functional(vec![(node, 1.0)]))
-        .collect();
-    let seen: Vec<&Functional> = ports.iter().copied().chain(&probes).collect();
-    let pencil = Pencil::assemble(system, factors)?;
-    let mut full = ShiftedCholesky::of(pencil)?;
-    let (lambda, vectors) = reduced.pencil(factors)?;
-    let at_modes = vectors.tr_mul(&basis.coordinates(&seen));
-    let b = Rows::sources(system.size, &ports);
-    let mut peaks = DMatrix::zeros(seen.len(), ports.len());
-    let mut worst = DMatrix::zeros(seen.len(), ports.len());
-    for t in options.checked_times() {
-        let contour = contour(t);
-        // The real shift of the preconditioner is near the points that weigh most; those further out need fewer digits.
-        let heaviest = contour.iter().map(|c| c.1.norm()).fold(0.0, f64::max);
-        full.factorise(contour[1].0.norm())?;
-        let mut error = DMatrix::zeros(seen.len(), ports.len());
-        for (z, weight) in contour {
-            let x = Complexes::new(solution(
-                basis,
-                &lambda,
-                &vectors,
-                &at_modes,
-                ports.len(),
-                z,
-            ));
-            let r = residual(&full, z, &b, &x);
-            let e = solve(&full, z, &r, RESIDUAL * heaviest / weight.norm())?;
-            // Between ports the error is r_i . e_j, because the residual is orthogonal to the basis: this form squares the
-            // accuracy of e.
-            for (k, pair) in r.pairs(&e).into_iter().enumerate() {
-                error[(k / ports.len(), k % ports.len())] += (weight * pair).im;
-            }
-            for (i, functional) in seen.iter().enumerate().skip(ports.len()) {
+/// Largest errors of a comparison.
+#[derive(Debug, Clone, Copy, Default)]
+struct Errors {
+    ports: f64,
+    random_nodes: f64,
+    leaks: f64,
+}
+
+impl Errors {
+    fn certificate(
+        self,
+        reduced: &Reduced,
+        options: &ReduceOptions,
+        box_corners: Option<f64>,
+    ) -> Certificate {
+        Certificate {
+            ports: self.ports,
+            random_nodes: self.random_nodes,
+            leaks: self.leaks,
+            box_corners,
+            times: options.checked_span(),
+            ..reduced.certificate.clone()
+        }
+    }
+}
+
+/// A reduced and a full system that are compared.
+struct Compared<'a> {
+    basis: &'a Basis<'a>,
+    system: &'a System,
+    patches: &'a PatchShares,
+    reduced: &'a Reduced,
+    options: &'a ReduceOptions,
+}
+
+impl Compared<'_> {
+    /// Largest errors at every `step`-th of the times, from number `first` on. Peaks are sought at all of them.
+    fn errors(&self, factors: &Factors, first: usize, step: usize) -> Result<Errors, ModelError> {
+        let (system, options) = (self.system, self.options);
+        let ports = distinct_ports(system)?;
+        let probes: Vec<Functional> = random_nodes(system, &ports, options.checked_nodes)
+            .into_iter()
+            .map(|node| Functional(vec![(node, 1.0)]))
+            .collect();
+        let seen: Vec<&Functional> = ports.iter().copied().chain(&probes).collect();
+        let mut full =
+            ShiftedCholesky::of(Pencil::assemble_patched(system, self.patches, factors)?)?;
+        let (lambda, vectors) = self.reduced.pencil(factors)?;
+        let at_modes = vectors.tr_mul(&self.basis.coordinates(&seen));
+        let b = Rows::sources(system.size, &ports);
+        let mut peaks = DMatrix::zeros(seen.len(), ports.len());
+        let mut worst = DMatrix::zeros(seen.len(), ports.len());
+        for (count, t) in options.checked_times().into_iter().enumerate() {
+            let gains = Gains::new(&lambda, t);
+            for i in 0..seen.len() {
                 for j in 0..ports.len() {
-                    for &(node, share) in &functional.0 {
-                        error[(i, j)] += share * (weight * e.at(node, j)).im;
+                    let response: f64 = (0..lambda.len())
+                        .map(|k| at_modes[(k, i)] * at_modes[(k, j)] * gains.gain[k])
+                        .sum();
+                    peaks[(i, j)] = f64::max(peaks[(i, j)], response.abs());
+                }
+            }
+            if count % step != first % step {
+                continue;
+            }
+            let contour = contour(t);
+            // The real shift of the preconditioner is near the points that weigh most; those further out need fewer digits.
+            let heaviest = contour.iter().map(|c| c.1.norm()).fold(0.0, f64::max);
+            full.factorise(contour[1].0.norm())?;
+            let mut error = DMatrix::zeros(seen.len(), ports.len());
+            for (z, weight) in contour {
+                let x = Complexes::new(solution(
+                    self.basis,
+                    &lambda,
+                    &vectors,
+                    &at_modes,
+                    ports.len(),
+                    z,
+                ));
+                let r = residual(&full, z, &b, &x);
+                let e = solve(&full, z, &r, RESIDUAL * heaviest / weight.norm())?;
+                // Between ports the error is r_i . e_j, because the residual is orthogonal to the basis: this form squares the
+                // accuracy of e.
+                for (k, pair) in r.pairs(&e).into_iter().enumerate() {
+                    error[(k / ports.len(), k % ports.len())] += (weight * pair).im;
+                }
+                for (i, functional) in seen.iter().enumerate().skip(ports.len()) {
+                    for j in 0..ports.len() {
+                        for &(node, share) in &functional.0 {
+                            error[(i, j)] += share * (weight * e.at(node, j)).im;
+                        }
                     }
                 }
             }
+            worst.zip_apply(&error, |w: &mut f64, e: f64| *w = w.max(e.abs()));
         }
-        let gains = Gains::new(&lambda, t);
-        for i in 0..seen.len() {
-            for j in 0..ports.len() {
-                let response: f64 = (0..lambda.len())
-                    .map(|k| at_modes[(k, i)] * at_modes[(k, j)] * gains.gain[k])
-                    .sum();
-                peaks[(i, j)] = f64::max(peaks[(i, j)], response.abs());
-                worst[(i, j)] = f64::max(worst[(i, j)], f64::abs(error[(i, j)]));
+        let mut found = Errors::default();
+        for (j, port) in ports.iter().enumerate() {
+            let elsewhere = (0..ports.len()).filter(|&i| i != j || ports.len() == 1);
+            let floor = FLOOR * elsewhere.map(|i| peaks[(i, j)]).fold(0.0, f64::max);
+            for i in 0..seen.len() {
+                let share = worst[(i, j)] / f64::max(peaks[(i, j)], floor);
+                let largest = if i < ports.len() {
+                    &mut found.ports
+                } else if is_well(system, port) {
+                    &mut found.random_nodes
+                } else {
+                    &mut found.leaks
+                };
+                *largest = largest.max(share);
             }
         }
+        // What a gauge in a well shows of a leak is a well's response read the other way.
+        found.leaks = found.leaks.max(found.random_nodes);
+        Ok(found)
     }
-    let (mut at_ports, mut at_nodes) = (0.0_f64, 0.0_f64);
-    for j in 0..ports.len() {
-        let elsewhere = (0..ports.len()).filter(|&i| i != j || ports.len() == 1);
-        let floor = FLOOR * elsewhere.map(|i| peaks[(i, j)]).fold(0.0, f64::max);
-        for i in 0..seen.len() {
-            let share = worst[(i, j)] / f64::max(peaks[(i, j)], floor);
-
-            let largest = if i < ports.len() {
-                &mut at_ports
-            } else {
-                &mut at_nodes
-            };
-            *largest = largest.max(share);
-        }
-    }
-    Ok((at_ports, at_nodes))
 }
 
 /// The reduced solution for unit sources at the first `count` functionals, lifted to the nodes: `[re | im]`.

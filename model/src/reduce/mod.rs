@@ -67,11 +67,7 @@ pub fn reduce_patched(
     places: &[(Point, usize, Functional)],
     options: &ReduceOptions,
 ) -> Result<Reduced, ModelError> {
-    let basis = Basis::build(system, options)?;
-    let mut reduced = basis.project(system, places)?;
-    reduced.patches = basis.project_patches(patches)?;
-    reduced.certificate = basis.certify(system, &reduced, options)?;
-    Ok(reduced)
+    Basis::build(system, options)?.reduce(system, patches, places, options)
 }
 
 /// A dense share of a reduced matrix that one parameter scales.
@@ -116,9 +112,11 @@ pub struct Reduced {
 pub struct Certificate {
     /// Largest step-response error over the times checked, as a share of that response's peak, at ports.
     pub ports: f64,
-    /// The same at randomly chosen nodes.
+    /// The same at randomly chosen nodes, for a rate at a well.
     pub random_nodes: f64,
-    /// The same at the corners of the parameter box, where it was checked.
+    /// The same of what any gauge shows of a rate at such a node: a leak. (By reciprocity, a rate at a gauge as seen there.)
+    pub leaks: f64,
+    /// The largest of the first two at the corners of the parameter box, where it was checked.
     pub box_corners: Option<f64>,
     /// Unknowns of the full system.
     pub full_size: usize,

@@ -8,9 +8,11 @@ const YEAR: f64 = 365.25 * 86_400.0;
 /// A response at time t is made of shifts up to some tens over t: with the largest shift at 1/t the error at the shortest time
 /// is twenty times that at all others.
 const SHIFT_ABOVE: f64 = 20.0;
+/// The same towards the longest time: a shift at a few over it still serves.
+const SHIFT_BELOW: f64 = 3.0;
 /// What happens up to the shortest time decides the response at it, so truncation looks this much earlier.
-const TRUNCATE_FROM: f64 = 10.0;
-const TRUNCATE_TIMES: u32 = 60;
+const TRUNCATE_FROM: f64 = 15.0;
+const TRUNCATE_TIMES: u32 = 80;
 
 /// What a reduction is asked for.
 #[derive(Debug, Clone, PartialEq)]
@@ -19,7 +21,7 @@ pub struct ReduceOptions {
     pub fastest: f64,
     /// Longest time \[s\]: the station's life.
     pub slowest: f64,
-    /// Error allowed at any node, as a share of a response's peak. At the ports themselves it is far smaller.
+    /// Error allowed at any node for a rate at a well, as a share of that response's peak. At the ports themselves it is far smaller.
     pub tolerance: f64,
     /// Modes kept at most.
     pub max_modes: usize,
@@ -54,7 +56,7 @@ impl Default for ReduceOptions {
             slowest: 10.0 * YEAR,
             tolerance: 1e-4,
             max_modes: 170,
-            max_shifts: 24,
+            max_shifts: 28,
             log_range: 0.5,
             checked_times: 8,
             checked_nodes: 20,
@@ -112,12 +114,19 @@ impl ReduceOptions {
 
     /// Smallest and largest real shift \[1/s\].
     pub(super) fn shift_span(&self) -> (f64, f64) {
-        (self.slowest.recip(), SHIFT_ABOVE / self.fastest)
+        (
+            (SHIFT_BELOW / self.slowest).min(self.fastest.recip()),
+            SHIFT_ABOVE / self.fastest,
+        )
     }
 
-    /// Log-spaced times of the step responses by which the basis is truncated \[s\].
-    pub(super) fn truncation_times(&self) -> Vec<f64> {
+    /// Log-spaced times of the step responses by which the basis is truncated \[s\], each with its weight: less the further
+    /// before the shortest time asked for.
+    pub(super) fn truncation_times(&self) -> Vec<(f64, f64)> {
         log_spaced(self.fastest / TRUNCATE_FROM, self.slowest, TRUNCATE_TIMES)
+            .into_iter()
+            .map(|t| (t, (t / self.fastest).sqrt().min(1.0)))
+            .collect()
     }
 
     /// Log-spaced times of the certificate \[s\].

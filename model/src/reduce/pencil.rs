@@ -8,10 +8,10 @@
 use faer::sparse::{SparseColMat, SparseColMatRef, SymbolicSparseColMat, SymbolicSparseColMatRef};
 
 use super::Factors;
-use super::modal::factor_on;
+use super::modal::{factor_on, layer_of};
 use super::rows::Rows;
 use crate::ModelError;
-use crate::weak_form::{SparseBlock, System};
+use crate::weak_form::{PatchShares, SparseBlock, System};
 
 /// K and M of the full system at one set of parameters, on their common pattern.
 pub(super) struct Pencil {
@@ -23,8 +23,18 @@ pub(super) struct Pencil {
 impl Pencil {
     /// Sums the blocks, each times its factor.
     pub(super) fn assemble(system: &System, factors: &Factors) -> Result<Self, ModelError> {
+        Self::assemble_patched(system, &PatchShares::default(), factors)
+    }
+
+    /// The same with patches: with a factor f on a patch, f - 1 times its share is added to that of its layer.
+    pub(super) fn assemble_patched(
+        system: &System,
+        patches: &PatchShares,
+        factors: &Factors,
+    ) -> Result<Self, ModelError> {
         let n = system.size;
-        for block in system.mass.iter().chain(&system.stiffness) {
+        let all = system.mass.iter().chain(&system.stiffness);
+        for block in all.chain(&patches.mass).chain(&patches.stiffness) {
             if block.matrix.nrows() != n || block.matrix.ncols() != n {
                 return Err(ModelError::Size {
                     what: "rows of a block of the discrete ground",
@@ -33,15 +43,9 @@ impl Pencil {
                 });
             }
         }
-        let scaled = |blocks: &[SparseBlock]| -> Result<Vec<f64>, ModelError> {
-            blocks
-                .iter()
-                .map(|b| factor_on(b.parameter, factors))
-                .collect()
-        };
         let shares = [
-            (&system.stiffness, scaled(&system.stiffness)?),
-            (&system.mass, scaled(&system.mass)?),
+            scaled(&system.stiffness, &patches.stiffness, factors)?,
+            scaled(&system.mass, &patches.mass, factors)?,
         ];
         let (mut ends, mut rows) = (vec![0], Vec::new());
         let mut values = [Vec::new(), Vec::new()];
@@ -49,9 +53,8 @@ impl Pencil {
         let mut seen = vec![usize::MAX; n];
         for j in 0..n {
             let start = rows.len();
-            for (which, (blocks, factors)) in shares.iter().enumerate() {
-                for (block, factor) in blocks.iter().zip(factors) {
-                    let matrix = block.matrix.as_ref();
+            for (which, blocks) in shares.iter().enumerate() {
+                for (matrix, factor) in blocks {
                     let range = matrix.symbolic().col_range(j);
                     for (&i, &value) in matrix.symbolic().row_idx()[range.clone()]
                         .iter()
@@ -113,6 +116,29 @@ impl Pencil {
             .map(|(k, m)| k + s * m);
         SparseColMat::new(self.pattern.clone(), values.collect())
     }
+}
+
+/// A matrix and what it is multiplied by.
+type Weighed<'a> = (SparseColMatRef<'a, usize, f64>, f64);
+
+/// Blocks and patches, each with what it is multiplied by.
+fn scaled<'a>(
+    blocks: &'a [SparseBlock],
+    patches: &'a [SparseBlock],
+    factors: &Factors,
+) -> Result<Vec<Weighed<'a>>, ModelError> {
+    let mut scaled = Vec::with_capacity(blocks.len());
+    for block in blocks {
+        scaled.push((block.matrix.as_ref(), factor_on(block.parameter, factors)?));
+    }
+    for block in patches {
+        let more = factor_on(layer_of(block.parameter), factors)?
+            * (factor_on(block.parameter, factors)? - 1.0);
+        if more != 0.0 {
+            scaled.push((block.matrix.as_ref(), more));
+        }
+    }
+    Ok(scaled)
 }
 
 /// A symmetric sparse matrix (both triangles stored) times a tall block: column j of the matrix is its row j.

@@ -12,6 +12,9 @@ use crate::weak_form::{Functional, Parameter, SparseBlock, System};
 
 /// Shifts used in any case at the described parameters, so that one lucky midpoint cannot end the search.
 const FEWEST_SHIFTS: usize = 5;
+/// With n shifts evenly spread over `ln(highest / lowest)` the error at any node is about this share of the peak times
+/// `exp(-pi^2 n / (2 ln(4 highest / lowest)))`: the exponent is Zolotarev's for real poles (from memory), the factor was measured with some reserve.
+const EVEN_ERROR: f64 = 0.1;
 /// Shifts at most for each set of other parameters.
 const SHIFTS_A_SAMPLE: usize = 5;
 
@@ -27,9 +30,10 @@ pub(super) struct Found<'a> {
 
 /// Searches at the described parameters, then at those that differ in a way that a basis for the described ones cannot follow.
 ///
-/// Shifts are placed by bisection on a logarithmic scale. The solution at a new shift shows exactly how far the basis
-/// without it was off there, which is its residual in the norm dual to K + s M; the interval with the largest such error
-/// is bisected next.
+/// At the described parameters as many shifts as the tolerance asks for are spread evenly on a logarithmic scale: bisection alone
+/// leaves some gaps twice as wide as others, and the widest decides the error far from the ports. What remains is
+/// placed by bisection. The solution at a new shift shows exactly how far the basis without it was off there, which is its residual
+/// in the norm dual to K + s M; the interval with the largest such error is bisected next.
 pub(super) fn search<'a>(
     system: &'a System,
     ports: &[&Functional],
@@ -56,14 +60,8 @@ pub(super) fn search<'a>(
         ports,
         peaks: Vec::new(),
     };
-    described.bisect(
-        &mut span,
-        &mut factors,
-        &mut shifts,
-        options,
-        FEWEST_SHIFTS,
-        options.max_shifts,
-    )?;
+    let even = even_count(options).clamp(2, options.max_shifts);
+    described.fill(&mut span, &mut factors, &mut shifts, options, even)?;
     for parameters in &samples {
         let mut other = Sample {
             pencil: Pencil::assemble(system, parameters)?,
@@ -71,14 +69,11 @@ pub(super) fn search<'a>(
             ports,
             peaks: Vec::new(),
         };
-        other.bisect(
-            &mut span,
-            &mut factors,
-            &mut shifts,
-            options,
-            2,
-            SHIFTS_A_SAMPLE,
-        )?;
+        let few = ReduceOptions {
+            max_shifts: SHIFTS_A_SAMPLE,
+            ..options.clone()
+        };
+        other.fill(&mut span, &mut factors, &mut shifts, &few, 2)?;
     }
     Ok(Found {
         span,
@@ -86,6 +81,20 @@ pub(super) fn search<'a>(
         peaks: described.peaks,
         samples: std::iter::once(Vec::new()).chain(samples).collect(),
     })
+}
+
+/// Evenly spread shifts that the tolerance asks for.
+fn even_count(options: &ReduceOptions) -> usize {
+    let (low, high) = options.shift_span();
+    let digits = (EVEN_ERROR / options.tolerance).ln().max(0.0);
+    let count = 2.0 * (4.0 * high / low).ln() * digits / std::f64::consts::PI.powi(2);
+    #[expect(
+        clippy::cast_possible_truncation,
+        clippy::cast_sign_loss,
+        reason = "not negative, and of the order of the digits asked for"
+    )]
+    let count = count.ceil() as usize;
+    count.max(FEWEST_SHIFTS)
 }
 
 /// Sets of parameters that a basis for the described ones cannot follow.
@@ -127,33 +136,59 @@ struct Sample<'p, 'a> {
 }
 
 impl Sample<'_, '_> {
-    fn bisect(
+    /// Takes solutions at `even` shifts spread evenly, then bisects where the error is worst, down to the tolerance or up to
+    /// `options.max_shifts`.
+    fn fill(
         &mut self,
         span: &mut Span<'_>,
         factors: &mut ShiftedCholesky,
         shifts: &mut Vec<f64>,
         options: &ReduceOptions,
-        fewest: usize,
-        most: usize,
+        even: usize,
     ) -> Result<(), ModelError> {
         let (low, high) = options.shift_span();
-        let mut add = |s: f64| {
-            shifts.push(s);
-            self.add(span, factors, s)
+        let (low, step) = (low.ln(), (high / low).ln() / (even - 1) as f64);
+        let mut add = |at: f64| {
+            shifts.push(at.exp());
+            self.add(span, factors, at.exp())
         };
-        let ends = f64::max(add(low)?, add(high)?);
-        let (low, high) = (low.ln(), high.ln());
-        let mut intervals = vec![(low, high, ends)];
-        for count in 2..most {
+        // Every other one first: what those between find is the error of a spread half as dense, whose square is that of the whole.
+        let mut errors = vec![1.0; even];
+        for start in [0, 1] {
+            for k in (start..even).step_by(2) {
+                let error = add(low + step * k as f64)?;
+                if let Some(kept) = errors.get_mut(k) {
+                    *kept = error;
+                }
+            }
+        }
+        let between = |k: usize| {
+            let seen = errors.get(k - k % 2 + 1).copied().unwrap_or(1.0);
+            if even > 2 {
+                seen * seen
+            } else {
+                errors.iter().copied().fold(seen, f64::max)
+            }
+        };
+        let mut intervals: Vec<(f64, f64, f64)> = (0..even - 1)
+            .map(|k| {
+                (
+                    low + step * k as f64,
+                    low + step * (k + 1) as f64,
+                    between(k),
+                )
+            })
+            .collect();
+        for _ in even..options.max_shifts {
             let (at, worst) = intervals.iter().enumerate().fold((0, 0.0), |best, (k, i)| {
                 if i.2 > best.1 { (k, i.2) } else { best }
             });
-            if count >= fewest && worst <= options.tolerance {
+            if worst <= options.tolerance {
                 break;
             }
             let (from, to, _) = intervals.swap_remove(at);
             let middle = 0.5 * (from + to);
-            let error = add(middle.exp())?;
+            let error = add(middle)?;
             intervals.push((from, middle, error));
             intervals.push((middle, to, error));
         }

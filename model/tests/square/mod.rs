@@ -149,6 +149,7 @@ pub fn reduced(ground: &Ground) -> Reduced {
         certificate: Certificate {
             ports: 0.0,
             random_nodes: 0.0,
+            leaks: 0.0,
             box_corners: None,
             full_size: modes,
             modes,
@@ -265,6 +266,7 @@ pub fn commissioned() -> &'static Commissioned {
             ground,
             reduced,
             calibration,
+            numerics: None,
         }
     })
 }

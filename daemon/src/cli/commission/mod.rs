@@ -12,6 +12,7 @@ mod doubts;
 mod embankment;
 mod figures;
 mod grounds;
+mod numbers;
 mod page;
 
 use super::progress;
@@ -258,7 +259,6 @@ pub(super) fn summary(site: &Site, ground: &GroundFile) -> String {
 fn ground_summary(site: &Site, commissioned: &Commissioned) -> String {
     use std::fmt::Write as _;
     let calibration = &commissioned.calibration;
-    let certificate = &commissioned.reduced.certificate;
     let plan = block_plan(site);
     let mut text = String::new();
     let (first, last) = calibration.blocks;
@@ -270,11 +270,7 @@ fn ground_summary(site: &Site, commissioned: &Commissioned) -> String {
         plan.start_of(last + 1),
         last + 1 - first
     );
-    let _ = writeln!(
-        text,
-        "model         {} unknowns, {} modes; worst step response {:.1e} at ports, {:.1e} at random nodes",
-        certificate.full_size, certificate.modes, certificate.ports, certificate.random_nodes
-    );
+    text += &numbers::numbers(commissioned);
     let mut table = Table::new(&[
         ("figure", Align::Left),
         ("site file", Align::Right),

@@ -261,7 +261,7 @@ fn numerics(found: &Found<'_>, shown: &Shown) -> Vec<String> {
         format!("{} east, {} north", show(x), show(y))
     };
     let (fastest, slowest) = certificate.times;
-    vec![
+    let mut said = vec![
         format!(
             "{} triangles, {} nodes a layer; least angle {:.0} degrees (at {}), steepest grading {:.1} (at {}).",
             shown.quality.triangles,
@@ -284,7 +284,16 @@ fn numerics(found: &Found<'_>, shown: &Shown) -> Vec<String> {
             "A mesh with three quarters of the points on a ring moves responses by {:.1e} of their peak, linear in place of quadratic elements by {:.1e}.",
             shown.spread.sizes, shown.spread.schemes
         ),
-    ]
+    ];
+    if let Some(numerics) = &found.commissioned.numerics {
+        said.push(format!(
+            "With the fitted parameters and patches: {:.1e} at wells and gauges, {:.1e} at nodes drawn at random. The watch leaves {:.1e} of every response to the numbers, so that no alarm is tighter.",
+            numerics.fitted.ports,
+            numerics.fitted.random_nodes,
+            numerics.pair(),
+        ));
+    }
+    said
 }
 
 /// How every channel stood over the history.
