@@ -67,6 +67,8 @@ pub struct Places {
     pub centre: Point,
     /// Half-width of the array: the largest distance of a well or gauge from its centre \[m\].
     pub half_width: f64,
+    /// Wells and gauges, each place once.
+    pub(crate) seats: Vec<Point>,
     /// Rings of the lattice of images.
     rings: usize,
     /// Distance from the centre within which an image may lie \[m\].
@@ -95,10 +97,11 @@ impl Places {
             lines: Vec::new(),
             centre,
             half_width,
+            seats,
             rings,
             reach,
         };
-        places.lines = places.fan(ground, &seats);
+        places.lines = places.fan(ground);
         places
     }
 
@@ -110,6 +113,7 @@ impl Places {
             lines: Vec::new(),
             centre: [0.0; 2],
             half_width: 1.0,
+            seats: Vec::new(),
             rings: 0,
             reach: 0.0,
         }
@@ -193,9 +197,9 @@ impl Places {
     }
 
     /// Lines behind the whole array.
-    fn fan(&self, ground: &Ground, seats: &[Point]) -> Vec<Line> {
+    fn fan(&self, ground: &Ground) -> Vec<Line> {
         let mut lines = Vec::new();
-        if seats.is_empty() {
+        if self.seats.is_empty() {
             return lines;
         }
         for step in 0..AZIMUTHS {

@@ -13,6 +13,7 @@ use std::f64::consts::{FRAC_PI_3, TAU};
 use nalgebra::DMatrix;
 
 use crate::commission::Places;
+use crate::commission::places::distance;
 use crate::ground::Point;
 
 /// Finer places from one place of the lattice to the next.
@@ -35,6 +36,7 @@ pub(crate) struct Candidates {
 #[derive(Debug, Clone)]
 pub(crate) struct Between {
     spacing: f64,
+    seats: Vec<Point>,
     /// By candidate: its six neighbours, counter-clockwise from east; `None` on the rim and beside wells and gauges.
     neighbours: Vec<Option<[usize; 6]>>,
 }
@@ -61,8 +63,20 @@ impl Between {
             .collect();
         Self {
             spacing,
+            seats: places.seats.clone(),
             neighbours,
         }
+    }
+
+    /// Relative error of a signature mixed at a place: of the third order in the spacing over the distance to the nearest well or
+    /// gauge, beside which signatures change fastest.
+    pub(crate) fn error(&self, at: Point) -> f64 {
+        let nearest = self
+            .seats
+            .iter()
+            .map(|seat| distance(*seat, at))
+            .fold(f64::INFINITY, f64::min);
+        (0.5 * self.spacing / nearest.max(self.spacing)).powi(3)
     }
 
     /// Finer candidates about the leading ones of `coarse`, whose places are given with the log of their evidence. Returns the

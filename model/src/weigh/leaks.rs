@@ -17,6 +17,11 @@ use crate::finding::Place;
 const HOPELESS: f64 = 1_000.0;
 /// Parts of the way from one pace of growth to the next.
 const BETWEEN: [f64; 4] = [0.0, 0.25, 0.5, 0.75];
+/// Relative error of a leak's signature between paces of growth even in the plainest ground, and of its size.
+const PACES: f64 = 0.01;
+const SIZE: f64 = 0.03;
+/// Radius that holds 90 % of a round normal distribution, in standard deviations.
+const NINETY: f64 = 2.146;
 /// Least radius that holds a place with 90 %, in half-widths of the array.
 const FINEST: f64 = 0.02;
 
@@ -119,6 +124,22 @@ impl Weights<'_> {
         all
     }
 
+    /// What is not known of signatures makes places and sizes less sure: one that is off by a share of itself may lose that share
+    /// squared of its evidence by chance.
+    pub(super) fn doubt(&self, all: &mut [Hypothesis]) {
+        let Some(best) = all.iter().max_by(|a, b| a.log.total_cmp(&b.log)) else {
+            return;
+        };
+        let (at, best) = (best.at, best.log.max(0.0));
+        let share = self.mismatch.max(PACES).max(self.between.error(at));
+        let doubt = 1.0 + share.powi(2) * best / self.gauges.max(1) as f64;
+        for hypothesis in all {
+            hypothesis.log = best + (hypothesis.log - best) / doubt;
+            let of_size = share.max(SIZE) * hypothesis.mean;
+            hypothesis.sd = (doubt * hypothesis.sd.powi(2) + of_size.powi(2)).sqrt();
+        }
+    }
+
     /// The candidates of the lattice.
     fn lattice(&self) -> Candidates {
         let weights = self.leak_weights();
@@ -200,12 +221,14 @@ impl Weights<'_> {
             .iter()
             .map(|(at, share)| (distance(*at, centre), share / sum))
             .collect();
-        let grid = FINEST * self.places.half_width;
+        // Where the ground is known only so well, a leak's distances are.
+        let moved = NINETY * self.mismatch * self.places.half_width;
+        let least = FINEST * self.places.half_width;
         Some(Place {
             x: centre[0],
             y: centre[1],
             layer,
-            radius_90: radius_90(&mut spread).max(grid),
+            radius_90: radius_90(&mut spread).max(least).hypot(moved),
         })
     }
 }

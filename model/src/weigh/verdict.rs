@@ -22,8 +22,6 @@ use crate::ground::Point;
 /// Prior covariance, as a share of an abrupt cause's variance, of its full effect and of its effect within the onset's
 /// block: it begins anywhere in that block.
 const ABRUPT: [[f64; 2]; 2] = [[1.0, 0.5], [0.5, 1.0 / 3.0]];
-/// Relative error of a leak's signature between places and growths even in the plainest ground.
-const LATTICE: f64 = 0.01;
 /// Of a cause that has no place.
 const NOWHERE: Point = [f64::NAN; 2];
 /// Weight of a leak outside the outline, beside one inside.
@@ -375,14 +373,7 @@ impl Weights<'_> {
             }
         }
         if cause == Cause::Leak {
-            // A signature that is off by a share of itself may lose that share squared of its evidence by chance.
-            let best = all.iter().map(|h| h.log).fold(0.0, f64::max);
-            let share = self.mismatch.max(LATTICE);
-            let doubt = 1.0 + share.powi(2) * best / self.gauges.max(1) as f64;
-            for hypothesis in &mut all {
-                hypothesis.log = best + (hypothesis.log - best) / doubt;
-                hypothesis.sd *= doubt.sqrt();
-            }
+            self.doubt(&mut all);
         }
         self.summary(cause, ladder, &all)
     }
