@@ -162,13 +162,7 @@ fn calibrate(site: &Site, log: &Path) -> Result<Calibration> {
     let blocks = history.blocks(&plan, first, plan.start_of(plan.index_of(last) + 1));
     let reduced = reduce_ground(&site.ground, &mut |_, _| {})?;
     let settings = CommissionSettings::default();
-    let (calibration, _) = commission(
-        &site.ground,
-        &reduced,
-        &blocks,
-        &settings,
-        &mut |_| {},
-    )?;
+    let (calibration, _) = commission(&site.ground, &reduced, &blocks, &settings, &mut |_| {})?;
     Ok(calibration)
 }
 

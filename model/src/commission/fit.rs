@@ -124,6 +124,10 @@ pub fn commission(
     }
     progress(0.8);
     let (calibration, account) = fit.finish((first.index, last.index))?;
+    let skins = calibration.skins.iter().zip(&calibration.skin_sd);
+    for (well, (skin, sd)) in ground.wells.iter().zip(skins) {
+        refuse::skin(&well.name, *skin, *sd)?;
+    }
     progress(1.0);
     Ok((calibration, Account { tried, ..account }))
 }

@@ -12,6 +12,11 @@ use crate::ModelError;
 use crate::block::Block;
 use crate::ground::Ground;
 
+/// Least skin of a well, far below what any stimulation reaches: a fracture of a hundred times the well's radius has -4
+/// (common practice, no source).
+const LEAST_SKIN: f64 = -8.0;
+/// Standard deviations beyond it that are no chance.
+const CERTAINLY: f64 = 3.0;
 /// Change of a rate that counts, as a share of the largest.
 const CHANGE: f64 = 0.05;
 /// How much smaller what is left must be, as a mean logarithm over gauges, before a sign is called wrong.
@@ -68,6 +73,19 @@ pub fn check_history(ground: &Ground, history: &[Block]) -> Result<(), ModelErro
         )));
     }
     Ok(())
+}
+
+/// Refuses a fitted skin that no stimulation gives: a fit that asks for it has been told something wrong.
+///
+/// # Errors
+/// [`ModelError::History`] with the name of the well, and the mend.
+pub(super) fn skin(well: &str, fitted: f64, sd: f64) -> Result<(), ModelError> {
+    if fitted >= LEAST_SKIN - CERTAINLY * sd {
+        return Ok(());
+    }
+    Err(ModelError::History(format!(
+        "it asks for a skin of {fitted:.1} at {well}, which no well has; check the sign of its rate (positive is into the ground: injection positive, production negative), the unit of its rate, and that its gauge is in that well"
+    )))
 }
 
 fn rates(history: &[Block], well: usize) -> impl Iterator<Item = f64> {
@@ -199,5 +217,21 @@ fn beside(line: &DMatrix<f64>, values: DVector<f64>) -> DVector<f64> {
             values - fitted
         }
         None => values,
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn a_skin_that_no_well_has_is_refused_by_the_wells_name() {
+        assert!(skin("Q-1", -4.5, 0.1).is_ok());
+        assert!(skin("Q-1", -12.0, 2.0).is_ok(), "it may be by chance");
+        let why = skin("Q-1", -22.0, 0.3).unwrap_err().to_string();
+        assert!(
+            why.contains("Q-1") && why.contains("sign of its rate"),
+            "{why}"
+        );
     }
 }

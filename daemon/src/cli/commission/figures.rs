@@ -180,6 +180,17 @@ fn describe(site: &Site, parameter: Parameter) -> (String, Option<Dimension>, f6
             Some(Dimension::Storage),
             ground.wells.get(i).map_or(f64::NAN, |w| w.storage),
         ),
+        Parameter::Stage(i) => {
+            let stage = ground.stages.get(i);
+            (
+                format!(
+                    "conductance of the bed of {}",
+                    stage.map_or("a stage", |s| s.name.as_str())
+                ),
+                Some(Dimension::Conductance),
+                stage.map_or(f64::NAN, |s| s.conductance),
+            )
+        }
         other => (format!("{other:?}, as a factor").to_lowercase(), None, 1.0),
     }
 }
