@@ -160,7 +160,7 @@ mod tests {
         let levels = levels(&pieces, 1.3e6, 1e-5);
         let all = changes(&levels, 1.3e6, 1e-3, 1e5);
         assert_eq!(all.len(), 4);
-        // Radial flow is reached at once at a tenth of a metre.
+        // At a tenth of a metre radial flow lacks exp(-u) - 1, which is 6e-6 after ten minutes.
         let change = all[3];
         let felt = |dt: f64| superpose(&path, change.at + dt, |t| line_source(0.1, T, S, t));
         let points: Vec<(f64, f64)> = (0..100)
@@ -172,7 +172,7 @@ mod tests {
         assert!(points.windows(2).all(|w| w[0].0 < w[1].0));
         let plateau = change.by / (4.0 * PI * T);
         for (index, slope) in bourdet(&points, 0.2) {
-            assert!((slope / plateau - 1.0).abs() < 1e-6, "{index}: {slope}");
+            assert!((slope / plateau - 1.0).abs() < 1e-5, "{index}: {slope}");
         }
         // By the plain logarithm of time it bends.
         let plain: Vec<(f64, f64)> = (0..100)

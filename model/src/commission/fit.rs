@@ -126,7 +126,7 @@ pub fn commission(
     let (calibration, account) = fit.finish((first.index, last.index))?;
     let skins = calibration.skins.iter().zip(&calibration.skin_sd);
     for (well, (skin, sd)) in ground.wells.iter().zip(skins) {
-        refuse::skin(&well.name, *skin, *sd)?;
+        refuse::skin(&well.name, well.skin.min(0.0) + *skin, *sd)?;
     }
     progress(1.0);
     Ok((calibration, Account { tried, ..account }))
@@ -365,18 +365,17 @@ impl<'a> Fit<'a> {
             let share = step.share_within(radius);
             let length = step.length();
             // Until scales are learned, and across a change of the noise, one round's evidence says nothing of another's.
-            if round
+            let settled = round
                 .checked_sub(let_in)
-                .is_some_and(|r| RELEARNED.contains(&r))
-            {
+                .is_some_and(|r| !RELEARNED.contains(&r));
+            if !settled {
                 best = None;
-            }
-            // The evidence is that of the parameters before this round's step, under the scales learned in it.
-            if round > let_in && best.as_ref().is_none_or(|b| self.log_evidence > b.0) {
+            } else if best.as_ref().is_none_or(|b| self.log_evidence > b.0) {
+                // The evidence is that of the parameters before this round's step, under the scales learned in it.
                 best = Some((self.log_evidence, self.state.clone(), step.clone(), share));
             }
             step.take(&mut self.state, share);
-            if round >= let_in + 2 && length < SETTLED {
+            if settled && length < SETTLED {
                 break;
             }
         }

@@ -60,7 +60,7 @@ pub(super) fn search<'a>(
         ports,
         peaks: Vec::new(),
     };
-    let even = even_count(options).clamp(2, options.max_shifts);
+    let even = even_count(options).min(options.max_shifts).max(2);
     described.fill(&mut span, &mut factors, &mut shifts, options, even)?;
     for parameters in &samples {
         let mut other = Sample {

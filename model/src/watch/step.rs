@@ -156,7 +156,7 @@ impl Watch {
             whitener,
             images,
             bank,
-            between: Between::new(&places),
+            between: Between::new(&ground, &places),
             places,
             skins,
             state,

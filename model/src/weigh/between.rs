@@ -14,12 +14,15 @@ use nalgebra::DMatrix;
 
 use crate::commission::Places;
 use crate::commission::places::distance;
-use crate::ground::Point;
+use crate::ground::mesh::cross;
+use crate::ground::{Ground, Point};
 
 /// Finer places from one place of the lattice to the next.
 const FINER: i32 = 5;
 /// Places of the lattice looked about.
 const LOOKED_ABOUT: usize = 10;
+/// Width of a cell's border, in spacings.
+const BORDER: f64 = 1e-9;
 /// How far a distance may be off and still be that of neighbours, as a share of the spacing.
 const LEEWAY: f64 = 1e-3;
 
@@ -37,12 +40,14 @@ pub(crate) struct Candidates {
 pub(crate) struct Between {
     spacing: f64,
     seats: Vec<Point>,
-    /// By candidate: its six neighbours, counter-clockwise from east; `None` on the rim and beside wells and gauges.
+    /// By candidate: its six neighbours, counter-clockwise from east; `None` on the rim, beside wells and gauges, and at
+    /// lines where signatures jump or bend.
     neighbours: Vec<Option<[usize; 6]>>,
 }
 
 impl Between {
-    pub(crate) fn new(places: &Places) -> Self {
+    pub(crate) fn new(ground: &Ground, places: &Places) -> Self {
+        let lines = lines(ground);
         let candidates = places.all.get(..places.candidates).unwrap_or_default();
         let spacing = places.spacing();
         let at = |point: Point, layer: usize| {
@@ -56,7 +61,11 @@ impl Between {
                 let mut six = [0; 6];
                 for (k, neighbour) in (0_i32..).zip(&mut six) {
                     let (sin, cos) = (FRAC_PI_3 * f64::from(k)).sin_cos();
-                    *neighbour = at([point[0] + spacing * cos, point[1] + spacing * sin], layer)?;
+                    let there = [point[0] + spacing * cos, point[1] + spacing * sin];
+                    if lines.iter().any(|line| crossed(*line, (point, there))) {
+                        return None;
+                    }
+                    *neighbour = at(there, layer)?;
                 }
                 Some(six)
             })
@@ -131,6 +140,34 @@ impl Between {
     }
 }
 
+/// Lines at which signatures jump or bend: nothing is mixed across them.
+fn lines(ground: &Ground) -> Vec<(Point, Point)> {
+    let open = ground.barriers.iter().map(|b| &b.line);
+    let open = open.chain(ground.stages.iter().map(|s| &s.line));
+    let open = open.chain(ground.wells.iter().map(|w| &w.trace));
+    let mut lines: Vec<(Point, Point)> = open.flat_map(|line| segments(line)).collect();
+    for zone in &ground.zones {
+        lines.extend(segments(&zone.outline));
+        lines.extend(
+            zone.outline
+                .last()
+                .copied()
+                .zip(zone.outline.first().copied()),
+        );
+    }
+    lines
+}
+
+fn segments(line: &[Point]) -> impl Iterator<Item = (Point, Point)> {
+    line.iter().copied().zip(line.iter().skip(1).copied())
+}
+
+/// Whether two segments cross or touch.
+fn crossed((a, b): (Point, Point), (c, d): (Point, Point)) -> bool {
+    let sides = |p: Point, q: Point, r: Point, s: Point| cross(p, q, r) * cross(p, q, s) <= 0.0;
+    sides(a, b, c, d) && sides(c, d, a, b)
+}
+
 /// Offsets of the finer places that are nearer to the middle than to any neighbour \[m\].
 fn offsets(spacing: f64) -> Vec<Point> {
     let step = 1.0 / f64::from(FINER);
@@ -141,9 +178,11 @@ fn offsets(spacing: f64) -> Vec<Point> {
                 step * (f64::from(column) + 0.5 * f64::from(row)),
                 step * f64::from(row) * 0.75_f64.sqrt(),
             ];
+            // Of a border two cells share, each has half.
             let within = (0..6).all(|k| {
                 let (sin, cos) = (TAU * f64::from(k) / 6.0).sin_cos();
-                at[0] * cos + at[1] * sin < 0.5
+                let border = if k < 3 { 0.5 + BORDER } else { 0.5 - BORDER };
+                at[0] * cos + at[1] * sin < border
             });
             if within {
                 out.push([spacing * at[0], spacing * at[1]]);
@@ -188,10 +227,20 @@ mod tests {
     }
 
     #[test]
+    fn nothing_is_mixed_across_a_line() {
+        let line = ([0.0, -1.0], [0.0, 1.0]);
+        assert!(crossed(line, ([-1.0, 0.2], [1.0, 0.3])));
+        assert!(crossed(line, ([-1.0, 0.0], [0.0, 0.0])));
+        assert!(!crossed(line, ([-1.0, 2.0], [1.0, 1.5])));
+        assert!(!crossed(line, ([0.5, 0.0], [1.0, 0.0])));
+    }
+
+    #[test]
     fn finer_places_fill_a_cell_once() {
         let offsets = offsets(100.0);
         // A cell of the lattice holds as many of the finer lattice as its area does.
-        assert!((20..=31).contains(&offsets.len()), "{}", offsets.len());
+        let count = usize::try_from(FINER * FINER).unwrap();
+        assert_eq!(offsets.len(), count);
         assert!(
             offsets
                 .iter()
