@@ -80,46 +80,64 @@ pub fn commission(
         )));
     }
     refuse::check_history(ground, history)?;
-    let mut begun = 0.0;
     // Fits are compared by evidence on the same readings, so those set aside by the first are set aside in all.
-    let mut settled = |spread: f64, sought: bool, aside: Option<&[usize]>| {
-        let mut fit = Fit::start(ground, reduced, history, settings, block)?;
-        fit.state.scales.patch = [spread; 2];
-        fit.sought = sought;
-        if let Some(aside) = aside {
-            fit.known_aside = true;
-            fit.state.aside = aside.to_vec();
-        }
-        fit.settle(&mut |share| progress(0.05 + 0.19 * (begun + share)))?;
-        begun += 1.0;
-        Ok::<Fit<'_>, ModelError>(fit)
-    };
+    let settled =
+        |spread: f64, sought: bool, aside: Option<&[usize]>, told: &mut dyn FnMut(f64)| {
+            let mut fit = Fit::start(ground, reduced, history, settings, block)?;
+            fit.state.scales.patch = [spread; 2];
+            fit.sought = sought;
+            if let Some(aside) = aside {
+                fit.known_aside = true;
+                fit.state.aside = aside.to_vec();
+            }
+            fit.settle(told)?;
+            Ok::<Fit<'_>, ModelError>(fit)
+        };
     // Begun from an even ground the fit is sure to end well where the ground is even; where it is not, either beginning may
-    // end in a blind alley. What has once been fitted is not lost by a trial that fails.
-    let mut fit = settled(EVEN, false, None)?;
+    // end in a blind alley. So uneven a ground may also be an even one with a barrier. What has once been fitted is not lost by
+    // a fit that fails; those that follow the first know nothing of each other, so they may run at once.
+    let mut fit = settled(EVEN, false, None, &mut |share| {
+        progress(0.05 + 0.35 * share)
+    })?;
     let aside = fit.state.aside.clone();
     let aside = Some(aside.as_slice());
-    if fit.spread_between_patches() > VARIED {
-        fit = better(fit, settled(TYPICAL_PATCH, false, aside));
+    let (varied, uneven) = (
+        fit.spread_between_patches() > VARIED,
+        settings.barrier && fit.spread_between_patches() > UNEVEN,
+    );
+    let (again, even, patchy) = std::thread::scope(|scope| {
+        let others = uneven.then(|| {
+            (
+                scope.spawn(|| settled(EVEN, true, aside, &mut |_| ())),
+                scope.spawn(|| settled(TYPICAL_PATCH, true, aside, &mut |_| ())),
+            )
+        });
+        let again = varied.then(|| {
+            settled(TYPICAL_PATCH, false, aside, &mut |share| {
+                progress(0.4 + 0.3 * share);
+            })
+        });
+        let (even, patchy) = others.map_or((None, None), |(even, patchy)| {
+            (even.join().ok(), patchy.join().ok())
+        });
+        (again, even, patchy)
+    });
+    if let Some(again) = again {
+        fit = better(fit, again);
     }
     let mut tried = vec![fit.tried(GroundKind::AsDescribed, fit.log_evidence)];
-    if settings.barrier && fit.spread_between_patches() > UNEVEN {
-        // So uneven a ground may be an even one with a barrier.
-        let other = match settled(EVEN, true, aside) {
-            Ok(one) => Ok(better(one, settled(TYPICAL_PATCH, true, aside))),
-            Err(_) => settled(TYPICAL_PATCH, true, aside),
-        };
-        if let Ok(mut other) = other
-            && other.state.suspect.is_some()
-        {
-            tried.push(other.tried(GroundKind::Barrier, other.log_evidence - OCCAM));
-            let log_evidence = other.log_evidence - fit.log_evidence - OCCAM;
-            if let Some(suspect) = &mut other.state.suspect {
-                suspect.log_evidence = log_evidence;
-            }
-            if log_evidence > BELIEVED {
-                fit = other;
-            }
+    let barriers = [even, patchy].into_iter().flatten().flatten();
+    let other = barriers.max_by(|a, b| a.log_evidence.total_cmp(&b.log_evidence));
+    if let Some(mut other) = other
+        && other.state.suspect.is_some()
+    {
+        tried.push(other.tried(GroundKind::Barrier, other.log_evidence - OCCAM));
+        let log_evidence = other.log_evidence - fit.log_evidence - OCCAM;
+        if let Some(suspect) = &mut other.state.suspect {
+            suspect.log_evidence = log_evidence;
+        }
+        if log_evidence > BELIEVED {
+            fit = other;
         }
     }
     progress(0.8);

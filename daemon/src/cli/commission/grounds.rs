@@ -147,7 +147,7 @@ pub(super) fn choice(found: &Found<'_>) -> String {
     let mend = match best.kind {
         GroundKind::AsDescribed => "",
         GroundKind::Barrier => {
-            "The watch has the barrier to report; if you know of it, declare it with [[barrier]] and commission again."
+            "The watch reports the barrier if what follows bears it out; if you know of it, declare it with [[barrier]] and commission again."
         }
         GroundKind::Leaky => {
             "The ground file still holds the ground as described. To take the leak up, declare the bed that feeds or drains as a further [[layer]] of much storage, join the two by leakance_up, and commission again."

@@ -235,13 +235,20 @@ pub(super) fn commission_site(
     ground
 }
 
+/// Log evidence from which a barrier is more than the scatter of fits of an uneven ground, which is some ten.
+const SURE: f64 = 20.0;
+
 /// A barrier that history asks for and the site file does not tell of.
 fn suspect(calibration: &Calibration) -> Option<String> {
     let suspect = calibration.suspect?;
+    let told = if suspect.log_evidence >= SURE {
+        "This history asks for a barrier that the site file does not tell of"
+    } else {
+        "A barrier that the site file does not tell of would explain this history a little better, which is no proof: fits of uneven grounds differ by as much. It would lie"
+    };
     Some(format!(
-        "This history asks for a barrier that the site file does not tell of: {:.0} m from the middle of the array, \
-         {:.0} degrees from east, counter-clockwise (log evidence {:.0}). The watch will report it; if you know of it, \
-         declare it with [[barrier]] and commission again.",
+        "{told}: {:.0} m from the middle of the array, {:.0} degrees from east, counter-clockwise (log evidence {:.0}). \
+         The watch reports it if what follows bears it out; if you know of it, declare it with [[barrier]] and commission again.",
         suspect.distance,
         suspect.azimuth.to_degrees().rem_euclid(360.0),
         suspect.log_evidence
