@@ -53,6 +53,9 @@ pub enum RateKnown {
     Read,
     /// The last rate held beyond its age: gauges that feel this well are blind.
     Stale,
+    /// The last value is too old to go by, but no gauge depends on it so much: it counts as its mean in history. Only of
+    /// an embankment's drives.
+    Lapsed,
 }
 
 /// What one gauge read in one block.

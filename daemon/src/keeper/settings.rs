@@ -7,7 +7,7 @@ use borewake_model::lagged::Driver;
 use super::{KeeperSettings, Pace};
 use crate::alarm::{AlarmSettings, Care, ChannelWatch, LimitSettings, Side, WatchAlarm};
 use crate::config::{self, DriveSettings, Site};
-use crate::watch::blocks::{BlockPlan, WellFeed};
+use crate::watch::blocks::{BlockPlan, Feeds, WellFeed};
 
 /// How blocks of a site are built.
 #[must_use]
@@ -19,19 +19,23 @@ pub fn block_plan(site: &Site) -> BlockPlan {
             channel: w.rate.clone(),
             share: w.share,
             holds: w.holds,
-            needed: true,
+            feeds: Feeds::Rate,
         })
         .chain(site.waters.iter().map(|w| WellFeed {
             channel: w.channel.clone(),
             share: w.weight,
             holds: w.holds,
-            needed: true,
+            feeds: Feeds::Level,
         }))
         .chain(drives(site).iter().map(|d| WellFeed {
             channel: d.channel.clone(),
             share: d.factor,
             holds: d.holds,
-            needed: matches!(d.driver, Driver::Pool | Driver::Tailwater),
+            feeds: match d.driver {
+                Driver::Pool | Driver::Tailwater => Feeds::Level,
+                Driver::Rain => Feeds::Rain,
+                Driver::Temperature | Driver::Barometer => Feeds::Colour,
+            },
         }))
         .collect();
     BlockPlan {

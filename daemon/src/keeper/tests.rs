@@ -194,7 +194,7 @@ fn settings() -> KeeperSettings {
                 channel: "q".into(),
                 share: 1.0,
                 holds: Holds::After,
-                needed: true,
+                feeds: crate::watch::blocks::Feeds::Rate,
             }],
             gauges: vec!["p".into()],
         },

@@ -19,8 +19,32 @@ pub struct WellFeed {
     pub share: f64,
     /// How values stand to their instants.
     pub holds: Holds,
-    /// Whether gauges are blind while it is too old. What only colours an embankment's answer may be held.
-    pub needed: bool,
+    /// What its silence does.
+    pub feeds: Feeds,
+}
+
+/// What a channel is to the model: what its silence does, and what stands before its first reading.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Feeds {
+    /// A rate: gauges are blind while it is too old, and before it was read nothing flowed.
+    Rate,
+    /// A level: gauges are blind while it is too old, and before it was read there is nothing to say.
+    Level,
+    /// What only colours an embankment's answer: it is held however old.
+    Colour,
+    /// Rain: too old it counts as its mean, for no rain lasts.
+    Rain,
+}
+
+impl Feeds {
+    /// How a path is known whose last reading is too old, or absent.
+    fn known(self, read: bool) -> RateKnown {
+        match self {
+            Self::Colour if read => RateKnown::Read,
+            Self::Rain => RateKnown::Lapsed,
+            _ => RateKnown::Stale,
+        }
+    }
 }
 
 /// What a block is built for: the channels of wells and gauges in the ground's order, and the tier's times.
@@ -158,15 +182,14 @@ impl BlockPlan {
             known = Some(reading);
         }
         put(end, value * well.share);
-        let fresh = known.is_some_and(|r| {
-            !well.needed || end.0 - r.sampled.0 <= self.hold_rate.saturating_add(self.length)
-        });
+        let fresh = known
+            .is_some_and(|r| end.0 - r.sampled.0 <= self.hold_rate.saturating_add(self.length));
         RatePath {
             pieces,
             known: if fresh {
                 RateKnown::Read
             } else {
-                RateKnown::Stale
+                well.feeds.known(known.is_some())
             },
         }
     }
@@ -286,7 +309,7 @@ mod tests {
                 channel: "q".into(),
                 share: 0.5,
                 holds,
-                needed: true,
+                feeds: Feeds::Rate,
             }],
             gauges: vec!["p".into(), "o".into()],
         }
@@ -348,6 +371,22 @@ mod tests {
             p.build(0, &BTreeMap::new(), &BTreeMap::new()).rates[0].known,
             RateKnown::Stale
         );
+    }
+
+    #[test]
+    fn silent_rain_lapses_and_what_only_colours_is_held() {
+        let before = BTreeMap::from([("q".into(), reading("q", 0, 2.0))]);
+        let mut plan = plan(Holds::After);
+        let mut known = |feeds, index, before: &BTreeMap<ChannelId, Reading>| {
+            plan.wells[0].feeds = feeds;
+            plan.build(index, &BTreeMap::new(), before).rates[0].known
+        };
+        assert_eq!(known(Feeds::Rain, 1, &before), RateKnown::Read);
+        assert_eq!(known(Feeds::Rain, 3, &before), RateKnown::Lapsed);
+        assert_eq!(known(Feeds::Rain, 1, &BTreeMap::new()), RateKnown::Lapsed);
+        assert_eq!(known(Feeds::Level, 3, &before), RateKnown::Stale);
+        assert_eq!(known(Feeds::Colour, 3, &before), RateKnown::Read);
+        assert_eq!(known(Feeds::Colour, 1, &BTreeMap::new()), RateKnown::Stale);
     }
 
     #[test]

@@ -2,8 +2,8 @@
 
 use std::collections::BTreeMap;
 
-use super::blocks::BlockPlan;
-use crate::record::{Block, ChannelId, Reading, Stamp};
+use super::blocks::{BlockPlan, Feeds};
+use crate::record::{Block, ChannelId, Holds, Reading, Stamp};
 
 /// Readings by channel, each in sample order and each key once.
 #[derive(Debug, Clone, Default)]
@@ -88,6 +88,33 @@ impl History {
         plan.build(index, &within, &before)
     }
 
+    /// From when on every level of a plan is known, and the channel that was read last of all; `None` where the plan has
+    /// none. A level never read is no level of zero, so nothing can be learned before.
+    ///
+    /// # Errors
+    /// The channel of a level that was never read.
+    pub fn levels_known(&self, plan: &BlockPlan) -> Result<Option<LevelsKnown>, ChannelId> {
+        let mut last: Option<LevelsKnown> = None;
+        let levels = plan.wells.iter();
+        for level in levels.filter(|w| matches!(w.feeds, Feeds::Level | Feeds::Colour)) {
+            let first = self.of(&level.channel).iter().find(|r| r.is_usable());
+            let read = first.ok_or_else(|| level.channel.clone())?.sampled;
+            let from = match level.holds {
+                Holds::After => read,
+                // What holds up to its instant says what was in the whole block before it.
+                Holds::Before => plan.start_of(plan.index_of(read.plus(-1))),
+            };
+            if last.as_ref().is_none_or(|l| l.from < from) {
+                last = Some(LevelsKnown {
+                    from,
+                    channel: level.channel.clone(),
+                    read,
+                });
+            }
+        }
+        Ok(last)
+    }
+
     /// All whole blocks between two instants, in order.
     #[must_use]
     pub fn blocks(&self, plan: &BlockPlan, from: Stamp, to: Stamp) -> Vec<Block> {
@@ -97,10 +124,21 @@ impl History {
     }
 }
 
+/// From when on the levels of a plan are known.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct LevelsKnown {
+    /// First instant at which all of them are.
+    pub from: Stamp,
+    /// The last of them to be read.
+    pub channel: ChannelId,
+    /// Its first reading.
+    pub read: Stamp,
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::record::{ClockEpoch, ClockState, DeviceStatus, Holds, Quality};
+    use crate::record::{ClockEpoch, ClockState, DeviceStatus, Quality};
     use crate::watch::blocks::WellFeed;
 
     fn reading(second: i64, value: f64) -> Reading {
@@ -127,7 +165,7 @@ mod tests {
                 channel: "q".into(),
                 share: 1.0,
                 holds: Holds::After,
-                needed: true,
+                feeds: Feeds::Rate,
             }],
             gauges: vec!["p".into()],
         };
@@ -151,5 +189,37 @@ mod tests {
             assert_eq!(straight.block(&plan, index), mixed.block(&plan, index));
         }
         assert_eq!(mixed.len(), 3);
+    }
+
+    #[test]
+    fn levels_are_known_from_the_last_one_first_read() {
+        let feed = |channel: &str, feeds, holds| WellFeed {
+            channel: channel.into(),
+            share: 1.0,
+            holds,
+            feeds,
+        };
+        let mut plan = BlockPlan {
+            length: 100 * Stamp::SECOND,
+            hold_rate: 0,
+            wells: vec![
+                feed("q", Feeds::Rate, Holds::After),
+                feed("p", Feeds::Level, Holds::After),
+            ],
+            gauges: Vec::new(),
+        };
+        let mut history = History::default();
+        assert_eq!(history.levels_known(&plan), Err("p".into()));
+        history.add([reading(130, 3.0)]);
+        let from = |plan: &BlockPlan| {
+            let known = history.levels_known(plan).unwrap();
+            known.map(|k| (k.from, k.channel))
+        };
+        let second = |s: i64| Stamp(s * Stamp::SECOND);
+        assert_eq!(from(&plan), Some((second(130), "p".into())));
+        plan.wells[1].holds = Holds::Before;
+        assert_eq!(from(&plan), Some((second(100), "p".into())));
+        plan.wells.truncate(1);
+        assert_eq!(from(&plan), None);
     }
 }

@@ -298,6 +298,9 @@ impl Columns {
     pub(crate) fn sample(&self, block: &Block) -> Result<Sampled, ModelError> {
         let mut sampled = Sampled::of(block, self.frame.wells, self.drives(), self.frame.gauges)?;
         sampled.count_from(&self.priors.rest);
+        if let (Some(lagged), Some(drives)) = (&self.lagged, &mut sampled.drives) {
+            lagged.as_usual_where_lapsed(block, drives);
+        }
         Ok(sampled)
     }
 

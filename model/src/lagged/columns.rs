@@ -13,6 +13,7 @@ use serde::{Deserialize, Serialize};
 use super::input::{Input, LAGS, Scaling, inputs};
 use super::{Driver, Embankment};
 use crate::ModelError;
+use crate::block::{Block, RateKnown};
 use crate::expect::drive::{Drive, Sampled, size};
 use crate::expect::frame::means;
 
@@ -218,6 +219,16 @@ impl Lagged {
             state: None,
             entering: Vec::new(),
             beyond: 0.0,
+        }
+    }
+
+    /// Puts the mean in place of drives of a block that have lapsed.
+    pub(crate) fn as_usual_where_lapsed(&self, block: &Block, drives: &mut Sampled) {
+        let paths = block.rates.iter().zip(&mut drives.rates);
+        for ((path, values), centre) in paths.zip(&self.scaling.centre) {
+            if path.known == RateKnown::Lapsed {
+                values.fill(*centre);
+            }
         }
     }
 

@@ -8,7 +8,7 @@
 use nalgebra::DMatrix;
 
 use crate::ModelError;
-use crate::block::Block;
+use crate::block::{Block, RateKnown};
 use crate::commission::history::{Regression, bridge, median};
 use crate::expect::columns::Columns;
 use crate::expect::whitener::Whitener;
@@ -47,10 +47,12 @@ impl Single {
         for (index, block) in history.iter().enumerate() {
             let sampled = columns.sample(block)?;
             let step = columns.step(&mut memory, &sampled)?;
+            // As the watch is blind then, so the fit learns nothing of an answer to a level that was only held.
+            let stale = block.rates.iter().any(|r| r.known == RateKnown::Stale);
             for ((gauge, one), own) in all.iter_mut().enumerate().zip(&mine) {
                 match block.gauges.get(gauge).and_then(Option::as_ref) {
-                    Some(read) => one.raw[(index, 0)] = read.mean,
-                    None => one.missing.push(index),
+                    Some(read) if !stale => one.raw[(index, 0)] = read.mean,
+                    _ => one.missing.push(index),
                 }
                 for (at, &column) in own.iter().enumerate() {
                     one.raw[(index, 1 + at)] = step.fixed[(gauge, column)];
@@ -64,7 +66,7 @@ impl Single {
                 .collect();
             if read.is_empty() {
                 return Err(ModelError::History(format!(
-                    "gauge {gauge} has no reading in the whole history; take it out of the site file or give a longer history"
+                    "gauge {gauge} has no reading in the whole history beside a level that was read; take it out of the site file or give a longer history"
                 )));
             }
             one.reference = median(read.clone());

@@ -9,7 +9,7 @@ use serde::{Deserialize, Serialize};
 
 use super::{Driver, Embankment};
 use crate::ModelError;
-use crate::block::Block;
+use crate::block::{Block, RateKnown};
 use crate::expect::drive::{Geometry, Sampled, size};
 
 /// Time constants of the lags, two a decade \[s\]: three hours to four months.
@@ -108,7 +108,16 @@ impl Scaling {
             let mut series = Vec::with_capacity(history.len());
             for block in history {
                 size("paths in a block", block.rates.len(), drives)?;
-                series.push(mean(block, drive));
+                // What was only held, or not read at all, says nothing of centre and range.
+                if block.rates[drive].known == RateKnown::Read {
+                    series.push(mean(block, drive));
+                }
+            }
+            if series.is_empty() {
+                return Err(ModelError::History(format!(
+                    "the {} was not read in it; take it out of the site file or give a history that has it",
+                    driver.name()
+                )));
             }
             let count = series.len().max(1) as f64;
             let middle = series.iter().sum::<f64>() / count;

@@ -21,12 +21,13 @@ use super::{Context, Exit, Failure, print};
 use crate::config::{self, Site};
 use crate::intake::log::LogReader;
 use crate::keeper::settings::block_plan;
-use crate::record::Stamp;
+use crate::record::{Block, Stamp};
 use crate::store::{Reader, StoreError};
+use crate::watch::blocks::BlockPlan;
 use crate::watch::commissioning::{Stage, make};
 use crate::watch::compare::Compare;
 use crate::watch::ground_file::{GroundFile, Model};
-use crate::watch::history::History;
+use crate::watch::history::{History, LevelsKnown};
 
 pub(super) use doubts::diffusivities;
 
@@ -111,7 +112,12 @@ impl Commission {
         let to = self
             .to
             .unwrap_or_else(|| plan.start_of(plan.index_of(last) + 1));
-        let blocks = history.blocks(&plan, from, to);
+        let known = history.levels_known(&plan).map_err(|channel| {
+            Failure::unusable(anyhow::anyhow!(
+                "{channel} was never read in this history, and without that level nothing can be learned; give logs that have it"
+            ))
+        })?;
+        let (blocks, left_out) = from_known(history.blocks(&plan, from, to), &plan, known);
         let others: Vec<Compare> = self.compare.iter().map(|o| o.what()).collect();
         let (ground, account) =
             commission_site(&site, &blocks, &others, Stamp::now()).map_err(|why| {
@@ -130,6 +136,7 @@ impl Commission {
                     made: ground.made,
                     commissioned,
                     account,
+                    left_out: left_out.as_deref(),
                 };
                 let (report, shown) = self.report(&found)?;
                 if context.json {
@@ -150,11 +157,15 @@ impl Commission {
             (Model::Embankment(embankment), _) if context.json => {
                 document(&embankment.calibration)?
             }
-            _ => format!(
-                "{}{reach}ground file   {}\n",
-                summary(&site, &ground),
-                path.display()
-            ),
+            _ => {
+                let left_out =
+                    left_out.map_or_else(String::new, |why| format!("\nTo look at: {why}\n"));
+                format!(
+                    "{}{left_out}{reach}ground file   {}\n",
+                    summary(&site, &ground),
+                    path.display()
+                )
+            }
         };
         print(&text)?;
         Ok(Exit::Done)
@@ -206,6 +217,28 @@ impl Commission {
             Ok(history)
         })
     }
+}
+
+/// Of the blocks of a history those in which all levels are known, and what people are told of the rest.
+fn from_known(
+    blocks: Vec<Block>,
+    plan: &BlockPlan,
+    known: Option<LevelsKnown>,
+) -> (Vec<Block>, Option<String>) {
+    let Some(known) = known else {
+        return (blocks, None);
+    };
+    let all = blocks.len();
+    let mut kept = blocks;
+    kept.retain(|block| plan.start_of(block.index) >= known.from);
+    let dropped = all - kept.len();
+    let why = (dropped > 0).then(|| {
+        format!(
+            "{dropped} blocks at the start of this history are left out: {} was first read at {}, and before that its level is not known.",
+            known.channel, known.read
+        )
+    });
+    (kept, why)
 }
 
 /// Makes a ground file, with a progress bar.
@@ -349,6 +382,7 @@ fn warnings(found: &Found<'_>) -> Vec<String> {
     let mut warnings = doubts::diffusivities(found.site, &calibration.factors);
     warnings.extend(doubts::unlikely(found.site, calibration, found.account));
     warnings.extend(suspect(calibration));
+    warnings.extend(found.left_out.map(str::to_owned));
     warnings
 }
 
@@ -360,6 +394,8 @@ struct Found<'a> {
     made: Stamp,
     commissioned: &'a Commissioned,
     account: &'a Account,
+    /// What of the history was left out, and why.
+    left_out: Option<&'a str>,
 }
 
 impl Found<'_> {
