@@ -14,6 +14,7 @@ use std::sync::OnceLock;
 
 use borewake_model::block::{Block, GaugeBlock, RateKnown, RatePath};
 use borewake_model::finding::{Cause, Finding, Subject};
+use borewake_model::forecast::{Bound, Horizon, RatePlan};
 use borewake_model::ground::{Edge, EdgeKind, Gauge, Ground, Seat};
 use borewake_model::lagged::{Commissioned, Driver, Embankment, commission};
 use borewake_model::watch::{Blind, Step, Watch, WatchSettings};
@@ -340,4 +341,88 @@ fn history_that_teaches_nothing_is_refused() {
         why.to_string().contains("the pool moved by 0.000 m"),
         "{why}"
     );
+}
+
+#[test]
+fn what_comes_is_foreseen_at_the_last_pool_and_the_usual_rain() {
+    let (commissioned, watch) = commissioned();
+    let horizon = Horizon {
+        blocks: 120,
+        instants: vec![0.0, READ],
+    };
+    let limits: Vec<Bound> = (0..PIEZOMETERS.len())
+        .map(|gauge| Bound {
+            gauge,
+            above: true,
+            value: 1e9,
+        })
+        .collect();
+    let forecast = watch
+        .forecast(&RatePlan::default(), &horizon, &limits)
+        .unwrap();
+    let history = blocks(LEARNED, &Story::default());
+    let last = history.last().unwrap();
+    let pool = last.rates[0].pieces.last().unwrap().1;
+    let rain = commissioned.calibration.scaling.centre[1];
+    for (held, right) in forecast.held.iter().zip([pool, rain]) {
+        assert!((held - right).abs() < 1e-9 * right.abs());
+    }
+    assert_eq!(forecast.blocks.len(), 120);
+    assert!(forecast.passages.iter().all(|p| p.share == 0.0));
+    // It begins where the gauges are, and grows less sure.
+    for (gauge, expected) in forecast.blocks[0].gauges.iter().enumerate() {
+        let read = last.gauges[gauge].as_ref().unwrap().mean;
+        assert!(
+            (expected.mean - read).abs() < 6.0 * expected.sd,
+            "{gauge}: {expected:?} against {read}"
+        );
+        let end = forecast.blocks[119].gauges[gauge];
+        assert!(end.mean.is_finite() && end.sd >= 0.99 * expected.sd);
+    }
+}
+
+#[test]
+fn silent_rain_is_as_usual_and_blinds_nobody() {
+    let centre = commissioned().0.calibration.scaling.centre[1];
+    let story = Story::default();
+    let next = &blocks(LEARNED + 5.0, &story)[learned()..];
+    let (mut lapsed, mut usual) = (commissioned().1.clone(), commissioned().1.clone());
+    for block in next {
+        let with = |value: f64, known| {
+            let mut block = block.clone();
+            block.rates[1] = RatePath {
+                pieces: vec![(BLOCK, value)],
+                known,
+            };
+            block
+        };
+        // A storm that never ended, as the last reading has it.
+        let a = lapsed.step(&with(1e-5, RateKnown::Lapsed)).unwrap();
+        let b = usual.step(&with(centre, RateKnown::Read)).unwrap();
+        assert_eq!(a, b);
+        assert!(a.blind.iter().all(Option::is_none));
+    }
+}
+
+#[test]
+fn a_level_that_was_only_held_is_no_level_of_the_history() {
+    let mut history = blocks(400.0, &Story::default());
+    for block in &mut history[..40] {
+        block.rates[0] = RatePath {
+            pieces: vec![(BLOCK, 0.0)],
+            known: RateKnown::Stale,
+        };
+    }
+    let calibration = commission(&ground(), &embankment(), &history, &mut |_| {}).unwrap();
+    let pools = history[40..].iter().flat_map(|b| &b.rates[0].pieces);
+    let least = pools.map(|p| p.1).fold(f64::INFINITY, f64::min);
+    assert!(calibration.scaling.range[0].0 >= least);
+    let never = |block: &Block| {
+        let mut block = block.clone();
+        block.rates[1].known = RateKnown::Lapsed;
+        block
+    };
+    let dry: Vec<Block> = history.iter().map(never).collect();
+    let why = commission(&ground(), &embankment(), &dry, &mut |_| {}).unwrap_err();
+    assert!(why.to_string().contains("rain"), "{why}");
 }

@@ -304,6 +304,12 @@ impl Columns {
         Ok(sampled)
     }
 
+    /// What an embankment's drives go on from; `None` of a ground.
+    pub(crate) fn last_drives(&self, memory: &Memory) -> Option<Vec<f64>> {
+        let lagged = self.lagged.as_ref()?;
+        Some(lagged.last(memory.lagged.as_ref()?))
+    }
+
     /// Number of drives.
     pub(crate) fn drives(&self) -> usize {
         self.lagged.as_ref().map_or(0, Lagged::drives)

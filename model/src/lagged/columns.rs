@@ -222,6 +222,17 @@ impl Lagged {
         }
     }
 
+    /// Last value of every drive, each in its own unit; the mean where it is rain, or where nothing was seen yet.
+    pub(crate) fn last(&self, memory: &Memory) -> Vec<f64> {
+        let mut last = self.scaling.centre.clone();
+        for (input, unit) in self.inputs.iter().zip(&memory.entering) {
+            if !input.square && input.driver != Driver::Rain {
+                last[input.drive] += unit * self.scaling.spread[input.drive];
+            }
+        }
+        last
+    }
+
     /// Puts the mean in place of drives of a block that have lapsed.
     pub(crate) fn as_usual_where_lapsed(&self, block: &Block, drives: &mut Sampled) {
         let paths = block.rates.iter().zip(&mut drives.rates);

@@ -47,11 +47,13 @@ pub(crate) struct Coasted {
 }
 
 impl Watch {
-    /// Last value of every input, wells \[m3/s\] before open water \[Pa\]; `None` before the first block.
+    /// Last value of every input, wells \[m3/s\] before open water \[Pa\]; of an embankment that of every drive in its
+    /// own unit, but the mean of rain, which no last value foretells. `None` before the first block.
     #[must_use]
     pub fn last_rates(&self) -> Option<Vec<f64>> {
         let memory = self.state.memory.as_ref()?;
-        Some(self.as_read(&memory.entering))
+        let drives = self.columns.last_drives(memory);
+        Some(drives.unwrap_or_else(|| self.as_read(&memory.entering)))
     }
 
     /// Inputs as they are read, from what they are counted from.

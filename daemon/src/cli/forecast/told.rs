@@ -15,6 +15,7 @@ use crate::keeper::settings::block_plan;
 use crate::record::{Expectation, Stamp};
 use crate::report::svg::ahead::{AheadPlot, GaugeAhead, ahead_plot};
 use crate::watch::blocks::BlockPlan;
+use crate::watch::ground_file::Model;
 
 /// Standard deviations either side that hold 95 % of a normal distribution.
 const BAND: f64 = 1.959_964;
@@ -132,11 +133,18 @@ impl<'a> Told<'a> {
                 ));
             }
         }
-        if self.forecast.held.len() > self.site.wells.len() {
+        if self.site.embankment.is_some() {
+            notes.push(
+                "The pool keeps its last level, and rain is as it was on average; what a rise or a storm to come does is not in it."
+                    .to_owned(),
+            );
+        } else if self.forecast.held.len() > self.site.wells.len() {
             notes.push("Open water keeps its last level.".to_owned());
         }
-        let ground = self.present.ground.commissioned.ground();
-        let span = ground.map(|g| g.calibration.blocks);
+        let span = match &self.present.ground.commissioned {
+            Model::Ground(ground) => Some(ground.calibration.blocks),
+            Model::Embankment(embankment) => Some(embankment.calibration.blocks),
+        };
         let count = i64::try_from(ahead.len()).unwrap_or(i64::MAX);
         if span.is_some_and(|(first, last)| count > last + 1 - first) {
             notes.push(
@@ -160,7 +168,9 @@ impl<'a> Told<'a> {
                 .last()
                 .map_or(self.now(), |b| self.blocks.start_of(b.block + 1)),
         );
-        text += &self.rates_table().text(0);
+        if !self.site.wells.is_empty() {
+            text += &self.rates_table().text(0);
+        }
         let _ = writeln!(
             text,
             "\nPressure in {}: mean and 95 % band of the block mean.",
@@ -212,18 +222,17 @@ impl<'a> Told<'a> {
 
     fn gauges_table(&self) -> Table {
         let units = self.site.units;
-        let per_hour = (3600 * Stamp::SECOND / self.blocks.length.max(1)).max(1);
         let ahead = &self.forecast.blocks;
         let leads: Vec<(String, &BlockAhead)> = LEADS
             .iter()
             .filter_map(|hours| {
-                let blocks = usize::try_from(hours * per_hour - 1).ok()?;
+                let block = last_block_of(*hours, self.blocks.length)?;
                 let head = if hours % 24 == 0 {
                     format!("after {} d", hours / 24)
                 } else {
                     format!("after {hours} h")
                 };
-                Some((head, ahead.get(blocks)?))
+                Some((head, ahead.get(block)?))
             })
             .collect();
         let mut heads = vec![("gauge", Align::Left), ("last read", Align::Right)];
@@ -454,5 +463,32 @@ impl<'a> Told<'a> {
             gauges,
             rates,
         })
+    }
+}
+
+/// Which block to come, by order, ends after a lead time \[h\]; `None` where no block does.
+fn last_block_of(hours: i64, length: i64) -> Option<usize> {
+    let lead = hours.checked_mul(3600 * Stamp::SECOND)?;
+    if length <= 0 || lead % length != 0 {
+        return None;
+    }
+    usize::try_from(lead / length - 1).ok()
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn a_lead_time_is_a_block_whatever_its_length() {
+        let block = |hours, minutes: i64| last_block_of(hours, minutes * 60 * Stamp::SECOND);
+        assert_eq!(block(6, 60), Some(5));
+        assert_eq!(block(6, 10), Some(35));
+        assert_eq!(block(6, 360), Some(0));
+        assert_eq!(block(24, 360), Some(3));
+        assert_eq!(block(6, 45), Some(7));
+        assert_eq!(block(24, 25), None);
+        assert_eq!(block(6, 1440), None);
+        assert_eq!(block(24, 0), None);
     }
 }
