@@ -188,8 +188,9 @@ fn calibrated(
         })?;
     if !others.is_empty() {
         let known = (&settings, &account);
-        let tried = compare(&site.ground, &reduced, history, known, others, progress)?;
+        let (tried, untried) = compare(&site.ground, &reduced, history, known, others, progress);
         account.tried.extend(tried);
+        account.untried.extend(untried);
     }
     progress(Stage::Certify, 0.0);
     let numerics = Numerics {

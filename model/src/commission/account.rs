@@ -8,8 +8,8 @@
 use nalgebra::{Cholesky, DMatrix, DVector};
 use serde::{Deserialize, Serialize};
 
-use super::Tried;
 use super::history::History;
+use super::{GroundKind, Tried};
 use crate::block::Block;
 use crate::expect::columns::{Columns, Kind};
 use crate::weak_form::Parameter;
@@ -27,6 +27,9 @@ pub struct Account {
     pub log_evidence: f64,
     /// Grounds that were tried, the one described first.
     pub tried: Vec<Tried>,
+    /// Grounds that could not be tried, and why.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub untried: Vec<(GroundKind, String)>,
 }
 
 /// What a figure is about.

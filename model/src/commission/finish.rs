@@ -130,6 +130,7 @@ impl Fit<'_> {
             gauges: GaugeFit::all(blocks, &history, &solved.mean),
             log_evidence: self.log_evidence,
             tried: Vec::new(),
+            untried: Vec::new(),
         };
         let innovation = whitener.innovation();
         let mut priors = self.priors.clone();

@@ -162,6 +162,18 @@ pub(super) fn choice(found: &Found<'_>) -> String {
     )
 }
 
+/// What could not be compared, and why.
+pub(super) fn untried(found: &Found<'_>) -> Vec<String> {
+    let untried = found.account.untried.iter();
+    let told = untried.map(|(kind, why)| {
+        format!(
+            "The ground \"{}\" could not be fitted for comparison: {why}.",
+            name(found, *kind)
+        )
+    });
+    told.collect()
+}
+
 /// The table as JSON.
 pub(super) fn json(found: &Found<'_>) -> Value {
     let described = described(found);

@@ -1,9 +1,10 @@
 //! `borewake commission`: calibrates on quiet history and writes the ground file.
 
-use std::path::PathBuf;
+use std::path::{Path, PathBuf};
 
-use anyhow::Context as _;
+use anyhow::{Context as _, ensure};
 use borewake_model::commission::{Account, Calibration, Commissioned};
+use borewake_model::ground::EdgeKind;
 use clap::Args;
 use serde_json::{Value, json};
 
@@ -84,11 +85,6 @@ impl Other {
     }
 }
 
-fn document(calibration: &impl serde::Serialize) -> Result<String, Failure> {
-    let text = serde_json::to_string(calibration).map_err(Failure::unusable)?;
-    Ok(format!("{text}\n"))
-}
-
 fn instant(text: &str) -> Result<Stamp, String> {
     Stamp::parse(text).map_err(|e| format!("{e}; write it as 2031-03-01T00:00:00Z"))
 }
@@ -96,6 +92,7 @@ fn instant(text: &str) -> Result<Stamp, String> {
 impl Commission {
     pub(super) fn run(self, context: &Context) -> Result<Exit, Failure> {
         let site = config::load(&self.site)?;
+        self.fits(&site).map_err(Failure::wrong)?;
         let history = if self.log.is_empty() {
             self.stored(&site)
         } else {
@@ -138,7 +135,7 @@ impl Commission {
                     account,
                     left_out: left_out.as_deref(),
                 };
-                let (report, shown) = self.report(&found)?;
+                let (report, shown) = self.report(&found, &path)?;
                 if context.json {
                     format!("{:#}\n", found.json(&shown, &path, &report))
                 } else {
@@ -151,11 +148,17 @@ impl Commission {
                     )
                 }
             }
-            (Model::Ground(commissioned), None) if context.json => {
-                document(&commissioned.calibration)?
-            }
             (Model::Embankment(embankment), _) if context.json => {
-                document(&embankment.calibration)?
+                let warnings: Vec<&String> = left_out.iter().collect();
+                let document = json!({
+                    "kind": "embankment",
+                    "ground_file": path,
+                    "report": null,
+                    "calibration": embankment.calibration,
+                    "told": [],
+                    "warnings": warnings,
+                });
+                format!("{document:#}\n")
             }
             _ => {
                 let left_out =
@@ -171,17 +174,45 @@ impl Commission {
         Ok(Exit::Done)
     }
 
+    /// Refuses what a site has not.
+    fn fits(&self, site: &Site) -> anyhow::Result<()> {
+        if site.embankment.is_some() {
+            ensure!(
+                self.compare.is_empty(),
+                "--compare is for a field of wells: an embankment's gauges answer by themselves, and no other ground stands beside them; leave it out"
+            );
+            ensure!(
+                self.report.is_none(),
+                "--report is for a field of wells: of an embankment all is printed (--json for programs); leave it out"
+            );
+        }
+        let edge = self.compare.iter().any(|o| o.what() == Compare::Edge);
+        ensure!(
+            !(edge && site.ground.edge.kind == EdgeKind::Driven),
+            "--compare edge: the edge is driven by open water, and so known to be fixed; leave it out"
+        );
+        Ok(())
+    }
+
     /// Writes the report; returns its path and what it shows of mesh and changes of rate.
-    fn report(&self, found: &Found<'_>) -> Result<(PathBuf, page::Shown), Failure> {
+    fn report(&self, found: &Found<'_>, ground: &Path) -> Result<(PathBuf, page::Shown), Failure> {
         let path = self
             .report
             .clone()
             .unwrap_or_else(|| found.site.store.folder.join(REPORT));
-        let shown = page::Shown::of(found).map_err(Failure::unusable)?;
-        std::fs::write(&path, page::page(found, &shown))
-            .with_context(|| path.display().to_string())
-            .map_err(Failure::unusable)?;
-        Ok((path, shown))
+        let written = || {
+            let shown = page::Shown::of(found)?;
+            std::fs::write(&path, page::page(found, &shown))?;
+            anyhow::Ok(shown)
+        };
+        let shown = written().with_context(|| {
+            format!(
+                "the ground file {} is written and can be used, but the report {} is not",
+                ground.display(),
+                path.display()
+            )
+        });
+        Ok((path.clone(), shown.map_err(Failure::unusable)?))
     }
 
     fn logged(&self, site: &Site) -> anyhow::Result<History> {
@@ -382,6 +413,7 @@ fn warnings(found: &Found<'_>) -> Vec<String> {
     let mut warnings = doubts::diffusivities(found.site, &calibration.factors);
     warnings.extend(doubts::unlikely(found.site, calibration, found.account));
     warnings.extend(suspect(calibration));
+    warnings.extend(grounds::untried(found));
     warnings.extend(found.left_out.map(str::to_owned));
     warnings
 }
@@ -424,6 +456,7 @@ impl Found<'_> {
         let calibration = &self.commissioned.calibration;
         let rows = figures::rows(self.site, calibration);
         json!({
+            "kind": "ground",
             "ground_file": path,
             "report": report,
             "calibration": calibration,

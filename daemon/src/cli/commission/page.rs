@@ -38,7 +38,11 @@ impl Shown {
         let commissioned = found.commissioned;
         Ok(Self {
             quality: Mesh::fit(ground, &options)?.quality(),
-            spread: spread(ground, &options)?,
+            // Worked out when the fitted ground was certified.
+            spread: match &commissioned.numerics {
+                Some(numerics) => numerics.spread,
+                None => spread(ground, &options)?,
+            },
             changes: drawn(found.site, commissioned, found.history, found.blocks)?,
             channels: channels(found),
         })

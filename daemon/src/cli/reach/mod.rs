@@ -260,9 +260,9 @@ pub(super) fn line(site: &Site, ground: &GroundFile, history: &[Block]) -> Optio
     let from = history.len().saturating_sub(blocks as usize);
     let reach = watch.reach(history.get(from..)?, &[3.0 * DAY], 0).ok()?;
     let [best, median, worst] = told::within_outline(&reach, 0)?;
-    let shown = |size: f64| site.units.show(Dimension::Rate, size);
+    let shown = |size| told::size(Some(size), |v| site.units.show(Dimension::Rate, v));
     Some(format!(
-        "Reach: of leaks that begin within the outline, one of {} is noticed within 3 d with 90 % probability at the median place\n\
+        "Reach: of leaks that begin within the outline, the smallest noticed within 3 d with 90 % probability is {} at the median place\n\
          ({} at the best, {} at the worst). `borewake reach` tells it place by place.\n",
         shown(median),
         shown(best),

@@ -53,12 +53,16 @@ pub(super) fn within_outline(reach: &Reach, delay: usize) -> Option<[f64; 3]> {
     ])
 }
 
+/// A size as it is told; a place where nothing is seen has none.
+pub(super) fn size(size: Option<f64>, show: impl FnOnce(f64) -> String) -> String {
+    let seen = size.filter(|s| s.is_finite());
+    seen.map_or_else(|| "unseen".to_owned(), show)
+}
+
 impl Told<'_> {
     fn number(&self, size: Option<f64>) -> String {
-        match size.filter(|s| s.is_finite()) {
-            Some(size) => significant(self.site.units.number(Dimension::Rate, size), 3),
-            None => "unseen".to_owned(),
-        }
+        let units = self.site.units;
+        self::size(size, |v| significant(units.number(Dimension::Rate, v), 3))
     }
 
     fn named(&self) -> Vec<(String, Point, usize)> {
@@ -263,5 +267,18 @@ impl Told<'_> {
             marks,
             added: self.added.map(|a| (a.at, a.layer)),
         })
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::size;
+
+    #[test]
+    fn a_place_that_nothing_sees_has_no_size() {
+        let show = |v: f64| v.to_string();
+        assert_eq!(size(Some(2.0), show), "2");
+        assert_eq!(size(Some(f64::INFINITY), show), "unseen");
+        assert_eq!(size(None, show), "unseen");
     }
 }
