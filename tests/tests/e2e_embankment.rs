@@ -106,6 +106,12 @@ async fn an_embankment_is_watched_from_its_site_file_to_its_report() {
     for word in ["Embankment", "pool.stage", "season", "ageing", "P-5"] {
         assert!(checked.contains(word), "{word}: {checked}");
     }
+    // What only a field of wells has is refused before any work.
+    for asked in [["--compare", "leaky"], ["--report", "page.html"]] {
+        let refused = borewake_in(here, &[&["commission", "site.toml"], &asked[..]].concat());
+        assert_eq!(refused.code, Some(2), "{refused:?}");
+        assert!(refused.stderr.contains(asked[0]), "{refused:?}");
+    }
     let to = at(LEARNED);
     let said = borewake_in(
         here,
@@ -129,6 +135,29 @@ async fn an_embankment_is_watched_from_its_site_file_to_its_report() {
         .as_f64()
         .expect("a share");
     assert!((share - 0.45).abs() < 0.06, "{share}");
+
+    // The pool keeps its level, and every piezometer has what is to come.
+    let ahead = borewake_in(
+        here,
+        &[
+            "forecast",
+            "site.toml",
+            "--log",
+            "log.csv",
+            "--svg",
+            "ahead.svg",
+            "--csv",
+            "ahead.csv",
+        ],
+    )
+    .done()
+    .stdout;
+    for word in ["P-5", "after 6 h", "after 10 d", "keeps its last level"] {
+        assert!(ahead.contains(word), "{word}: {ahead}");
+    }
+    for file in ["ahead.svg", "ahead.csv"] {
+        assert!(here.join(file).exists(), "{file}");
+    }
 
     // Played twice it says the same: nothing for half a year, then what began on day 915, at two piezometers.
     let replay = |store: &str, events: &str| {
