@@ -9,6 +9,7 @@ use crate::reduce::{Factors, Reduced};
 
 mod account;
 mod aside;
+mod choose;
 mod finish;
 mod fit;
 pub(crate) mod history;
@@ -26,8 +27,8 @@ mod tried;
 mod unsteady;
 
 pub use account::{Account, Figure, GaugeFit, Known, Patchwork, Rival};
+pub use choose::commission;
 pub(crate) use finish::longest_unchanged;
-pub use fit::commission;
 pub use numerics::Numerics;
 pub use places::{Line, Places, places};
 pub use refuse::check_history;
