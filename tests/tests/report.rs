@@ -29,7 +29,7 @@ async fn a_report_stands_alone_and_names_stay_names() {
         "Bench &lt;script&gt;alert(1)&lt;/script&gt; &amp; Co",
         "87.0 %",
         "meter scale",
-        "310 m east, -120 m north",
+        "310 m east, 120 m south",
         "not a safety function",
         "Data quality",
         "o.pressure",

@@ -126,7 +126,7 @@ pub fn html(report: &CalibrationReport) -> String {
 }
 
 /// Tables wider than a phone scroll by themselves.
-const WIDE: &str = ".wide{overflow-x:auto}.wide td{white-space:nowrap}li{margin:.25rem 0}figcaption{font-size:.9rem}\
+const WIDE: &str = ".wide{overflow-x:auto}.wide td{white-space:nowrap}.wide table{font-size:.82rem}.wide th,.wide td{padding-right:.45rem}@media print{.wide td{white-space:normal}}li{margin:.25rem 0}figcaption{font-size:.9rem}\
 @media (max-width:560px){th,td{padding-right:.5rem;font-size:.85rem}}\
 @media print{.wide{overflow:visible}.wide td{white-space:normal}}";
 

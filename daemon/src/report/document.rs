@@ -66,6 +66,12 @@ pub fn escaped(text: &str) -> String {
     safe
 }
 
+/// A distance with the side it lies on.
+fn towards(metres: f64, [positive, negative]: [&str; 2]) -> String {
+    let side = if metres < 0.0 { negative } else { positive };
+    format!("{:.0} m {side}", metres.abs())
+}
+
 /// How a document looks: on a screen of any width, and printed.
 pub(super) const STYLE: &str = "\
 body{font:16px/1.5 'Noto Sans','DejaVu Sans',sans-serif;color:#22302f;background:#fff;max-width:52rem;margin:1.5rem auto;padding:0 1rem}\
@@ -193,9 +199,9 @@ fn evidence(out: &mut String, report: &AlarmReport) {
         row(
             "Place",
             format!(
-                "{:.0} m east, {:.0} m north of the origin, in {}; within {:.0} m with 90 %",
-                place.x,
-                place.y,
+                "{}, {} of the origin, in {}; within {:.0} m with 90 %",
+                towards(place.x, ["east", "west"]),
+                towards(place.y, ["north", "south"]),
                 names.layer(place.layer),
                 place.radius_90
             ),

@@ -19,7 +19,19 @@ impl Space for FiniteVolume {
     fn storage(&self, corners: &[Point; 3]) -> Local {
         // Each face part and the half side it stands on make a right triangle of the cell at either end.
         let mut local = Local::zero(3);
-        for (k, (face, side)) in faces(corners).into_iter().enumerate() {
+        let faces = faces(corners);
+        if let Some(obtuse) = faces.iter().position(|(face, _)| *face < 0.0) {
+            // The circumcentre lies outside, and at an edge nothing makes up for what counts negative: the obtuse corner has half
+            // of the triangle and the others a quarter (Meyer et al. 2003, Visualization and Mathematics III, from memory).
+            let area: f64 = faces.iter().map(|(face, side)| 0.5 * face * side).sum();
+            for (i, row) in local.entries.iter_mut().enumerate().take(3) {
+                if let Some(entry) = row.get_mut(i) {
+                    *entry = area * if i == obtuse { 0.5 } else { 0.25 };
+                }
+            }
+            return local;
+        }
+        for (k, (face, side)) in faces.into_iter().enumerate() {
             for (i, row) in local.entries.iter_mut().enumerate().take(3) {
                 if i != k
                     && let Some(entry) = row.get_mut(i)

@@ -69,7 +69,7 @@ pub(super) fn unlikely(site: &Site, calibration: &Calibration, account: &Account
         .any(|spread| *spread > BOUND)
     {
         doubts.push(
-            "To explain this history the ground would have to vary by 100 % from patch to patch, the most that is allowed: the ground as described does not fit. Look at the signs of the rates (injection is positive), the units and places of wells and gauges, the edge, and what else happened in that time."
+            "To explain this history the ground would have to vary by 100 % from patch to patch, the most that is allowed: the ground as described does not fit. Look at the signs of the rates (injection is positive) and of what each gauge reads, the units and places of wells and gauges, the edge, and what else happened in that time."
                 .to_owned(),
         );
     }

@@ -5,6 +5,7 @@ mod told;
 use std::path::PathBuf;
 
 use anyhow::Context as _;
+use borewake_model::commission::Places;
 use borewake_model::ground::Point;
 use borewake_model::units::{Dimension, nearest};
 use borewake_model::watch::{AddedGauge, Reach};
@@ -94,6 +95,18 @@ fn point(text: &str) -> Result<Point, String> {
     Ok([length(east)?, length(north)?])
 }
 
+/// Refuses a place beyond the edge: the model knows nothing of what lies there.
+fn within(site: &Site, at: Point) -> Result<(), Failure> {
+    let [x, y] = Places::of(&site.ground).centre;
+    let (off, edge) = ((at[0] - x).hypot(at[1] - y), site.ground.edge.distance);
+    if off <= edge {
+        return Ok(());
+    }
+    Err(Failure::wrong(anyhow::anyhow!(
+        "--gauge-at: that is {off:.0} m from the middle of wells and gauges, beyond the edge at {edge:.0} m; give a place within it, or the edge a greater distance"
+    )))
+}
+
 impl ReachVerb {
     pub(super) fn run(self, context: &Context) -> Result<Exit, Failure> {
         let site = config::load(&self.site)?;
@@ -103,6 +116,9 @@ impl ReachVerb {
                 "{}: an embankment claims no place of a leak, so it has no reach",
                 self.site.display()
             )));
+        }
+        if let Some(at) = self.gauge_at {
+            within(&site, at)?;
         }
         let present = present(&site, &self.log)?;
         let reach = self.weigh(&site, &present).map_err(Failure::unusable)?;
