@@ -33,6 +33,8 @@ const LIST: (f64, f64) = (628.0, 30.0);
 const HEIGHT: f64 = 606.0;
 /// Most ticks of the time axis.
 const MOST_TIMES: i64 = 7;
+/// Numbers as large as this are none: sums and bands of them would overflow.
+const DRAWN: f64 = 1e300;
 
 /// What is known of a gauge over a stretch of time.
 #[derive(Debug, Clone)]
@@ -127,12 +129,13 @@ fn picture(plot: &GaugePlot, words: &Words) -> String {
 
 /// Points with not finite numbers taken out.
 fn finite(points: &[PlotPoint]) -> Vec<PlotPoint> {
-    let sound = |e: &Expectation| e.mean.is_finite() && e.sd.is_finite() && e.sd >= 0.0;
+    let drawn = |v: f64| v.abs() < DRAWN;
+    let sound = |e: &Expectation| drawn(e.mean) && drawn(e.sd) && e.sd >= 0.0;
     points
         .iter()
         .map(|p| PlotPoint {
             at: p.at,
-            reading: p.reading.filter(|r| r.is_finite()),
+            reading: p.reading.filter(|r| drawn(*r)),
             expectation: p.expectation.filter(sound),
         })
         .collect()
