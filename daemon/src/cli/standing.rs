@@ -95,11 +95,8 @@ async fn stored(site: &Site, ground: &GroundFile) -> anyhow::Result<(Standing, V
     Ok((standing, notes))
 }
 
-fn logged(
-    site: &Site,
-    ground: &GroundFile,
-    logs: &[PathBuf],
-) -> anyhow::Result<(Standing, Vec<String>)> {
+/// What logs hold, with a progress bar.
+pub(super) fn history_of(site: &Site, logs: &[PathBuf]) -> anyhow::Result<History> {
     let mut log = LogReader::of_site(logs, site)?;
     let bar = progress::bytes(log.total_bytes(), "reading logs");
     let mut history = History::default();
@@ -108,6 +105,15 @@ fn logged(
         bar.set_position(log.read_bytes());
     }
     bar.finish_and_clear();
+    Ok(history)
+}
+
+fn logged(
+    site: &Site,
+    ground: &GroundFile,
+    logs: &[PathBuf],
+) -> anyhow::Result<(Standing, Vec<String>)> {
+    let history = history_of(site, logs)?;
     let bar = progress::share("bringing the watch up to date");
     let standing = from_logs(&history, &block_plan(site), ground, &mut |done, of| {
         bar.set_position(thousandths(done, of));

@@ -127,7 +127,7 @@ pub fn draw(plan: &Plan) -> String {
 }
 
 /// The largest of 1, 2, 5 times a power of ten that is no longer.
-fn round(length: f64) -> f64 {
+pub(super) fn round(length: f64) -> f64 {
     let power = 10_f64.powf(length.log10().floor());
     [5.0, 2.0, 1.0]
         .map(|m| m * power)

@@ -5,7 +5,7 @@ use std::fmt::Write as _;
 use borewake_model::units::{Dimension, UnitSystem, significant};
 
 use super::document::escaped;
-use super::plan::Mark;
+use super::plan::{Mark, round};
 
 const WIDTH: f64 = 640.0;
 const MARGIN: f64 = 24.0;
@@ -310,16 +310,6 @@ fn legend(svg: &mut String, map: &ReachMap, bounds: &[f64], y: &mut f64) {
         WIDTH - MARGIN,
         *y + 6.0
     );
-}
-
-/// The largest of 1, 2, 5 times a power of ten that is no longer.
-fn round(length: f64) -> f64 {
-    let power = 10_f64.powf(length.log10().floor());
-    [5.0, 2.0, 1.0]
-        .map(|m| m * power)
-        .into_iter()
-        .find(|bar| *bar <= length)
-        .unwrap_or(power)
 }
 
 #[cfg(test)]

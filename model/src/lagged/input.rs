@@ -5,6 +5,7 @@
     reason = "inputs and drives are counted by the same code that lays them out"
 )]
 
+use crate::units::WATER_WEIGHT;
 use serde::{Deserialize, Serialize};
 
 use super::{Driver, Embankment};
@@ -130,7 +131,7 @@ impl Scaling {
             if *driver == Driver::Pool && greatest - least < LEAST_RANGE {
                 return Err(ModelError::History(format!(
                     "the pool moved by {:.3} m only, so that no answer to it can be learned; give a longer history",
-                    (greatest - least) / WATER
+                    (greatest - least) / WATER_WEIGHT
                 )));
             }
             centre.push(middle);
@@ -149,9 +150,7 @@ impl Scaling {
 }
 
 /// Least range of the pool from which an answer can be learned \[Pa\]: a tenth of a metre.
-const LEAST_RANGE: f64 = 0.1 * WATER;
-/// Weight of water \[Pa/m\], fresh and at 4 degC.
-pub const WATER: f64 = 9_806.65;
+const LEAST_RANGE: f64 = 0.1 * WATER_WEIGHT;
 
 /// Mean of a drive over a block.
 pub(crate) fn mean(block: &Block, drive: usize) -> f64 {

@@ -26,7 +26,7 @@ mod history;
 pub(crate) mod input;
 
 pub use fit::commission;
-pub use input::{Scaling, WATER};
+pub use input::Scaling;
 
 use columns::Lagged;
 

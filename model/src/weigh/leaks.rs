@@ -167,15 +167,20 @@ impl Weights<'_> {
 
     /// Sources that may be a leak, with their places and the log of their prior weight.
     fn leak_weights(&self) -> Vec<(usize, usize, f64)> {
-        let weights: Vec<(usize, usize, f64)> = self
-            .bank
-            .sources
-            .iter()
-            .enumerate()
-            .filter_map(|(index, source)| match source {
-                Source::Place(place) => Some((index, *place, self.inside(*place))),
-                Source::Neighbour(_) => None,
-            })
+        let sources = self.bank.sources.iter().enumerate();
+        self.weighted(sources.filter_map(|(index, source)| match source {
+            Source::Place(place) => Some((index, *place)),
+            Source::Neighbour(_) => None,
+        }))
+    }
+
+    /// Places with the log of their share of the prior weight of all that are given.
+    pub(super) fn weighted(
+        &self,
+        places: impl Iterator<Item = (usize, usize)>,
+    ) -> Vec<(usize, usize, f64)> {
+        let weights: Vec<(usize, usize, f64)> = places
+            .map(|(index, place)| (index, place, self.inside(place)))
             .collect();
         let total: f64 = weights.iter().map(|(_, _, w)| w).sum();
         weights

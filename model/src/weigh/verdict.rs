@@ -153,21 +153,13 @@ impl Weights<'_> {
 
     /// Places weighed as leaks for detection: order among the bank's thinned sources, and log prior weight.
     pub(crate) fn thinned_leak_weights(&self) -> Vec<(usize, f64)> {
-        let weights: Vec<(usize, f64)> = self
-            .bank
-            .chosen
-            .iter()
-            .enumerate()
-            .filter_map(|(at, &i)| match self.bank.sources.get(i) {
-                Some(Source::Place(place)) => Some((at, self.inside(*place))),
-                _ => None,
-            })
-            .collect();
-        let total: f64 = weights.iter().map(|(_, w)| w).sum();
-        weights
-            .into_iter()
-            .map(|(at, weight)| (at, (weight / total).ln()))
-            .collect()
+        let chosen = self.bank.chosen.iter().enumerate();
+        let places = chosen.filter_map(|(at, &i)| match self.bank.sources.get(i) {
+            Some(Source::Place(place)) => Some((at, *place)),
+            _ => None,
+        });
+        let weights = self.weighted(places).into_iter();
+        weights.map(|(at, _, log)| (at, log)).collect()
     }
 
     pub(super) fn inside(&self, place: usize) -> f64 {

@@ -17,10 +17,10 @@ mod numbers;
 mod page;
 
 use super::progress;
+use super::standing::history_of;
 use super::table::{Align, Table};
 use super::{Context, Exit, Failure, print};
 use crate::config::{self, Site};
-use crate::intake::log::LogReader;
 use crate::keeper::settings::block_plan;
 use crate::record::{Block, Stamp};
 use crate::store::{Reader, StoreError};
@@ -96,7 +96,7 @@ impl Commission {
         let history = if self.log.is_empty() {
             self.stored(&site)
         } else {
-            self.logged(&site)
+            history_of(&site, &self.log)
         };
         let history = history.map_err(Failure::unusable)?;
         let Some((first, last)) = history.span() else {
@@ -213,18 +213,6 @@ impl Commission {
             )
         });
         Ok((path.clone(), shown.map_err(Failure::unusable)?))
-    }
-
-    fn logged(&self, site: &Site) -> anyhow::Result<History> {
-        let mut log = LogReader::of_site(&self.log, site)?;
-        let bar = progress::bytes(log.total_bytes(), "reading logs");
-        let mut history = History::default();
-        while let Some(delivery) = log.next_delivery()? {
-            history.add(delivery.readings);
-            bar.set_position(log.read_bytes());
-        }
-        bar.finish_and_clear();
-        Ok(history)
     }
 
     fn stored(&self, site: &Site) -> anyhow::Result<History> {

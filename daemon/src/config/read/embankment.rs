@@ -1,6 +1,7 @@
 //! `[embankment]`: what an embankment dam answers to, in place of layers, edge and wells.
 
-use borewake_model::lagged::{Driver, WATER};
+use borewake_model::lagged::Driver;
+use borewake_model::units::WATER_WEIGHT;
 
 use super::super::section::{At, Section};
 use super::super::{ChannelSettings, DriveSettings, EmbankmentSettings};
@@ -47,7 +48,7 @@ pub(super) fn kinds(driver: Driver) -> &'static [ChannelKind] {
 /// What a drive's channel is multiplied by: levels become pressures.
 pub(super) fn factor(kind: ChannelKind) -> f64 {
     if kind == ChannelKind::Stage {
-        WATER
+        WATER_WEIGHT
     } else {
         1.0
     }

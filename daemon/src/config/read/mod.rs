@@ -20,6 +20,7 @@ mod zone;
 use std::path::Path;
 
 use borewake_model::ground::{Ground, Point};
+use borewake_model::units::WATER_WEIGHT;
 use toml::de::DeTable;
 
 use super::report::Report;
@@ -27,9 +28,6 @@ use super::section::Section;
 use super::{ConfigError, Site, WaterSettings};
 use crate::record::{ChannelId, ChannelKind, Holds};
 use cross::WaterRead;
-
-/// Pressure under a metre of water \[Pa/m\].
-const METRE_OF_WATER: f64 = 9_806.65;
 
 /// Reads the text of a site file. Nothing but the text is looked at; `path` is where relative paths start.
 ///
@@ -134,7 +132,7 @@ fn walk<'s>(report: &'s Report<'s>, table: &'s DeTable<'s>, text: &str, path: &P
             WaterSettings {
                 name: water.name,
                 holds: found.map_or(Holds::default(), |c| c.holds),
-                weight: if level { METRE_OF_WATER } else { 1.0 },
+                weight: if level { WATER_WEIGHT } else { 1.0 },
                 channel: id,
             }
         })
